@@ -1,0 +1,228 @@
+"""The sections of a model sheet other than [equations]: each function reads one, noting its problems."""
+
+from __future__ import annotations
+
+from collections.abc import Collection
+from dataclasses import dataclass
+
+import numpy as np
+
+from covariates.catalogue import ATTRIBUTES, EQUATIONS
+from covariates.problems import nearest
+from covariates.sheet_section import Section
+from covariates.units import Range
+from covariates.variability import covariance_from, omega_from_cv, omega_from_variance
+
+FLUIDS = ("total plasma", "unbound plasma", "whole blood")
+SAMPLING = ("arterial", "venous", "arterial and venous")
+_SEXES = ("female", "male")
+_RANGES = {
+    "age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",
+    "serum_creatinine": "creatinine", "postmenstrual_age_weeks": "postmenstrual_age",
+}  # fmt: skip
+_TO_OMEGA = {"sd of ln": float, "variance of ln": omega_from_variance, "cv": omega_from_cv}
+_LARGEST_SPREAD = 3.0
+
+
+@dataclass(frozen=True)
+class BuiltOn:
+    """The people a model was built on.
+
+    people                a sentence
+    count                 how many, or None where not known
+    ranges                attribute or bmi -> Range (years, kg, cm, kg/m2, mg/dL, wk); only what is known
+    sex                   "female" or "male" where only they were studied, else None
+    longest_infusion_min  or None where not known
+    sampling              "arterial", "venous", "arterial and venous", or empty
+    evidence, note        how far this is known
+    """
+
+    people: str
+    count: int | None
+    ranges: dict[str, Range]
+    sex: str | None
+    longest_infusion_min: float | None
+    sampling: str
+    evidence: str
+    note: str
+
+
+@dataclass(frozen=True)
+class EffectModel:
+    """The sigmoid effect: baseline + (at_infinity - baseline) Ce^g / (half^g + Ce^g), each part an equation's name.
+
+    g is `steepness`, and above `half` it is `steepness_above` where that is given. `half` is a concentration.
+    `low_means` and `high_means` say in words what an effect below and above a range means ("too deep").
+    """
+
+    name: str
+    unit: str
+    baseline: str
+    at_infinity: str
+    half: str
+    steepness: str
+    steepness_above: str | None
+    low_means: str
+    high_means: str
+
+    @property
+    def names(self) -> tuple[str, ...]:
+        """The equations it uses."""
+        parts = (self.baseline, self.at_infinity, self.half, self.steepness, self.steepness_above)
+        return tuple(dict.fromkeys(part for part in parts if part))
+
+    @property
+    def units(self) -> dict[str, str]:
+        """Equation -> kind of its unit."""
+        return {name: "concentration" if name == self.half else "number" for name in self.names}
+
+
+def read_source(top: Section) -> dict[str, object]:
+    """[source]: citation, doi, doi_evidence, further."""
+    section = top.section("source", needed=True)
+    if section.table:
+        section.text("citation", needed=True)
+    found = {key: section.text(key) for key in ("citation", "doi", "doi_evidence")} if section.table else {}
+    further = section.texts("further")
+    section.close()
+    return {key: value for key, value in found.items() if value} | {"further": further}
+
+
+def read_built_on(top: Section) -> BuiltOn:
+    """[built_on]: the people, their ranges, the longest infusion, the sampling."""
+    section = top.section("built_on", needed=True)
+    people = section.text("people", needed=bool(section.table)) or ""
+    count = section.whole_number("count")
+    ranges = {name: found for name, kind in _RANGES.items() if (found := section.range(name, kind)) is not None}
+    sex = section.text("sex", among=_SEXES)
+    longest = section.quantity("longest_infusion", "time")
+    sampling = section.text("sampling", among=SAMPLING) or ""
+    evidence, note = section.text("evidence") or "", section.text("note") or ""
+    section.close()
+    return BuiltOn(people, count, ranges, sex, longest, sampling, evidence, note)
+
+
+def read_measured_in(top: Section) -> dict[str, object]:
+    """[measured_in]: the fluid, the fraction unbound where published."""
+    section = top.section("measured_in", needed=True)
+    found = {
+        "fluid": section.text("fluid", needed=bool(section.table), among=FLUIDS),
+        "fraction_unbound": section.number("fraction_unbound", 0, 1),
+        "evidence": section.text("evidence"),
+        "note": section.text("note"),
+    }
+    section.close()
+    return {key: value for key, value in found.items() if value is not None}
+
+
+def read_reference_person(top: Section) -> dict[str, np.ndarray]:
+    """[reference_person]: attribute -> array of one, empty where the sheet has none."""
+    section = top.section("reference_person")
+    sex = section.text("sex", among=_SEXES)
+    person = {} if sex is None else {"sex": np.array([sex])}
+    for name, kind in _RANGES.items():
+        value = section.quantity(name, kind) if name in ATTRIBUTES else None
+        if value is not None:
+            person[name] = np.array([value])
+    section.close()
+    return person
+
+
+def read_needs(top: Section) -> dict[str, str]:
+    """[needs]: switch -> what it means when true."""
+    section = top.section("needs")
+    switches = {}
+    for name, meaning in section.pairs():
+        if not isinstance(meaning, str) or not meaning.strip():
+            section.problem(name, f"{meaning!r:.100}", 'what it means: "true when ..."')
+        elif name in ATTRIBUTES or name in EQUATIONS or not name.isidentifier():
+            section.problem(name, "no name for a switch", "a name of its own, such as venous_sampling")
+        else:
+            switches[name] = meaning
+    return switches
+
+
+def read_effect(top: Section) -> EffectModel | None:
+    """[effect]: what the effect is called and which equations it uses."""
+    section = top.section("effect")
+    if "effect" not in top.table:
+        return None
+    texts = {key: section.text(key, needed=True) for key in ("name", "low_means", "high_means")}
+    unit = section.table.get("unit", "")
+    section.take("unit", False, "")
+    uses = section.section("uses", needed=True)
+    parts = {key: uses.text(key, needed=True) for key in ("baseline", "at_infinity", "half", "steepness")}
+    above = uses.text("steepness_above")
+    uses.close()
+    section.close()
+    if not isinstance(unit, str):
+        section.problem("unit", f"{unit!r:.100}", "text in quotes")
+    if None in texts.values() or None in parts.values():
+        return None
+    return EffectModel(unit=str(unit), steepness_above=above, **texts, **parts)
+
+
+def read_spread(top: Section, equations: Collection[str]) -> tuple[dict[str, float], str, dict[tuple[str, str], float]]:
+    """[spread] and [spread_together]: omegas, the note, correlations."""
+    section = top.section("spread", needed=True)
+    published = section.flag("published", True)
+    note = section.text("note") or ""
+    usual = section.text("printed_as", among=_TO_OMEGA)
+    omegas = {}
+    for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
+        omega = _read_omega(entry, usual)
+        if name not in equations:
+            section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
+        elif omega is not None:
+            omegas[name] = omega
+        entry.close()
+    if "spread" in top.table and published and not omegas:
+        section.problem("published", "no spread given", "values, or published = false")
+    if not published and omegas:
+        section.problem("published", "false, yet values are given", "published = true")
+    return omegas, note, _read_together(top, omegas)
+
+
+def _read_omega(entry: Section, usual: str | None) -> float | None:
+    """One spread as omega, whatever way it was printed."""
+    advice = "write 0.26 for 26 %"
+    value = entry.number("value", 0, _LARGEST_SPREAD, needed=True, advice=advice)
+    printed_as = entry.text("printed_as", among=_TO_OMEGA) or usual
+    entry.text("evidence")
+    entry.text("note")
+    if printed_as is None:
+        entry.problem("printed_as", "missing", ", ".join(_TO_OMEGA))
+        return None
+    return None if value is None else float(_TO_OMEGA[printed_as](value))
+
+
+def _read_together(top: Section, omegas: dict[str, float]) -> dict[tuple[str, str], float]:
+    """[spread_together]: "V1, CL" = 0.3."""
+    section = top.section("spread_together")
+    correlations = {}
+    for key, value in section.pairs():
+        pair = tuple(part.strip() for part in key.split(","))
+        if len(pair) != 2 or pair[0] == pair[1] or not set(pair) <= set(omegas):
+            section.problem(f'"{key}"', "not two names with spread", '"V1, CL" = 0.3')
+        elif isinstance(value, bool) or not isinstance(value, (int, float)) or not -1 < value < 1:
+            section.problem(f'"{key}"', f"{value!r:.100}", "a correlation between -1 and 1")
+        else:
+            correlations[pair] = float(value)
+    try:
+        covariance_from(omegas, correlations)
+    except ValueError as error:
+        top.problem("spread_together", str(error), "correlations that can hold together")
+    return correlations
+
+
+def read_error(top: Section) -> dict[str, object]:
+    """[measurement_error]: proportional (a fraction), additive (a concentration, in mg/L)."""
+    section = top.section("measurement_error")
+    found = {
+        "proportional": section.number("proportional", 0, _LARGEST_SPREAD, advice="write 0.2 for 20 %"),
+        "additive": section.quantity("additive", "concentration"),
+        "evidence": section.text("evidence"),
+        "note": section.text("note"),
+    }
+    section.close()
+    return {key: value for key, value in found.items() if value is not None}

@@ -1,0 +1,77 @@
+"""The record of a run: enough to repeat it to the last bit on the same kind of machine and versions."""
+
+from __future__ import annotations
+
+import platform
+from dataclasses import fields, is_dataclass
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+from covariates.formula import Formula
+from covariates.sheet import DrugModel
+from covariates.units import Quantity
+from popsim import solve
+from popsim.cautions import CAUTIONS
+from popsim.parameters import spread_used
+from popsim.tally import Findings
+
+PACKAGES = ("popsim", "numpy", "scipy", "pandas", "numba", "matplotlib", "seaborn")
+
+
+def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, Any]:
+    """Everything record.json holds. Timings stand here and nowhere else."""
+    study, tally = findings.study, findings.tally
+    return {
+        "title": study.title,
+        "question": study.question,
+        "seed": study.seed,
+        "command": command,
+        "study_file": study.path.name,
+        "study_digest_sha256": study.digest,
+        "study": plain(study),
+        "models": [_model_record(study, model) for model in study.models],
+        "counts": {
+            "patients": int(tally.patients[0]),
+            "candidates_seen": findings.candidates_seen,
+            "candidates_eligible": findings.candidates_eligible,
+            "list_rows_skipped": findings.rows_skipped,
+            "groups": {name: int(count) for name, count in zip(study.group_names, tally.patients, strict=True)},
+            "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count}
+                              for (m, code), count in sorted(tally.statuses.items())],
+            "outside_by": [{"model": study.models[m].name, "attribute": name,
+                            "patients": {group: int(count)
+                                         for group, count in zip(study.group_names, counts, strict=True)}}
+                           for (m, name), counts in tally.beyond.items()],
+        },
+        "notes": notes,
+        "cautions": list(CAUTIONS),
+        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
+        "machine": {"system": platform.system(), "processor": platform.machine()},
+        "timings": {"simulation_s": round(findings.seconds, 3), "threads": findings.threads},
+    }
+
+
+def _model_record(study, model: DrugModel) -> dict[str, Any]:
+    return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
+            "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
+            "spread_note": model.spread_note, "cautions": list(model.cautions)}
+
+
+def plain(value: Any) -> Any:
+    """A record as JSON can hold it: formulas and quantities as written, models by name, paths by file name."""
+    if isinstance(value, DrugModel):
+        return {"model": value.name, "digest_sha256": value.digest}
+    if isinstance(value, Formula | Quantity):
+        return value.text
+    if isinstance(value, Path):
+        return value.name
+    if isinstance(value, float) and value in (float("inf"), float("-inf")):
+        return "unlimited"
+    if is_dataclass(value):
+        return {field.name: plain(getattr(value, field.name)) for field in fields(value)}
+    if isinstance(value, dict):
+        return {str(key): plain(item) for key, item in value.items()}
+    if isinstance(value, list | tuple):
+        return [plain(item) for item in value]
+    return value

@@ -1,0 +1,279 @@
+"""The records that pass from step to step. Plain arrays in mg, L, min; one row a patient."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from pathlib import Path
+from typing import Any
+
+import numpy as np
+
+from covariates.formula import Formula
+from covariates.sheet import DrugModel
+from covariates.units import Quantity
+from popsim.lookup import Lookup
+from popsim.patients.population import Population
+
+
+@dataclass(frozen=True)
+class Patients:
+    """One block of virtual patients.
+
+    first       number of its first patient (1, 2, ... over the whole population)
+    block       which block of candidates they were drawn from: with `slots`, the key to their luck
+    slots       (n,) int64, position of each within its block of candidates
+    attributes  name -> (n,) array: `sex` as text ("female", "male"), switches as bool, numbers as float64
+                in the attribute's own unit (age years, weight kg, height cm, serum_creatinine mg/dL)
+    labels      (n,) text, what a list calls its people; None elsewhere
+    """
+
+    first: int
+    block: int
+    slots: np.ndarray
+    attributes: dict[str, np.ndarray]
+    labels: np.ndarray | None = None
+
+    def __len__(self) -> int:
+        return len(self.slots)
+
+
+@dataclass(frozen=True)
+class IndividualParameters:
+    """What a drug model says of each patient of a block, random effects applied.
+
+    values    parameter -> (n,) float64 in L, L/min, 1/min (or the parameter's own unit: E0, C50 in mg/L)
+    outside   (n,) bool: outside the people the model was built on
+    beyond    attribute -> (n,) bool: outside by that attribute alone
+    """
+
+    values: dict[str, np.ndarray]
+    outside: np.ndarray
+    beyond: dict[str, np.ndarray] = field(default_factory=dict)
+
+
+@dataclass(frozen=True)
+class Disposition:
+    """Plasma after a unit bolus, patient by patient: the sum over i of weights[i] exp(-rates[i] t).
+
+    rates    (n, 3) float64, 1/min, ascending; unused compartments have rate 1 and weight 0
+    weights  (n, 3) float64, 1/L, none negative, adding up to 1/V1
+    ke0      (n,) float64, 1/min; 0 where the model has no effect site
+    status   (n,) int64, 0 = fine, else a code of `solve.STATUS`
+    """
+
+    rates: np.ndarray
+    weights: np.ndarray
+    ke0: np.ndarray
+    status: np.ndarray
+
+    def __len__(self) -> int:
+        return len(self.ke0)
+
+
+@dataclass(frozen=True)
+class Timeline:
+    """What each patient is given, as events in order of time.
+
+    time_min         (n, m) float64, ascending, padded with inf
+    bolus_mg         (n, m) float64, given at that time
+    rate_mg_per_min  (n, m) float64, infused from that time until the next event
+    """
+
+    time_min: np.ndarray
+    bolus_mg: np.ndarray
+    rate_mg_per_min: np.ndarray
+
+
+@dataclass(frozen=True)
+class WindowCourse:
+    """What one course (plasma or effect site) does in each patient's window, found exactly.
+
+    below, inside, above  (n,) float64: shares of the window under `low`, from `low` to `high`, over `high`;
+                          for an instant, 0 or 1. They add up to 1; NaN where status is not 0.
+    touched               (n,) bool: within the range at any moment of the closed window
+    lowest, highest       (n,) float64: smallest and largest value in the closed window, mg/L
+    at_end                (n,) float64: value at the window's end, before doses at that time, mg/L
+    status                (n,) int64, 0 = fine
+    """
+
+    below: np.ndarray
+    inside: np.ndarray
+    above: np.ndarray
+    touched: np.ndarray
+    lowest: np.ndarray
+    highest: np.ndarray
+    at_end: np.ndarray
+    status: np.ndarray
+
+
+@dataclass(frozen=True)
+class DoseVariant:
+    """One way in which a dose step is given: the step itself, or one band of it.
+
+    where    which patients (None: all whom the step reaches)
+    at_min   time of the first administration
+    every    minutes between administrations, None for a single one
+    amount   dose as written, None when a rate says it
+    rate     rate as written; with an amount the duration follows
+    """
+
+    where: Formula | None
+    at_min: float
+    every_min: float | None
+    amount: Quantity | None
+    rate: Quantity | None
+
+
+@dataclass(frozen=True)
+class DoseStep:
+    """One line of the ward card. Caps, floors and rounding are in mg, or mg/min when the step has only a rate."""
+
+    number: int
+    where: Formula | None
+    variants: tuple[DoseVariant, ...]
+    by: str
+    over_min: float | None
+    until_min: float | None
+    times: int | None
+    at_most: float | None
+    at_least: float | None
+    round_to: float | None
+
+    @property
+    def banded(self) -> bool:
+        return len(self.variants) > 1 or self.variants[0].where is not None
+
+
+@dataclass(frozen=True)
+class Protocol:
+    """A regimen as written on the ward card; it sees covariates only.
+
+    by                    the covariate that a "/kg" or "/m2" means where a step does not say
+    strength_mg_per_ml    preparation, None when not given
+    vial_ml               volume of one container, None when not given
+    no_dose_allowed       whether a patient may be reached by no step
+    """
+
+    name: str
+    by: str
+    strength_mg_per_ml: float | None
+    vial_ml: float | None
+    no_dose_allowed: bool
+    steps: tuple[DoseStep, ...]
+
+
+@dataclass(frozen=True)
+class Target:
+    """What counts as success.
+
+    quantity      plasma, effect_site, effect
+    low, high     limits in mg/L, or in the effect's own unit; -inf or inf where one-sided
+    unit          the unit that the study wrote
+    start, end    the window: minutes, or the name of a numeric attribute in minutes or hours
+    rule          share, any, always, end; `share_needed` goes with share
+    """
+
+    name: str
+    quantity: str
+    low: float
+    high: float
+    unit: str
+    range_text: str
+    start: float | str
+    end: float | str
+    rule: str
+    share_needed: float
+    rule_text: str
+
+    @property
+    def instant(self) -> bool:
+        return self.start == self.end
+
+
+@dataclass(frozen=True)
+class Variability:
+    """between_subject False: typical patients. `from_model`: the sheet whose variability is borrowed, or None."""
+
+    between_subject: bool
+    scale: float
+    from_model: DrugModel | None
+
+
+@dataclass(frozen=True)
+class Study:
+    """A study file, resolved: every name looked up, every quantity in mg, L, min."""
+
+    path: Path
+    digest: str
+    title: str
+    question: str
+    seed: int
+    population: Population
+    variability: Variability
+    groups: tuple[tuple[str, Formula], ...]
+    models: tuple[DrugModel, ...]
+    protocols: tuple[Protocol, ...]
+    targets: tuple[Target, ...]
+    matters: float | None
+    reference: str | None
+    until_min: float
+    every_min: float
+    warnings: tuple[str, ...]
+
+    @property
+    def group_names(self) -> tuple[str, ...]:
+        return ("all", *(name for name, _ in self.groups))
+
+    def grid_min(self) -> np.ndarray:
+        """Times of the over-time tables: 0, k x every, and until."""
+        count = int(np.floor(self.until_min / self.every_min * (1 + 1e-12)))
+        grid = np.arange(count + 1) * self.every_min
+        if grid[-1] >= self.until_min * (1 - 1e-12):
+            grid[-1] = self.until_min
+            return grid
+        return np.append(grid, self.until_min)
+
+
+@dataclass(frozen=True)
+class Received:
+    """What each patient of a block really receives until the run's end, one array (n,) each.
+
+    capped, floored, rounded   whether any administration was changed so
+    impossible                 whether any administration came out as zero
+    longest_infusion_min       longest infusion at one stretch of rates above zero
+    """
+
+    total_mg: np.ndarray
+    capped: np.ndarray
+    floored: np.ndarray
+    rounded: np.ndarray
+    impossible: np.ndarray
+    undosed: np.ndarray
+    longest_infusion_min: np.ndarray
+
+
+@dataclass(frozen=True)
+class Judged:
+    """One target judged in each patient of a block, arrays (n,). Failed patients count as not attained."""
+
+    failed: np.ndarray
+    attained: np.ndarray
+    below: np.ndarray
+    inside: np.ndarray
+    above: np.ndarray
+    far_below: np.ndarray
+    far_above: np.ndarray
+
+
+@dataclass(frozen=True)
+class BlockRows:
+    """What a block leaves for the tables that have a row per patient. Courses only when they are kept."""
+
+    patients: Patients
+    lookup: Lookup
+    courses: list[tuple[str, str, np.ndarray, np.ndarray, np.ndarray | None]]  # model, protocol, plasma, site, effect
+
+
+def rows_of(record: Any, rows: slice) -> Any:
+    """The same record (Disposition, Timeline) for some of its patients only."""
+    return type(record)(**{name: array[rows] for name, array in vars(record).items()})

@@ -1,0 +1,205 @@
+"""The report of a run: one HTML file that needs nothing else, for a committee to read and print.
+
+Every number is a cell of the run's tables or a count of its record, written as on the terminal.
+"""
+
+from __future__ import annotations
+
+import re
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+from jinja2 import Environment, PackageLoader, StrictUndefined
+from markupsafe import Markup
+
+from covariates.sheet import DrugModel
+from covariates.units import to_unit
+from popsim.headlines import has_headline, rows_where
+from popsim.pictures import INTERVALS_SAY, Picture
+from popsim.records import Protocol, Study, Target
+from popsim.ward_card import card_lines, describe, example_people, step_as_written
+from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line
+
+ATTRIBUTE_UNITS = {"age": "years", "weight": "kg", "height": "cm", "bmi": "kg/m2"}
+SOURCES = {"survey": "adults drawn as a national household survey of the United States finds them",
+           "list": "the people of a list"}
+
+
+def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any], pictures: list[Picture],
+                 path: Path) -> None:
+    """Write the report to `path`; the pictures' files stand in the same folder."""
+    environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
+                              trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
+    environment.globals |= {"percent": percent, "points": points, "interval": _interval}
+    html = environment.get_template("report.html.j2").render(
+        study=study,
+        record=record,
+        intervals_say=INTERVALS_SAY,
+        targets=[target_line(target) for target in study.targets],
+        answers=[_answer(study, tables, model, target) for model in study.models for target in study.targets],
+        pictures=[{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
+                  for number, picture in enumerate(pictures, 1)],
+        who=_who(study, record),
+        people=_groups_of_people(study, tables["attainment"], record),
+        ward=_cards(study),
+        doses=[_doses(study, protocol, tables["doses"]) for protocol in study.protocols],
+        models=[_model(study, model, found) for model, found in zip(study.models, record["models"], strict=True)],
+        left_out=_left_out(study, tables["attainment"], record),
+        run_end=clock(study.until_min),
+    )
+    path.write_text(html, encoding="utf-8")
+
+
+def _interval(low: float, high: float, show=percent) -> str:
+    return f"{show(low)} to {show(high)}"
+
+
+def _answer(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel, target: Target) -> dict[str, Any]:
+    """The sentences and tables of one model and one target."""
+    attainment, pairs, against = (rows_where(tables[name], model=model.name, target=target.name)
+                                  for name in ("attainment", "comparison", "groups"))
+    by_group = [(group, rows_where(attainment, group=group)) for group in study.group_names]
+    sides = ("", "") if target.quantity != "effect" or model.effect is None else (
+        model.effect.low_means, model.effect.high_means)
+    return {
+        "title": _about(study, model, target),
+        "sentences": [finding(study, pairs, attainment, group, target.name, model.name) for group in study.group_names],
+        "attainment": [(group, [(row, has_headline(row)) for row in rows.itertuples()]) for group, rows in by_group],
+        "sides": sides,
+        "sides_line": sides_line(target, model),
+        "pairs": [(a, b, [(row, all(has_headline(one) for one in attainment.itertuples()
+                                    if one.group == row.group and one.protocol in (a, b)))
+                          for row in rows.itertuples()])
+                  for (a, b), rows in pairs.groupby(["protocol_a", "protocol_b"], sort=False)],
+        "against": list(against.itertuples()),
+    }
+
+
+def _about(study: Study, model: DrugModel, target: Target) -> str:
+    """What tells one answer from the others; empty where there is only one."""
+    parts = [target.name] * (len(study.targets) > 1) + [f"under {model.name}"] * (len(study.models) > 1)
+    return " ".join(parts)
+
+
+def _who(study: Study, record: dict[str, Any]) -> list[str]:
+    """The population in sentences."""
+    population, counts = study.population, record["counts"]
+    limits = [f"{name.replace('_', ' ')} {_range(low, high, ATTRIBUTE_UNITS[name])}"
+              for name, (low, high) in population.limits.items()]
+    limits += [f"only {population.sex}"] if population.sex is not None else []
+    limits += [population.where.text] if population.where is not None else []
+    lines = [f"{counts['patients']:,} virtual patients: {SOURCES[population.source]}."]
+    if limits:
+        lines.append(f"Eligible: {'; '.join(limits)}. Of {counts['candidates_seen']:,} candidates "
+                     f"{counts['candidates_eligible']:,} were eligible.")
+    if population.set:
+        lines.append("Set for everyone: " + ", ".join(
+            f"{name.replace('_', ' ')} {'yes' if value is True else 'no' if value is False else f'{value:g}'}"
+            for name, value in population.set.items()) + ".")
+    lines += [f"Every {name.replace('_', ' ')} is multiplied by {factor:g}." for name, factor in population.scale.items()]
+    return lines + [_spread_line(study)]
+
+
+def _spread_line(study: Study) -> str:
+    variability = study.variability
+    if not variability.between_subject:
+        return "Typical patients: no between-subject variability."
+    lender = f", borrowed from {variability.from_model.name}" if variability.from_model else ""
+    factor = f", times {variability.scale:g}" if variability.scale != 1 else ""
+    return f"Between-subject variability as published{lender}{factor}."
+
+
+def _range(low: float, high: float, unit: str) -> str:
+    if low == float("-inf"):
+        return f"up to {high:g} {unit}"
+    return f"from {low:g} {unit}" if high == float("inf") else f"{low:g} to {high:g} {unit}"
+
+
+def _groups_of_people(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) -> list[dict[str, Any]]:
+    """For each group: its condition, its size, and for each model the share outside it."""
+    conditions = {"all": "everyone"} | {name: where.text for name, where in study.groups}
+    first = rows_where(attainment, protocol=study.protocols[0].name, target=study.targets[0].name)
+    return [{"group": group, "where": conditions[group], "patients": record["counts"]["groups"][group],
+             "outside": [rows_where(first, model=model.name, group=group).iloc[0].outside_model for model in study.models]}
+            for group in study.group_names]
+
+
+def _cards(study: Study) -> dict[str, Any]:
+    """Every protocol, step by step, with what each example person is given of it."""
+    labels, attributes = example_people(study)
+    cards = []
+    for protocol in study.protocols:
+        steps = []
+        for step, lines in zip(protocol.steps, card_lines(study, protocol, attributes), strict=True):
+            times = {line.when for line in lines if line is not None}
+            steps.append({"written": step_as_written(step), "when": times.pop() if len(times) == 1 else "", "lines": lines})
+        cards.append({"protocol": protocol, "scaled": per_kg_line(protocol), "steps": steps})
+    return {"people": [(label, describe(attributes, i)) for i, label in enumerate(labels)], "cards": cards}
+
+
+def _doses(study: Study, protocol: Protocol, doses: pd.DataFrame) -> dict[str, Any]:
+    """Doses received, in the mass unit that the protocol's first step is written in."""
+    first = protocol.steps[0].variants[0]
+    unit = (first.amount or first.rate).unit.split("/")[0]
+
+    rows = rows_where(doses, protocol=protocol.name)
+    shares = [name for name in ("capped", "floored", "rounded", "impossible", "undosed") if (rows[f"share_{name}"] > 0).any()]
+    columns = [f"Total, {unit}", f"{unit}/kg total weight", f"{unit}/kg lean weight"]
+    columns += ["Volume, mL"] * (protocol.strength_mg_per_ml is not None) + ["Containers"] * (protocol.vial_ml is not None)
+    cells = []
+    for row in rows.itertuples():
+        line = [_three(row, measure, unit) for measure in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")]
+        line += [_three(row, "volume_ml")] * (protocol.strength_mg_per_ml is not None)
+        line += [_three(row, "vials")] * (protocol.vial_ml is not None)
+        cells.append((row.group, line + [f"{percent(getattr(row, f'share_{name}'))} %" for name in shares]))
+    return {"name": protocol.name, "columns": columns + [name.capitalize() for name in shares], "rows": cells}
+
+
+def _three(row, measure: str, unit: str | None = None) -> str:
+    """Median with the 5th and 95th percentile: "684.1 (467 to 1070)"."""
+    low, median, high = (getattr(row, f"{measure}_{name}") for name in ("p05", "p50", "p95"))
+    if pd.isna(median):
+        return "-"
+    low, median, high = (f"{to_unit(value, unit, 'mass') if unit else value:.4g}" for value in (low, median, high))
+    return f"{median} ({low} to {high})"
+
+
+def _model(study: Study, model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
+    built_on = model.built_on
+    limits = [f"{name.replace('_', ' ') if name != 'bmi' else 'body mass index'} {limit.text}"
+              for name, limit in built_on.ranges.items()]
+    if built_on.longest_infusion_min is not None:
+        limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
+    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
+            "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
+
+
+def _left_out(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) -> dict[str, Any]:
+    """Who could not be simulated, who lies outside a model and by what, whose infusion is longer than was studied."""
+    counts, total = record["counts"], record["counts"]["patients"]
+    everyone = rows_where(attainment, group="all", target=study.targets[0].name)
+    longest = {model.name: model.built_on.longest_infusion_min for model in study.models}
+    return {
+        "failed": counts["not_simulated"],
+        "skipped": counts["list_rows_skipped"],
+        "by": [(one["model"], one["attribute"].replace("_", " "),
+                [(group, number / max(counts["groups"][group], 1)) for group, number in one["patients"].items()])
+               for one in counts["outside_by"]],
+        "groups": list(study.group_names),
+        "total": total,
+        "long": [(row.model, row.protocol, clock(longest[row.model]), row.infusion_beyond_model)
+                 for row in everyone.itertuples() if row.infusion_beyond_model > 0],
+    }
+
+
+def _inlined(svg: str, number: int) -> Markup:
+    """One of our SVG files as part of a page: no prolog, comments or metadata; ids that no other picture has."""
+    svg = svg[svg.index("<svg"):]
+    svg = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", svg, flags=re.DOTALL)
+    own = f"p{number}-"
+    svg = re.sub(r'\bid="', f'id="{own}', svg)
+    svg = re.sub(r'(xlink:href="#|url\(#)', rf"\g<1>{own}", svg)
+    svg = svg.replace('aria-labelledby="popsim-title popsim-description"',
+                      f'aria-labelledby="{own}popsim-title {own}popsim-description"')
+    return Markup(re.sub(r"\n\s*\n+", "\n", svg))  # its text was escaped when it was drawn

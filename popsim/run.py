@@ -1,0 +1,182 @@
+"""The order of steps: patients -> covariates -> parameters -> timeline -> courses -> judgement -> counts.
+
+Blocks of patients go through the steps one by one; threads share blocks, never a count. The only file that knows the order.
+"""
+
+from __future__ import annotations
+
+import threading
+import time
+from collections.abc import Callable, Iterator
+from concurrent.futures import ThreadPoolExecutor
+from itertools import combinations
+
+import numpy as np
+
+from covariates.catalogue import attributes_needed
+from popsim import solve
+from popsim.effect import effect_at
+from popsim.groups import members as group_members
+from popsim.lookup import Lookup
+from popsim.parameters import individual_parameters
+from popsim.patients.draw import blocks
+from popsim.records import (
+    BlockRows,
+    Disposition,
+    IndividualParameters,
+    Judged,
+    Patients,
+    Received,
+    Study,
+    Timeline,
+    rows_of,
+)
+from popsim.tally import Findings, Tally
+from popsim.target import COURSE_OF, concentration_limits, course_values, judge, window_of
+from popsim.timeline import build_timeline
+
+LEAN = "lean_body_mass_janmahasatian"
+ROWS_AT_ONCE = 1024  # patients whose courses are held at a time: they stay in the processor's cache
+
+
+def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
+             sink: Callable[[BlockRows], None] | None = None,
+             progress: Callable[[int], None] | None = None) -> Findings:
+    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far."""
+    started = time.perf_counter()
+    drawn = blocks(study.population, study.seed)
+    queue = _Queue(iter(drawn), sink, progress)
+    grid = study.grid_min()
+
+    def work(_: int = 0) -> Tally | None:
+        tally = None  # counts take tens of MB: a thread that finds no block left makes none
+        for number, patients in queue:
+            try:
+                tally = tally or Tally.empty(study, len(grid))
+                queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
+            except BaseException:
+                queue.stop()
+                raise
+        return tally
+
+    if threads == 1:
+        tallies = [work()]
+    else:
+        with ThreadPoolExecutor(threads) as pool:
+            tallies = list(pool.map(work, range(threads)))
+    total, *others = [tally for tally in tallies if tally is not None]
+    for other in others:
+        total.merge(other)
+    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads)
+
+
+class _Queue:
+    """Hands out blocks to threads and passes what they leave to the sink in order."""
+
+    def __init__(self, source: Iterator[Patients], sink: Callable | None, progress: Callable | None):
+        self._source, self._sink, self._progress = enumerate(source), sink, progress
+        self._drawing, self._passing = threading.Lock(), threading.Lock()
+        self._waiting: dict[int, BlockRows] = {}
+        self._next, self._patients, self._stopped = 0, 0, False
+
+    def __iter__(self) -> Iterator[tuple[int, Patients]]:
+        while not self._stopped:
+            with self._drawing:
+                item = next(self._source, None)
+            if item is None:
+                return
+            yield item
+
+    def stop(self) -> None:
+        self._stopped = True
+
+    def done(self, number: int, rows: BlockRows) -> None:
+        with self._passing:
+            self._waiting[number] = rows
+            while self._next in self._waiting:
+                ready = self._waiting.pop(self._next)
+                if self._sink is not None:
+                    self._sink(ready)
+                self._next += 1
+                self._patients += len(ready.patients)
+                if self._progress is not None:
+                    self._progress(self._patients)
+
+
+def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tally, keep_courses: bool) -> BlockRows:
+    lookup = Lookup(patients.attributes)
+    members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
+    tally.patients += members.sum(axis=0)
+    tally.overlap += members.T @ members
+    given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
+    per = _per_kg(patients, lookup)
+    for p, (_, received) in enumerate(given):
+        tally.doses[p].add(received, per, members)
+    courses = []
+    for m, model in enumerate(study.models):
+        parameters = individual_parameters(model, study.variability, study.seed, patients, lookup)
+        disposition = solve.disposition(parameters.values)
+        status = disposition.status
+        tally.outside[m] += members.T @ parameters.outside
+        for name, marked in parameters.beyond.items():
+            tally.beyond[m, name] += members.T @ marked
+        judged: dict[tuple[int, int], Judged] = {}
+        for p, (timeline, received) in enumerate(given):
+            if model.built_on.longest_infusion_min is not None:
+                tally.long_infusion[m, p] += members.T @ (
+                    received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
+            for t in range(len(study.targets)):
+                judged[p, t], of_course = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
+                status = np.where(status == 0, of_course, status)
+                tally.targets[m, p, t].add(judged[p, t], members)
+            counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
+            kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)
+            if keep_courses:
+                courses.append((model.name, study.protocols[p].name, *kept))
+        tally.add_statuses(m, status)
+        for t in range(len(study.targets)):
+            for a, b in combinations(range(len(study.protocols)), 2):
+                tally.pairs[m, t, a, b].add(judged[a, t], judged[b, t], members)
+    return BlockRows(patients, lookup, courses)
+
+
+def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
+    per = {}
+    if "weight" in patients.attributes:
+        per["mg_per_kg_total"] = lookup("weight")
+    if attributes_needed(LEAN) <= patients.attributes.keys():
+        per["mg_per_kg_lean"] = lookup(LEAN)
+    return per
+
+
+def _judge_target(study: Study, m: int, t: int, parameters: IndividualParameters, disposition: Disposition,
+                  timeline: Timeline, received: Received, lookup: Lookup) -> tuple[Judged, np.ndarray]:
+    model, target, n = study.models[m], study.targets[t], len(disposition)
+    low, high = concentration_limits(target, model, parameters.values, n)
+    start, end = window_of(target, lookup, n, study.until_min)
+    course = solve.window_course(disposition, timeline, COURSE_OF[target.quantity], low, high, start, end)
+    return judge(target, model, parameters.values, course, received.undosed), course.status
+
+
+def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: IndividualParameters,
+               disposition: Disposition, timeline: Timeline, counted: list[np.ndarray], tally: Tally,
+               keep_courses: bool) -> tuple[np.ndarray, ...] | None:
+    """Add to the over-time counts, a few rows at a time; return the courses only when they are kept.
+
+    counted  for each target (n, groups) bool: whose course counts in which group
+    """
+    model, kept = study.models[m], []
+    for first in range(0, len(disposition), ROWS_AT_ONCE):
+        rows = slice(first, first + ROWS_AT_ONCE)
+        part = rows_of(disposition, rows)
+        plasma, site = solve.courses_on_grid(part, rows_of(timeline, rows), grid)
+        values = {name: array[rows] for name, array in parameters.values.items()}
+        for t, target in enumerate(study.targets):
+            quantity = course_values(target, model, values, plasma, site)
+            counts = tally.targets[m, p, t]
+            limits = (np.full(len(part), limit) for limit in (target.low, target.high))
+            solve.tally_on_grid(quantity, *limits, counted[t][rows], counts.over_time, counts.bins)
+        if keep_courses:
+            effect = effect_at(model, values, site) if model.effect else np.full_like(site, np.nan)
+            kept.append((plasma, site if model.has_effect_site else np.full_like(site, np.nan), effect))
+    return tuple(np.concatenate(course) for course in zip(*kept, strict=True)) if keep_courses else None

@@ -1,0 +1,270 @@
+"""Study file -> Study: every name looked up, every quantity in mg, L, min, every problem reported at once."""
+
+from __future__ import annotations
+
+import hashlib
+import re
+from collections.abc import Iterable
+from dataclasses import replace
+from pathlib import Path
+
+from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
+from covariates.formula import FUNCTIONS, Formula
+from covariates.problems import Problem, ProblemsError, nearest
+from covariates.sheet import DrugModel, read_sheet, shipped_sheets
+from popsim.patients.listed import list_columns
+from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
+from popsim.records import Study, Target, Variability
+from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
+from popsim.study_protocols import covariate_fault, resolve_protocols
+from popsim.study_targets import resolve_targets
+
+ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
+MOST_GRID_TIMES = 20_001
+WORDS = {"number": "a number", "condition": "true or false", "text": "text"}
+
+
+def read_study(path: Path) -> Study:
+    """Read and check a study file; ProblemsError lists all that the user can mend."""
+    section = read_study_file(path)
+    problems: list[Problem] = []
+    models = _models(section, path, problems)
+    brought = _brought(section.population, path, problems)
+    attributes = brought | {name: "condition" if isinstance(value, bool) else "number"
+                            for name, value in section.population.set.items()}
+    population = _population(section.population, brought, path, problems)
+    until_min, every_min = section.run.until.value, section.run.every.value
+    _check_grid(until_min, every_min, path, problems)
+
+    groups = _groups(section, path, problems)
+    protocols = resolve_protocols(section.protocol, until_min, attributes, path.name, problems)
+    _check_unique("protocol", [protocol.name for protocol in protocols], path, problems)
+    targets = resolve_targets(section.target, models, until_min, attributes, path.name, problems)
+    _check_set_windows(section, targets, until_min, path, problems)
+    _check_formulas(section, attributes, path, problems)
+    _check_model_needs(models, attributes, path, problems)
+    variability = _variability(section.variability, models, path, problems)
+    _check_compare(section, [name for name, _ in groups], path, problems)
+    if problems:
+        raise ProblemsError(problems)
+    return Study(
+        path=path,
+        digest=hashlib.sha256(path.read_bytes()).hexdigest(),
+        title=section.title,
+        question=section.question,
+        seed=section.seed,
+        population=population,
+        variability=variability,
+        groups=groups,
+        models=models,
+        protocols=protocols,
+        targets=targets,
+        matters=section.compare.matters.value / 100 if section.compare.matters else None,
+        reference=section.compare.reference or (groups[0][0] if groups else None),
+        until_min=until_min,
+        every_min=every_min,
+        warnings=tuple(_warnings(models, targets, variability)),
+    )
+
+
+def _models(section: StudyFile, path: Path, problems: list[Problem]) -> tuple[DrugModel, ...]:
+    models: list[DrugModel] = []
+    named = [("model", section.drug.model), *(("repeat_with", name) for name in section.drug.repeat_with)]
+    for key, name in named:
+        model = _sheet(name, f"drug: {key}", path, problems)
+        if model is not None:
+            models.append(model)
+    if models and len(models) == len(named):
+        for other in models[1:]:
+            if other.drug != models[0].drug:
+                problems.append(Problem(f"{path.name}: drug: repeat_with", f"{other.name}, a model of {other.drug}",
+                                        f"other models of {models[0].drug}"))
+        _check_unique("drug: model", [model.name for model in models], path, problems)
+    return tuple(models)
+
+
+def _sheet(name: str, where: str, path: Path, problems: list[Problem]) -> DrugModel | None:
+    if name.endswith(".toml") or name in shipped_sheets():
+        try:
+            return read_sheet(name, base=path.parent)
+        except ProblemsError as error:
+            problems.extend(error.problems)
+            return None
+    problems.append(Problem(f"{path.name}: {where}", f'"{name}", no such sheet', ", ".join(shipped_sheets()),
+                            nearest(name, shipped_sheets()) or "name your own sheet by its path, which ends in .toml"))
+    return None
+
+
+def _brought(section: PopulationSection, path: Path, problems: list[Problem]) -> dict[str, str]:
+    """What each patient brings: attribute -> "number", "condition" or "text"; "" for a list's own column."""
+    usual = {name: "text" if name == "sex" else "number" for name in SURVEY_ATTRIBUTES}
+    if section.source == "survey" or section.file is None:
+        return usual
+    try:
+        return {name: usual.get(name, "") for name in list_columns(path.parent / section.file)}
+    except ProblemsError as error:
+        problems.extend(error.problems)
+        return usual
+
+
+def _population(section: PopulationSection, brought: dict[str, str], path: Path,
+                problems: list[Problem]) -> Population:
+    def say(key: str, found: str, allowed: str, advice: str = "") -> None:
+        problems.append(Problem(f"{path.name}: population: {key}", found, allowed, advice))
+
+    for key in ("file", "on_bad_row"):
+        if section.source == "survey" and getattr(section, key) is not None:
+            say(key, f'given with source = "{section.source}"', 'only with source = "list"')
+    for name in section.set:
+        if name in brought or name in EQUATIONS:
+            say("set", f'"{name}"', "an attribute that the patients do not bring themselves",
+                "to narrow the population, give limits (age, weight, height, bmi, sex, where)")
+        elif not ATTRIBUTE_NAME.fullmatch(name) or name in (*FUNCTIONS, "true", "false", "patient", "label"):
+            say("set", shown(name), "a name of letters, digits and _ that no function has, such as opioid")
+    for name in section.scale:
+        if name in SCALED and name not in brought:
+            say("scale", f'"{name}", which is no column of the list', ", ".join(brought))
+    population = Population(
+        source=section.source,
+        count=section.count,
+        limits={name: (limit.low, limit.high) for name in LIMITED if (limit := getattr(section, name)) is not None},
+        sex=section.sex,
+        where=section.where,
+        set=dict(section.set),
+        scale=dict(section.scale),
+        file=None if section.file is None else path.parent / section.file,
+        on_bad_row=section.on_bad_row or "stop",
+    )
+    said = {problem.where for problem in problems}
+    problems.extend(replace(problem, where=where) for problem in population.problems()
+                    if (where := f"{path.name}: {problem.where}") not in said)
+    return population
+
+
+def _groups(section: StudyFile, path: Path, problems: list[Problem]) -> tuple[tuple[str, Formula], ...]:
+    names = [group.name for group in section.group]
+    _check_unique("group", names, path, problems)
+    for index, name in enumerate(names):
+        if name == "all":
+            problems.append(Problem(f"{path.name}: {key_path('group', index, 'name')}", '"all"', "any other name",
+                                    'the group "all" is always there'))
+    return tuple((group.name, group.where) for group in section.group)
+
+
+def _check_unique(what: str, names: Iterable[str], path: Path, problems: list[Problem]) -> None:
+    names = list(names)
+    for name in sorted({name for name in names if names.count(name) > 1}):
+        problems.append(Problem(f"{path.name}: {what}", f'"{name}" twice', "each name once"))
+
+
+def _check_grid(until_min: float, every_min: float, path: Path, problems: list[Problem]) -> None:
+    if until_min <= 0:
+        problems.append(Problem(f"{path.name}: run: until", f"{until_min:g} min", "a time above zero"))
+    if every_min <= 0:
+        problems.append(Problem(f"{path.name}: run: every", f"{every_min:g} min", "a time above zero"))
+    elif until_min / every_min > MOST_GRID_TIMES - 1:
+        problems.append(Problem(f"{path.name}: run: every", f"{until_min / every_min:.0f} times in the tables",
+                                f"at most {MOST_GRID_TIMES - 1}", "a longer step; time in range is exact whatever it is"))
+
+
+def _formulas(section: StudyFile) -> Iterable[tuple[tuple, Formula]]:
+    if section.population.where is not None:
+        yield ("population", "where"), section.population.where
+    for index, group in enumerate(section.group):
+        yield ("group", index, "where"), group.where
+    for index, protocol in enumerate(section.protocol):
+        for number, dose in enumerate(protocol.dose):
+            if dose.where is not None:
+                yield ("protocol", index, "dose", number, "where"), dose.where
+            for place, band in enumerate(dose.band):
+                yield ("protocol", index, "dose", number, "band", place, "where"), band.where
+
+
+def _check_formulas(section: StudyFile, attributes: dict[str, str], path: Path, problems: list[Problem]) -> None:
+    for key, formula in _formulas(section):
+        where = f"{path.name}: {key_path(*key)}"
+        for name, use in sorted(formula.uses):
+            fault = covariate_fault(name, attributes)
+            is_now = attributes.get(name, "number")
+            if fault is not None:
+                problems.append(Problem(where, *fault))
+            elif is_now not in ("", use):
+                allowed = f'a comparison, such as "{name} > 0"' if is_now == "number" else f'"{name}" or "not {name}"'
+                problems.append(Problem(where, f'"{name}" is {WORDS[is_now]} but is used as {WORDS[use]}', allowed))
+
+
+def _check_model_needs(models: tuple[DrugModel, ...], attributes: dict[str, str], path: Path,
+                       problems: list[Problem]) -> None:
+    for model in models:
+        for name, meaning in model.switches.items():
+            if name not in attributes:
+                problems.append(Problem(f"{path.name}: population: set", f"{name} is missing, and {model.name} needs it",
+                                        f"true or false ({meaning})", f"under [population.set]: {name} = true"))
+            elif attributes[name] not in ("", "condition"):
+                problems.append(Problem(f"{path.name}: population: set", f"{name} is {WORDS[attributes[name]]}",
+                                        f"true or false ({meaning})", f"under [population.set]: {name} = true"))
+        lacking = set().union(*(attributes_needed(name, attributes) for name in model.needs))
+        for name in sorted(lacking):
+            problems.append(Problem(f"{path.name}: population", f"no {name}, and {model.name} needs it",
+                                    f"a population with {name} ({ATTRIBUTES[name] or 'female, male'})"))
+
+
+def _variability(section: VariabilitySection, models: tuple[DrugModel, ...], path: Path,
+                 problems: list[Problem]) -> Variability:
+    def say(key: str, found: str, allowed: str, advice: str = "") -> None:
+        problems.append(Problem(f"{path.name}: {key}", found, allowed, advice))
+
+    borrowed = None
+    if section.from_ is not None:
+        borrowed = _sheet(section.from_, "variability: from", path, problems)
+        if not section.between_subject:
+            say("variability: from", "given with between_subject = false", "one of the two",
+                "typical patients have no variability to borrow")
+        if borrowed is not None and not borrowed.spread:
+            say("variability: from", f"{borrowed.name}, which publishes none itself",
+                "a sheet with between-subject variability")
+        if borrowed is not None and models and borrowed.drug != models[0].drug:
+            say("variability: from", f"{borrowed.name}, a model of {borrowed.drug}", f"a model of {models[0].drug}")
+    elif section.between_subject:
+        for model in models:
+            if not model.spread:
+                lenders = [name for name in shipped_sheets()
+                           if (other := read_sheet(name)).drug == model.drug and other.spread]
+                say("variability", f"{model.name} publishes no between-subject variability",
+                    "between_subject = false (typical patients), or from = another sheet",
+                    f"sheets of {model.drug} with variability: {', '.join(lenders)}" if lenders else "")
+    return Variability(section.between_subject, section.scale, borrowed)
+
+
+def _check_set_windows(section: StudyFile, targets: tuple[Target, ...], until_min: float, path: Path,
+                       problems: list[Problem]) -> None:
+    """A window whose end is set for everyone can be checked now; one from a list's column only with the patients."""
+    values = {name: value * (60.0 if name.endswith("_h") else 1.0) for name, value in section.population.set.items()}
+    for target in targets:
+        start, end = (values.get(edge, edge) for edge in (target.start, target.end))
+        known = not isinstance(start, str) and not isinstance(end, str)
+        if known and not 0 <= start <= end <= until_min:
+            problems.append(Problem(f"{path.name}: target: during", f"{start:g} min to {end:g} min",
+                                    f"a window from start to end, within the run ({until_min:g} min)"))
+
+
+def _check_compare(section: StudyFile, groups: list[str], path: Path, problems: list[Problem]) -> None:
+    matters, reference = section.compare.matters, section.compare.reference
+    if matters is not None and not 0 < matters.value <= 100:
+        problems.append(Problem(f"{path.name}: compare: matters", f'"{matters.text}"', "above 0 % and up to 100 %"))
+    if reference is not None and reference not in groups:
+        problems.append(Problem(f"{path.name}: compare: reference", f'"{reference}"', "the name of a [[group]]",
+                                nearest(reference, groups)))
+
+
+def _warnings(models: tuple[DrugModel, ...], targets: tuple[Target, ...], variability: Variability) -> Iterable[str]:
+    if len(models) > 1 and any(target.quantity == "effect_site" for target in targets):
+        yield ("Each ke0 defines an effect site of its own: an effect-site range does not mean the same under "
+               "another model, so these results are not to be compared between models.")
+    if variability.from_model is not None and variability.between_subject:
+        yield (f"Between-subject variability is borrowed from {variability.from_model.name} (volumes and clearances; "
+               "correlations that it does not give are taken to be 0).")
+    if not variability.between_subject:
+        yield "Typical patients: no between-subject variability, so these shares say nothing about single patients."
+    elif variability.scale != 1:
+        yield f"Between-subject variability is scaled by {variability.scale:g}."

@@ -1,0 +1,168 @@
+"""Counts -> the tables of a run. Shares are 0 to 1, concentrations mg/L, times min, at full precision."""
+
+from __future__ import annotations
+
+import math
+
+import numpy as np
+import pandas as pd
+
+from popsim import solve
+from popsim.compare import against_reference, protocol_pairs
+from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
+from popsim.records import Protocol, Study
+from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value
+
+FEW_PATIENTS = 400
+PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
+PERCENTILE_NAMES = ("p05", "p25", "p50", "p75", "p95")
+
+
+def attainment(study: Study, tally: Tally) -> pd.DataFrame:
+    """One row per model, protocol, group, target.
+
+    Failed and undosed patients stay in the denominator, but have no share of a window: time_below, time_in_range and
+    time_above are means over the others.
+    """
+    rows = []
+    for (m, p, t), counts in tally.targets.items():
+        low, high = wilson(counts.attained, tally.patients)
+        for g, group in enumerate(study.group_names):
+            n, failed = int(tally.patients[g]), int(counts.failed[g])
+            everyone, judged = n or math.nan, (n - failed) * ONE or math.nan
+            rows.append({
+                "model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
+                "target": study.targets[t].name, "patients": n, "failed": failed,
+                "attained": int(counts.attained[g]) / everyone, "attained_low": low[g], "attained_high": high[g],
+                "time_below": int(counts.below[g]) / judged, "time_in_range": int(counts.inside[g]) / judged,
+                "time_above": int(counts.above[g]) / judged,
+                "ever_far_below": int(counts.far_below[g]) / everyone,
+                "ever_far_above": int(counts.far_above[g]) / everyone,
+                "outside_model": int(tally.outside[m][g]) / everyone,
+                "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
+                "note": _note(n, failed)})
+    return pd.DataFrame(rows)
+
+
+def _note(patients: int, failed: int) -> str:
+    if patients == 0:
+        return "no patients in this group"
+    if no_headline(failed, patients):
+        return f"{_patients(failed)} failed or went without a dose, over {MOST_FAILED_PERCENT} %: no headline"
+    return f"under {FEW_PATIENTS} patients" if patients < FEW_PATIENTS else ""
+
+
+def over_time(study: Study, tally: Tally) -> pd.DataFrame:
+    """One row per model, protocol, group, target and time: shares of patients, percentiles of the course quantity.
+
+    Failed and undosed patients are left out, as they are of the mean times.
+    """
+    grid, parts = study.grid_min(), []
+    for (m, p, t), counts in tally.targets.items():
+        quantiles = solve.percentiles_from_bins(counts.bins, PERCENTILES)
+        for g, group in enumerate(study.group_names):
+            solved = counts.over_time[g].sum(axis=1)
+            with np.errstate(invalid="ignore"):
+                shares = counts.over_time[g] / solved[:, None]
+            parts.append(pd.DataFrame({
+                "model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
+                "target": study.targets[t].name, "time_min": grid,
+                "below": shares[:, 0], "in_range": shares[:, 1], "above": shares[:, 2],
+                **{name: quantiles[g, :, k] for k, name in enumerate(PERCENTILE_NAMES)}}))
+    return pd.concat(parts, ignore_index=True)
+
+
+COMPARISON_COLUMNS = ("model", "group", "target", "protocol_a", "protocol_b", "patients", "failed", "attained_a",
+                      "attained_b", "difference", "difference_low", "difference_high", "only_a", "only_b", "both",
+                      "neither", "verdict", "better")
+GROUP_COLUMNS = ("model", "protocol", "target", "group", "reference", "patients", "reference_patients", "attained",
+                 "reference_attained", "difference", "difference_low", "difference_high", "failed", "reference_failed", "note")
+
+
+def comparison(study: Study, tally: Tally) -> pd.DataFrame:
+    return pd.DataFrame(protocol_pairs(study, tally), columns=list(COMPARISON_COLUMNS))
+
+
+def groups(study: Study, tally: Tally) -> pd.DataFrame:
+    return pd.DataFrame(against_reference(study, tally), columns=list(GROUP_COLUMNS))
+
+
+def doses(study: Study, tally: Tally) -> pd.DataFrame:
+    """What they really receive until the run's end, by protocol and group; doses to four significant digits."""
+    rows = []
+    for p, protocol in enumerate(study.protocols):
+        counts = tally.doses[p]
+        for g, group in enumerate(study.group_names):
+            n = int(tally.patients[g])
+            row: dict = {"protocol": protocol.name, "group": group, "patients": n}
+            for measure, keys in counts.doses.items():
+                row |= {f"{measure}_{name}": decimal_quantile(keys[g], share)
+                        for name, share in zip(PERCENTILE_NAMES, PERCENTILES, strict=True)}
+            row |= {f"share_{name}": int(values[g]) / n if n else math.nan for name, values in counts.counts.items()}
+            rows.append(row | _prepared(protocol, row, counts.doses["total_mg"][g]))
+    return pd.DataFrame(rows)
+
+
+def _prepared(protocol: Protocol, row: dict, counted: np.ndarray) -> dict:
+    """Volumes and vials from the same quantiles, and the mean left over in opened vials; empty where the study gives
+    no strength or vial."""
+    cells: dict = {}
+    for name in ("p05", "p50", "p95"):
+        total = row[f"total_mg_{name}"]
+        volume = total / protocol.strength_mg_per_ml if protocol.strength_mg_per_ml else math.nan
+        cells[f"volume_ml_{name}"] = volume
+        whole = protocol.vial_ml is not None and not math.isnan(volume)
+        cells[f"vials_{name}"] = math.ceil(volume / protocol.vial_ml - 1e-9) if whole else math.nan
+    cells["waste_ml_mean"] = _mean_waste_ml(protocol, counted)
+    return cells
+
+
+def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
+    """Patients are counted by total mg; each opens whole vials of their own."""
+    if protocol.strength_mg_per_ml is None or protocol.vial_ml is None or not counted.any():
+        return math.nan
+    keys = np.flatnonzero(counted)
+    volume = np.array([decimal_value(int(key)) for key in keys]) / protocol.strength_mg_per_ml
+    waste = np.ceil(volume / protocol.vial_ml - 1e-9) * protocol.vial_ml - volume
+    return math.fsum(counted[keys] * waste) / int(counted.sum())
+
+
+TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses}
+
+
+def all_tables(study: Study, tally: Tally) -> dict[str, pd.DataFrame]:
+    """Every table of a run that has no row per patient, by name."""
+    return {name: build(study, tally) for name, build in TABLES.items()}
+
+
+def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
+    """What a reader must know beside the numbers: warnings, who could not be simulated, doses that cannot be given."""
+    study, tally = findings.study, findings.tally
+    notes = list(study.warnings)
+    for name, factor in study.population.scale.items():
+        notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
+    if findings.rows_skipped:
+        notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
+    for (m, code), count in sorted(tally.statuses.items()):
+        notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "
+                     f"({solve.STATUS[code]}): not attained.")
+    for p, protocol in enumerate(study.protocols):
+        for name, what in (("impossible", "with a dose that comes out as zero"), ("undosed", "without any dose")):
+            count = int(tally.doses[p].counts[name][0])
+            if count:
+                notes.append(f'"{protocol.name}": {_patients(count)} {what}.')
+    for model in study.models:
+        if model.spread_note and study.variability.between_subject:
+            notes.append(f"{model.name}: {model.spread_note}")
+    few = sorted(set(tables["attainment"].query("0 < patients < @FEW_PATIENTS")["group"]))
+    if few:
+        notes.append(f"Fewer than {FEW_PATIENTS} patients in: {', '.join(few)}.")
+    overlapping = sorted(set(tables["groups"].query("note != ''")["group"]))
+    if overlapping:
+        notes.append(f'No difference to the reference group "{study.reference}" for groups that share patients with it: '
+                     f"{', '.join(overlapping)}.")
+    return notes
+
+
+def _patients(count: int) -> str:
+    return f"{count} patient" if count == 1 else f"{count} patients"

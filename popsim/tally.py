@@ -1,0 +1,207 @@
+"""Counts over patients. Only integers are added, so the order of blocks and threads cannot change a digit."""
+
+from __future__ import annotations
+
+from dataclasses import dataclass, field
+from itertools import combinations
+
+import numpy as np
+
+from covariates.problems import Problem, ProblemsError
+from popsim import solve
+from popsim.records import Judged, Received, Study
+
+ONE = 2**32  # a share of 1 as a fixed-point integer
+DIGITS = 4  # doses are counted to four significant digits
+LOWEST_DECADE, DECADES = -9, 18
+
+
+@dataclass
+class TargetTally:
+    """One model, protocol and target; (groups,) integers, and the over-time counts."""
+
+    failed: np.ndarray
+    attained: np.ndarray
+    below: np.ndarray
+    inside: np.ndarray
+    above: np.ndarray
+    far_below: np.ndarray
+    far_above: np.ndarray
+    over_time: np.ndarray  # (groups, times, 3): below, in range, above
+    bins: np.ndarray  # (groups, times, bins) of the course quantity
+
+    def add(self, judged: Judged, members: np.ndarray) -> None:
+        fine = ~judged.failed
+        below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
+                         for share in (judged.below, judged.inside))
+        columns = {"failed": judged.failed, "attained": judged.attained, "below": below, "inside": inside,
+                   "above": np.where(fine, ONE - below - inside, 0), "far_below": judged.far_below,
+                   "far_above": judged.far_above}
+        for name, values in columns.items():
+            getattr(self, name)[:] += members.T @ values.astype(np.int64)
+
+
+@dataclass
+class PairTally:
+    """Two protocols in the same patients under one model and target; (groups,) integers."""
+
+    failed: np.ndarray
+    both: np.ndarray
+    only_a: np.ndarray
+    only_b: np.ndarray
+    neither: np.ndarray
+
+    def add(self, a: Judged, b: Judged, members: np.ndarray) -> None:
+        columns = {"failed": a.failed | b.failed, "both": a.attained & b.attained, "only_a": a.attained & ~b.attained,
+                   "only_b": ~a.attained & b.attained, "neither": ~a.attained & ~b.attained}
+        for name, values in columns.items():
+            getattr(self, name)[:] += members.T @ values.astype(np.int64)
+
+
+@dataclass
+class DoseTally:
+    """What one protocol gives; doses counted by group to four significant digits."""
+
+    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, undosed: (groups,)
+    doses: dict[str, np.ndarray]  # total_mg, mg_per_kg_total, mg_per_kg_lean: (groups, keys)
+
+    def add(self, received: Received, per: dict[str, np.ndarray], members: np.ndarray) -> None:
+        """`per` gives the divisor in kg of each per-kg measure that these patients have."""
+        for name, counts in self.counts.items():
+            counts += members.T @ getattr(received, name).astype(np.int64)
+        for name, divisor in {"total_mg": 1.0, **per}.items():
+            keys = decimal_keys(received.total_mg / divisor)
+            for group in range(members.shape[1]):
+                np.add.at(self.doses[name][group], keys[members[:, group] > 0], 1)
+
+
+@dataclass
+class Tally:
+    """All counts of a study; one per thread, added up at the end."""
+
+    patients: np.ndarray  # (groups,)
+    outside: dict[int, np.ndarray]  # model -> (groups,)
+    beyond: dict[tuple[int, str], np.ndarray]  # model, attribute -> (groups,)
+    long_infusion: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
+    targets: dict[tuple[int, int, int], TargetTally]  # model, protocol, target
+    pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
+    doses: dict[int, DoseTally]  # protocol
+    overlap: np.ndarray  # (groups, groups) patients in both
+    statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+
+    @classmethod
+    def empty(cls, study: Study, times: int) -> Tally:
+        groups = len(study.group_names)
+        models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
+
+        def zeros() -> np.ndarray:
+            return np.zeros(groups, dtype=np.int64)
+
+        def target_tally() -> TargetTally:
+            return TargetTally(*(zeros() for _ in range(7)),
+                               over_time=np.zeros((groups, times, 3), dtype=np.int64),
+                               bins=np.zeros((groups, times, solve.BIN_COUNT), dtype=np.int32))
+
+        def dose_tally() -> DoseTally:
+            return DoseTally(
+                {name: zeros() for name in ("capped", "floored", "rounded", "impossible", "undosed")},
+                {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
+                 for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
+
+        return cls(
+            patients=zeros(),
+            outside={m: zeros() for m in models},
+            beyond={(m, name): zeros() for m in models for name in _range_names(study.models[m])},
+            long_infusion={(m, p): zeros() for m in models for p in protocols},
+            targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
+            pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
+                   for m in models for t in targets for a, b in combinations(protocols, 2)},
+            doses={p: dose_tally() for p in protocols},
+            overlap=np.zeros((groups, groups), dtype=np.int64),
+        )
+
+    def merge(self, other: Tally) -> None:
+        """Add another thread's counts to this one's."""
+        for mine, theirs in zip(_arrays(self), _arrays(other), strict=True):
+            mine += theirs
+        for key, count in other.statuses.items():
+            self.statuses[key] = self.statuses.get(key, 0) + count
+
+    def add_statuses(self, model: int, status: np.ndarray) -> None:
+        for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
+            key = (model, int(code))
+            self.statuses[key] = self.statuses.get(key, 0) + int(count)
+
+
+@dataclass(frozen=True)
+class Findings:
+    """What a run found: counts, and how it went."""
+
+    study: Study
+    tally: Tally
+    candidates_seen: int
+    candidates_eligible: int
+    rows_skipped: int
+    seconds: float
+    threads: int
+
+
+def _range_names(model) -> list[str]:
+    return [*model.built_on.ranges, *(["sex"] if model.built_on.sex is not None else [])]
+
+
+def _arrays(tally: Tally) -> list[np.ndarray]:
+    """Every counting array of a tally, always in the same order."""
+    found = [tally.patients, tally.overlap]
+    for table in (tally.outside, tally.beyond, tally.long_infusion):
+        found += table.values()
+    for table in (tally.targets, tally.pairs):
+        for entry in table.values():
+            found += vars(entry).values()
+    for entry in tally.doses.values():
+        found += [*entry.counts.values(), *entry.doses.values()]
+    return found
+
+
+MANTISSAS = 9 * 10 ** (DIGITS - 1)
+KEY_COUNT = 1 + DECADES * MANTISSAS
+HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
+
+
+def decimal_keys(values: np.ndarray) -> np.ndarray:
+    """Each value rounded to four significant digits, as an index: 0 for zero, then ascending.
+
+    Raises ProblemsError for a dose that cannot be counted: not a number, below zero, or outside 1e-9 to 1e9.
+    """
+    positive = values > 0
+    within = (values >= 10.0**LOWEST_DECADE) & (values < HIGHEST)
+    if not (within | (values == 0)).all():
+        wrong = values[~(within | (values == 0))][0]
+        raise ProblemsError(Problem("doses", f"a total of {wrong:g} mg, or mg/kg, in a patient",
+                                    f"0, or {10.0**LOWEST_DECADE:g} to {HIGHEST:g}", "check the units of the doses"))
+    safe = np.where(positive, values, 1.0)
+    decade = np.floor(np.log10(safe)).astype(np.int64)
+    mantissa = np.rint(safe / 10.0 ** (decade - DIGITS + 1)).astype(np.int64)
+    carried = mantissa >= 10**DIGITS  # 9999.7 rounds up into the next decade
+    decade, mantissa = np.where(carried, decade + 1, decade), np.where(carried, 10 ** (DIGITS - 1), mantissa)
+    short = mantissa < 10 ** (DIGITS - 1)  # log10 may round up just below a power of ten
+    mantissa = np.where(short, 10 ** (DIGITS - 1), mantissa)
+    keys = 1 + (decade - LOWEST_DECADE) * MANTISSAS + mantissa - 10 ** (DIGITS - 1)
+    return np.where(positive, keys, 0)
+
+
+def decimal_value(key: int) -> float:
+    """The value of a key of `decimal_keys`: 600.0 for the key of 600.04."""
+    if key == 0:
+        return 0.0
+    decade, mantissa = divmod(key - 1, MANTISSAS)
+    return float(f"{mantissa + 10 ** (DIGITS - 1)}e{decade + LOWEST_DECADE - DIGITS + 1}")
+
+
+def decimal_quantile(counts: np.ndarray, share: float) -> float:
+    """Smallest counted value with at least `share` of the counts at or below it; NaN without counts."""
+    total = int(counts.sum())
+    if total == 0:
+        return float("nan")
+    needed = max(int(np.ceil(share * total - 1e-9)), 1)
+    return decimal_value(int(np.searchsorted(np.cumsum(counts), needed)))

@@ -1,0 +1,231 @@
+"""Dose steps -> what each patient is given, and when. Sees covariates only, never drawn parameters."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from dataclasses import dataclass
+
+import numpy as np
+
+from covariates.problems import Problem, ProblemsError
+from covariates.units import Quantity
+from popsim.records import DoseStep, DoseVariant, Protocol, Received, Timeline
+
+GAP_MIN = 1e-9  # between two infusions: no pause, but the rounding of start + duration
+ROUNDING_SLACK = 1e-9  # 0.15 mg in steps of 0.1 mg is 1.4999999999999998 steps, and must round up
+Lookup = Callable[[str], np.ndarray]
+
+
+@dataclass(frozen=True)
+class Administration:
+    """One administration of dose step `step`: (n,) arrays. A bolus has duration 0; who does not get it has amount 0."""
+
+    step: int
+    start_min: float
+    duration_min: np.ndarray
+    amount_mg: np.ndarray
+    gets_it: np.ndarray
+
+
+@dataclass
+class Changes:
+    """(n,) bool each: who had any administration changed on its way from the card to the syringe."""
+
+    capped: np.ndarray
+    floored: np.ndarray
+    rounded: np.ndarray
+    impossible: np.ndarray
+
+    @classmethod
+    def none(cls, n: int) -> Changes:
+        return cls(*(np.zeros(n, dtype=bool) for _ in range(4)))
+
+
+def build_timeline(protocol: Protocol, lookup: Lookup, n: int, until_min: float) -> tuple[Timeline, Received]:
+    """The events of n patients under a protocol, and what they receive until the run's end.
+
+    Raises ProblemsError when a patient falls in two bands of a step, or in none, or is reached by no step at all,
+    unless the protocol allows patients without a dose.
+    """
+    administrations, changes = administrations_of(protocol, lookup, n, until_min)
+    reached = np.zeros(n, dtype=bool)
+    for administration in administrations:
+        reached |= administration.gets_it
+    if not protocol.no_dose_allowed and not reached.all():
+        raise _left_out(protocol, "no dose step covers", ~reached)
+    timeline, longest = _events(administrations, n, until_min)
+    total = np.zeros(n)
+    for administration in administrations:
+        total += _within_run(administration, until_min)
+    received = Received(total, changes.capped, changes.floored, changes.rounded, changes.impossible, total == 0, longest)
+    return timeline, received
+
+
+def administrations_of(protocol: Protocol, lookup: Lookup, n: int,
+                       until_min: float) -> tuple[list[Administration], Changes]:
+    """Every administration of a protocol to n patients, after floors, caps and rounding."""
+    changes = Changes.none(n)
+    administrations: list[Administration] = []
+    for step in protocol.steps:
+        administrations += _of_step(protocol, step, lookup, n, until_min, changes)
+    return administrations, changes
+
+
+def as_given(wanted: np.ndarray, at_least: float | None, at_most: float | None,
+             round_to: float | None) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
+    """Floor, cap, round half up, never above the cap: (given, floored, capped, rounded).
+
+    105 mg with a cap of 100 mg and steps of 15 mg is given as 90 mg: 100 would round up to 105, above the cap.
+    """
+    given = np.array(wanted, dtype=np.float64)
+    floored = np.zeros(len(given), dtype=bool)
+    capped = np.zeros(len(given), dtype=bool)
+    rounded = np.zeros(len(given), dtype=bool)
+    if at_least is not None:
+        floored = given < at_least
+        given[floored] = at_least
+    if at_most is not None:
+        capped = given > at_most
+        given[capped] = at_most
+    if round_to is not None:
+        steps = np.floor(given / round_to + 0.5 + ROUNDING_SLACK)
+        if at_most is not None:
+            steps = np.minimum(steps, np.floor(at_most / round_to + ROUNDING_SLACK))
+        in_steps = steps * round_to
+        rounded = np.abs(in_steps - given) > ROUNDING_SLACK * np.maximum(given, round_to)
+        given = np.where(rounded, in_steps, given)
+    return given, floored, capped, rounded
+
+
+def _of_step(protocol: Protocol, step: DoseStep, lookup: Lookup, n: int, until_min: float,
+             changes: Changes) -> list[Administration]:
+    reach = np.ones(n, dtype=bool) if step.where is None else _holds(step.where, lookup, n)
+    covered = np.zeros(n, dtype=np.int64)
+    administrations = []
+    for variant in step.variants:
+        gets_it = reach if variant.where is None else reach & _holds(variant.where, lookup, n)
+        covered += gets_it
+        if gets_it.any():
+            amount, duration = _one_administration(step, variant, lookup, gets_it, until_min, changes)
+            administrations += [Administration(step.number, start, duration, amount, gets_it)
+                                for start in _starts(step, variant, until_min)]
+    if (covered > 1).any():
+        raise ProblemsError(Problem(f'protocol "{protocol.name}", dose {step.number}: band',
+                                    f"two bands cover {(covered > 1).sum():,} of {n:,} patients looked at",
+                                    "bands that do not overlap", 'such as "age < 65" and "age >= 65"'))
+    uncovered = reach & (covered == 0)
+    if uncovered.any() and not protocol.no_dose_allowed:
+        raise _left_out(protocol, f"no band of dose {step.number} covers", uncovered)
+    return administrations
+
+
+def _holds(condition, lookup: Lookup, n: int) -> np.ndarray:
+    return np.broadcast_to(np.asarray(condition.evaluate(lookup), dtype=bool), (n,))
+
+
+def _left_out(protocol: Protocol, nothing_covers: str, who: np.ndarray) -> ProblemsError:
+    return ProblemsError(Problem(
+        f'protocol "{protocol.name}"', f"{nothing_covers} {who.sum():,} of {len(who):,} patients looked at",
+        "each patient covered by the dose steps",
+        'no_dose = "allowed" in the protocol, if going without is meant'))
+
+
+def _scaled(quantity: Quantity, step: DoseStep, lookup: Lookup, gets_it: np.ndarray) -> np.ndarray:
+    """mg or mg/min for each patient; a size by which nobody can be dosed is refused."""
+    if quantity.kind in ("mass", "rate"):
+        return np.full(len(gets_it), quantity.value)
+    size = np.broadcast_to(lookup(step.by), gets_it.shape)
+    unfit = gets_it & ~((size > 0) & np.isfinite(size))
+    if unfit.any():
+        raise ProblemsError(Problem(f"dose {step.number}: {quantity.text} by {step.by}",
+                                    f"{step.by} is zero, negative or unknown in {unfit.sum():,} patients",
+                                    "a size above zero", "dose by another size, or let where leave these patients out"))
+    return quantity.value * size
+
+
+def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, gets_it: np.ndarray, until_min: float,
+                        changes: Changes) -> tuple[np.ndarray, np.ndarray]:
+    """Amount in mg and duration in min of each administration of a step."""
+    n = len(gets_it)
+    wanted = _scaled(variant.amount or variant.rate, step, lookup, gets_it)
+    given, floored, capped, rounded = as_given(wanted, step.at_least, step.at_most, step.round_to)
+    changes.floored |= floored & gets_it
+    changes.capped |= capped & gets_it
+    changes.rounded |= rounded & gets_it
+    changes.impossible |= ~(given > 0) & gets_it
+    given = np.where(gets_it, given, 0.0)
+    if variant.amount is None:
+        end = variant.at_min + step.over_min if step.over_min is not None else step.until_min
+        duration = np.full(n, end - variant.at_min)
+        return given * duration, duration
+    if variant.rate is not None:
+        duration = np.zeros(n)
+        np.divide(given, _scaled(variant.rate, step, lookup, gets_it), out=duration, where=gets_it)
+        return given, duration
+    return given, np.full(n, step.over_min or 0.0)
+
+
+def _starts(step: DoseStep, variant: DoseVariant, until_min: float) -> list[float]:
+    """Times of the administrations: all counted by `times`, else repeated until before `until` or the run's end."""
+    if variant.every_min is None:
+        return [variant.at_min]
+    if step.times is not None:
+        count = step.times
+    else:
+        end = until_min if step.until_min is None else min(step.until_min, until_min)
+        count = max(int(np.ceil((end - variant.at_min) / variant.every_min - 1e-9)), 1)
+    starts = [variant.at_min + k * variant.every_min for k in range(count)]
+    return [start for start in starts if start <= until_min]
+
+
+def _within_run(administration: Administration, until_min: float) -> np.ndarray:
+    duration = administration.duration_min
+    share = np.ones(len(duration))
+    np.divide(until_min - administration.start_min, duration, out=share, where=duration > 0)
+    return administration.amount_mg * np.clip(share, 0.0, 1.0)
+
+
+def _events(administrations: list[Administration], n: int, until_min: float) -> tuple[Timeline, np.ndarray]:
+    """Events in order of time for each patient, and the longest infusion at one stretch."""
+    columns = 2 * len(administrations) or 1
+    time = np.full((n, columns), np.inf)
+    bolus = np.zeros((n, columns))
+    rate_change = np.zeros((n, columns))
+    running = np.zeros((n, columns), dtype=np.int64)
+    for k, administration in enumerate(administrations):
+        infused = administration.gets_it & (administration.duration_min > 0)
+        at_once = administration.gets_it & (administration.duration_min == 0)
+        rate = np.zeros(n)
+        np.divide(administration.amount_mg, administration.duration_min, out=rate, where=infused)
+        begin, end = 2 * k, 2 * k + 1
+        time[administration.gets_it, begin] = administration.start_min
+        bolus[at_once, begin] = administration.amount_mg[at_once]
+        rate_change[:, begin] = rate
+        running[rate > 0, begin] = 1
+        time[infused, end] = administration.start_min + administration.duration_min[infused]
+        rate_change[:, end] = -rate
+        running[rate > 0, end] = -1
+    order = np.argsort(time, axis=1, kind="stable")
+    time, bolus, rate_change, running = (np.take_along_axis(array, order, axis=1)
+                                         for array in (time, bolus, rate_change, running))
+    active = np.cumsum(running, axis=1)
+    # no infusion running is exactly no rate, whatever the rounding of the sum
+    rate = np.where(active > 0, np.maximum(np.cumsum(rate_change, axis=1), 0.0), 0.0)
+    used = max(int(np.isfinite(time).any(axis=0).sum()), 1)
+    timeline = Timeline(*(np.ascontiguousarray(array[:, :used]) for array in (time, bolus, rate)))
+    return timeline, _longest_infusion(timeline, until_min)
+
+
+def _longest_infusion(timeline: Timeline, until_min: float) -> np.ndarray:
+    """Longest stretch of minutes with a rate above zero, up to the run's end."""
+    n, columns = timeline.time_min.shape
+    longest, stretch = np.zeros(n), np.zeros(n)
+    for j in range(columns):
+        start = np.minimum(timeline.time_min[:, j], until_min)
+        following = timeline.time_min[:, j + 1] if j + 1 < columns else np.full(n, np.inf)
+        span = np.minimum(following, until_min) - start
+        flowing = timeline.rate_mg_per_min[:, j] > 0
+        # events at one time (one infusion ends, the next begins) do not break a stretch
+        stretch = np.where(flowing, stretch + span, np.where(span > GAP_MIN, 0.0, stretch))
+        longest = np.maximum(longest, stretch)
+    return longest

@@ -1,0 +1,137 @@
+"""Numbers and findings in words, the same for terminal, pictures and report. Nothing is computed here that a table lacks."""
+
+from __future__ import annotations
+
+import math
+
+import pandas as pd
+
+from covariates.sheet import DrugModel
+from popsim.estimate import MOST_FAILED_PERCENT, no_headline
+from popsim.records import Protocol, Study, Target
+
+
+def percent(share: float, digits: int = 1) -> str:
+    """0.8413 is "84.1"; a share that exists but rounds to nothing is "<0.1", one short of all ">99.9"."""
+    if math.isnan(share):
+        return "-"
+    shown, least = f"{100 * share:.{digits}f}", 10.0**-digits
+    if share > 0 and float(shown) == 0:
+        return f"<{least:.{digits}f}"
+    if share < 1 and float(shown) == 100:
+        return f">{100 - least:.{digits}f}"
+    return shown
+
+
+def points(difference: float) -> str:
+    """A difference of shares in percentage points, signed: -0.271 is "-27.1"; what rounds to nothing is "0.0"."""
+    if math.isnan(difference):
+        return "-"
+    shown = f"{100 * difference:+.1f}"
+    return "0.0" if float(shown) == 0 else shown
+
+
+def clock(minutes: float) -> str:
+    """0.5 is "30 s", 90 is "90 min", 1440 is "24 h"."""
+    if 0 < minutes < 1:
+        return f"{minutes * 60:g} s"
+    if minutes >= 240 and minutes % 60 == 0:
+        return f"{minutes / 60:g} h"
+    return f"{minutes:g} min"
+
+
+def window(target: Target) -> str:
+    """The window of a target: "15 min to 60 min", or an instant."""
+    start, end = (edge if isinstance(edge, str) else clock(edge) for edge in (target.start, target.end))
+    return f"at {start}" if target.instant else f"{start} to {end}"
+
+
+def target_line(target: Target) -> str:
+    quantity = {"effect_site": "effect site", "plasma": "plasma", "effect": "effect"}[target.quantity]
+    described = f"{quantity} {target.range_text}"
+    # a target that the study does not name is called by its range already
+    name = target.name if target.name.endswith(target.range_text) else f"{target.name}: {described}"
+    return f"{name}, {window(target)}, attained when in range {target.rule_text}"
+
+
+def sides_line(target: Target, model: DrugModel) -> str:
+    """What lies below and above an effect's range, where the sheet says: "below is too deep, above is too light"."""
+    if target.quantity != "effect" or model.effect is None:
+        return ""
+    meanings = (("below", model.effect.low_means), ("above", model.effect.high_means))
+    return ", ".join(f"{side} is {meaning}" for side, meaning in meanings if meaning)
+
+
+def per_kg_line(protocol: Protocol) -> str:
+    """What a "/kg" or "/m2" of a protocol means: "per kg of total body weight"; fixed doses are the same for everyone."""
+    scaled = {("m2" if "m2" in dose.kind else "kg", step.by)
+              for step in protocol.steps for variant in step.variants for dose in (variant.amount, variant.rate)
+              if dose is not None and "_per_" in dose.kind}
+    if not scaled:
+        return "not scaled by body size"
+    return " and ".join(f"per {unit} of {'total body weight' if by == 'weight' else by.replace('_', ' ')}"
+                        for unit, by in sorted(scaled))
+
+
+def finding(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, group: str, target: str,
+            model: str) -> str:
+    """What the numbers say of one group, in one sentence."""
+    where = "Among all patients" if group == "all" else f'In the group "{group}"'
+    rows = _of(attainment, group, target, model)
+    if not (rows["patients"] > 0).all():
+        return f"{where}: no patients."
+    if no_headline(rows["failed"], rows["patients"]).any():
+        return (f"{where}: no headline, since more than {MOST_FAILED_PERCENT} % could not be simulated or went "
+                "without a dose.")
+    if len(rows) == 1:
+        row = rows.iloc[0]
+        return (f"{where}, {percent(row.attained)} % attain the target "
+                f"({percent(row.attained_low)} to {percent(row.attained_high)} %).")
+    pairs = _of(comparison, group, target, model)
+    if len(pairs) == 1:
+        pair = pairs.iloc[0]
+        return (f'{where}, {percent(pair.attained_a)} % attain the target with "{pair.protocol_a}", '
+                f'{percent(pair.attained_b)} % with "{pair.protocol_b}": {_difference(pair)}.')
+    best, following = rows.sort_values("attained", ascending=False, kind="stable")["protocol"].iloc[:2]
+    pair = _pair_ending_in(best, following, pairs)
+    return (f'{where}, "{best}" has the most patients on target, {percent(pair.attained_b)} %, before "{following}", '
+            f"{percent(pair.attained_a)} %: {_difference(pair)}.")
+
+
+def _of(table: pd.DataFrame, group: str, target: str, model: str) -> pd.DataFrame:
+    return table[(table["group"] == group) & (table["target"] == target) & (table["model"] == model)]
+
+
+def _pair_ending_in(second: str, first: str, pairs: pd.DataFrame) -> pd.Series:
+    """The row that compares two protocols, as `second` minus `first`."""
+    pair = pairs[pairs["protocol_a"].isin((first, second)) & pairs["protocol_b"].isin((first, second))].iloc[0].copy()
+    if pair.protocol_a == second:
+        pair[["protocol_a", "protocol_b", "attained_a", "attained_b"]] = [
+            pair.protocol_b, pair.protocol_a, pair.attained_b, pair.attained_a]
+        pair[["difference", "difference_low", "difference_high"]] = [
+            -pair.difference, -pair.difference_high, -pair.difference_low]
+    return pair
+
+
+def _difference(pair: pd.Series) -> str:
+    limits = f"{points(pair.difference_low)} to {points(pair.difference_high)}"
+    said = f"{points(pair.difference)} points ({limits})"
+    if pair.verdict == "too small to matter":
+        return f"{said}, too small to matter"
+    if pair.difference_low <= 0 <= pair.difference_high:
+        return f"no clear difference ({limits} points)"
+    return f"{said}, not clear whether it matters" if pair.verdict == "not clear" else said
+
+
+def short_finding(pair: pd.Series) -> str:
+    """A picture's title for one pair: which protocol does better, by how much, or that it is not clear."""
+    if pair.patients == 0:
+        return "no patients"
+    if no_headline(pair.failed, pair.patients):
+        return "no headline: too many failed"
+    if pair.verdict == "too small to matter":
+        return "difference too small to matter"
+    if pair.difference_low <= 0 <= pair.difference_high:
+        return "no clear difference"
+    better = pair.protocol_b if pair.difference > 0 else pair.protocol_a
+    return f"{better}: {abs(100 * pair.difference):.0f} points more on target"

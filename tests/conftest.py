@@ -1,0 +1,13 @@
+"""What all tests share: no screen, nothing written into the repository."""
+
+import os
+
+os.environ.setdefault("MPLBACKEND", "Agg")
+
+try:
+    from hypothesis import settings
+except ImportError:  # only the property tests need it
+    pass
+else:
+    settings.register_profile("popsim", database=None, deadline=None, derandomize=True)
+    settings.load_profile("popsim")

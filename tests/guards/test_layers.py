@@ -1,0 +1,92 @@
+"""Data flows one way: a test walks the import statements."""
+
+import ast
+from pathlib import Path
+
+import covariates
+import popsim
+
+COVARIATES = Path(covariates.__file__).parent
+POPSIM = Path(popsim.__file__).parent
+
+# In order of the flow: a module may import only what stands before it.
+FLOW = [
+    "errors", "cautions", "lookup", "streams", "kernels",
+    "patients.survey", "patients.population", "patients.fit_survey", "records",
+    "patients.listed", "patients.draw", "study_file", "study_protocols", "study_targets", "study",
+    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
+    "tally", "run", "compare", "tables", "words", "ward_card", "provenance", "output",
+    "drawing", "pictures", "report", "terminal", "check_text", "progress",
+    "commands.new", "commands.check", "commands.judge", "cli",
+]  # fmt: skip
+# Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
+STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
+
+
+def modules(folder: Path) -> dict[str, Path]:
+    found = {}
+    for path in sorted(folder.rglob("*.py")):
+        if path.name != "__init__.py":
+            found[".".join(path.relative_to(folder).with_suffix("").parts)] = path
+    return found
+
+
+def imported(path: Path, package: str) -> set[str]:
+    """Modules of `package` that a file imports anywhere, also inside functions."""
+    names = set()
+    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
+            rest = node.module[len(package) + 1:]
+            inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
+            names |= inside if rest in ("", "patients", "commands") else {rest}
+        if isinstance(node, ast.Import):
+            names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
+    return names
+
+
+def outside_packages(path: Path) -> set[str]:
+    names = set()
+    for node in ast.walk(ast.parse(path.read_text(encoding="utf-8"))):
+        if isinstance(node, ast.ImportFrom) and node.module:
+            names.add(node.module.split(".")[0])
+        if isinstance(node, ast.Import):
+            names |= {alias.name.split(".")[0] for alias in node.names}
+    return names
+
+
+def test_every_module_has_its_place_in_the_flow():
+    assert sorted(modules(POPSIM)) == sorted(FLOW)
+
+
+def test_imports_follow_the_flow():
+    for name, path in modules(POPSIM).items():
+        later = [other for other in imported(path, "popsim") if FLOW.index(other) >= FLOW.index(name)]
+        assert not later, f"popsim/{name} imports what comes after it: {later}"
+
+
+def test_steps_do_not_import_steps():
+    for name, path in modules(POPSIM).items():
+        if name in STEPS:
+            assert not imported(path, "popsim") & STEPS - {name}, f"step {name} imports a step"
+
+
+def test_covariates_stand_alone():
+    for name, path in modules(COVARIATES).items():
+        assert not imported(path, "popsim"), f"covariates/{name} imports popsim"
+        heavy = outside_packages(path) & {"pandas", "numba", "scipy", "matplotlib", "seaborn", "pydantic", "click", "jinja2"}
+        assert not heavy, f"covariates/{name} imports {heavy}"
+
+
+def test_numba_only_in_kernels_and_kernels_import_nothing_of_ours():
+    for name, path in modules(POPSIM).items():
+        assert ("numba" in outside_packages(path)) == (name == "kernels")
+    kernels = POPSIM / "kernels.py"
+    assert outside_packages(kernels) <= {"__future__", "math", "numpy", "numba"}
+
+
+def test_init_files_hold_no_code():
+    for folder in (COVARIATES, POPSIM):
+        for path in folder.rglob("__init__.py"):
+            statements = ast.parse(path.read_text(encoding="utf-8")).body
+            allowed = 1 if path == POPSIM / "__init__.py" else 0
+            assert len(statements) <= allowed, path
