@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import signal
 import sys
 
 import click
@@ -13,7 +14,7 @@ from popsim.commands.judge import judge
 from popsim.commands.new import new
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
-INTERRUPTED = 130  # what a shell expects of a program stopped by Ctrl-C
+INTERRUPTED = 130  # what a shell expects of a program that was stopped
 
 
 @click.group(context_settings={"help_option_names": ["-h", "--help"], "max_content_width": 80})
@@ -37,6 +38,7 @@ for command in (new, check, judge):
 
 def main() -> None:
     """Run a command; every message goes to stderr, every way out through one exit code."""
+    signal.signal(signal.SIGTERM, signal.default_int_handler)  # stopped from outside: tidied up as after Ctrl-C
     for stream in (sys.stdout, sys.stderr):
         stream.reconfigure(errors="replace")  # a title with signs that the terminal cannot show is no reason to stop
     sys.exit(run(sys.argv[1:]))

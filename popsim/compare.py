@@ -41,7 +41,7 @@ def _share(count: int, patients: int) -> float:
 
 
 def against_reference(study: Study, tally: Tally) -> list[dict]:
-    """One row per model, protocol, target and group; differences are group - reference, refused where groups overlap."""
+    """One row per model, protocol, target, group; differences are group - reference, refused where groups overlap."""
     if study.reference is None:
         return []
     names = study.group_names

@@ -12,16 +12,19 @@ from pathlib import Path
 import numpy as np
 from matplotlib import style
 from matplotlib.axes import Axes
+from matplotlib.axis import Axis
 from matplotlib.figure import Figure
 from matplotlib.font_manager import FontProperties
 from matplotlib.lines import Line2D
 from matplotlib.textpath import text_to_path
+from matplotlib.ticker import MaxNLocator
 from matplotlib.transforms import Bbox
 
 WIDTH = 9.0
+HOURS_FROM_MIN = 240.0
 MARGIN = 0.12
 INK, FAINT, RULE, SHADE = "#1a1a1a", "#595959", "#d9d9d9", "#f0f0f0"
-# Source: Okabe and Ito 2008, Color Universal Design (from memory); their yellow is left out, too pale for a line on white.
+# Source: Okabe and Ito 2008, Color Universal Design (from memory); without their yellow, too pale for a line on white.
 COLOURS = ("#0072B2", "#D55E00", "#000000", "#CC79A7", "#009E73", "#56B4E9", "#E69F00")
 DASHES = ("solid", (0, (5, 1.6)), (0, (1, 1.2)), (0, (6, 1.5, 1, 1.5)), (0, (2.5, 1.2)))
 MARKERS = ("o", "s", "D", "^", "v", "P", "X", "*")
@@ -112,6 +115,24 @@ def label_spots(curves: dict[str, tuple[np.ndarray, np.ndarray]], size: float, w
             return None
         spots[name] = best[1]
     return {name: (at, level) for name, (at, level, _) in spots.items()}
+
+
+def share_axis(axis: Axis) -> None:
+    """Ticks of a share from 0 to 1, in percent."""
+    axis.set_ticks([0, 0.25, 0.5, 0.75, 1], ["0 %", "25 %", "50 %", "75 %", "100 %"])
+    axis.set_tick_params(length=0, pad=5)
+
+
+def time_axis(axes: Axes, until_min: float) -> None:
+    """Minutes, or hours for a long run; the positions stay minutes."""
+    unit, name = (60.0, "h") if until_min > HOURS_FROM_MIN else (1.0, "min")
+    steps = [1, 1.2, 2.4, 4.8, 6, 10] if unit == 60 else [1, 1.5, 2, 3, 6, 10]
+    ticks = MaxNLocator(6, steps=steps).tick_values(0, until_min / unit)
+    ticks = [tick for tick in ticks if 0 <= tick <= until_min / unit * (1 + 1e-9)]
+    axes.set_xticks([tick * unit for tick in ticks], [f"{tick:g}" for tick in ticks])
+    axes.set(xlim=(0, until_min))
+    axes.set_xlabel(f"Time ({name})", labelpad=2)
+    axes.tick_params(axis="x", length=3)
 
 
 class Page:

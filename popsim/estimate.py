@@ -1,4 +1,7 @@
-"""Shares with their simulation intervals. They tell how far luck in drawing patients moves a number, nothing about the model."""
+"""Shares with their simulation intervals.
+
+The intervals tell how far the luck of drawing patients moves a number, and nothing about the model.
+"""
 
 from __future__ import annotations
 
@@ -16,7 +19,8 @@ def no_headline(failed: np.ndarray | int, patients: np.ndarray | int) -> np.ndar
 def wilson(successes: np.ndarray | int, n: np.ndarray | int) -> tuple[np.ndarray, np.ndarray]:
     """95 % Wilson score interval of a share, (low, high); NaN where n is 0.
 
-    Source: Wilson 1927, J Am Stat Assoc 22:209-12. 81 of 263 gives 0.2553 to 0.3662 (Newcombe 1998, Stat Med 17:857-72).
+    Source: Wilson 1927, J Am Stat Assoc 22:209-12.
+    81 of 263 gives 0.2553 to 0.3662 (Newcombe 1998, Stat Med 17:857-72).
     """
     successes, n = np.asarray(successes, dtype=np.float64), np.asarray(n, dtype=np.float64)
     with np.errstate(all="ignore"):

@@ -90,9 +90,10 @@ def range_headline(study: Study, comparison: pd.DataFrame, attainment: pd.DataFr
     if len(study.protocols) > 3:
         everyone = everyone.loc[[everyone["time_in_range"].idxmin(), everyone["time_in_range"].idxmax()]]
     joined = " to " if len(study.protocols) > 3 else ", "
-    shares = joined.join(f'{percent(row.time_in_range)} %' + (f' with "{row.protocol}"' if len(study.protocols) > 1 else "")
+    several = len(study.protocols) > 1
+    shares = joined.join(f"{percent(row.time_in_range)} %" + (f' with "{row.protocol}"' if several else "")
                          for row in everyone.itertuples())
-    title = f"In range {window(target)}: {shares}" if target.instant else f"Mean time in range, {window(target)}: {shares}"
+    title = f"{'In range' if target.instant else 'Mean time in range,'} {window(target)}: {shares}"
     pairs = rows_where(comparison, group="all")
     unclear = len(pairs) == 1 and spans_zero(pairs.iloc[0])
     return title + ("; no clear difference in attainment" if unclear else "")

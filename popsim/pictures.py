@@ -3,17 +3,18 @@
 from __future__ import annotations
 
 import re
+from collections.abc import Callable
 from dataclasses import dataclass
 from pathlib import Path
 
 import numpy as np
 import pandas as pd
 from matplotlib.axes import Axes
-from matplotlib.ticker import MaxNLocator
 
 from covariates.sheet import DrugModel
 from popsim.drawing import (
-    FAINT, INK, MARGIN, RULE, SHADE, WIDTH, Page, house_style, label_spots, plain, save, strokes, text_width, wrapped,
+    FAINT, INK, MARGIN, RULE, SHADE, WIDTH, Page, house_style, label_spots, plain, save, share_axis, strokes,
+    text_width, time_axis, wrapped,
 )  # fmt: skip
 from popsim.estimate import wilson
 from popsim.headlines import attainment_headline, has_headline, range_headline, rows_where, spans_zero
@@ -22,7 +23,6 @@ from popsim.words import clock, percent, points, sides_line, target_line, window
 
 INTERVALS_SAY = "95 % simulation intervals: the luck of drawing patients. They say nothing about the model's error."
 MOST_POINTS = 600
-HOURS_FROM_MIN = 240.0
 
 
 @dataclass(frozen=True)
@@ -113,11 +113,12 @@ def _by_group(shown: Shown, path: Path) -> Picture:
         page.key(shown.protocols)
     if paired:
         _difference_header(page, shown)
-    names = {group: wrapped(_group_label(study, group), GROUP_WIDTH - 0.2, 9, most_lines=3) for group in study.group_names}
-    heights = {group: max(STEP * len(shown.protocols), 0.175 * (len(names[group]) + 1)) + 0.2 for group in study.group_names}
+    names = {group: wrapped(_group_label(study, group), GROUP_WIDTH - 0.2, 9, most_lines=3)
+             for group in study.group_names}
+    heights = {group: max(STEP * len(shown.protocols), 0.175 * (len(names[group]) + 1)) + 0.2 for group in names}
     left, total = MARGIN + GROUP_WIDTH, sum(heights.values())
     axes = page.axes(left, page.top, width, total)
-    _share_axis(axes.xaxis)
+    share_axis(axes.xaxis)
     axes.set(xlim=(0, 1), ylim=(total, 0), yticks=[])
     axes.set_xlabel("Patients who attain the target (%)")
     axes.grid(axis="x")
@@ -137,7 +138,7 @@ def _by_group(shown: Shown, path: Path) -> Picture:
             axes.axhline(place, color=RULE, linewidth=0.6)
     page.top += total + 0.48
     page.lines(wrapped(f"Bars: {INTERVALS_SAY}", WIDTH - 2 * MARGIN, 8), 8, color=FAINT)
-    caption = f"{shown.about} Dots: share of patients who attain the target. Bars: {INTERVALS_SAY}"
+    caption = f"Dots: share of patients who attain the target. Bars: {INTERVALS_SAY}"
     save(page, path, title, told := _told_by_group(shown))
     return Picture(path.name, title, told, caption)
 
@@ -155,11 +156,6 @@ def _group_name(page: Page, lines: list[str], middle: float, patients: int) -> N
         page.text(MARGIN, top + 0.175 * index, line, 8 if last else 9, color=FAINT if last else INK)
 
 
-def _share_axis(axis) -> None:
-    axis.set_ticks([0, 0.25, 0.5, 0.75, 1], ["0 %", "25 %", "50 %", "75 %", "100 %"])
-    axis.set_tick_params(length=0, pad=5)
-
-
 def _value_text(row: pd.Series, name: str) -> str:
     return plain(f"{name}  {percent(row.attained)} %" if name else f"{percent(row.attained)} %")
 
@@ -173,7 +169,8 @@ def _fits(row: pd.Series, text: str, width: float) -> tuple[bool, bool]:
 def _names_fit(shown: Shown, width: float) -> bool:
     """Whether every protocol's name has room beside its dot in the group "all"; else a key says who is who."""
     rows = [shown.row("all", protocol) for protocol in shown.protocols]
-    return len(rows) > 1 and all(has_headline(row) and any(_fits(row, _value_text(row, row.protocol), width)) for row in rows)
+    return len(rows) > 1 and all(has_headline(row) and any(_fits(row, _value_text(row, row.protocol), width))
+                                 for row in rows)
 
 
 def _dot(axes: Axes, row: pd.Series, at: float, index: int, name: str, width: float) -> None:
@@ -225,15 +222,19 @@ def _pair_said(pair: pd.Series) -> str:
 
 
 def _told_by_group(shown: Shown) -> str:
+    said = _told(shown, lambda row: f"{percent(row.attained)} % ({percent(row.attained_low)} to "
+                                    f"{percent(row.attained_high)})")
+    return f"Dots with intervals on a scale from 0 to 100 % of patients who attain the target. {said}."
+
+
+def _told(shown: Shown, number: Callable[[pd.Series], str]) -> str:
+    """Group by group, what a number is with each protocol, for those who cannot see the picture."""
     parts = []
     for group in shown.study.group_names:
-        shares = []
-        for protocol in shown.protocols:
-            row = shown.row(group, protocol)
-            shares.append(f"{protocol} {percent(row.attained)} % ({percent(row.attained_low)} to "
-                          f"{percent(row.attained_high)})" if has_headline(row) else f"{protocol} {row.note}")
-        parts.append(f"{_group_label(shown.study, group)}: {', '.join(shares)}")
-    return f"Dots with intervals on a scale from 0 to 100 % of patients who attain the target. {'; '.join(parts)}."
+        rows = [(protocol, shown.row(group, protocol)) for protocol in shown.protocols]
+        said = [f"{protocol} {number(row) if has_headline(row) else row.note}" for protocol, row in rows]
+        parts.append(f"{_group_label(shown.study, group)}: {', '.join(said)}")
+    return "; ".join(parts)
 
 
 # ------------------------------------------------------------------------------------ share in range over time
@@ -274,7 +275,7 @@ def _over_time(shown: Shown, path: Path) -> Picture:
     foot = f"Bands: {INTERVALS_SAY} {_window_said(shown.target)}"
     page.lines(wrapped(foot, WIDTH - 2 * MARGIN, 8), 8, color=FAINT)
     save(page, path, title, told := _told_over_time(shown))
-    return Picture(path.name, title, told, f"{shown.about} Lines: share of patients in range at each moment. {foot}")
+    return Picture(path.name, title, told, f"Lines: share of patients in range at each moment. {foot}")
 
 
 def _lines(shown: Shown, group: str) -> dict[int, tuple[np.ndarray, ...]]:
@@ -294,8 +295,8 @@ def _lines(shown: Shown, group: str) -> dict[int, tuple[np.ndarray, ...]]:
 
 
 def _panel(axes: Axes, shown: Shown, lines: dict[int, tuple[np.ndarray, ...]], group: str) -> None:
-    _time_axis(axes, shown.study.until_min)
-    _share_axis(axes.yaxis)
+    time_axis(axes, shown.study.until_min)
+    share_axis(axes.yaxis)
     axes.set(ylim=(0, 1))
     axes.set_ylabel("Patients in range (%)", fontsize=8.5, labelpad=3)
     axes.grid(axis="y")
@@ -316,18 +317,6 @@ def _panel(axes: Axes, shown: Shown, lines: dict[int, tuple[np.ndarray, ...]], g
                   bbox={"facecolor": "white", "edgecolor": "none", "pad": 2})
 
 
-def _time_axis(axes: Axes, until_min: float) -> None:
-    """Minutes, or hours for a long run; the positions stay minutes."""
-    unit, name = (60.0, "h") if until_min > HOURS_FROM_MIN else (1.0, "min")
-    steps = [1, 1.2, 2.4, 4.8, 6, 10] if unit == 60 else [1, 1.5, 2, 3, 6, 10]
-    ticks = MaxNLocator(6, steps=steps).tick_values(0, until_min / unit)
-    ticks = [tick for tick in ticks if 0 <= tick <= until_min / unit * (1 + 1e-9)]
-    axes.set_xticks([tick * unit for tick in ticks], [f"{tick:g}" for tick in ticks])
-    axes.set(xlim=(0, until_min))
-    axes.set_xlabel(f"Time ({name})", labelpad=2)
-    axes.tick_params(axis="x", length=3)
-
-
 def _shade(axes: Axes, target: Target) -> None:
     if isinstance(target.start, str) or isinstance(target.end, str):
         return
@@ -336,9 +325,9 @@ def _shade(axes: Axes, target: Target) -> None:
     else:
         axes.axvspan(target.start, target.end, facecolor=SHADE, edgecolor="none", zorder=0)
     right = target.start > axes.get_xlim()[1] * 0.75
-    axes.annotate(f"{'judged' if target.instant else 'window'} {window(target)}", (target.start, 1), xytext=(-1 if right else 1, 3), fontsize=7.5,
-                  xycoords=axes.get_xaxis_transform(), textcoords="offset points", color=FAINT,
-                  ha="right" if right else "left")
+    axes.annotate(f"{'judged' if target.instant else 'window'} {window(target)}", (target.start, 1),
+                  xycoords=axes.get_xaxis_transform(), xytext=(-1 if right else 1, 3), textcoords="offset points",
+                  fontsize=7.5, color=FAINT, ha="right" if right else "left")
 
 
 def _window_said(target: Target) -> str:
@@ -350,12 +339,6 @@ def _window_said(target: Target) -> str:
 
 
 def _told_over_time(shown: Shown) -> str:
-    parts = []
-    for group in shown.study.group_names:
-        shares = []
-        for protocol in shown.protocols:
-            row = shown.row(group, protocol)
-            shares.append(f"{protocol} {percent(row.time_in_range)} %" if has_headline(row) else f"{protocol} {row.note}")
-        parts.append(f"{_group_label(shown.study, group)}: {', '.join(shares)}")
+    said = _told(shown, lambda row: f"{percent(row.time_in_range)} %")
     return (f"Lines over time from 0 to {clock(shown.study.until_min)}: share of patients in range, from 0 to 100 %. "
-            f"Mean over the window ({window(shown.target)}): {'; '.join(parts)}.")
+            f"Mean over the window ({window(shown.target)}): {said}.")

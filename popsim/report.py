@@ -22,6 +22,7 @@ from popsim.ward_card import card_lines, describe, example_people, step_as_writt
 from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line
 
 ATTRIBUTE_UNITS = {"age": "years", "weight": "kg", "height": "cm", "bmi": "kg/m2"}
+CHANGED = ("capped", "floored", "rounded", "impossible", "undosed")  # what can befall a dose, as doses.csv counts it
 SOURCES = {"survey": "adults drawn as a national household survey of the United States finds them",
            "list": "the people of a list"}
 
@@ -43,8 +44,8 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
         who=_who(study, record),
         people=_groups_of_people(study, tables["attainment"], record),
         ward=_cards(study),
-        doses=[_doses(study, protocol, tables["doses"]) for protocol in study.protocols],
-        models=[_model(study, model, found) for model, found in zip(study.models, record["models"], strict=True)],
+        doses=[_doses(protocol, tables["doses"]) for protocol in study.protocols],
+        models=[_model(model, found) for model, found in zip(study.models, record["models"], strict=True)],
         left_out=_left_out(study, tables["attainment"], record),
         run_end=clock(study.until_min),
     )
@@ -85,7 +86,7 @@ def _about(study: Study, model: DrugModel, target: Target) -> str:
 def _who(study: Study, record: dict[str, Any]) -> list[str]:
     """The population in sentences."""
     population, counts = study.population, record["counts"]
-    limits = [f"{name.replace('_', ' ')} {_range(low, high, ATTRIBUTE_UNITS[name])}"
+    limits = [f"{_called(name)} {_range(low, high, ATTRIBUTE_UNITS[name])}"
               for name, (low, high) in population.limits.items()]
     limits += [f"only {population.sex}"] if population.sex is not None else []
     limits += [population.where.text] if population.where is not None else []
@@ -97,7 +98,7 @@ def _who(study: Study, record: dict[str, Any]) -> list[str]:
         lines.append("Set for everyone: " + ", ".join(
             f"{name.replace('_', ' ')} {'yes' if value is True else 'no' if value is False else f'{value:g}'}"
             for name, value in population.set.items()) + ".")
-    lines += [f"Every {name.replace('_', ' ')} is multiplied by {factor:g}." for name, factor in population.scale.items()]
+    lines += [f"Every {_called(name)} is multiplied by {factor:g}." for name, factor in population.scale.items()]
     return lines + [_spread_line(study)]
 
 
@@ -108,6 +109,10 @@ def _spread_line(study: Study) -> str:
     lender = f", borrowed from {variability.from_model.name}" if variability.from_model else ""
     factor = f", times {variability.scale:g}" if variability.scale != 1 else ""
     return f"Between-subject variability as published{lender}{factor}."
+
+
+def _called(name: str) -> str:
+    return "body mass index" if name == "bmi" else name.replace("_", " ")
 
 
 def _range(low: float, high: float, unit: str) -> str:
@@ -121,7 +126,8 @@ def _groups_of_people(study: Study, attainment: pd.DataFrame, record: dict[str, 
     conditions = {"all": "everyone"} | {name: where.text for name, where in study.groups}
     first = rows_where(attainment, protocol=study.protocols[0].name, target=study.targets[0].name)
     return [{"group": group, "where": conditions[group], "patients": record["counts"]["groups"][group],
-             "outside": [rows_where(first, model=model.name, group=group).iloc[0].outside_model for model in study.models]}
+             "outside": [rows_where(first, model=model.name, group=group).iloc[0].outside_model
+                         for model in study.models]}
             for group in study.group_names]
 
 
@@ -133,20 +139,22 @@ def _cards(study: Study) -> dict[str, Any]:
         steps = []
         for step, lines in zip(protocol.steps, card_lines(study, protocol, attributes), strict=True):
             times = {line.when for line in lines if line is not None}
-            steps.append({"written": step_as_written(step), "when": times.pop() if len(times) == 1 else "", "lines": lines})
+            steps.append({"written": step_as_written(step), "when": times.pop() if len(times) == 1 else "",
+                          "lines": lines})
         cards.append({"protocol": protocol, "scaled": per_kg_line(protocol), "steps": steps})
     return {"people": [(label, describe(attributes, i)) for i, label in enumerate(labels)], "cards": cards}
 
 
-def _doses(study: Study, protocol: Protocol, doses: pd.DataFrame) -> dict[str, Any]:
+def _doses(protocol: Protocol, doses: pd.DataFrame) -> dict[str, Any]:
     """Doses received, in the mass unit that the protocol's first step is written in."""
     first = protocol.steps[0].variants[0]
     unit = (first.amount or first.rate).unit.split("/")[0]
 
     rows = rows_where(doses, protocol=protocol.name)
-    shares = [name for name in ("capped", "floored", "rounded", "impossible", "undosed") if (rows[f"share_{name}"] > 0).any()]
+    shares = [name for name in CHANGED if (rows[f"share_{name}"] > 0).any()]
     columns = [f"Total, {unit}", f"{unit}/kg total weight", f"{unit}/kg lean weight"]
-    columns += ["Volume, mL"] * (protocol.strength_mg_per_ml is not None) + ["Containers"] * (protocol.vial_ml is not None)
+    columns += ["Volume, mL"] * (protocol.strength_mg_per_ml is not None)
+    columns += ["Containers"] * (protocol.vial_ml is not None)
     cells = []
     for row in rows.itertuples():
         line = [_three(row, measure, unit) for measure in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")]
@@ -165,10 +173,9 @@ def _three(row, measure: str, unit: str | None = None) -> str:
     return f"{median} ({low} to {high})"
 
 
-def _model(study: Study, model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
+def _model(model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
     built_on = model.built_on
-    limits = [f"{name.replace('_', ' ') if name != 'bmi' else 'body mass index'} {limit.text}"
-              for name, limit in built_on.ranges.items()]
+    limits = [f"{_called(name)} {limit.text}" for name, limit in built_on.ranges.items()]
     if built_on.longest_infusion_min is not None:
         limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
     return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
@@ -183,7 +190,7 @@ def _left_out(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) ->
     return {
         "failed": counts["not_simulated"],
         "skipped": counts["list_rows_skipped"],
-        "by": [(one["model"], one["attribute"].replace("_", " "),
+        "by": [(one["model"], _called(one["attribute"]),
                 [(group, number / max(counts["groups"][group], 1)) for group, number in one["patients"].items()])
                for one in counts["outside_by"]],
         "groups": list(study.group_names),

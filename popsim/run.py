@@ -1,6 +1,7 @@
 """The order of steps: patients -> covariates -> parameters -> timeline -> courses -> judgement -> counts.
 
-Blocks of patients go through the steps one by one; threads share blocks, never a count. The only file that knows the order.
+Blocks of patients go through the steps one by one; threads share blocks, never a count. The only file that knows the
+order.
 """
 
 from __future__ import annotations
@@ -31,7 +32,7 @@ from popsim.records import (
     Timeline,
     rows_of,
 )
-from popsim.tally import Findings, Tally
+from popsim.tally import Findings, Tally, check_room
 from popsim.target import COURSE_OF, concentration_limits, course_values, judge, window_of
 from popsim.timeline import build_timeline
 
@@ -47,6 +48,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
     drawn = blocks(study.population, study.seed)
     queue = _Queue(iter(drawn), sink, progress)
     grid = study.grid_min()
+    check_room(study, len(grid))
 
     def work(_: int = 0) -> Tally | None:
         tally = None  # counts take tens of MB: a thread that finds no block left makes none

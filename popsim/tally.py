@@ -14,6 +14,7 @@ from popsim.records import Judged, Received, Study
 ONE = 2**32  # a share of 1 as a fixed-point integer
 DIGITS = 4  # doses are counted to four significant digits
 LOWEST_DECADE, DECADES = -9, 18
+MOST_BYTES = 8 * 2**30
 
 
 @dataclass
@@ -161,6 +162,16 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
     return found
+
+
+def check_room(study: Study, times: int) -> None:
+    """Raise ProblemsError where the counts of one thread would outgrow any ordinary machine's memory."""
+    courses = len(study.models) * len(study.targets) * times * (4 * solve.BIN_COUNT + 3 * 8)
+    needed = len(study.group_names) * len(study.protocols) * (courses + 3 * 8 * KEY_COUNT)
+    if needed > MOST_BYTES:
+        raise ProblemsError(Problem(
+            "run: every", f"counts of {needed / 2**30:.0f} GB, by group, protocol, model, target and time of the tables",
+            f"at most {MOST_BYTES / 2**30:.0f} GB", "a longer step, or fewer groups, protocols, models or targets"))
 
 
 MANTISSAS = 9 * 10 ** (DIGITS - 1)

@@ -77,7 +77,7 @@ def _attainment_table(rows: pd.DataFrame, groups: tuple[str, ...]) -> list[str]:
         if no_headline(row.failed, row.patients):
             attained = "no headline"
         group = _cut(row.group, group_width) if row.group != previous else ""
-        lines.append(f"{group:<{group_width}} {_cut(row.protocol, protocol_width):<{protocol_width}} "
+        lines.append(f"{group:<{group_width}} {_cut(row.protocol, protocol_width):<{protocol_width}}"
                      f" {row.patients:>{n_width}}  {attained:<19} {percent(row.time_below):>5} {percent(row.time_in_range):>5}"
                      f" {percent(row.time_above):>5}")
         previous = row.group

@@ -105,7 +105,8 @@ def _line(protocol: Protocol, step: DoseStep, given: list[Administration], perso
         text, volume = f"{text} at {rate}", " at ".join(part for part in (volume, per_hour) if part)
     when = f"at {clock(first.start_min)}"
     if variant.rate and duration > 0:
-        when = f"{clock(first.start_min)} to {clock(_tidy(first.start_min + duration))}"
+        end = round(first.start_min + duration, 1) if variant.amount else _tidy(first.start_min + duration)
+        when = f"{clock(first.start_min)} to {clock(end)}"
     elif duration > 0:
         when += f", over {clock(duration)}"
     if len(given) > 1:

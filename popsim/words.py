@@ -1,4 +1,4 @@
-"""Numbers and findings in words, the same for terminal, pictures and report. Nothing is computed here that a table lacks."""
+"""Numbers and findings in words, the same for terminal, pictures and report. Nothing is computed that a table lacks."""
 
 from __future__ import annotations
 
@@ -63,7 +63,7 @@ def sides_line(target: Target, model: DrugModel) -> str:
 
 
 def per_kg_line(protocol: Protocol) -> str:
-    """What a "/kg" or "/m2" of a protocol means: "per kg of total body weight"; fixed doses are the same for everyone."""
+    """What a "/kg" or "/m2" of a protocol means: "per kg of total body weight"; a fixed dose is not scaled."""
     scaled = {("m2" if "m2" in dose.kind else "kg", step.by)
               for step in protocol.steps for variant in step.variants for dose in (variant.amount, variant.rate)
               if dose is not None and "_per_" in dose.kind}
@@ -121,17 +121,3 @@ def _difference(pair: pd.Series) -> str:
     if pair.difference_low <= 0 <= pair.difference_high:
         return f"no clear difference ({limits} points)"
     return f"{said}, not clear whether it matters" if pair.verdict == "not clear" else said
-
-
-def short_finding(pair: pd.Series) -> str:
-    """A picture's title for one pair: which protocol does better, by how much, or that it is not clear."""
-    if pair.patients == 0:
-        return "no patients"
-    if no_headline(pair.failed, pair.patients):
-        return "no headline: too many failed"
-    if pair.verdict == "too small to matter":
-        return "difference too small to matter"
-    if pair.difference_low <= 0 <= pair.difference_high:
-        return "no clear difference"
-    better = pair.protocol_b if pair.difference > 0 else pair.protocol_a
-    return f"{better}: {abs(100 * pair.difference):.0f} points more on target"

@@ -1,8 +1,10 @@
 """What all tests share: no screen, nothing written into the repository."""
 
 import os
+import tempfile
 
 os.environ.setdefault("MPLBACKEND", "Agg")
+os.environ.setdefault("HYPOTHESIS_STORAGE_DIRECTORY", tempfile.mkdtemp(prefix="hypothesis-"))
 
 try:
     from hypothesis import settings

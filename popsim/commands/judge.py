@@ -8,6 +8,8 @@ from pathlib import Path
 
 import click
 
+MOST_THREADS = 256
+
 
 @click.command()
 @click.argument("study", type=click.Path(path_type=Path, dir_okay=False))
@@ -17,7 +19,7 @@ import click
 @click.option("--tables-only", is_flag=True, help="No pictures, no report.")
 @click.option("--no-patients", is_flag=True, help="No patients.csv.")
 @click.option("--keep-courses", is_flag=True, help="Keep every patient's course: courses.csv.")
-@click.option("--threads", type=click.IntRange(1, 256), metavar="N",
+@click.option("--threads", type=click.IntRange(1, MOST_THREADS), metavar="N",
               help="Threads to use; NUMBA_NUM_THREADS, or all there are, if not given. Results do not depend on it.")
 @click.option("--format", "kind", type=click.Choice(["csv", "parquet"]), default="csv", show_default=True,
               help="Format of the tables; parquet needs an optional extra.")
@@ -71,7 +73,7 @@ def default_threads() -> int:
     """NUMBA_NUM_THREADS where it is set, else the processors this process may use."""
     given = os.environ.get("NUMBA_NUM_THREADS", "")
     if given.isdigit() and int(given) > 0:
-        return int(given)
+        return min(int(given), MOST_THREADS)
     try:
         return len(os.sched_getaffinity(0))
     except AttributeError:

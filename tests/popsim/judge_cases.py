@@ -6,6 +6,7 @@ from pathlib import Path
 
 import pandas as pd
 
+from covariates.problems import ProblemsError  # noqa: F401 (for the tests)
 from popsim.records import Study
 from popsim.run import simulate
 from popsim.study import read_study
@@ -43,21 +44,45 @@ CL = {{ is = "{clearance}", unit = "L/min", evidence = "seen" }}
 """
 
 
-def sheet(folder: Path, name: str = "one", volume: str = "10", clearance: str = "0.5", more: str = "",
-          spread: str = 'published = false\nnote = "none"') -> str:
+def sheet(
+    folder: Path,
+    name: str = "one",
+    volume: str = "10",
+    clearance: str = "0.5",
+    more: str = "",
+    spread: str = 'published = false\nnote = "none"',
+) -> str:
     """Write a sheet and return the path that a study names."""
     (folder / f"{name}.toml").write_text(
-        SHEET.format(name=name, volume=volume, clearance=clearance, more=more, spread=spread), encoding="utf-8")
+        SHEET.format(name=name, volume=volume, clearance=clearance, more=more, spread=spread), encoding="utf-8"
+    )
     return f"{name}.toml"
 
 
-def study(folder: Path, count: int = 300, model: str = "remifentanil_minto_1997", repeat_with: tuple[str, ...] = (),
-          population: str | None = None, groups: dict[str, str] | None = None, protocols: dict[str, str] | None = None,
-          targets: tuple[str, ...] = (EFFECT_SITE,), variability: str = "", compare: str = "", until: str = "60 min",
-          every: str = "5 min", in_protocol: str = "", seed: int = 11) -> Study:
+def study(
+    folder: Path,
+    count: int = 300,
+    model: str = "remifentanil_minto_1997",
+    repeat_with: tuple[str, ...] = (),
+    population: str | None = None,
+    groups: dict[str, str] | None = None,
+    protocols: dict[str, str] | None = None,
+    targets: tuple[str, ...] = (EFFECT_SITE,),
+    variability: str = "",
+    compare: str = "",
+    until: str = "60 min",
+    every: str = "5 min",
+    in_protocol: str = "",
+    seed: int = 11,
+) -> Study:
     """The study that this text asks for."""
-    lines = ['title = "A test"', 'question = "Is it right?"', f"seed = {seed}", "[population]",
-             population or SURVEY.format(count=count)]
+    lines = [
+        'title = "A test"',
+        'question = "Is it right?"',
+        f"seed = {seed}",
+        "[population]",
+        population or SURVEY.format(count=count),
+    ]
     if variability:
         lines += ["[variability]", variability]
     for name, where in (GROUPS if groups is None else groups).items():

@@ -19,8 +19,9 @@ THREE = {**cases.REMIFENTANIL, "750 ug/h": 'rate = "750 ug/h"\nuntil = "60 min"'
 
 @pytest.fixture(scope="module")
 def run(tmp_path_factory):
-    asked = cases.study(tmp_path_factory.mktemp("compare"), count=600, groups=GROUPS, protocols=THREE,
-                        compare='matters = "5 %"')
+    asked = cases.study(
+        tmp_path_factory.mktemp("compare"), count=600, groups=GROUPS, protocols=THREE, compare='matters = "5 %"'
+    )
     findings, tables = cases.judged(asked)
     return SimpleNamespace(study=asked, tally=findings.tally, tables=tables)
 
@@ -48,8 +49,10 @@ def test_pairs_agree_with_attainment(run):
 
 def test_an_empty_group_has_no_numbers_and_no_verdict(run):
     rows = [row for row in protocol_pairs(run.study, run.tally) if row["group"] == "nobody"]
-    assert all(row["patients"] == 0 and np.isnan(row["difference"]) and np.isnan(row["both"]) and row["verdict"] == ""
-               for row in rows)
+    assert all(
+        row["patients"] == 0 and np.isnan(row["difference"]) and np.isnan(row["both"]) and row["verdict"] == ""
+        for row in rows
+    )
 
 
 def test_groups_that_share_patients_are_refused(run):
@@ -60,8 +63,12 @@ def test_groups_that_share_patients_are_refused(run):
     shared = int(run.tally.overlap[run.study.group_names.index("young"), run.study.group_names.index("women")])
     assert shared > 0 and women["note"] == f"{shared} patients are in both groups: no difference is given"
     old = rows["600 ug/h", "old"]
-    counts = [round(old["reference_attained"] * old["reference_patients"]), old["reference_patients"],
-              round(old["attained"] * old["patients"]), old["patients"]]
+    counts = [
+        round(old["reference_attained"] * old["reference_patients"]),
+        old["reference_patients"],
+        round(old["attained"] * old["patients"]),
+        old["patients"],
+    ]
     assert (old["difference"], old["difference_low"], old["difference_high"]) == unpaired_difference(*counts)
     assert old["note"] == "" and old["reference"] == "young"
     assert np.isnan(rows["600 ug/h", "nobody"]["difference"])
@@ -71,12 +78,24 @@ def test_a_group_that_failed_gets_no_verdict(tmp_path):
     """Half of this list has a clearance below zero."""
     sheet = cases.sheet(tmp_path, clearance="0.5 if age < 50 else -1")
     rows = [f"female,{age},60,165" for age in (30, 40, 60, 70)]
-    asked = cases.study(tmp_path, model=sheet, population=cases.people(tmp_path, rows), groups={"young": "age < 50"},
-                        variability="between_subject = false", compare='matters = "5 %"',
-                        protocols={"a": 'amount = "100 mg"', "b": 'amount = "1 mg"'},
-                        targets=('quantity = "plasma"\nrange = ">= 5 mg/L"\nduring = "0 min"',))
+    asked = cases.study(
+        tmp_path,
+        model=sheet,
+        population=cases.people(tmp_path, rows),
+        groups={"young": "age < 50"},
+        variability="between_subject = false",
+        compare='matters = "5 %"',
+        protocols={"a": 'amount = "100 mg"', "b": 'amount = "1 mg"'},
+        targets=('quantity = "plasma"\nrange = ">= 5 mg/L"\nduring = "0 min"',),
+    )
     _, tables = cases.judged(asked)
     pairs = tables["comparison"].set_index("group")
     assert pairs.loc["all", ["patients", "failed", "attained_a", "neither", "verdict", "better"]].tolist() == [
-        4, 2, 0.5, 0.5, "", ""]
+        4,
+        2,
+        0.5,
+        0.5,
+        "",
+        "",
+    ]
     assert pairs.loc["young", "failed"] == 0

@@ -16,7 +16,9 @@ BIS = read_sheet("propofol_eleveld_2018")
 
 
 def people(baseline=93.0, at_infinity=0.0, half=3.0, below=1.89, above=1.47, n=1):
-    values = zip(("E0", "Emax", "C50", "gamma", "gamma_above"), (baseline, at_infinity, half, below, above), strict=True)
+    values = zip(
+        ("E0", "Emax", "C50", "gamma", "gamma_above"), (baseline, at_infinity, half, below, above), strict=True
+    )
     return {name: np.full(n, value) for name, value in values}
 
 
@@ -57,14 +59,17 @@ def test_monotone(concentrations, rises):
     assert falls(BIS, values).tolist() == [not rises]
 
 
-@pytest.mark.parametrize(("effect", "wanted"), [
-    (95.0, -1.0), (float("inf"), -1.0), (93.0, 0.0), (0.0, np.inf), (-5.0, np.inf), (float("-inf"), np.inf)])
+@pytest.mark.parametrize(
+    ("effect", "wanted"),
+    [(95.0, -1.0), (float("inf"), -1.0), (93.0, 0.0), (0.0, np.inf), (-5.0, np.inf), (float("-inf"), np.inf)],
+)
 def test_limits_out_of_reach(effect, wanted):
     assert concentration_at(BIS, people(), effect).tolist() == [wanted]
 
 
-@pytest.mark.parametrize(("effect", "wanted"), [
-    (5.0, -1.0), (float("-inf"), -1.0), (10.0, 0.0), (80.0, np.inf), (float("inf"), np.inf)])
+@pytest.mark.parametrize(
+    ("effect", "wanted"), [(5.0, -1.0), (float("-inf"), -1.0), (10.0, 0.0), (80.0, np.inf), (float("inf"), np.inf)]
+)
 def test_limits_out_of_reach_of_an_effect_that_rises(effect, wanted):
     assert concentration_at(BIS, people(10.0, 80.0), effect).tolist() == [wanted]
 

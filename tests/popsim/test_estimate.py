@@ -15,8 +15,10 @@ from statsmodels.stats.proportion import confint_proportions_2indep
 from popsim.estimate import no_headline, paired_difference, unpaired_difference, verdict, wilson
 
 
-@pytest.mark.parametrize(("successes", "n", "low", "high"), [
-    (81, 263, 0.2553, 0.3662), (15, 148, 0.0624, 0.1605), (0, 20, 0.0, 0.1611), (1, 29, 0.0061, 0.1718)])
+@pytest.mark.parametrize(
+    ("successes", "n", "low", "high"),
+    [(81, 263, 0.2553, 0.3662), (15, 148, 0.0624, 0.1605), (0, 20, 0.0, 0.1611), (1, 29, 0.0061, 0.1718)],
+)
 def test_wilson_in_print(successes, n, low, high):
     """Newcombe 1998, Stat Med 17:857-72, table I, method 3 (from memory)."""
     assert [round(float(limit), 4) for limit in wilson(successes, n)] == [low, high]
@@ -26,7 +28,9 @@ def test_wilson_in_print(successes, n, low, high):
 def test_wilson_as_scipy(case):
     """scipy.stats.binomtest(...).proportion_ci(method="wilson")."""
     theirs = binomtest(*case).proportion_ci(method="wilson")
-    np.testing.assert_allclose([float(limit) for limit in wilson(*case)], [theirs.low, theirs.high], rtol=1e-10, atol=1e-12)
+    np.testing.assert_allclose(
+        [float(limit) for limit in wilson(*case)], [theirs.low, theirs.high], rtol=1e-10, atol=1e-12
+    )
 
 
 def test_wilson_of_none_all_and_nobody():
@@ -36,8 +40,12 @@ def test_wilson_of_none_all_and_nobody():
 
 
 # Newcombe 1998, Stat Med 17:873-90, table II, method 10 (from memory): (a, m, b, n, low, high of a/m - b/n)
-UNPAIRED = [(56, 70, 48, 80, 0.0524, 0.3339), (9, 10, 3, 10, 0.1705, 0.8090), (10, 10, 0, 20, 0.6791, 1.0),
-            (10, 10, 0, 10, 0.6075, 1.0)]
+UNPAIRED = [
+    (56, 70, 48, 80, 0.0524, 0.3339),
+    (9, 10, 3, 10, 0.1705, 0.8090),
+    (10, 10, 0, 20, 0.6791, 1.0),
+    (10, 10, 0, 10, 0.6075, 1.0),
+]
 
 
 @pytest.mark.parametrize(("a", "m", "b", "n", "low", "high"), UNPAIRED)
@@ -104,8 +112,9 @@ def test_counts_of_a_hundred_million_do_not_overflow():
     assert 0.0998 < low < 0.1 < high < 0.1002
 
 
-@pytest.mark.parametrize(("shares", "n"), list(itertools.product(
-    [(0.5, 0.1, 0.15, 0.25), (0.85, 0.03, 0.02, 0.1)], [400, 2000])))
+@pytest.mark.parametrize(
+    ("shares", "n"), list(itertools.product([(0.5, 0.1, 0.15, 0.25), (0.85, 0.03, 0.02, 0.1)], [400, 2000]))
+)
 def test_the_paired_interval_covers_the_truth(shares, n):
     """4,000 samples; a 95 % interval must cover in 93.5 to 97 %, which is beyond 3.5 of the count's own SDs."""
     luck = np.random.default_rng(3)
@@ -124,9 +133,19 @@ def test_the_unpaired_interval_covers_the_truth(share_a, share_b):
     assert 0.935 < covered < 0.97
 
 
-@pytest.mark.parametrize(("low", "high", "said"), [
-    (0.068, 0.092, "better"), (-0.092, -0.068, "better"), (0.05, 0.08, "better"), (0.043, 0.067, "not clear"),
-    (-0.049, 0.049, "too small to matter"), (-0.05, 0.049, "not clear"), (-0.2, 0.2, "not clear"), (0.01, 0.02, "too small to matter")])
+@pytest.mark.parametrize(
+    ("low", "high", "said"),
+    [
+        (0.068, 0.092, "better"),
+        (-0.092, -0.068, "better"),
+        (0.05, 0.08, "better"),
+        (0.043, 0.067, "not clear"),
+        (-0.049, 0.049, "too small to matter"),
+        (-0.05, 0.049, "not clear"),
+        (-0.2, 0.2, "not clear"),
+        (0.01, 0.02, "too small to matter"),
+    ],
+)
 def test_verdicts(low, high, said):
     assert verdict(low, high, 0.05) == said
 

@@ -33,8 +33,14 @@ def test_people_who_are_alike_attain_all_or_not_at_all(tmp_path, rule):
 
 def test_a_dose_that_comes_to_nothing_gives_nothing(tmp_path):
     """20 mg rounded to whole 50 mg is no dose: said, and counted as failed."""
-    asked = cases.study(tmp_path, model=PROPOFOL, population=cases.people(tmp_path, ALIKE), variability=TYPICAL,
-                        protocols={"a": 'amount = "20 mg"\nround_to = "50 mg"'}, targets=(PLASMA.format("at any time"),))
+    asked = cases.study(
+        tmp_path,
+        model=PROPOFOL,
+        population=cases.people(tmp_path, ALIKE),
+        variability=TYPICAL,
+        protocols={"a": 'amount = "20 mg"\nround_to = "50 mg"'},
+        targets=(PLASMA.format("at any time"),),
+    )
     findings, tables = cases.judged(asked)
     row = tables["attainment"].iloc[0]
     assert (row["failed"], row["attained"]) == (7, 0.0) and np.isnan(row["time_below"])
@@ -42,8 +48,13 @@ def test_a_dose_that_comes_to_nothing_gives_nothing(tmp_path):
 
 
 def test_a_negligible_dose_gives_a_negligible_concentration(tmp_path):
-    asked = cases.study(tmp_path, model=PROPOFOL, variability=TYPICAL, protocols={"a": 'amount = "1 ng"'},
-                        targets=(PLASMA.format("at any time"),))
+    asked = cases.study(
+        tmp_path,
+        model=PROPOFOL,
+        variability=TYPICAL,
+        protocols={"a": 'amount = "1 ng"'},
+        targets=(PLASMA.format("at any time"),),
+    )
     over = cases.judged(asked)[1]["over_time"].query("group == 'all'")
     assert (over["below"] == 1).all() and over["p95"].max() < 1e-6
 
@@ -76,8 +87,12 @@ def test_threads_change_no_digit(tmp_path, threads):
 
 def same_rows(small, large):
     """Every row of the smaller run stands unchanged in the larger."""
-    for name, keys in {"attainment": KEYS, "over_time": [*KEYS, "time_min"], "doses": ["protocol", "group"],
-                       "comparison": ["model", "group", "target", "protocol_a", "protocol_b"]}.items():
+    for name, keys in {
+        "attainment": KEYS,
+        "over_time": [*KEYS, "time_min"],
+        "doses": ["protocol", "group"],
+        "comparison": ["model", "group", "target", "protocol_a", "protocol_b"],
+    }.items():
         both = large[name].set_index(keys).loc[small[name].set_index(keys).index].reset_index()
         assert both[small[name].columns].to_csv(index=False) == small[name].to_csv(index=False), name
 
@@ -123,10 +138,17 @@ def test_more_patients_begin_with_the_same_patients(tmp_path):
 
 def test_kept_courses_show_only_what_the_model_has(tmp_path):
     """No effect site in a model without ke0: empty, not zero. The effect is there whatever the target asks."""
+
     def courses(model, population):
         rows = []
-        asked = cases.study(tmp_path, model=model, population=population, variability=TYPICAL, protocols={"a": 'amount = "100 mg"'},
-                            targets=(PLASMA.format("at any time"),))
+        asked = cases.study(
+            tmp_path,
+            model=model,
+            population=population,
+            variability=TYPICAL,
+            protocols={"a": 'amount = "100 mg"'},
+            targets=(PLASMA.format("at any time"),),
+        )
         cases.simulate(asked, sink=rows.append, keep_courses=True)
         return rows[0].courses[0][2:]
 
@@ -148,7 +170,18 @@ def test_an_error_in_one_thread_is_raised_and_stops_the_others(tmp_path):
 
 def test_the_sink_receives_every_block_in_order(tmp_path):
     firsts, done = [], []
-    cases.simulate(cases.study(tmp_path, count=20_000, every="60 min"), 3,
-                   sink=lambda rows: firsts.append((rows.patients.first, len(rows.patients))), progress=done.append)
+    cases.simulate(
+        cases.study(tmp_path, count=20_000, every="60 min"),
+        3,
+        sink=lambda rows: firsts.append((rows.patients.first, len(rows.patients))),
+        progress=done.append,
+    )
     assert firsts[0][0] == 1 and all(b[0] == a[0] + a[1] for a, b in zip(firsts, firsts[1:], strict=False))
     assert done[-1] == sum(n for _, n in firsts) == 20_000 and done == sorted(done)
+
+
+def test_counts_that_no_machine_could_hold_are_refused(tmp_path):
+    many = {f"group {k}": f"age > {k}" for k in range(60)}
+    asked = cases.study(tmp_path, groups=many, until="300 min", every="1 s")
+    with pytest.raises(cases.ProblemsError, match="a longer step, or fewer groups"):
+        cases.simulate(asked)

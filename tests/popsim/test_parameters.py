@@ -12,15 +12,24 @@ from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters, outside_ranges, random_effects, spread_used
 from popsim.records import Patients, Variability
 
-BIS, MINTO, MARSH = (read_sheet(name) for name in ("propofol_eleveld_2018", "remifentanil_minto_1997", "propofol_marsh_1991"))
+BIS, MINTO, MARSH = (
+    read_sheet(name) for name in ("propofol_eleveld_2018", "remifentanil_minto_1997", "propofol_marsh_1991")
+)
 SCHNIDER = read_sheet("propofol_schnider_1998")
 N = 8192
 OWN, TYPICAL = Variability(True, 1.0, None), Variability(False, 1.0, None)
 
 
 def alike(n=N, block=0, first=1, **other) -> Patients:
-    person = {"sex": np.full(n, "male"), "age": np.full(n, 40.0), "weight": np.full(n, 70.0), "height": np.full(n, 170.0),
-              "bmi": np.full(n, 70 / 1.7**2), "opioid": np.full(n, True), "venous_sampling": np.full(n, False)}
+    person = {
+        "sex": np.full(n, "male"),
+        "age": np.full(n, 40.0),
+        "weight": np.full(n, 70.0),
+        "height": np.full(n, 170.0),
+        "bmi": np.full(n, 70 / 1.7**2),
+        "opioid": np.full(n, True),
+        "venous_sampling": np.full(n, False),
+    }
     return Patients(first, block, np.arange(n), {**person, **other})
 
 
@@ -69,7 +78,9 @@ def test_borrowed_variability_acts_on_volumes_and_clearances_alone():
 def test_the_same_luck_under_two_models_and_whoever_else_is_there():
     a, b = (random_effects(model, Variability(True, 1.0, BIS), 5, alike()) for model in (MARSH, BIS))
     assert all((a[name] == b[name]).all() for name in a)
-    later = Patients(101, 0, np.arange(100, 200), {name: values[100:200] for name, values in alike().attributes.items()})
+    later = Patients(
+        101, 0, np.arange(100, 200), {name: values[100:200] for name, values in alike().attributes.items()}
+    )
     whole, part = drawn(BIS, OWN).values, drawn(BIS, OWN, later).values
     assert all((part[name] == whole[name][100:200]).all() for name in whole)
 
@@ -126,6 +137,8 @@ def test_nobody_is_outside_of_people_who_are_not_known():
 def test_typical_values_in_print():
     """Schnider 1998 at 53 years, 77 kg, 177 cm: V1 4.27, V2 18.9, V3 238 L, Q2 1.29, Q3 0.836 L/min; CL 1.89 at a lean
     body mass (James) of 59 kg, less 0.0681 for each kg above, here 60.48 kg (from memory)."""
-    values = drawn(SCHNIDER, TYPICAL, alike(n=1, age=np.array([53.0]), weight=np.array([77.0]), height=np.array([177.0]))).values
+    values = drawn(
+        SCHNIDER, TYPICAL, alike(n=1, age=np.array([53.0]), weight=np.array([77.0]), height=np.array([177.0]))
+    ).values
     found = [values[name][0] for name in ("V1", "V2", "V3", "CL", "Q2", "Q3")]
     np.testing.assert_allclose(found, [4.27, 18.9, 238.0, 1.89 - 0.0681 * 1.48, 1.29, 0.836], rtol=2e-3)

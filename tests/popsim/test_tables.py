@@ -13,13 +13,15 @@ from popsim.tables import TABLES, notes_of
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 GROUPS = {"young": "age < 65", "old": "age >= 65", "nobody": "age > 500"}
-PLASMA = 'name = "peak"\nquantity = "plasma"\nrange = "<= 8 ng/mL"\nduring = "0 min to 60 min"\nattained_when = "always"\n'
+PLASMA = (
+    'name = "peak"\nquantity = "plasma"\nrange = "<= 8 ng/mL"\nduring = "0 min to 60 min"\nattained_when = "always"\n'
+)
 COLUMNS = {  # the contract: these come first, in this order
     "attainment": "model, protocol, group, target, patients, failed, attained, attained_low, attained_high, time_below, "
-                  "time_in_range, time_above, ever_far_below, ever_far_above, outside_model",
+    "time_in_range, time_above, ever_far_below, ever_far_above, outside_model",
     "over_time": "model, protocol, group, target, time_min, below, in_range, above, p05, p25, p50, p75, p95",
     "comparison": "model, group, target, protocol_a, protocol_b, patients, failed, attained_a, attained_b, difference, "
-                  "difference_low, difference_high, only_a, only_b, both, neither, verdict",
+    "difference_low, difference_high, only_a, only_b, both, neither, verdict",
     "groups": "model, protocol, target, group",
     "doses": "protocol, group",
 }
@@ -28,15 +30,29 @@ LIST = ["female,30,60,165", "male,40,80,180", "female,60,70,160", "male,70,90,17
 
 @pytest.fixture(scope="module")
 def run(tmp_path_factory):
-    asked = cases.study(tmp_path_factory.mktemp("tables"), count=600, groups=GROUPS, every="7 min", until="61 min",
-                        targets=('name = "site"\n' + cases.EFFECT_SITE, PLASMA), in_protocol='strength = "50 ug/mL"\nvial = "20 mL"')
+    asked = cases.study(
+        tmp_path_factory.mktemp("tables"),
+        count=600,
+        groups=GROUPS,
+        every="7 min",
+        until="61 min",
+        targets=('name = "site"\n' + cases.EFFECT_SITE, PLASMA),
+        in_protocol='strength = "50 ug/mL"\nvial = "20 mL"',
+    )
     findings, tables = cases.judged(asked)
     return SimpleNamespace(study=asked, findings=findings, tables=tables)
 
 
 def of_list(folder, model, protocols, target, **more):
-    asked = cases.study(folder, model=model, population=cases.people(folder, LIST), protocols=protocols,
-                        targets=(target,), variability="between_subject = false", **more)
+    asked = cases.study(
+        folder,
+        model=model,
+        population=cases.people(folder, LIST),
+        protocols=protocols,
+        targets=(target,),
+        variability="between_subject = false",
+        **more,
+    )
     findings, tables = cases.judged(asked)
     return findings, tables, notes_of(findings, tables)
 
@@ -44,15 +60,22 @@ def of_list(folder, model, protocols, target, **more):
 @pytest.mark.parametrize("name", TABLES)
 def test_columns_stand_as_promised(run, name):
     wanted = COLUMNS[name].split(", ")
-    assert list(run.tables[name].columns)[:len(wanted)] == wanted
+    assert list(run.tables[name].columns)[: len(wanted)] == wanted
 
 
 def test_one_row_per(run):
     t = run.tables
     assert {name: len(table) for name, table in t.items()} == {
-        "attainment": 2 * 4 * 2, "over_time": 2 * 4 * 2 * 10, "comparison": 4 * 2, "groups": 2 * 2 * 2, "doses": 2 * 4}
-    for name, keys in {"attainment": ["model", "protocol", "group", "target"],
-                       "over_time": ["model", "protocol", "group", "target", "time_min"]}.items():
+        "attainment": 2 * 4 * 2,
+        "over_time": 2 * 4 * 2 * 10,
+        "comparison": 4 * 2,
+        "groups": 2 * 2 * 2,
+        "doses": 2 * 4,
+    }
+    for name, keys in {
+        "attainment": ["model", "protocol", "group", "target"],
+        "over_time": ["model", "protocol", "group", "target", "time_min"],
+    }.items():
         assert not t[name].duplicated(keys).any()
 
 
@@ -72,8 +95,11 @@ def test_groups_that_part_everyone_add_up(run):
     for protocol in cases.REMIFENTANIL:
         for target in ("site", "peak"):
             for column in ("attained", "failed", "outside_model", "ever_far_above"):
-                total = sum(t.loc[(protocol, target, group), column] * (t.loc[(protocol, target, group), "patients"]
-                            if column != "failed" else 1) for group in ("young", "old"))
+                total = sum(
+                    t.loc[(protocol, target, group), column]
+                    * (t.loc[(protocol, target, group), "patients"] if column != "failed" else 1)
+                    for group in ("young", "old")
+                )
                 whole = t.loc[(protocol, target, "all"), column] * (600 if column != "failed" else 1)
                 assert total == pytest.approx(whole, abs=1e-9)
 
@@ -92,8 +118,10 @@ def test_small_groups_are_flagged(run):
     few = t[t["group"] == "old"]
     assert (few["patients"] < 400).all() and (few["note"] == "under 400 patients").all()
     assert (t[t["group"] == "all"]["note"] == "").all()
-    assert any(note.startswith("Fewer than 400 patients in: ") and "old" in note and "nobody" not in note
-               for note in notes_of(run.findings, run.tables))
+    assert any(
+        note.startswith("Fewer than 400 patients in: ") and "old" in note and "nobody" not in note
+        for note in notes_of(run.findings, run.tables)
+    )
 
 
 def test_the_grid_is_multiplied_and_ends_at_until(run):
@@ -105,10 +133,15 @@ def test_everyone_attaining_is_exactly_one(tmp_path):
     """49 x (1/49) is not 1 in floats: shares are quotients."""
     rows = ["female,30,60,165"] * 49
     sheet = cases.sheet(tmp_path)
-    asked = cases.study(tmp_path, model=sheet, population=cases.people(tmp_path, rows), groups={},
-                        protocols={"a": 'amount = "100 mg"', "b": 'amount = "100 mg"'},
-                        targets=('quantity = "plasma"\nrange = "1 to 20 mg/L"\nduring = "0 min to 5 min"\nattained_when = "always"',),
-                        variability="between_subject = false")
+    asked = cases.study(
+        tmp_path,
+        model=sheet,
+        population=cases.people(tmp_path, rows),
+        groups={},
+        protocols={"a": 'amount = "100 mg"', "b": 'amount = "100 mg"'},
+        targets=('quantity = "plasma"\nrange = "1 to 20 mg/L"\nduring = "0 min to 5 min"\nattained_when = "always"',),
+        variability="between_subject = false",
+    )
     _, tables = cases.judged(asked)
     row = tables["attainment"].iloc[0]
     assert row[["attained", "attained_high", "time_in_range", "time_below", "time_above"]].tolist() == [1, 1, 1, 0, 0]
@@ -127,12 +160,19 @@ def test_patients_who_fail_stay_in_the_denominator(tmp_path):
     row = tables["attainment"].set_index("group").loc["all"]
     assert row[["patients", "failed", "attained", "time_in_range"]].tolist() == [4, 2, 0.5, 1.0]
     assert row["note"] == "2 patients failed or went without a dose, over 1 %: no headline"
-    assert any("2 patients could not be simulated or judged (a volume or elimination clearance" in note for note in notes)
+    assert any(
+        "2 patients could not be simulated or judged (a volume or elimination clearance" in note for note in notes
+    )
 
 
 def test_patients_without_a_dose_stay_in_the_denominator_too(tmp_path):
-    _, tables, notes = of_list(tmp_path, cases.sheet(tmp_path), {"a": 'amount = "100 mg"\nwhere = "age < 50"'}, TROUGH,
-                               in_protocol='no_dose = "allowed"')
+    _, tables, notes = of_list(
+        tmp_path,
+        cases.sheet(tmp_path),
+        {"a": 'amount = "100 mg"\nwhere = "age < 50"'},
+        TROUGH,
+        in_protocol='no_dose = "allowed"',
+    )
     row = tables["attainment"].set_index("group").loc["all"]
     assert row[["patients", "failed", "attained", "time_in_range", "time_below"]].tolist() == [4, 2, 0.5, 1.0, 0.0]
     over = tables["over_time"].query("group == 'all'").iloc[0]
@@ -144,9 +184,15 @@ def test_a_window_that_cannot_be_is_counted_and_said(tmp_path):
     """A window that ends before it starts in one of four."""
     rows = [f"{row},{end}" for row, end in zip(LIST, (10, 10, 10, 2), strict=True)]
     population = cases.people(tmp_path, rows, "sex,age,weight,height,closure_min")
-    asked = cases.study(tmp_path, model=cases.sheet(tmp_path), population=population, groups={},
-                        protocols={"a": 'amount = "100 mg"'}, variability="between_subject = false",
-                        targets=(TROUGH.replace('"0 min to 10 min"', '"5 min to closure_min"'),))
+    asked = cases.study(
+        tmp_path,
+        model=cases.sheet(tmp_path),
+        population=population,
+        groups={},
+        protocols={"a": 'amount = "100 mg"'},
+        variability="between_subject = false",
+        targets=(TROUGH.replace('"0 min to 10 min"', '"5 min to closure_min"'),),
+    )
     findings, tables = cases.judged(asked)
     assert tables["attainment"].iloc[0][["patients", "failed", "attained"]].tolist() == [4, 1, 0.75]
     assert any("1 patient could not be simulated or judged (a window" in note for note in notes_of(findings, tables))
@@ -154,8 +200,13 @@ def test_a_window_that_cannot_be_is_counted_and_said(tmp_path):
 
 def test_doses_by_hand(tmp_path):
     """2 mg/kg of 60, 80, 70, 90 kg: 120, 160, 140, 180 mg; 10 mg/mL in vials of 10 mL: 12, 16, 14, 18 mL, two vials each."""
-    _, tables, _ = of_list(tmp_path, cases.sheet(tmp_path), {"a": 'amount = "2 mg/kg"\nat_most = "165 mg"'}, TROUGH,
-                           in_protocol='strength = "10 mg/mL"\nvial = "10 mL"')
+    _, tables, _ = of_list(
+        tmp_path,
+        cases.sheet(tmp_path),
+        {"a": 'amount = "2 mg/kg"\nat_most = "165 mg"'},
+        TROUGH,
+        in_protocol='strength = "10 mg/mL"\nvial = "10 mL"',
+    )
     row = tables["doses"].set_index("group").loc["all"]
     assert row[["total_mg_p05", "total_mg_p50", "total_mg_p95"]].tolist() == [120, 140, 165]
     assert row[["mg_per_kg_total_p05", "mg_per_kg_total_p50"]].tolist() == [1.833, 2.0]

@@ -22,9 +22,22 @@ def key(value: float) -> int:
     return int(decimal_keys(np.array([value]))[0])
 
 
-@pytest.mark.parametrize(("value", "counted"), [
-    (0.0, 0.0), (600.04, 600.0), (9999.7, 10000.0), (9999.4, 9999.0), (0.3, 0.3), (1e-9, 1e-9), (9.99e8, 9.99e8),
-    (0.00123449, 0.001234), (1.0, 1.0), (0.99999, 1.0), (1234.5, 1234.0)])
+@pytest.mark.parametrize(
+    ("value", "counted"),
+    [
+        (0.0, 0.0),
+        (600.04, 600.0),
+        (9999.7, 10000.0),
+        (9999.4, 9999.0),
+        (0.3, 0.3),
+        (1e-9, 1e-9),
+        (9.99e8, 9.99e8),
+        (0.00123449, 0.001234),
+        (1.0, 1.0),
+        (0.99999, 1.0),
+        (1234.5, 1234.0),
+    ],
+)
 def test_by_hand(value, counted):
     assert decimal_value(key(value)) == counted
 
@@ -45,7 +58,9 @@ def test_round_trip_within_half_a_digit(value):
 
 
 def test_every_key_is_a_value_of_its_own_ascending():
-    some = np.unique(np.concatenate([np.arange(30), np.random.default_rng(1).integers(0, KEY_COUNT, 3000), [KEY_COUNT - 1]]))
+    some = np.unique(
+        np.concatenate([np.arange(30), np.random.default_rng(1).integers(0, KEY_COUNT, 3000), [KEY_COUNT - 1]])
+    )
     values = [decimal_value(int(k)) for k in some]
     assert (np.diff(values) > 0).all()
     inside = [(k, value) for k, value in zip(some, values, strict=True) if value < 9.999e8]
@@ -108,10 +123,18 @@ def test_pairs_by_hand():
         return Judged(np.array(failed), np.array(attained), blank, blank, blank, blank > 0, blank > 0)
 
     pair = PairTally(*(np.zeros(1, dtype=np.int64) for _ in range(5)))
-    pair.add(with_attained([True, True, False, False], [False] * 4),
-             with_attained([True, False, True, False], [False, True, False, False]), np.ones((4, 1), dtype=np.int64))
+    pair.add(
+        with_attained([True, True, False, False], [False] * 4),
+        with_attained([True, False, True, False], [False, True, False, False]),
+        np.ones((4, 1), dtype=np.int64),
+    )
     assert {name: int(value[0]) for name, value in vars(pair).items()} == {
-        "failed": 1, "both": 1, "only_a": 1, "only_b": 1, "neither": 1}
+        "failed": 1,
+        "both": 1,
+        "only_a": 1,
+        "only_b": 1,
+        "neither": 1,
+    }
 
 
 def test_merged_counts_equal_those_of_one(tmp_path):

@@ -24,8 +24,9 @@ def course(inside=(1.0,), below=None, above=None, touched=True, lowest=4.0, high
     n = len(inside)
     below = 1 - inside if below is None else np.array(below, dtype=float)
     above = np.zeros(n) if above is None else np.array(above, dtype=float)
-    return WindowCourse(below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in
-                        (touched, lowest, highest, at_end, status)))
+    return WindowCourse(
+        below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in (touched, lowest, highest, at_end, status))
+    )
 
 
 def attained(asked: Target, found: WindowCourse, model=REMIFENTANIL, values=None) -> list[bool]:
@@ -49,7 +50,12 @@ def test_always_is_about_extremes():
 
 
 def test_at_the_end():
-    assert attained(target("end"), course((0.5,) * 4, at_end=np.array([2.9, 3.0, 6.0, 6.1]))) == [False, True, True, False]
+    assert attained(target("end"), course((0.5,) * 4, at_end=np.array([2.9, 3.0, 6.0, 6.1]))) == [
+        False,
+        True,
+        True,
+        False,
+    ]
 
 
 @pytest.mark.parametrize(("low", "high", "wanted"), [(3.0, INF, [False, True, True]), (-INF, 6.0, [True, True, False])])

@@ -1,0 +1,280 @@
+"""Numbers and findings in words; the summary on the terminal."""
+
+from __future__ import annotations
+
+import json
+import runpy
+from pathlib import Path
+from types import SimpleNamespace
+
+import numpy as np
+import pandas as pd
+import pytest
+from hypothesis import given
+from hypothesis import strategies as st
+
+from popsim.tables import notes_of
+from popsim.terminal import WIDTH, as_json_text, summary
+from popsim.words import clock, finding, percent, points, short_finding
+
+cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
+LONG = "a very long name of a group or protocol that a department may well have written so"[:80]
+UNBROKEN = "x" * 80
+
+
+@pytest.mark.parametrize(
+    ("share", "said"),
+    [
+        (0.8413, "84.1"),
+        (0.0, "0.0"),
+        (1.0, "100.0"),
+        (0.0004, "<0.1"),
+        (0.0005, "0.1"),
+        (1e-12, "<0.1"),
+        (0.9994, "99.9"),
+        (0.9995, ">99.9"),
+        (0.99951, ">99.9"),
+        (1 - 1e-12, ">99.9"),
+        (float("nan"), "-"),
+    ],
+)
+def test_percent(share, said):
+    assert percent(share) == said
+
+
+@given(st.integers(1, 10**8).flatmap(lambda n: st.tuples(st.integers(0, n), st.just(n))))
+def test_none_and_all_are_said_of_none_and_all_alone(case):
+    some, n = case
+    assert (percent(some / n) == "0.0") == (some == 0)
+    assert (percent(some / n) == "100.0") == (some == n)
+
+
+@pytest.mark.parametrize(
+    ("difference", "said"),
+    [
+        (-0.271, "-27.1"),
+        (0.0449, "+4.5"),
+        (0.0, "0.0"),
+        (-0.0004, "0.0"),
+        (-0.0, "0.0"),
+        (1.0, "+100.0"),
+        (float("nan"), "-"),
+    ],
+)
+def test_points(difference, said):
+    assert points(difference) == said
+
+
+@pytest.mark.parametrize(
+    ("minutes", "said"), [(0.0, "0 min"), (0.5, "30 s"), (90, "90 min"), (1440, "24 h"), (250, "250 min")]
+)
+def test_clock(minutes, said):
+    assert clock(minutes) == said
+
+
+def pair(low, high, said="", a="A", b="B", share_a=0.5, failed=0, patients=1000):
+    middle = (low + high) / 2
+    return {
+        "model": "m",
+        "group": "all",
+        "target": "t",
+        "protocol_a": a,
+        "protocol_b": b,
+        "patients": patients,
+        "failed": failed,
+        "attained_a": share_a,
+        "attained_b": share_a + middle,
+        "difference": middle,
+        "difference_low": low,
+        "difference_high": high,
+        "verdict": said,
+    }
+
+
+def found(pairs, attained, failed=0, patients=1000):
+    names = list(attained)
+    rows = pd.DataFrame(
+        {
+            "model": "m",
+            "group": "all",
+            "target": "t",
+            "protocol": names,
+            "patients": patients,
+            "failed": failed,
+            "attained": list(attained.values()),
+            "attained_low": 0.1,
+            "attained_high": 0.9,
+        }
+    )
+    study = SimpleNamespace(protocols=names)
+    columns = list(pair(0, 0))
+    return finding(study, pd.DataFrame(pairs, columns=columns), rows, "all", "t", "m")
+
+
+@pytest.mark.parametrize(
+    ("low", "high", "verdict", "said", "title"),
+    [
+        (0.05, 0.15, "", "+10.0 points (+5.0 to +15.0)", "B: 10 points more on target"),
+        (-0.15, -0.05, "better", "-10.0 points (-15.0 to -5.0)", "A: 10 points more on target"),
+        (-0.05, 0.15, "", "no clear difference (-5.0 to +15.0 points)", "no clear difference"),
+        (-0.05, 0.15, "not clear", "no clear difference (-5.0 to +15.0 points)", "no clear difference"),
+        (
+            -0.01,
+            0.03,
+            "too small to matter",
+            "+1.0 points (-1.0 to +3.0), too small to matter",
+            "difference too small to matter",
+        ),
+        (
+            0.01,
+            0.09,
+            "not clear",
+            "+5.0 points (+1.0 to +9.0), not clear whether it matters",
+            "B: 5 points more on target",
+        ),
+    ],
+)
+def test_findings_of_two(low, high, verdict, said, title):
+    row = pair(low, high, verdict)
+    sentence = found([row], {"A": 0.5, "B": row["attained_b"]})
+    assert sentence.startswith('Among all patients, 50.0 % attain the target with "A", ') and sentence.endswith(
+        f": {said}."
+    )
+    assert short_finding(pd.Series(row)) == title
+
+
+def test_findings_of_three_compare_the_best_with_the_next():
+    """B 60 %, C 55 %, A 50 %: the row of C and B is written C first, so B minus C turns its sign."""
+    pairs = [
+        pair(0.05, 0.15, a="A", b="B"),
+        pair(0.02, 0.08, a="A", b="C"),
+        pair(-0.07, -0.03, a="B", b="C", share_a=0.6),
+    ]
+    assert found(pairs, {"A": 0.5, "B": 0.6, "C": 0.55}) == (
+        'Among all patients, "B" has the most patients on target, 60.0 %, before "C", 55.0 %: +5.0 points (+3.0 to +7.0).'
+    )
+    pairs[2] = pair(-0.12, 0.02, a="B", b="C", share_a=0.6)
+    assert found(pairs, {"A": 0.5, "B": 0.6, "C": 0.55}).endswith("no clear difference (-2.0 to +12.0 points).")
+
+
+def test_findings_of_nobody_and_of_those_who_failed():
+    assert found([], {"A": np.nan}, patients=0) == "Among all patients: no patients."
+    assert found([pair(np.nan, np.nan, patients=0)] * 3, {"A": np.nan, "B": np.nan, "C": np.nan}, patients=0).endswith(
+        "no patients."
+    )
+    for protocols in ({"A": 0.5}, {"A": 0.5, "B": 0.6}):
+        assert "no headline" in found([pair(0.05, 0.15, failed=11)], protocols, failed=11)
+        assert "no headline" not in found([pair(0.05, 0.15, failed=10)], protocols, failed=10)
+    assert "no headline" in short_finding(pd.Series(pair(0.05, 0.15, failed=11)))
+
+
+@pytest.fixture(scope="module")
+def run(tmp_path_factory):
+    asked = cases.study(
+        tmp_path_factory.mktemp("words"),
+        count=500,
+        compare='matters = "5 %"',
+        groups={"old": "age >= 65", "nobody": "age > 500"},
+    )
+    findings, tables = cases.judged(asked)
+    return SimpleNamespace(study=asked, tables=tables, notes=notes_of(findings, tables))
+
+
+def test_the_summary_holds_the_tables_numbers(run):
+    text = summary(run.study, run.tables, run.notes)
+    assert text.isascii() and max(map(len, text.splitlines())) <= WIDTH
+    for row in run.tables["attainment"].query("patients > 0").itertuples():
+        line = f"{percent(row.attained):>5} ({percent(row.attained_low)}-{percent(row.attained_high)})"
+        assert (
+            line in text
+            and f"{percent(row.time_below):>5} {percent(row.time_in_range):>5} {percent(row.time_above):>5}" in text
+        )
+    for row in run.tables["comparison"].query("patients > 0").itertuples():
+        assert f"{points(row.difference):>5} ({points(row.difference_low)} to {points(row.difference_high)})" in text
+    assert "first is better" in text  # 600 ug/h, whatever the sign of the difference
+    assert "simulation interval" in text and "not for dosing a person" in text and "nan" not in text
+
+
+def test_bold_changes_nothing_but_headings(run):
+    plain, bold = (summary(run.study, run.tables, run.notes, bold=bold) for bold in (False, True))
+    assert bold.replace("\033[1m", "").replace("\033[0m", "") == plain != bold
+
+
+@pytest.mark.parametrize(
+    ("group", "protocols"),
+    [
+        (LONG, (LONG, LONG[::-1])),
+        (UNBROKEN, (UNBROKEN, "y" * 80)),
+        ("g", ("a", "b")),
+        ("g", ("a", UNBROKEN)),
+        (LONG, ("a", "b")),
+    ],
+)
+def test_80_columns_whatever_the_names(tmp_path, group, protocols):
+    doses = dict(zip(protocols, cases.REMIFENTANIL.values(), strict=True))
+    asked = cases.study(
+        tmp_path,
+        count=40,
+        groups={group: "age >= 65"},
+        protocols=doses,
+        compare='matters = "5 %"',
+        targets=(f'name = "{UNBROKEN}"\n{cases.EFFECT_SITE}', 'quantity = "plasma"\nlow = "1 ug/L"\nduring = "5 min"'),
+    )
+    findings, tables = cases.judged(asked)
+    for bold in (False, True):
+        lines = (
+            summary(asked, tables, notes_of(findings, tables), bold)
+            .replace("\033[1m", "")
+            .replace("\033[0m", "")
+            .splitlines()
+        )
+        assert [line for line in lines if len(line) > WIDTH] == []
+
+
+def test_80_columns_with_a_hundred_million_patients_and_shares_near_the_ends(run):
+    tables = {name: table.copy() for name, table in run.tables.items()}
+    for name in ("attainment", "comparison"):
+        tables[name]["patients"] = 100_000_000
+        tables[name]["failed"] = 0
+    for column in ("attained", "attained_low", "attained_high"):
+        tables["attainment"][column] = 0.99999
+    for column in ("difference", "difference_low", "difference_high"):
+        tables["comparison"][column] = -1.0
+    tables["comparison"]["verdict"] = "too small to matter"
+    assert max(map(len, summary(run.study, tables, run.notes).splitlines())) <= WIDTH
+
+
+def test_too_many_failures_leave_no_headline(run):
+    tables = {name: table.copy() for name, table in run.tables.items()}
+    for name in ("attainment", "comparison"):
+        tables[name]["failed"] = tables[name]["patients"]
+    tables["comparison"]["verdict"] = ""
+    text = summary(run.study, tables, run.notes)
+    table = text.split("Attained, with")[1].split("Outside the people")[0]
+    assert table.count("no headline") >= 4 * 2 - 2
+    for row in tables["comparison"].query("patients > 0").itertuples():
+        assert f"({points(row.difference_low)} to" not in text
+
+
+def test_what_below_and_above_mean_for_an_effect(tmp_path):
+    population = cases.SURVEY.format(count=40) + "\n[population.set]\nopioid = true\nvenous_sampling = false"
+    asked = cases.study(
+        tmp_path,
+        model="propofol_eleveld_2018",
+        population=population,
+        protocols={"a": 'amount = "2 mg/kg"'},
+        targets=('quantity = "effect"\nrange = "40 to 60"\nduring = "1 min to 5 min"\nattained_when = "always"',),
+    )
+    findings, tables = cases.judged(asked)
+    assert "below is too deep, above is too light" in summary(asked, tables, notes_of(findings, tables))
+
+
+def test_json_is_the_tables(run):
+    found = json.loads(as_json_text(run.study, run.tables, run.notes))
+    assert found["notes"] == run.notes and found["seed"] == 11
+    for name in ("attainment", "comparison", "groups", "doses"):
+        table = run.tables[name]
+        assert len(found[name]) == len(table)
+        for row, given_row in zip(found[name], table.to_dict("records"), strict=True):
+            for key, value in given_row.items():
+                assert row[key] == value or (row[key] is None and pd.isna(value))
