@@ -91,7 +91,7 @@ def _given(line: CardLine | None, together: str) -> str:
 
 
 def _who(study: Study, looked_at: int) -> list[str]:
-    """Groups, events and the share outside each model among the first patients; a dose that reaches nobody shows here."""
+    """Groups, events and the share outside each model among the first patients."""
     names = study.group_names
     counts = np.zeros(len(names), dtype=np.int64)
     outside = {model.name: np.zeros(len(names), dtype=np.int64) for model in study.models}

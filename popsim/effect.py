@@ -13,7 +13,7 @@ def effect_at(model: DrugModel, values: Mapping[str, np.ndarray], concentration:
     """Effect at a concentration in mg/L, (n,) or (n, times); parameters in `values` are (n,).
 
     effect = baseline + (at_infinity - baseline) r / (1 + r), r = (concentration / half)^steepness, with another
-    steepness above `half` where the model has one. Source: the Hill equation (Hill 1910) as the model's paper writes it.
+    steepness above `half` where the model has one. Source: the Hill equation (Hill 1910) as the model's paper has it.
     At `half` the effect lies midway: baseline 93 and 0 at infinity give 46.5.
     """
     column = (slice(None), None) if concentration.ndim == 2 else slice(None)

@@ -23,7 +23,8 @@ OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES 
 def check_folder(folder: Path, overwrite: bool) -> None:
     """Raise ProblemsError where a run may not write: a file in the way, or other files without --overwrite."""
     if folder.exists() and not folder.is_dir():
-        raise ProblemsError(Problem(str(folder), "a file, not a folder", "a folder to write into", "--out ANOTHER_FOLDER"))
+        raise ProblemsError(Problem(str(folder), "a file, not a folder", "a folder to write into",
+                                    "--out ANOTHER_FOLDER"))
     if folder.is_dir() and not os.access(folder, os.W_OK | os.X_OK):
         raise ProblemsError(Problem(str(folder), "a folder that cannot be written into", "a folder of your own",
                                     "--out ANOTHER_FOLDER"))
@@ -48,7 +49,7 @@ def written_aside(folder: Path) -> Iterator[Path]:
             return
         fresh = {path.name for path in aside.iterdir()}
         for path in folder.iterdir():
-            if path.name not in fresh and (path.name in OURS or path.suffix == ".svg" and path.is_file() and _is_picture(path)):
+            if path.name not in fresh and (path.name in OURS or _is_picture(path)):
                 path.unlink()
         for path in sorted(aside.iterdir(), key=lambda path: path.name == "record.json"):
             os.replace(path, folder / path.name)
@@ -63,7 +64,9 @@ def _umask() -> int:
 
 
 def _is_picture(path: Path) -> bool:
-    """Whether an SVG came from popsim, which signs its pictures."""
+    """Whether this is an SVG that came from popsim, which signs its pictures."""
+    if path.suffix != ".svg" or not path.is_file():
+        return False
     with path.open(encoding="utf-8", errors="replace") as file:
         return "popsim" in file.read(2000)
 
@@ -123,10 +126,11 @@ class PatientRows:
     def _course_table(self, rows: BlockRows) -> pd.DataFrame:
         """Patient by patient, then model, protocol and time."""
         n, times = len(rows.patients), len(self._grid)
+        numbers = range(rows.patients.first, rows.patients.first + n)
         parts = []
         for model, protocol, plasma, site, effect in rows.courses:
             parts.append(pd.DataFrame({
-                "patient": [number for number in range(rows.patients.first, rows.patients.first + n) for _ in range(times)],
+                "patient": [number for number in numbers for _ in range(times)],
                 "model": model, "protocol": protocol, "time_min": list(self._grid) * n,
                 "plasma": plasma.ravel(), "effect_site": site.ravel(),
                 "effect": effect.ravel() if effect is not None else float("nan")}))

@@ -19,6 +19,7 @@ from popsim.drawing import (
 from popsim.estimate import wilson
 from popsim.headlines import attainment_headline, has_headline, range_headline, rows_where, spans_zero
 from popsim.records import Study, Target
+from popsim.tables import FEW_PATIENTS
 from popsim.words import clock, percent, points, sides_line, target_line, window
 
 INTERVALS_SAY = "95 % simulation intervals: the luck of drawing patients. They say nothing about the model's error."
@@ -151,7 +152,8 @@ def _group_label(study: Study, group: str) -> str:
 
 def _group_name(page: Page, lines: list[str], middle: float, patients: int) -> None:
     top = middle - 0.175 * (len(lines) + 1) / 2
-    for index, line in enumerate([*lines, f"{patients:,} patients"]):
+    few = f" (under {FEW_PATIENTS})" if patients < FEW_PATIENTS else ""
+    for index, line in enumerate([*lines, f"{patients:,} patients{few}"]):
         last = index == len(lines)
         page.text(MARGIN, top + 0.175 * index, line, 8 if last else 9, color=FAINT if last else INK)
 
@@ -215,10 +217,14 @@ def _difference(page: Page, shown: Shown, group: str, left: float, middle: float
 
 
 def _pair_said(pair: pd.Series) -> str:
-    """The verdict of `[compare] matters`; without that key only whether the interval spans zero."""
+    """The verdict of `[compare] matters`, in the words of the sentences; without that key only whether zero is in."""
     if pair.verdict == "better":
         return f"better: {pair.better}"
-    return pair.verdict or ("no clear difference" if spans_zero(pair) else "")
+    if pair.verdict == "too small to matter":
+        return pair.verdict
+    if spans_zero(pair):
+        return "no clear difference"
+    return "not clear whether it matters" if pair.verdict else ""
 
 
 def _told_by_group(shown: Shown) -> str:

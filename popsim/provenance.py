@@ -16,7 +16,7 @@ from popsim.cautions import CAUTIONS
 from popsim.parameters import spread_used
 from popsim.tally import Findings
 
-PACKAGES = ("popsim", "numpy", "scipy", "pandas", "numba", "matplotlib", "seaborn")
+PACKAGES = ("popsim", "numpy", "scipy", "pandas", "numba", "matplotlib", "jinja2", "pydantic")
 
 
 def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, Any]:

@@ -65,7 +65,11 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
         tallies = [work()]
     else:
         with ThreadPoolExecutor(threads) as pool:
-            tallies = list(pool.map(work, range(threads)))
+            try:
+                tallies = list(pool.map(work, range(threads)))
+            except BaseException:  # an interrupt reaches this thread only, and the pool waits for the others
+                queue.stop()
+                raise
     total, *others = [tally for tally in tallies if tally is not None]
     for other in others:
         total.merge(other)
@@ -128,8 +132,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 tally.long_infusion[m, p] += members.T @ (
                     received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
             for t in range(len(study.targets)):
-                judged[p, t], of_course = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
-                status = np.where(status == 0, of_course, status)
+                judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
+                status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
             counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
             kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)

@@ -164,7 +164,8 @@ def _check_grid(until_min: float, every_min: float, path: Path, problems: list[P
         problems.append(Problem(f"{path.name}: run: every", f"{every_min:g} min", "a time above zero"))
     elif until_min / every_min > MOST_GRID_TIMES - 1:
         problems.append(Problem(f"{path.name}: run: every", f"{until_min / every_min:.0f} times in the tables",
-                                f"at most {MOST_GRID_TIMES - 1}", "a longer step; time in range is exact whatever it is"))
+                                f"at most {MOST_GRID_TIMES - 1}",
+                                "a longer step; time in range is exact whatever it is"))
 
 
 def _formulas(section: StudyFile) -> Iterable[tuple[tuple, Formula]]:
@@ -198,7 +199,8 @@ def _check_model_needs(models: tuple[DrugModel, ...], attributes: dict[str, str]
     for model in models:
         for name, meaning in model.switches.items():
             if name not in attributes:
-                problems.append(Problem(f"{path.name}: population: set", f"{name} is missing, and {model.name} needs it",
+                problems.append(Problem(f"{path.name}: population: set",
+                                        f"{name} is missing, and {model.name} needs it",
                                         f"true or false ({meaning})", f"under [population.set]: {name} = true"))
             elif attributes[name] not in ("", "condition"):
                 problems.append(Problem(f"{path.name}: population: set", f"{name} is {WORDS[attributes[name]]}",

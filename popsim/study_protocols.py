@@ -11,6 +11,7 @@ from popsim.records import DoseStep, DoseVariant, Protocol
 from popsim.study_file import MOST_ADMINISTRATIONS, DoseSection, ProtocolSection, key_path
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
+SIZES = {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}
 ROUTE_ADVICE = "none of the shipped models has absorption; give the dose iv"
 
 Report = Callable[..., None]
@@ -83,7 +84,8 @@ def _variants(section: DoseSection, number: int, say: Callable, report: Report) 
     """The step itself, or its bands: a band's own value wins, the step's stands where the band gives none."""
     if not section.band:
         if section.amount is None and section.rate is None:
-            say("amount", "neither amount nor rate", 'amount = "1.5 mg/kg" (a dose) or rate = "6 mg/kg/h" (an infusion)')
+            say("amount", "neither amount nor rate",
+                'amount = "1.5 mg/kg" (a dose) or rate = "6 mg/kg/h" (an infusion)')
         return (DoseVariant(None, _minutes(section.at) or 0.0, _minutes(section.every), section.amount, section.rate),)
     variants = []
     for index, band in enumerate(section.band):
@@ -135,7 +137,7 @@ def _check_scaling(scaled: set[str], own_by: str | None, by: str | None, attribu
         if attributes.get(name) in ("text", "condition") or unit not in (None, per):
             is_now = f"in {unit}" if unit else "no size"
             say("by", f'"{name}" is {is_now}', f"a covariate in {per}, since the dose is per {per}",
-                {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}[per])
+                SIZES[per])
 
 
 def _check_bands(section: DoseSection, variants: tuple[DoseVariant, ...], say: Callable) -> None:

@@ -101,7 +101,8 @@ def _window(section: TargetSection, run_until_min: float, attributes: dict[str, 
     """Start and end in minutes; an end may name an attribute that ends in _min or _h."""
     text = section.during.strip()
     if text == "steady state":
-        report("during", '"steady state"', 'a window such as "24 h to 48 h"', "this version of popsim does not have it yet")
+        report("during", '"steady state"', 'a window such as "24 h to 48 h"',
+               "this version of popsim does not have it yet")
         return None
     parts = re.split(r"\s+to\s+", text)
     if len(parts) > 2:

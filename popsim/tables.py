@@ -11,7 +11,7 @@ from popsim import solve
 from popsim.compare import against_reference, protocol_pairs
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
 from popsim.records import Protocol, Study
-from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value
+from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
 FEW_PATIENTS = 400
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
@@ -22,7 +22,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     """One row per model, protocol, group, target.
 
     Failed and undosed patients stay in the denominator, but have no share of a window: time_below, time_in_range and
-    time_above are means over the others.
+    time_above are means over the others. outside_model is empty where the model's people are not known.
     """
     rows = []
     for (m, p, t), counts in tally.targets.items():
@@ -38,7 +38,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "time_above": int(counts.above[g]) / judged,
                 "ever_far_below": int(counts.far_below[g]) / everyone,
                 "ever_far_above": int(counts.far_above[g]) / everyone,
-                "outside_model": int(tally.outside[m][g]) / everyone,
+                "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
                 "note": _note(n, failed)})
     return pd.DataFrame(rows)
@@ -76,7 +76,8 @@ COMPARISON_COLUMNS = ("model", "group", "target", "protocol_a", "protocol_b", "p
                       "attained_b", "difference", "difference_low", "difference_high", "only_a", "only_b", "both",
                       "neither", "verdict", "better")
 GROUP_COLUMNS = ("model", "protocol", "target", "group", "reference", "patients", "reference_patients", "attained",
-                 "reference_attained", "difference", "difference_low", "difference_high", "failed", "reference_failed", "note")
+                 "reference_attained", "difference", "difference_low", "difference_high", "failed", "reference_failed",
+                 "note")
 
 
 def comparison(study: Study, tally: Tally) -> pd.DataFrame:
@@ -151,16 +152,17 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
             count = int(tally.doses[p].counts[name][0])
             if count:
                 notes.append(f'"{protocol.name}": {_patients(count)} {what}.')
-    for model in study.models:
-        if model.spread_note and study.variability.between_subject:
+    lender, varies = study.variability.from_model, study.variability.between_subject
+    for model in (study.models if lender is None else (lender,)) if varies else ():
+        if model.spread_note:
             notes.append(f"{model.name}: {model.spread_note}")
     few = sorted(set(tables["attainment"].query("0 < patients < @FEW_PATIENTS")["group"]))
     if few:
         notes.append(f"Fewer than {FEW_PATIENTS} patients in: {', '.join(few)}.")
     overlapping = sorted(set(tables["groups"].query("note != ''")["group"]))
     if overlapping:
-        notes.append(f'No difference to the reference group "{study.reference}" for groups that share patients with it: '
-                     f"{', '.join(overlapping)}.")
+        notes.append(f'No difference to the reference group "{study.reference}" for groups that share patients with '
+                     f"it: {', '.join(overlapping)}.")
     return notes
 
 

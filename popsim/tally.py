@@ -8,12 +8,16 @@ from itertools import combinations
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
+from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
 DIGITS = 4  # doses are counted to four significant digits
 LOWEST_DECADE, DECADES = -9, 18
+MANTISSAS = 9 * 10 ** (DIGITS - 1)
+KEY_COUNT = 1 + DECADES * MANTISSAS
+HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
 MOST_BYTES = 8 * 2**30
 
 
@@ -112,7 +116,7 @@ class Tally:
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
-            beyond={(m, name): zeros() for m in models for name in _range_names(study.models[m])},
+            beyond={(m, name): zeros() for m in models for name in range_names(study.models[m])},
             long_infusion={(m, p): zeros() for m in models for p in protocols},
             targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
             pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
@@ -147,7 +151,8 @@ class Findings:
     threads: int
 
 
-def _range_names(model) -> list[str]:
+def range_names(model: DrugModel) -> list[str]:
+    """Attributes by which a patient can lie outside the people that a model was built on."""
     return [*model.built_on.ranges, *(["sex"] if model.built_on.sex is not None else [])]
 
 
@@ -170,13 +175,8 @@ def check_room(study: Study, times: int) -> None:
     needed = len(study.group_names) * len(study.protocols) * (courses + 3 * 8 * KEY_COUNT)
     if needed > MOST_BYTES:
         raise ProblemsError(Problem(
-            "run: every", f"counts of {needed / 2**30:.0f} GB, by group, protocol, model, target and time of the tables",
+            "run: every", f"counts of {needed / 2**30:.0f} GB, by group, protocol, model, target and time",
             f"at most {MOST_BYTES / 2**30:.0f} GB", "a longer step, or fewer groups, protocols, models or targets"))
-
-
-MANTISSAS = 9 * 10 ** (DIGITS - 1)
-KEY_COUNT = 1 + DECADES * MANTISSAS
-HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
 
 
 def decimal_keys(values: np.ndarray) -> np.ndarray:

@@ -74,12 +74,12 @@ def _attainment_table(rows: pd.DataFrame, groups: tuple[str, ...]) -> list[str]:
     previous = None
     for row in rows.itertuples():
         attained = f"{percent(row.attained):>5} ({percent(row.attained_low)}-{percent(row.attained_high)})"
-        if no_headline(row.failed, row.patients):
-            attained = "no headline"
+        if row.patients == 0 or no_headline(row.failed, row.patients):
+            attained = "no headline" if row.patients else "no patients"
         group = _cut(row.group, group_width) if row.group != previous else ""
         lines.append(f"{group:<{group_width}} {_cut(row.protocol, protocol_width):<{protocol_width}}"
-                     f" {row.patients:>{n_width}}  {attained:<19} {percent(row.time_below):>5} {percent(row.time_in_range):>5}"
-                     f" {percent(row.time_above):>5}")
+                     f" {row.patients:>{n_width}}  {attained:<19} {percent(row.time_below):>5}"
+                     f" {percent(row.time_in_range):>5} {percent(row.time_above):>5}")
         previous = row.group
     for note in sorted({f"{row.group}: {row.note}" for row in rows.itertuples() if row.note}):
         lines += _wrapped(note, "  ! ")
@@ -101,6 +101,8 @@ def _pair_table(rows: pd.DataFrame) -> list[str]:
 def _interval_cell(row) -> str:
     if no_headline(row.failed, row.patients):
         return "  no headline"
+    if row.patients == 0:
+        return "  no patients"
     return f"{points(row.difference):>5} ({points(row.difference_low)} to {points(row.difference_high)})"
 
 
@@ -114,8 +116,9 @@ def _verdict_cell(row) -> str:
 def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[str]:
     rows = attainment[(attainment["model"] == model.name) & (attainment["target"] == study.targets[0].name)]
     shares = ", ".join(f"{row.group} {percent(row.outside_model)} %"
-                       for row in rows[rows["protocol"] == study.protocols[0].name].itertuples())
-    lines = _wrapped(f"{model.name}: {shares}", "  ")
+                       for row in rows[rows["protocol"] == study.protocols[0].name].itertuples() if row.patients)
+    known = rows["outside_model"].notna().any()
+    lines = _wrapped(f"{model.name}: {shares if known else 'not known, the sheet gives no ranges of its people'}", "  ")
     for row in rows[rows["group"] == "all"].itertuples():
         if row.infusion_beyond_model > 0:
             lines += _wrapped(f'"{row.protocol}" infuses longer than the {model.built_on.longest_infusion_min:g} min '

@@ -57,7 +57,8 @@ def build_timeline(protocol: Protocol, lookup: Lookup, n: int, until_min: float)
     total = np.zeros(n)
     for administration in administrations:
         total += _within_run(administration, until_min)
-    received = Received(total, changes.capped, changes.floored, changes.rounded, changes.impossible, total == 0, longest)
+    received = Received(total, changes.capped, changes.floored, changes.rounded, changes.impossible, total == 0,
+                        longest)
     return timeline, received
 
 
@@ -135,6 +136,9 @@ def _scaled(quantity: Quantity, step: DoseStep, lookup: Lookup, gets_it: np.ndar
     if quantity.kind in ("mass", "rate"):
         return np.full(len(gets_it), quantity.value)
     size = np.broadcast_to(lookup(step.by), gets_it.shape)
+    if size.dtype.kind not in "fiu":
+        raise ProblemsError(Problem(f"dose {step.number}: {quantity.text} by {step.by}", f"{step.by} is no number",
+                                    "a size, such as weight"))
     unfit = gets_it & ~((size > 0) & np.isfinite(size))
     if unfit.any():
         raise ProblemsError(Problem(f"dose {step.number}: {quantity.text} by {step.by}",
@@ -187,28 +191,31 @@ def _within_run(administration: Administration, until_min: float) -> np.ndarray:
 
 def _events(administrations: list[Administration], n: int, until_min: float) -> tuple[Timeline, np.ndarray]:
     """Events in order of time for each patient, and the longest infusion at one stretch."""
-    columns = 2 * len(administrations) or 1
+    ends = [bool((one.duration_min > 0)[one.gets_it].any()) for one in administrations]  # a bolus has no end of its own
+    columns = len(administrations) + sum(ends) or 1
     time = np.full((n, columns), np.inf)
     bolus = np.zeros((n, columns))
     rate_change = np.zeros((n, columns))
-    running = np.zeros((n, columns), dtype=np.int64)
-    for k, administration in enumerate(administrations):
+    running = np.zeros((n, columns), dtype=np.int8)
+    begin = 0
+    for administration, has_end in zip(administrations, ends, strict=True):
         infused = administration.gets_it & (administration.duration_min > 0)
         at_once = administration.gets_it & (administration.duration_min == 0)
         rate = np.zeros(n)
         np.divide(administration.amount_mg, administration.duration_min, out=rate, where=infused)
-        begin, end = 2 * k, 2 * k + 1
         time[administration.gets_it, begin] = administration.start_min
         bolus[at_once, begin] = administration.amount_mg[at_once]
         rate_change[:, begin] = rate
         running[rate > 0, begin] = 1
-        time[infused, end] = administration.start_min + administration.duration_min[infused]
-        rate_change[:, end] = -rate
-        running[rate > 0, end] = -1
+        if has_end:
+            time[infused, begin + 1] = administration.start_min + administration.duration_min[infused]
+            rate_change[:, begin + 1] = -rate
+            running[rate > 0, begin + 1] = -1
+        begin += 1 + has_end
     order = np.argsort(time, axis=1, kind="stable")
     time, bolus, rate_change, running = (np.take_along_axis(array, order, axis=1)
                                          for array in (time, bolus, rate_change, running))
-    active = np.cumsum(running, axis=1)
+    active = np.cumsum(running, axis=1, dtype=np.int64)
     # no infusion running is exactly no rate, whatever the rounding of the sum
     rate = np.where(active > 0, np.maximum(np.cumsum(rate_change, axis=1), 0.0), 0.0)
     used = max(int(np.isfinite(time).any(axis=0).sum()), 1)

@@ -69,7 +69,8 @@ def step_as_written(step: DoseStep) -> str:
     per_min = step.variants[0].amount is None
     unit = (step.variants[0].amount or step.variants[0].rate).unit.replace("/kg", "").replace("/m2", "")
     limits = [f"{word} {show(limit, unit, 'rate' if per_min else 'mass')}"
-              for word, limit in (("at least", step.at_least), ("at most", step.at_most), ("in steps of", step.round_to))
+              for word, limit in (("at least", step.at_least), ("at most", step.at_most),
+                                  ("in steps of", step.round_to))
               if limit is not None]
     return ", ".join([doses, *limits, *([f"only where {step.where.text}"] if step.where else [])])
 

@@ -3,12 +3,14 @@
 from __future__ import annotations
 
 import math
-
-import pandas as pd
+from typing import TYPE_CHECKING
 
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
 from popsim.records import Protocol, Study, Target
+
+if TYPE_CHECKING:  # a third of a second that `popsim check` does without
+    import pandas as pd
 
 
 def percent(share: float, digits: int = 1) -> str:
@@ -80,9 +82,11 @@ def finding(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, gr
     rows = _of(attainment, group, target, model)
     if not (rows["patients"] > 0).all():
         return f"{where}: no patients."
-    if no_headline(rows["failed"], rows["patients"]).any():
+    failed = rows[no_headline(rows["failed"], rows["patients"])]
+    if len(failed):
+        protocols = " and ".join(f'"{name}"' for name in failed["protocol"])
         return (f"{where}: no headline, since more than {MOST_FAILED_PERCENT} % could not be simulated or went "
-                "without a dose.")
+                f"without a dose with {protocols}.")
     if len(rows) == 1:
         row = rows.iloc[0]
         return (f"{where}, {percent(row.attained)} % attain the target "

@@ -15,7 +15,7 @@ FLOW = [
     "patients.survey", "patients.population", "patients.fit_survey", "records",
     "patients.listed", "patients.draw", "study_file", "study_protocols", "study_targets", "study",
     "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
-    "tally", "run", "compare", "tables", "words", "ward_card", "provenance", "output",
+    "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "commands.new", "commands.check", "commands.judge", "cli",
 ]  # fmt: skip

@@ -3,8 +3,10 @@
 import hashlib
 import json
 import os
+import signal
 import subprocess
 import sys
+import threading
 import tomllib
 from pathlib import Path
 
@@ -90,7 +92,9 @@ def loaded(*arguments: str, cwd: Path) -> set[str]:
 HEAVY = {"pandas", "numba", "scipy", "matplotlib", "seaborn", "jinja2"}
 
 
-@pytest.mark.parametrize("arguments", [["--help"], ["--version"], ["new", "--help"], ["check", "--help"], ["judge", "--help"]])
+@pytest.mark.parametrize("arguments", [
+    ["--help"], ["--version"], ["new", "--help"], ["check", "--help"], ["judge", "--help"],
+])
 def test_help_loads_nothing_heavy(arguments, tmp_path):
     modules = loaded(*arguments, cwd=tmp_path)
     assert "click" in modules
@@ -133,7 +137,8 @@ def test_what_the_user_can_mend_is_2_and_said_on_stderr(folder, capsys, argument
 
 
 def test_problems_are_counted_and_told(folder, capsys):
-    (folder / "bad.toml").write_text(STUDY.replace('"600 ug/h"\nuntil', '600\nuntil').replace("seed", "sede"), encoding="utf-8")
+    bad = STUDY.replace('"600 ug/h"\nuntil', "600\nuntil").replace("seed", "sede")
+    (folder / "bad.toml").write_text(bad, encoding="utf-8")
     for command in ("check", "judge"):
         assert run([command, "bad.toml"]) == USER_CAN_MEND
         out, err = capsys.readouterr()
@@ -201,12 +206,13 @@ def test_a_folder_with_files_is_refused_and_overwrite_keeps_what_is_not_ours(fol
     (folder / "small" / "notes.txt").write_text("mine", encoding="utf-8")
     (folder / "small" / "drawing.svg").write_text("<svg>mine</svg>", encoding="utf-8")
     (folder / "small" / "figures").mkdir()
+    (folder / "small" / "earlier.svg").write_text("<svg><title>popsim</title>", encoding="utf-8")
     before = {path.name for path in (folder / "small").iterdir()}
     assert judge("--quiet") == USER_CAN_MEND
     assert "already holds files" in capsys.readouterr().err
     assert {path.name for path in (folder / "small").iterdir()} == before
     assert judge("--quiet", "--overwrite") == DONE
-    # courses.csv is of the earlier run, and this run has none
+    # courses.csv and earlier.svg (signed by popsim) are of the earlier run, and this run has none
     assert {path.name for path in (folder / "small").iterdir()} == TABLES | {"notes.txt", "drawing.svg", "figures"}
     assert (folder / "small" / "notes.txt").read_text(encoding="utf-8") == "mine"
 
@@ -235,7 +241,7 @@ def test_a_run_that_fails_leaves_earlier_results_as_they_were(folder, monkeypatc
 
 
 def test_a_problem_that_shows_while_running_is_the_users_to_mend(folder, capsys):
-    rare = STUDY.replace('[[protocol.dose]]\nrate = "8 ug/kg/h"', '[[protocol.dose]]\nwhere = "age < 80"\nrate = "8 ug/kg/h"')
+    rare = STUDY.replace('rate = "8 ug/kg/h"', 'where = "age < 80"\nrate = "8 ug/kg/h"')
     (folder / "rare.toml").write_text(rare, encoding="utf-8")
     for command in (["check", "rare.toml"], ["judge", "rare.toml"], ["judge", "rare.toml", "--threads", "2"]):
         assert run(command) == USER_CAN_MEND
@@ -249,6 +255,26 @@ def test_parquet_needs_its_extra_and_says_so(folder, monkeypatch, capsys):
     assert judge("--format", "parquet") == USER_CAN_MEND
     assert 'pip install "popsim[parquet]"' in capsys.readouterr().err
     assert not (folder / "small").exists()
+
+
+@pytest.mark.skipif(os.name != "posix", reason="signals of POSIX")
+@pytest.mark.parametrize("threads", [1, 2])
+def test_an_interrupted_run_stops_at_once_not_when_all_patients_are_done(folder, threads):
+    """Ctrl-C reaches the main thread only, whatever the others do."""
+    from popsim.run import simulate
+    from popsim.study import read_study
+
+    (folder / "large.toml").write_text(STUDY.replace("9000", "400000"), encoding="utf-8")  # 49 blocks and more
+    seen = []
+
+    def sink(rows) -> None:
+        if not seen:
+            signal.pthread_kill(threading.main_thread().ident, signal.SIGINT)
+        seen.append(rows.patients.first)
+
+    with pytest.raises(KeyboardInterrupt):
+        simulate(read_study(Path("large.toml")), threads, sink=sink)
+    assert len(seen) < 20
 
 
 @pytest.mark.skipif(os.name != "posix", reason="signals of POSIX")

@@ -21,7 +21,8 @@ PLASMA = 'quantity = "plasma"\nrange = "2 to 4 ug/mL"\nduring = "10 min to 60 mi
 @pytest.mark.parametrize("rule", ["50 % of the time", "always", "at any time", "at the end"])
 def test_people_who_are_alike_attain_all_or_not_at_all(tmp_path, rule):
     for low in ("1", "2", "3"):
-        target = f'quantity = "effect_site"\nrange = "{low} to 4.5 ng/mL"\nduring = "2 min to 60 min"\nattained_when = "{rule}"'
+        target = f'quantity = "effect_site"\nrange = "{low} to 4.5 ng/mL"\nduring = "2 min to 60 min"'
+        target += f'\nattained_when = "{rule}"'
         asked = cases.study(tmp_path, population=cases.people(tmp_path, ALIKE), variability=TYPICAL, targets=(target,))
         _, tables = cases.judged(asked)
         rows = tables["attainment"].query("patients > 0")

@@ -119,7 +119,7 @@ def courses(folder, model, person, doses, until="60 min", every="1 min"):
 
 @pytest.mark.parametrize("model", MODELS)
 def test_typical_people_as_scipy_has_them(tmp_path, model):
-    """scipy.linalg.expm, and scipy.integrate.solve_ivp at rtol 1e-10, of the equations in print; relative to the peak."""
+    """scipy.linalg.expm, and scipy.integrate.solve_ivp at rtol 1e-10, of the equations in print, relative to peak."""
     equations, person, bolus, bolus_mg, rate, rate_mg_per_min = MODELS[model]
     times, plasma, site = courses(
         tmp_path, model, person, f'amount = "{bolus}"\n---\nrate = "{rate}"\nuntil = "60 min"'
@@ -135,7 +135,9 @@ def test_typical_people_as_scipy_has_them(tmp_path, model):
 
 
 def test_exponential_rules_of_the_trade(tmp_path):
-    """95 % of steady state after three time constants, 97 % after five half-lives (common practice): 20 and 69.3 min here."""
+    """95 % of steady state after three time constants, 97 % after five half-lives (common practice).
+
+    Here: 60 and 69.3 min."""
     sheet = cases.sheet(tmp_path, volume="10", clearance="0.5")
     times, plasma, _ = courses(
         tmp_path, sheet, man_of(40, 80, 180), 'rate = "5 mg/min"\nuntil = "400 min"', "400 min", "1 min"
@@ -179,7 +181,8 @@ def test_attainment_in_closed_form(tmp_path, low, high):
     share in range is a normal probability (scipy.stats.norm). Within its 99.9 % interval for 20,000 patients."""
     spread = 'printed_as = "sd of ln"\nCL = { value = 0.3, evidence = "from memory" }'
     sheet = cases.sheet(tmp_path, volume="1", clearance="0.5", spread=spread)
-    target = f'quantity = "plasma"\nrange = "{low} to {high} mg/L"\nduring = "900 min to 1000 min"\nattained_when = "80 % of the time"'
+    target = f'quantity = "plasma"\nrange = "{low} to {high} mg/L"\nduring = "900 min to 1000 min"'
+    target += '\nattained_when = "80 % of the time"'
     asked = cases.study(
         tmp_path,
         count=20_000,
@@ -258,9 +261,9 @@ def test_propofol_by_adjusted_weight_cures_obesity_not_age(tmp_path):
 
 
 def test_no_regimen_spreads_more_than_a_bolus(tmp_path):
-    """Theorem of linear kinetics (a published one; its statement from memory): at time t, SD / mean over patients of any
-    regimen given alike to all is at most the largest SD / mean after a bolus at any time up to t. For a finite set of
-    patients it holds exactly. Boluses are followed every 2 s."""
+    """Theorem of linear kinetics (a published one; its statement from memory): at time t, SD / mean over patients of
+    any regimen given alike to all is at most the largest SD / mean after a bolus at any time up to t. For a finite set
+    of patients it holds exactly. Boluses are followed every 2 s."""
 
     def relative_spread(doses, every):
         rows = []

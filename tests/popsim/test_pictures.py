@@ -38,7 +38,8 @@ def drawn(folder, **asked):
     study = cases.study(folder, count=asked.pop("count", 120), **asked)
     _, tables = cases.judged(study)
     pictures = draw_all(study, tables, folder)
-    return study, tables, {picture.file_name: (picture, (folder / picture.file_name).read_text()) for picture in pictures}
+    drawings = {one.file_name: (one, (folder / one.file_name).read_text(encoding="utf-8")) for one in pictures}
+    return study, tables, drawings
 
 
 def test_each_picture_is_sound_xml_with_title_and_description(two):
@@ -135,7 +136,8 @@ def test_one_protocol_one_group(tmp_path):
     protocols = {"the card": 'rate = "600 ug/h"\nuntil = "60 min"'}
     _, tables, pictures = drawn(tmp_path, protocols=protocols, groups={})
     row = tables["attainment"].iloc[0]
-    assert pictures["attainment_by_group.svg"][0].title == f"{percent(row.attained)} % of all patients attain the target"
+    title = f"{percent(row.attained)} % of all patients attain the target"
+    assert pictures["attainment_by_group.svg"][0].title == title
     assert pictures["attainment_over_time.svg"][0].title.endswith(f": {percent(row.time_in_range)} %")
 
 
@@ -152,6 +154,7 @@ def test_many_protocols_many_groups_an_empty_one_and_long_names(tmp_path):
         ElementTree.fromstring(svg)
         assert "no patients" in written_in(svg)
         assert "nan" not in re.sub(r"<!--.*?-->", "", svg, flags=re.DOTALL).lower()
+    assert "0 patients (under 400)" in written_in(pictures["attainment_by_group.svg"][1])
 
 
 def test_names_of_files_are_safe_and_unique(tmp_path):

@@ -2,6 +2,7 @@
 
 import re
 import runpy
+from dataclasses import replace
 from html.parser import HTMLParser
 from pathlib import Path
 from types import SimpleNamespace
@@ -21,7 +22,7 @@ cases = SimpleNamespace(**runpy.run_path(str(HERE.with_name("judge_cases.py"))))
 contrast = runpy.run_path(str(HERE.with_name("test_pictures.py")))["contrast"]
 VOID = {"meta", "br", "link", "img", "hr", "input"}
 HOSTILE = {"</style><script>alert(1)</script>": 'rate = "600 ug/h"\nuntil = "60 min"',
-           '" onload="alert(2)': 'rate = "900 ug/h"\nuntil = "60 min"'}
+           '\\" onload=\\"alert(2)': 'rate = "900 ug/h"\nuntil = "60 min"'}
 
 
 class Page(HTMLParser):
@@ -60,8 +61,8 @@ class Page(HTMLParser):
         return " ".join(self.words.split())
 
 
-def reported(folder: Path, count: int = 500, **asked) -> SimpleNamespace:
-    study = cases.study(folder, count=count, **asked)
+def reported(folder: Path, count: int = 500, title: str = "A test", **asked) -> SimpleNamespace:
+    study = replace(cases.study(folder, count=count, **asked), title=title)
     findings, tables = cases.judged(study)
     record = record_of(findings, "popsim judge study.toml", notes_of(findings, tables))
     pictures = draw_all(study, tables, folder)
@@ -101,7 +102,8 @@ def test_every_sentence_target_note_and_caution(run):
 
 def test_numbers_are_the_tables(run):
     for row in run.tables["attainment"].itertuples():
-        assert f"{percent(row.attained)} ({percent(row.attained_low)} to {percent(row.attained_high)})" in run.page.cells
+        interval = f"{percent(row.attained_low)} to {percent(row.attained_high)}"
+        assert f"{percent(row.attained)} ({interval})" in run.page.cells
         for share in (row.time_below, row.time_in_range, row.time_above, row.ever_far_below, row.ever_far_above,
                       row.outside_model):
             assert percent(share) in run.page.cells
@@ -161,10 +163,12 @@ def test_same_bytes_on_repeat(run):
 
 
 def test_text_of_a_study_stays_text(tmp_path):
-    found = reported(tmp_path, count=60, protocols=HOSTILE, groups={"<img src=x onerror=alert(3)>": "age < 65"})
+    title = "</title><script>alert(0)</script>"
+    found = reported(tmp_path, count=60, title=title, protocols=HOSTILE,
+                     groups={"<img src=x onerror=alert(3)>": "age < 65"})
     assert not [tag for tag, _ in found.page.elements if tag in ("script", "img")]
     assert not [name for _, attributes in found.page.elements for name in attributes if name.startswith("on")]
-    for name in (*HOSTILE, "<img src=x onerror=alert(3)>"):
+    for name in (title, *found.study.group_names, *(protocol.name for protocol in found.study.protocols)):
         assert name in found.page.text
 
 
@@ -172,6 +176,7 @@ def test_one_protocol_and_one_group(tmp_path):
     found = reported(tmp_path, count=60, groups={}, protocols={"card": 'rate = "600 ug/h"\nuntil = "60 min"'})
     row = found.tables["attainment"].iloc[0]
     assert f"Among all patients, {percent(row.attained)} % attain the target" in found.page.text
+    assert "60under 400 patients" in found.page.cells
     headings = " ".join(re.findall(r"<h2>(.*?)</h2>", found.html))
     assert "Protocol against protocol" not in headings and "Groups against" not in headings
 

@@ -17,7 +17,8 @@ PLASMA = (
     'name = "peak"\nquantity = "plasma"\nrange = "<= 8 ng/mL"\nduring = "0 min to 60 min"\nattained_when = "always"\n'
 )
 COLUMNS = {  # the contract: these come first, in this order
-    "attainment": "model, protocol, group, target, patients, failed, attained, attained_low, attained_high, time_below, "
+    "attainment": "model, protocol, group, target, patients, failed, attained, attained_low, attained_high, "
+    "time_below, "
     "time_in_range, time_above, ever_far_below, ever_far_above, outside_model",
     "over_time": "model, protocol, group, target, time_min, below, in_range, above, p05, p25, p50, p75, p95",
     "comparison": "model, group, target, protocol_a, protocol_b, patients, failed, attained_a, attained_b, difference, "
@@ -199,7 +200,7 @@ def test_a_window_that_cannot_be_is_counted_and_said(tmp_path):
 
 
 def test_doses_by_hand(tmp_path):
-    """2 mg/kg of 60, 80, 70, 90 kg: 120, 160, 140, 180 mg; 10 mg/mL in vials of 10 mL: 12, 16, 14, 18 mL, two vials each."""
+    """2 mg/kg of 60, 80, 70, 90 kg, at most 165 mg: 120, 160, 140, 165 mg. At 10 mg/mL: two vials of 10 mL each."""
     _, tables, _ = of_list(
         tmp_path,
         cases.sheet(tmp_path),
@@ -220,3 +221,20 @@ def test_doses_of_a_rate_for_everyone(run):
     assert row["total_mg_p05"] == row["total_mg_p95"] == 0.6
     assert (row["volume_ml_p50"], row["vials_p50"]) == (pytest.approx(12), 1)
     assert row["waste_ml_mean"] == pytest.approx(8)
+
+
+def test_nobody_can_be_said_to_be_outside_of_people_who_are_not_known(tmp_path):
+    _, tables, _ = of_list(tmp_path, "propofol_marsh_1991", {"a": 'amount = "1 mg/kg"'}, TROUGH)
+    assert tables["attainment"]["outside_model"].isna().all()
+
+
+def test_notes_tell_of_the_spread_that_is_used(tmp_path):
+    """Of a borrowed spread the lender's doubts, not those of the sheet whose own spread is not used."""
+    lender = "propofol_eleveld_2018"
+    for variability, wanted in ((f'from = "{lender}"', [lender]), ("", ["propofol_schnider_1998"])):
+        asked = cases.study(
+            tmp_path, count=20, model="propofol_schnider_1998", variability=variability, targets=(PLASMA,)
+        )
+        findings, tables = cases.judged(asked)
+        notes = notes_of(findings, tables)
+        assert [note.split(":")[0] for note in notes if note.startswith("propofol_")] == wanted

@@ -13,7 +13,7 @@ from hypothesis import strategies as st
 
 from covariates.problems import ProblemsError
 from popsim.records import Judged
-from popsim.tally import KEY_COUNT, ONE, PairTally, TargetTally, Tally, decimal_keys, decimal_quantile, decimal_value
+from popsim.tally import KEY_COUNT, ONE, PairTally, Tally, TargetTally, decimal_keys, decimal_quantile, decimal_value
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 

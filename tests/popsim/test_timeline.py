@@ -1,4 +1,4 @@
-"""Dose steps against doses worked out by hand from the rules of the study file, and properties that must always hold."""
+"""Dose steps against doses worked out by hand from the rules of the study file, and what must always hold."""
 
 import numpy as np
 import pytest
@@ -21,7 +21,8 @@ def dose(text: str | None):
 
 
 def variant(amount=None, rate=None, at=0.0, every=None, where=None) -> DoseVariant:
-    return DoseVariant(None if where is None else compile_formula(where, "", "condition"), at, every, dose(amount), dose(rate))
+    condition = None if where is None else compile_formula(where, "", "condition")
+    return DoseVariant(condition, at, every, dose(amount), dose(rate))
 
 
 def step(*variants: DoseVariant, number=1, where=None, by="weight", over=None, until=None, times=None, at_most=None,
@@ -169,6 +170,12 @@ def test_a_size_that_nobody_can_be_dosed_by_is_refused(size, doses):
         administrations_of(protocol(step(variant(**doses), by="dosing_weight")), people.__getitem__, 2, 60.0)
 
 
+@pytest.mark.parametrize("column", [np.array([True, False]), np.array(["female", "male"])])
+def test_a_switch_or_a_text_is_no_size(column):
+    with pytest.raises(ProblemsError, match="frail is no number"):
+        administrations_of(protocol(step(variant("1 mg/kg"), by="frail")), {"frail": column}.__getitem__, 2, 60.0)
+
+
 def test_longest_infusion_joins_what_follows_without_a_pause():
     first, second = step(variant(rate="5 mg/min"), until=20), step(variant(rate="3 mg/min", at=20), number=2, until=50)
     third = step(variant(rate="3 mg/min", at=60), number=3, until=300)
@@ -189,7 +196,7 @@ rates = st.floats(0.01, 50).map(lambda x: f"{x:.3f} mg/min") | st.floats(0.01, 2
 
 @st.composite
 def steps(draw, number=1):
-    limits = {"at_most": draw(st.none() | st.floats(5, 200)), "round_to": draw(st.none() | st.sampled_from([0.1, 5.0, 15.0]))}
+    limits = {"at_most": draw(st.none() | st.floats(5, 200)), "round_to": draw(st.sampled_from([None, 0.1, 5.0, 15.0]))}
     at, every = draw(minutes), draw(st.none() | st.floats(1, 40))
     repeats = {} if every is None else draw(st.sampled_from([{}, {"times": 4}, {"until": at + 30}]))
     shape = draw(st.sampled_from(["bolus", "over", "with rate", "rate"]))
