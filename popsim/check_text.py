@@ -55,7 +55,7 @@ def _cards(study: Study) -> list[str]:
     lines += [f"  {label:<{width}}  {describe(attributes, i)}" for i, label in enumerate(labels)]
     seen: dict[tuple, str] = {}
     for protocol in study.protocols:
-        strength = f", {protocol.strength_mg_per_ml:g} mg/mL" if protocol.strength_mg_per_ml else ""
+        strength = f", {protocol.strength_text}" if protocol.strength_text else ""
         title = f'Ward card "{protocol.name}" ({per_kg_line(protocol)}{strength})'
         lines += ["", *textwrap.wrap(title, WIDTH), "=" * min(len(title), WIDTH)]
         for step, of_step in zip(protocol.steps, card_lines(study, protocol, attributes), strict=True):

@@ -4,9 +4,12 @@ from __future__ import annotations
 
 from itertools import combinations
 
-from popsim.estimate import no_headline, paired_difference, unpaired_difference, verdict
-from popsim.records import Study
-from popsim.tally import Tally
+import numpy as np
+
+from popsim.estimate import no_headline, paired_difference, quantile_ranks, unpaired_difference, verdict, wilson
+from popsim.records import Study, needs_effect_site
+from popsim.slices import QUARTILES
+from popsim.tally import STEPS_OF_SHARE, PairTally, Tally, key_of_rank
 
 
 def protocol_pairs(study: Study, tally: Tally) -> list[dict]:
@@ -16,15 +19,16 @@ def protocol_pairs(study: Study, tally: Tally) -> list[dict]:
         for g, group in enumerate(study.group_names):
             for t, target in enumerate(study.targets):
                 for a, b in combinations(range(len(study.protocols)), 2):
-                    counts = {name: int(values[g]) for name, values in vars(tally.pairs[m, t, a, b]).items()}
                     names = (study.protocols[a].name, study.protocols[b].name)
                     rows.append({"model": model.name, "group": group, "target": target.name,
                                  "protocol_a": names[0], "protocol_b": names[1],
-                                 **_pair(counts, int(tally.patients[g]), names, study.matters)})
+                                 **pair_row(tally.pairs[m, t, a, b], g, int(tally.patients[g]), names, study.matters)})
     return rows
 
 
-def _pair(counts: dict[str, int], patients: int, names: tuple[str, str], matters: float | None) -> dict:
+def pair_row(tallied: PairTally, g: int, patients: int, names: tuple[str, str], matters: float | None) -> dict:
+    """One pair in one group; median_gain: the median over patients of b - a in the share of the window in range."""
+    counts = {name: int(getattr(tallied, name)[g]) for name in ("failed", "both", "only_a", "only_b", "neither")}
     four = counts["both"], counts["only_a"], counts["only_b"], counts["neither"]
     difference, low, high = paired_difference(*four)
     said = "" if no_headline(counts["failed"], patients) else verdict(low, high, matters)
@@ -33,7 +37,55 @@ def _pair(counts: dict[str, int], patients: int, names: tuple[str, str], matters
             "attained_a": _share(counts["both"] + counts["only_a"], patients),
             "attained_b": _share(counts["both"] + counts["only_b"], patients),
             "difference": difference, "difference_low": low, "difference_high": high, **shares,
-            "verdict": said, "better": names[difference > 0] if said == "better" else ""}
+            "verdict": said, "better": names[difference > 0] if said == "better" else "",
+            **_median_gain(tallied.gained[g])}
+
+
+def _median_gain(counted: np.ndarray) -> dict[str, float]:
+    n, names = int(counted.sum()), ("median_gain", "median_gain_low", "median_gain_high")
+    if n == 0:
+        return dict.fromkeys(names, float("nan"))
+    return {name: key_of_rank(counted, rank) / STEPS_OF_SHARE - 1
+            for name, rank in zip(names, quantile_ranks(0.5, n), strict=True)}
+
+
+def quartile_pairs(study: Study, tally: Tally) -> list[dict]:
+    """One row per model, target, pair and quarter of a covariate: who gains and who loses; differences are b - a."""
+    rows = []
+    for (m, t, a, b), tallied in tally.quartile_pairs.items():
+        names = (study.protocols[a].name, study.protocols[b].name)
+        for place, (covariate, cut) in enumerate(tally.cuts.items()):
+            edges = [float("-inf"), *(float(value) for value in cut), float("inf")]
+            for quarter in range(len(QUARTILES) + 1):
+                g = place * (len(QUARTILES) + 1) + quarter
+                rows.append({"model": study.models[m].name, "target": study.targets[t].name, "protocol_a": names[0],
+                             "protocol_b": names[1], "covariate": covariate, "quarter": quarter + 1,
+                             "above": edges[quarter], "up_to": edges[quarter + 1],
+                             **pair_row(tallied, g, int(tally.quartile_patients[g]), names, study.matters)})
+    return rows
+
+
+def between_models(study: Study, tally: Tally) -> list[dict]:
+    """One row per protocol, group and target: the spread of attainment between models beside the simulation interval.
+
+    None for a single model, nor for targets in the effect site, which is another one in each model.
+    """
+    rows = []
+    if len(study.models) == 1:
+        return rows
+    for p, protocol in enumerate(study.protocols):
+        for t, target in enumerate(study.targets):
+            for g, group in enumerate(study.group_names) if not needs_effect_site(target) else ():
+                n = int(tally.patients[g])
+                counts = [int(tally.targets[m, p, t].attained[g]) for m in range(len(study.models))]
+                least, most = counts.index(min(counts)), counts.index(max(counts))
+                low, high = wilson(counts[0], n)
+                rows.append({"protocol": protocol.name, "group": group, "target": target.name, "patients": n,
+                             "lowest": _share(counts[least], n), "lowest_model": study.models[least].name,
+                             "highest": _share(counts[most], n), "highest_model": study.models[most].name,
+                             "spread_between_models": _share(counts[most] - counts[least], n),
+                             "simulation_interval": float(high - low)})
+    return rows
 
 
 def _share(count: int, patients: int) -> float:

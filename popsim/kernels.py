@@ -530,9 +530,10 @@ def _passage(kind, level, a, b, ya, yb, state, rate, slopes, rates, weights, ke0
 
 
 @_compiled
-def _interval(kind, length, low, high, cuts, roots, tally, state, rate, rates, weights, ke0):
+def _interval(kind, begin, length, low, high, cuts, roots, tally, state, rate, rates, weights, ke0):
     """Add the interval's minutes below, in and above the range to tally[0:3]; widen tally[3:5] (lowest, highest);
-    set tally[5] where the range is touched and tally[6] to the last value."""
+    set tally[5] where the range is touched, tally[6] to the last value, tally[7] to when the course first is within the
+    range and tally[8] to when it last is above it."""
     slopes = _slopes(state, rate, rates, weights, ke0)
     count = _monotone_cuts(kind, length, cuts, roots, state, rate, slopes, rates, weights, ke0)
     a = cuts[0]
@@ -541,6 +542,7 @@ def _interval(kind, length, low, high, cuts, roots, tally, state, rate, rates, w
         b = cuts[j]
         yb = _function(kind, b, state, rate, slopes, rates, weights, ke0)
         least, most = min(ya, yb), max(ya, yb)
+        enters, leaves = a, b
         if low <= least and most <= high:
             tally[1] += b - a
         elif most < low:
@@ -553,10 +555,15 @@ def _interval(kind, length, low, high, cuts, roots, tally, state, rate, rates, w
             tally[0] += (at_low - a) if yb > ya else (b - at_low)
             tally[1] += abs(at_high - at_low)
             tally[2] += (b - at_high) if yb > ya else (at_high - a)
+            enters = a if low <= ya <= high else (at_low if ya < low else at_high)
+            leaves = b if yb > high else at_high
         tally[3] = min(tally[3], least)
         tally[4] = max(tally[4], most)
         if least <= high and most >= low:
             tally[5] = 1.0
+            tally[7] = min(tally[7], begin + enters)
+        if most > high:
+            tally[8] = begin + leaves
         tally[6] = yb
         a, ya = b, yb
 
@@ -565,18 +572,20 @@ def _interval(kind, length, low, high, cuts, roots, tally, state, rate, rates, w
 def _one_window(kind, i, start, end, low, high, cuts, roots, tally, time, bolus, rate, rates, weights, ke0):
     """Walk one patient's window from event to event."""
     tally[:] = 0.0
-    tally[3], tally[4] = math.inf, -math.inf
+    tally[3], tally[4], tally[7], tally[8] = math.inf, -math.inf, math.inf, -math.inf
     state, flow, event = _reached(i, start, time, bolus, rate, rates, weights, ke0)
     if start == end:
         value = state[3] if kind == EFFECT_SITE else state[0] + state[1] + state[2]
         zone = 0 if value < low else (2 if value > high else 1)
         tally[zone] = 1.0
-        tally[3:] = value
+        tally[3:7] = value
         tally[5] = 1.0 if zone == 1 else 0.0
+        tally[7] = start if zone == 1 else math.inf
+        tally[8] = start if zone == 2 else -math.inf
     now = start
     while now < end:
         until = min(end, time[i, event]) if event < time.shape[1] else end
-        _interval(kind, until - now, low, high, cuts, roots, tally, state, flow, rates[i], weights[i], ke0[i])
+        _interval(kind, now, until - now, low, high, cuts, roots, tally, state, flow, rates[i], weights[i], ke0[i])
         if until < end:
             state, flow, event = _met(i, state, flow, event, now, until, time, bolus, rate, rates, weights, ke0)
         now = until
@@ -584,8 +593,9 @@ def _one_window(kind, i, start, end, low, high, cuts, roots, tally, time, bolus,
 
 @_compiled
 def windows(kind, rates, weights, ke0, time, bolus, rate, low, high, start, end, status, shares, extremes, touched):
-    """Shares below, in and above the range, extremes (lowest, highest, at the end) and touch of each window."""
-    cuts, roots, tally = np.empty(5), np.empty(3), np.empty(7)
+    """Shares below, in and above the range, extremes (lowest, highest, at the end, first inside, last above) and touch
+    of each window."""
+    cuts, roots, tally = np.empty(5), np.empty(3), np.empty(9)
     for i in range(ke0.size):
         if status[i] == FINE:
             if not (math.isfinite(start[i]) and math.isfinite(end[i]) and start[i] <= end[i]):
@@ -605,6 +615,7 @@ def windows(kind, rates, weights, ke0, time, bolus, rate, low, high, start, end,
         for c in range(3):
             shares[i, c] = tally[c] / whole
         extremes[i, 0], extremes[i, 1], extremes[i, 2] = tally[3], tally[4], tally[6]
+        extremes[i, 3], extremes[i, 4] = tally[7], tally[8]
         touched[i] = tally[5] > 0.0
 
 

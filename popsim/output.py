@@ -16,7 +16,8 @@ import pandas as pd
 from covariates.problems import Problem, ProblemsError
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses")
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles", "models",
+               "robustness", "patients", "courses")
 OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 
@@ -173,6 +174,8 @@ def covariates_used(study: Study) -> list[str]:
             if any(dose is not None and "_per_" in dose.kind for variant in step.variants
                    for dose in (variant.amount, variant.rate)):
                 names.add(step.by)
+            for loading in (variant.loading for variant in step.variants if variant.loading is not None):
+                names |= {step.by} if loading.model is None else loading.model.needs
     for _, where in study.groups:
         names |= where.names
     if study.population.where is not None:

@@ -94,6 +94,8 @@ class WindowCourse:
     lowest, highest       (n,) float64: smallest and largest value in the closed window, mg/L
     at_end                (n,) float64: value at the window's end, before doses at that time, mg/L
     status                (n,) int64, 0 = fine
+    first_inside_min      (n,) float64: when the course first is within the range, min; inf where it never is
+    last_above_min        (n,) float64: when it last is above the range, min; -inf where it never is
     """
 
     below: np.ndarray
@@ -104,6 +106,25 @@ class WindowCourse:
     highest: np.ndarray
     at_end: np.ndarray
     status: np.ndarray
+    first_inside_min: np.ndarray
+    last_above_min: np.ndarray
+
+
+@dataclass(frozen=True)
+class Loading:
+    """A dose that brings a volume to a concentration: never a patient's drawn volume, but a stated or a typical one.
+
+    concentration   as written
+    litres_per_kg   a stated volume by size; None where a sheet says it
+    model, volume   the sheet, and which of its typical volumes: V1, or Vss (V1 + V2 + V3)
+    text            the whole in words
+    """
+
+    concentration: Quantity
+    litres_per_kg: float | None
+    model: DrugModel | None
+    volume: str
+    text: str
 
 
 @dataclass(frozen=True)
@@ -113,8 +134,9 @@ class DoseVariant:
     where    which patients (None: all whom the step reaches)
     at_min   time of the first administration
     every    minutes between administrations, None for a single one
-    amount   dose as written, None when a rate says it
+    amount   dose as written, None when a rate or a loading concentration says it
     rate     rate as written; with an amount the duration follows
+    loading  a dose that fills a typical volume to a concentration, None when the dose is written out
     """
 
     where: Formula | None
@@ -122,6 +144,11 @@ class DoseVariant:
     every_min: float | None
     amount: Quantity | None
     rate: Quantity | None
+    loading: Loading | None = None
+
+    @property
+    def is_rate(self) -> bool:
+        return self.amount is None and self.loading is None
 
 
 @dataclass(frozen=True)
@@ -152,6 +179,9 @@ class Protocol:
     strength_mg_per_ml    preparation, None when not given
     vial_ml               volume of one container, None when not given
     no_dose_allowed       whether a patient may be reached by no step
+    strength_text         the preparation as written
+    pump_mg_per_min       the fastest that the pump can give, None when not given
+    impossible_refused    whether a dose that comes out as zero or is too fast for the pump ends the study
     """
 
     name: str
@@ -160,17 +190,53 @@ class Protocol:
     vial_ml: float | None
     no_dose_allowed: bool
     steps: tuple[DoseStep, ...]
+    strength_text: str = ""
+    pump_mg_per_min: float | None = None
+    impossible_refused: bool = False
+
+
+COURSE_QUANTITIES = ("plasma", "unbound_plasma", "effect_site", "effect", "response")
+SUMMARIES = ("area_under_curve", "peak", "trough", "average")
+MINUTES_A_DAY = 1440.0  # an area "per 24 h"
+
+
+@dataclass(frozen=True)
+class Mic:
+    """The minimum inhibitory concentration that a target is judged against.
+
+    family      what the targets of all MICs of one section are called together
+    weight      share of the isolates with this MIC, None where the study gives no distribution
+    first       whether it is the section's first: what does not depend on the MIC is tabled there alone
+    """
+
+    mg_per_l: float
+    family: str
+    weight: float | None
+    first: bool
+
+
+@dataclass(frozen=True)
+class ResponseCurve:
+    """Probability of response: logistic in the logarithm of a concentration, `half` (mg/L) gives 50 %."""
+
+    half_mg_per_l: float
+    steepness: float
+    follows: str
 
 
 @dataclass(frozen=True)
 class Target:
     """What counts as success.
 
-    quantity      plasma, effect_site, effect
-    low, high     limits in mg/L, or in the effect's own unit; -inf or inf where one-sided
+    quantity      one of COURSE_QUANTITIES, or of SUMMARIES of a window, these also as unbound_...
+    low, high     limits in mg/L, mg.min/L (areas), the effect's own unit, or as a probability; -inf or inf where
+                  one-sided
     unit          the unit that the study wrote
     start, end    the window: minutes, or the name of a numeric attribute in minutes or hours
     rule          share, any, always, end; `share_needed` goes with share
+    per_day       whether an area is brought to 24 h
+    measured      whether levels as an assay would measure them are judged, its error included
+    recovers_at   level by which a course has recovered after the last dose; None where not asked
     """
 
     name: str
@@ -184,10 +250,36 @@ class Target:
     rule: str
     share_needed: float
     rule_text: str
+    per_day: bool = False
+    mic: Mic | None = None
+    response: ResponseCurve | None = None
+    measured: bool = False
+    recovers_at: float | None = None
 
     @property
     def instant(self) -> bool:
         return self.start == self.end
+
+    @property
+    def summary(self) -> str:
+        """Which summary of the window is judged; empty for a course."""
+        word = self.quantity.removeprefix("unbound_")
+        return word if word in SUMMARIES else ""
+
+    @property
+    def unbound(self) -> bool:
+        return self.quantity.startswith("unbound_")
+
+    @property
+    def over_time(self) -> bool:
+        """Whether it has rows in the over-time tables: once for all MICs of a section."""
+        return self.mic is None or self.mic.first
+
+
+def needs_effect_site(target: Target) -> bool:
+    """Whether a target follows the effect site; else it follows plasma."""
+    follows = target.response.follows if target.response else target.quantity
+    return follows in ("effect_site", "effect")
 
 
 @dataclass(frozen=True)
@@ -216,9 +308,16 @@ class Study:
     targets: tuple[Target, ...]
     matters: float | None
     reference: str | None
+    robustness: bool
     until_min: float
     every_min: float
     warnings: tuple[str, ...]
+
+    @property
+    def families(self) -> tuple[str, ...]:
+        """The target sections that are judged against a distribution of MICs."""
+        return tuple(dict.fromkeys(target.mic.family for target in self.targets
+                                   if target.mic is not None and target.mic.weight is not None))
 
     @property
     def group_names(self) -> tuple[str, ...]:
@@ -241,6 +340,9 @@ class Received:
     capped, floored, rounded   whether any administration was changed so
     impossible                 whether any administration came out as zero
     longest_infusion_min       longest infusion at one stretch of rates above zero
+    too_fast                   whether any infusion is faster than the protocol's pump can give
+    vials                      containers opened when each administration opens its own; 0 where no vial is given
+    last_given_min             when the last dose or infusion ends, at most the run's end
     """
 
     total_mg: np.ndarray
@@ -250,11 +352,18 @@ class Received:
     impossible: np.ndarray
     undosed: np.ndarray
     longest_infusion_min: np.ndarray
+    too_fast: np.ndarray
+    vials: np.ndarray
+    last_given_min: np.ndarray
 
 
 @dataclass(frozen=True)
 class Judged:
-    """One target judged in each patient of a block, arrays (n,). Failed patients count as not attained."""
+    """One target judged in each patient of a block, arrays (n,). Failed patients count as not attained.
+
+    ever_below, ever_above  whether the window's lowest or highest value lies outside the range
+    measures                further numbers of each patient, by name: inf where it never happens, NaN where it has none
+    """
 
     failed: np.ndarray
     attained: np.ndarray
@@ -263,6 +372,9 @@ class Judged:
     above: np.ndarray
     far_below: np.ndarray
     far_above: np.ndarray
+    ever_below: np.ndarray
+    ever_above: np.ndarray
+    measures: dict[str, np.ndarray] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

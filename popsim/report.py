@@ -147,9 +147,8 @@ def _cards(study: Study) -> dict[str, Any]:
 
 def _doses(protocol: Protocol, doses: pd.DataFrame) -> dict[str, Any]:
     """Doses received, in the mass unit that the protocol's first step is written in."""
-    first = protocol.steps[0].variants[0]
-    unit = (first.amount or first.rate).unit.split("/")[0]
-
+    first = protocol.steps[0].variants[0].amount or protocol.steps[0].variants[0].rate
+    unit = first.unit.split("/")[0] if first else "mg"  # a loading dose is computed in mg
     rows = rows_where(doses, protocol=protocol.name)
     shares = [name for name in CHANGED if (rows[f"share_{name}"] > 0).any()]
     columns = [f"Total, {unit}", f"{unit}/kg total weight", f"{unit}/kg lean weight"]

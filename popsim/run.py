@@ -18,6 +18,7 @@ from covariates.catalogue import attributes_needed
 from popsim import solve
 from popsim.effect import effect_at
 from popsim.groups import members as group_members
+from popsim.judging import judge_target
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
@@ -27,13 +28,13 @@ from popsim.records import (
     IndividualParameters,
     Judged,
     Patients,
-    Received,
     Study,
     Timeline,
     rows_of,
 )
+from popsim.slices import quartile_cuts, quartile_members
 from popsim.tally import Findings, Tally, check_room
-from popsim.target import COURSE_OF, concentration_limits, course_values, judge, window_of
+from popsim.target import course_values
 from popsim.timeline import build_timeline
 
 LEAN = "lean_body_mass_janmahasatian"
@@ -42,19 +43,21 @@ ROWS_AT_ONCE = 1024  # patients whose courses are held at a time: they stay in t
 
 def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              sink: Callable[[BlockRows], None] | None = None,
-             progress: Callable[[int], None] | None = None) -> Findings:
-    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far."""
+             progress: Callable[[int], None] | None = None, over_time: bool = True) -> Findings:
+    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far. Without
+    `over_time` nothing is counted on the grid, which takes most of the time."""
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)
     queue = _Queue(iter(drawn), sink, progress)
-    grid = study.grid_min()
+    grid = study.grid_min() if over_time else np.empty(0)
     check_room(study, len(grid))
+    cuts = quartile_cuts(study)
 
     def work(_: int = 0) -> Tally | None:
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid))
+                tally = tally or Tally.empty(study, len(grid), cuts)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -113,6 +116,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     lookup = Lookup(patients.attributes)
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
+    quarters = quartile_members(tally.cuts, lookup, len(patients)).astype(np.int64)
+    tally.quartile_patients += quarters.sum(axis=0)
     tally.overlap += members.T @ members
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
@@ -131,10 +136,14 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if model.built_on.longest_infusion_min is not None:
                 tally.long_infusion[m, p] += members.T @ (
                     received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
-            for t in range(len(study.targets)):
-                judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
+            for t, target in enumerate(study.targets):
+                judged[p, t], found = judge_target(study, m, target, patients, parameters, disposition, timeline,
+                                                   received, lookup)
                 status = np.where(status == 0, found, status)
-                tally.targets[m, p, t].add(judged[p, t], members)
+                tally.targets[m, p, t].add(judged[p, t], members, parameters.outside)
+            _add_responses(study, m, p, judged, members, tally)
+            if not len(grid):
+                continue
             counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
             kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)
             if keep_courses:
@@ -142,7 +151,10 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
         tally.add_statuses(m, status)
         for t in range(len(study.targets)):
             for a, b in combinations(range(len(study.protocols)), 2):
-                tally.pairs[m, t, a, b].add(judged[a, t], judged[b, t], members)
+                pair = judged[a, t], judged[b, t]
+                tally.pairs[m, t, a, b].add(*pair, members)
+                tally.pairs_inside[m, t, a, b].add(*pair, members * ~parameters.outside[:, None])
+                tally.quartile_pairs[m, t, a, b].add(*pair, quarters)
     return BlockRows(patients, lookup, courses)
 
 
@@ -155,13 +167,14 @@ def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
     return per
 
 
-def _judge_target(study: Study, m: int, t: int, parameters: IndividualParameters, disposition: Disposition,
-                  timeline: Timeline, received: Received, lookup: Lookup) -> tuple[Judged, np.ndarray]:
-    model, target, n = study.models[m], study.targets[t], len(disposition)
-    low, high = concentration_limits(target, model, parameters.values, n)
-    start, end = window_of(target, lookup, n, study.until_min)
-    course = solve.window_course(disposition, timeline, COURSE_OF[target.quantity], low, high, start, end)
-    return judge(target, model, parameters.values, course, received.undosed), course.status
+def _add_responses(study: Study, m: int, p: int, judged: dict[tuple[int, int], Judged], members: np.ndarray,
+                   tally: Tally) -> None:
+    """Each patient's share of the isolates against which the target is attained: its mean is the cumulative fraction
+    of response."""
+    for family in study.families:
+        share = sum(target.mic.weight * judged[p, t].attained for t, target in enumerate(study.targets)
+                    if target.mic is not None and target.mic.family == family)
+        tally.responses[m, p, family].add(share, members)
 
 
 def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: IndividualParameters,
@@ -178,9 +191,12 @@ def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: Indiv
         plasma, site = solve.courses_on_grid(part, rows_of(timeline, rows), grid)
         values = {name: array[rows] for name, array in parameters.values.items()}
         for t, target in enumerate(study.targets):
+            if not target.over_time:
+                continue
             quantity = course_values(target, model, values, plasma, site)
             counts = tally.targets[m, p, t]
-            limits = (np.full(len(part), limit) for limit in (target.low, target.high))
+            ends = (-np.inf, np.inf) if target.summary else (target.low, target.high)
+            limits = (np.full(len(part), limit) for limit in ends)
             solve.tally_on_grid(quantity, *limits, counted[t][rows], counts.over_time, counts.bins)
         if keep_courses:
             effect = effect_at(model, values, site) if model.effect else np.full_like(site, np.nan)

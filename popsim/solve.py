@@ -110,14 +110,14 @@ def window_course(
     n = (len(disposition),)
     low, high = _array("low", low, n), _array("high", high, n)
     start, end = _array("start_min", start_min, n), _array("end_min", end_min, n)
-    shares, extremes, touched = np.empty((*n, 3)), np.empty((*n, 3)), np.empty(n, dtype=np.bool_)
+    shares, extremes, touched = np.empty((*n, 3)), np.empty((*n, 5)), np.empty(n, dtype=np.bool_)
     kernels.windows(
         COURSES[which], disposition.rates, disposition.weights, disposition.ke0, *events, low, high, start, end,
         status, shares, extremes, touched,
     )  # fmt: skip
     below, inside, above = shares.T.copy()
-    lowest, highest, at_end = extremes.T.copy()
-    return WindowCourse(below, inside, above, touched, lowest, highest, at_end, status)
+    lowest, highest, at_end, first_inside, last_above = extremes.T.copy()
+    return WindowCourse(below, inside, above, touched, lowest, highest, at_end, status, first_inside, last_above)
 
 
 def area_under_curve(

@@ -12,9 +12,9 @@ from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
 from covariates.formula import FUNCTIONS, Formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
-from popsim.patients.listed import list_columns
+from popsim.patients.listed import list_columns, read_list
 from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
-from popsim.records import Study, Target, Variability
+from popsim.records import Study, Target, Variability, needs_effect_site
 from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
 from popsim.study_protocols import covariate_fault, resolve_protocols
 from popsim.study_targets import resolve_targets
@@ -28,7 +28,7 @@ def read_study(path: Path) -> Study:
     """Read and check a study file; ProblemsError lists all that the user can mend."""
     section = read_study_file(path)
     problems: list[Problem] = []
-    models = _models(section, path, problems)
+    models = _with_fraction_unbound(section, _models(section, path, problems), path, problems)
     brought = _brought(section.population, path, problems)
     attributes = brought | {name: "condition" if isinstance(value, bool) else "number"
                             for name, value in section.population.set.items()}
@@ -41,6 +41,7 @@ def read_study(path: Path) -> Study:
     _check_unique("protocol", [protocol.name for protocol in protocols], path, problems)
     targets = resolve_targets(section.target, models, until_min, attributes, path.name, problems)
     _check_set_windows(section, targets, until_min, path, problems)
+    _check_listed_windows(section, targets, path, problems)
     _check_formulas(section, attributes, path, problems)
     _check_model_needs(models, attributes, path, problems)
     variability = _variability(section.variability, models, path, problems)
@@ -61,9 +62,10 @@ def read_study(path: Path) -> Study:
         targets=targets,
         matters=section.compare.matters.value / 100 if section.compare.matters else None,
         reference=section.compare.reference or (groups[0][0] if groups else None),
+        robustness=section.compare.robustness,
         until_min=until_min,
         every_min=every_min,
-        warnings=tuple(_warnings(models, targets, variability)),
+        warnings=tuple(_warnings(section, models, targets, variability)),
     )
 
 
@@ -81,6 +83,29 @@ def _models(section: StudyFile, path: Path, problems: list[Problem]) -> tuple[Dr
                                         f"other models of {models[0].drug}"))
         _check_unique("drug: model", [model.name for model in models], path, problems)
     return tuple(models)
+
+
+def _with_fraction_unbound(section: StudyFile, models: tuple[DrugModel, ...], path: Path,
+                           problems: list[Problem]) -> tuple[DrugModel, ...]:
+    """The models, with the study's own fraction unbound; refused where a sheet has one, or has no use for it."""
+    share, source = section.drug.fraction_unbound, section.drug.fraction_unbound_source
+    if (share is None) != (source is None):
+        missing = "fraction_unbound" if share is None else "fraction_unbound_source"
+        problems.append(Problem(f"{path.name}: drug: {missing}", "missing", "both, or neither",
+                                'fraction_unbound = 0.2 with fraction_unbound_source = "where the number comes from"'))
+    if share is None or source is None:
+        return models
+    where = f"{path.name}: drug: fraction_unbound"
+    if share == 0:
+        problems.append(Problem(where, "0", "above 0 and up to 1"))
+    for model in models:
+        if "fraction_unbound" in model.measured_in:
+            problems.append(Problem(where, f"given, but {model.name} has its own "
+                                           f"({model.measured_in['fraction_unbound']:g})", "no fraction_unbound"))
+        elif model.measured_in["fluid"] != "total plasma":
+            problems.append(Problem(where, f"given, but {model.name} was built on {model.measured_in['fluid']}",
+                                    "a model built on total plasma"))
+    return tuple(replace(model, measured_in=model.measured_in | {"fraction_unbound": share}) for model in models)
 
 
 def _sheet(name: str, where: str, path: Path, problems: list[Problem]) -> DrugModel | None:
@@ -205,7 +230,8 @@ def _check_model_needs(models: tuple[DrugModel, ...], attributes: dict[str, str]
             elif attributes[name] not in ("", "condition"):
                 problems.append(Problem(f"{path.name}: population: set", f"{name} is {WORDS[attributes[name]]}",
                                         f"true or false ({meaning})", f"under [population.set]: {name} = true"))
-        lacking = set().union(*(attributes_needed(name, attributes) for name in model.needs))
+        asked = model.needs | set(model.built_on.ranges) | ({"sex"} if model.built_on.sex else set())
+        lacking = set().union(*(attributes_needed(name, attributes) for name in asked))
         for name in sorted(lacking):
             problems.append(Problem(f"{path.name}: population", f"no {name}, and {model.name} needs it",
                                     f"a population with {name} ({ATTRIBUTES[name] or 'female, male'})"))
@@ -238,6 +264,23 @@ def _variability(section: VariabilitySection, models: tuple[DrugModel, ...], pat
     return Variability(section.between_subject, section.scale, borrowed)
 
 
+def _check_listed_windows(section: StudyFile, targets: tuple[Target, ...], path: Path,
+                          problems: list[Problem]) -> None:
+    """A column of the list that bounds a window must count minutes or hours."""
+    named = {edge for target in targets for edge in (target.start, target.end) if isinstance(edge, str)}
+    named -= section.population.set.keys()
+    if not named or section.population.source != "list" or section.population.file is None:
+        return
+    try:
+        people = read_list(path.parent / section.population.file, section.population.on_bad_row or "stop")
+    except ProblemsError:
+        return  # told when the population is read
+    for name in sorted(named & people.attributes.keys()):
+        if people.attributes[name].dtype.kind == "b":
+            problems.append(Problem(f"{path.name}: target: during", f'"{name}", which is true or false in the list',
+                                    "a column that counts minutes or hours"))
+
+
 def _check_set_windows(section: StudyFile, targets: tuple[Target, ...], until_min: float, path: Path,
                        problems: list[Problem]) -> None:
     """A window whose end is set for everyone can be checked now; one from a list's column only with the patients."""
@@ -259,8 +302,21 @@ def _check_compare(section: StudyFile, groups: list[str], path: Path, problems: 
                                 nearest(reference, groups)))
 
 
-def _warnings(models: tuple[DrugModel, ...], targets: tuple[Target, ...], variability: Variability) -> Iterable[str]:
-    if len(models) > 1 and any(target.quantity == "effect_site" for target in targets):
+def _warnings(section: StudyFile, models: tuple[DrugModel, ...], targets: tuple[Target, ...],
+              variability: Variability) -> Iterable[str]:
+    if section.drug.fraction_unbound is not None:
+        yield (f"Fraction unbound {section.drug.fraction_unbound:g}, the same in everyone: "
+               f"{section.drug.fraction_unbound_source}.")
+    for model in models:
+        if model.measured_in["fluid"] == "whole blood" and any(not needs_effect_site(target) for target in targets):
+            yield f"{model.name} was built on whole blood: its concentrations are not those of plasma."
+    if any(target.measured for target in targets):
+        yield ("Levels are judged as an assay would measure them, the model's residual error included; "
+               "they are not the true concentrations.")
+    for target in section.target:
+        if target.isolates_source is not None:
+            yield f"Isolates: {target.isolates_source}."
+    if len(models) > 1 and any(needs_effect_site(target) for target in targets):
         yield ("Each ke0 defines an effect site of its own: an effect-site range does not mean the same under "
                "another model, so these results are not to be compared between models.")
     if variability.from_model is not None and variability.between_subject:

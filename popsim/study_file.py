@@ -15,9 +15,12 @@ from covariates.units import Quantity, Range, allowed_kinds, parse_quantity, par
 
 DOSE_AMOUNTS = ("mass", "mass_per_kg", "mass_per_m2")
 DOSE_RATES = ("rate", "rate_per_kg", "rate_per_m2")
+WHOLE_VIALS = "whole vials"
 LARGEST, SMALLEST = 1e9, 1e-12  # of any quantity in its internal unit: beyond lie slips of the pen, and overflow
 LONGEST_NAME, LONGEST_TEXT = 80, 400
 MOST_ADMINISTRATIONS = 1000  # of one dose step
+MOST_IN_PROTOCOL = 2000
+MOST_MICS = 20
 
 
 def _refuse(found: str, allowed: str, advice: str = "") -> ProblemsError:
@@ -29,16 +32,17 @@ def _parsed(parse: Callable[[Any], Any], kind: Any) -> Any:
     return Annotated[kind, BeforeValidator(parse)]
 
 
-def _quantity(*kinds: str) -> Any:
-    def parse(value: Any) -> Quantity:
-        if isinstance(value, bool) or not isinstance(value, str | int | float):
-            raise _refuse(shown(value), allowed_kinds(kinds))
-        quantity = parse_quantity(value, kinds)
-        if quantity.value != 0 and not SMALLEST <= quantity.value <= LARGEST:
-            raise _refuse(f'"{quantity.text}"', "a plausible size", "check the number and its unit")
-        return quantity
+def _parse_plain(value: Any, kinds: tuple[str, ...]) -> Quantity:
+    if isinstance(value, bool) or not isinstance(value, str | int | float):
+        raise _refuse(shown(value), allowed_kinds(kinds))
+    quantity = parse_quantity(value, kinds)
+    if quantity.value != 0 and not SMALLEST <= quantity.value <= LARGEST:
+        raise _refuse(f'"{quantity.text}"', "a plausible size", "check the number and its unit")
+    return quantity
 
-    return _parsed(parse, Quantity)
+
+def _quantity(*kinds: str) -> Any:
+    return _parsed(lambda value: _parse_plain(value, kinds), Quantity)
 
 
 def _range(kind: str) -> Any:
@@ -93,6 +97,27 @@ def _limit(value: Any) -> str | float:
     return value
 
 
+def _rounding(value: Any) -> Quantity | str:
+    return WHOLE_VIALS if value == WHOLE_VIALS else _parse_plain(value, ("mass", "rate", "volume", "flow"))
+
+
+def _mics(value: Any) -> list[Quantity]:
+    """One minimum inhibitory concentration, or a list of them."""
+    if isinstance(value, list) and not 0 < len(value) <= MOST_MICS:
+        raise _refuse(f"{len(value)} of them", f"1 to {MOST_MICS} concentrations")
+    return [_parse_plain(one, ("concentration",)) for one in (value if isinstance(value, list) else [value])]
+
+
+def _isolates(value: Any) -> list[tuple[Quantity, int]]:
+    """How many isolates have which minimum inhibitory concentration."""
+    form = 'numbers of isolates: { "0.5 mg/L" = 120, "1 mg/L" = 60 }'
+    if not isinstance(value, dict) or not 0 < len(value) <= MOST_MICS:
+        raise _refuse(shown(value), form)
+    if any(isinstance(count, bool) or not isinstance(count, int) or not 0 < count <= 10**9 for count in value.values()):
+        raise _refuse("a number of isolates that is not a whole number above zero", form)
+    return [(_parse_plain(mic, ("concentration",)), count) for mic, count in value.items()]
+
+
 def _condition(value: Any) -> Formula:
     if not isinstance(value, str):
         raise _refuse(shown(value), 'a condition as text, such as "age >= 65 and bmi < 30"')
@@ -141,12 +166,15 @@ class GroupSection(Section):
 class DrugSection(Section):
     model: Name
     repeat_with: Annotated[list[Name], Field(max_length=20)] = []
+    fraction_unbound: _number(0, 1, 0.2) | None = None
+    fraction_unbound_source: _text(LONGEST_TEXT) | None = None
 
 
 class BandSection(Section):
     where: Condition
     at: Time | None = None
     amount: Amount | None = None
+    amount_for: _quantity("concentration") | None = None
     rate: Rate | None = None
     every: Time | None = None
 
@@ -154,6 +182,10 @@ class BandSection(Section):
 class DoseSection(Section):
     at: Time | None = None
     amount: Amount | None = None
+    amount_for: _quantity("concentration") | None = None
+    volume: _quantity("volume_per_kg") | None = None
+    volume_of: Name | None = None
+    volume_is: Literal["V1", "Vss"] | None = None
     rate: Rate | None = None
     over: Time | None = None
     until: Time | None = None
@@ -162,7 +194,7 @@ class DoseSection(Section):
     by: Name | None = None
     at_most: PlainDose | None = None
     at_least: PlainDose | None = None
-    round_to: PlainDose | None = None
+    round_to: _parsed(_rounding, Any) | None = None
     where: Condition | None = None
     route: Literal["iv", "oral"] = "iv"
     band: Annotated[list[BandSection], Field(max_length=100)] = []
@@ -173,16 +205,30 @@ class ProtocolSection(Section):
     by: Name | None = None
     strength: _quantity("concentration") | None = None
     vial: _quantity("volume") | None = None
+    pump_at_most: _quantity("flow", "rate") | None = None
+    impossible: Literal["warn", "error"] = "warn"
     no_dose: Literal["error", "allowed"] = "error"
     dose: Annotated[list[DoseSection], Field(min_length=1, max_length=100)]
 
 
 class TargetSection(Section):
     name: Name | None = None
-    quantity: Literal["plasma", "effect_site", "effect"]
+    quantity: Literal["plasma", "unbound_plasma", "effect_site", "effect", "response", "area_under_curve",
+                      "unbound_area_under_curve", "peak", "unbound_peak", "trough", "unbound_trough", "average",
+                      "unbound_average"]
     range: Name | None = None
     low: Limit | None = None
     high: Limit | None = None
+    over_mic: Name | None = None
+    mic: _parsed(_mics, Any) | None = None
+    isolates: _parsed(_isolates, Any) | None = None
+    isolates_source: _text(LONGEST_TEXT) | None = None
+    per: Literal["24 h"] | None = None
+    half: _quantity("concentration") | None = None
+    steepness: _number(0.01, 100, 4) | None = None
+    follows: Literal["plasma", "unbound_plasma", "effect_site"] | None = None
+    levels: Literal["true", "measured"] = "true"
+    recovers_at: Limit | None = None
     during: Name
     attained_when: Name | None = None
 
@@ -190,6 +236,7 @@ class TargetSection(Section):
 class CompareSection(Section):
     matters: _quantity("percent") | None = None
     reference: Name | None = None
+    robustness: StrictBool = True
 
 
 class RunSection(Section):
@@ -298,8 +345,7 @@ _EXAMPLES = {
     "protocol": "at least one [[protocol]]", "target": "a [target] section", "dose": "at least one [[protocol.dose]]",
 }
 _NOT_YET = "this version of popsim does not have it yet"
-_LATER = dict.fromkeys(("described", "lattice", "unbound_plasma", "area_under_curve", "unbound_area_under_curve",
-                        "peak", "trough", "average"), _NOT_YET)
+_LATER = dict.fromkeys(("described", "lattice"), _NOT_YET)
 
 
 def _known_keys(location: list[str | int]) -> list[str]:

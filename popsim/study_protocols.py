@@ -8,7 +8,8 @@ from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity
 from popsim.records import DoseStep, DoseVariant, Protocol
-from popsim.study_file import MOST_ADMINISTRATIONS, DoseSection, ProtocolSection, key_path
+from popsim.study_file import MOST_ADMINISTRATIONS, MOST_IN_PROTOCOL, WHOLE_VIALS, DoseSection, ProtocolSection, key_path
+from popsim.study_loading import is_given, resolve_loading
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
 SIZES = {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}
@@ -34,6 +35,7 @@ def resolve_protocols(sections: list[ProtocolSection], run_until_min: float, att
             report(("vial",), section.vial.text, "a vial only beside strength", 'add strength = "10 mg/mL"')
         steps = tuple(_step(step, number, section, run_until_min, attributes, report)
                       for number, step in enumerate(section.dose))
+        _check_many(steps, run_until_min, report)
         protocols.append(Protocol(
             name=section.name,
             by=section.by or "weight",
@@ -41,8 +43,42 @@ def resolve_protocols(sections: list[ProtocolSection], run_until_min: float, att
             vial_ml=section.vial.value * 1000 if section.vial else None,
             no_dose_allowed=section.no_dose == "allowed",
             steps=steps,
+            strength_text=section.strength.text if section.strength else "",
+            pump_mg_per_min=_pump(section, report),
+            impossible_refused=section.impossible == "error",
         ))
     return tuple(protocols)
+
+
+def _pump(section: ProtocolSection, report: Report) -> float | None:
+    """The pump's limit in mg/min: as a rate, or as a flow of a stated strength."""
+    limit = section.pump_at_most
+    if limit is None:
+        return None
+    if limit.value == 0:
+        report(("pump_at_most",), f'"{limit.text}"', "above zero")
+    if limit.kind == "rate":
+        return limit.value
+    if section.strength is None:
+        report(("pump_at_most",), f'"{limit.text}" without strength', "a flow beside strength, or a rate",
+               'add strength = "10 mg/mL"')
+        return None
+    return limit.value * section.strength.value
+
+
+def _check_many(steps: tuple[DoseStep, ...], run_until_min: float, report: Report) -> None:
+    """Each administration costs memory in every patient: many steps of many administrations are refused together."""
+    counts = [administrations_at_most(step, run_until_min) for step in steps]
+    if sum(counts) > MOST_IN_PROTOCOL:
+        report(("dose",), f"about {sum(counts):,.0f} administrations in all", f"at most {MOST_IN_PROTOCOL:,}",
+               "longer intervals, fewer times, or an infusion (rate)")
+
+
+def administrations_at_most(step: DoseStep, run_until_min: float) -> float:
+    """How many administrations a step has, over all its bands."""
+    end = run_until_min if step.until_min is None else min(step.until_min, run_until_min)
+    return sum(1 if not variant.every_min else step.times or max((end - variant.at_min) / variant.every_min, 1)
+               for variant in step.variants)
 
 
 def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_until_min: float,
@@ -50,9 +86,12 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
     def say(key: str, found: str, allowed: str, advice: str = "") -> None:
         report(("dose", number, key), found, allowed, advice)
 
-    variants = _variants(section, number, say, report)
+    loading = resolve_loading(section, attributes, say)
+    variants = _variants(section, number, loading, say, report)
     scaled = {PER_UNIT[dose.kind] for variant in variants for dose in (variant.amount, variant.rate)
               if dose is not None and dose.kind in PER_UNIT}
+    if any(variant.loading is not None and variant.loading.litres_per_kg is not None for variant in variants):
+        scaled |= {"kg"}
     by = section.by or protocol.by
     _check_scaling(scaled, section.by, by, attributes, say)
     _check_bands(section, variants, say)
@@ -67,7 +106,7 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
         for key, dose in (("amount", variant.amount), ("rate", variant.rate)):
             if dose is not None and dose.value == 0:
                 say(key, f'"{dose.text}"', "above zero", "leave the step out, or let where say who gets it")
-    limits = _limits(section, variants, say)
+    limits = _limits(section, protocol, variants, say)
     return DoseStep(
         number=number + 1,
         where=section.where,
@@ -80,17 +119,24 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
     )
 
 
-def _variants(section: DoseSection, number: int, say: Callable, report: Report) -> tuple[DoseVariant, ...]:
+def _variants(section: DoseSection, number: int, loading: Callable, say: Callable,
+              report: Report) -> tuple[DoseVariant, ...]:
     """The step itself, or its bands: a band's own value wins, the step's stands where the band gives none."""
     if not section.band:
-        if section.amount is None and section.rate is None:
+        if section.amount is None and section.rate is None and not is_given(section):
             say("amount", "neither amount nor rate",
                 'amount = "1.5 mg/kg" (a dose) or rate = "6 mg/kg/h" (an infusion)')
-        return (DoseVariant(None, _minutes(section.at) or 0.0, _minutes(section.every), section.amount, section.rate),)
+        if section.amount is not None and section.amount_for is not None:
+            say("amount_for", section.amount_for.text, "amount or amount_for, not both")
+        return (DoseVariant(None, _minutes(section.at) or 0.0, _minutes(section.every), section.amount, section.rate,
+                            loading(section.amount_for)),)
     variants = []
     for index, band in enumerate(section.band):
         amount, rate = band.amount or section.amount, band.rate or section.rate
-        if amount is None and rate is None:
+        concentration = band.amount_for or section.amount_for
+        if amount is not None and concentration is not None:
+            report(("dose", number, "band", index, "amount_for"), concentration.text, "amount or amount_for, not both")
+        if amount is None and rate is None and concentration is None:
             report(("dose", number, "band", index, "amount"), "neither amount nor rate",
                    'amount = "500 mg" or rate = "6 mg/kg/h", here or in the step')
         variants.append(DoseVariant(
@@ -99,6 +145,7 @@ def _variants(section: DoseSection, number: int, say: Callable, report: Report) 
             every_min=_minutes(band.every) if band.every else _minutes(section.every),
             amount=amount,
             rate=rate,
+            loading=loading(concentration),
         ))
     return tuple(variants)
 
@@ -141,7 +188,7 @@ def _check_scaling(scaled: set[str], own_by: str | None, by: str | None, attribu
 
 
 def _check_bands(section: DoseSection, variants: tuple[DoseVariant, ...], say: Callable) -> None:
-    kinds = {(variant.amount is not None, variant.rate is not None) for variant in variants}
+    kinds = {(not variant.is_rate, variant.rate is not None) for variant in variants}
     if len(kinds) > 1:
         say("band", "amounts in some bands and rates in others", "the same kind of dose in every band",
             "make two steps of it, each with its where")
@@ -164,7 +211,7 @@ def _check_repeats(section: DoseSection, variants: tuple[DoseVariant, ...], run_
 
 
 def _check_duration(section: DoseSection, variants: tuple[DoseVariant, ...], say: Callable) -> None:
-    has_amount = any(variant.amount is not None for variant in variants)
+    has_amount = any(variant.amount is not None or variant.loading is not None for variant in variants)
     has_rate = any(variant.rate is not None for variant in variants)
     repeats = any(variant.every_min is not None for variant in variants)
     if has_amount and has_rate and section.over is not None:
@@ -189,13 +236,16 @@ def _check_duration(section: DoseSection, variants: tuple[DoseVariant, ...], say
             say("until", section.until.text, f"after the step's start at {variant.at_min:g} min")
 
 
-def _limits(section: DoseSection, variants: tuple[DoseVariant, ...], say: Callable) -> dict[str, float | None]:
+def _limits(section: DoseSection, protocol: ProtocolSection, variants: tuple[DoseVariant, ...],
+            say: Callable) -> dict[str, float | None]:
     """Caps, floors and rounding in mg, or mg/min when the step has only a rate."""
-    wanted = "mass" if any(variant.amount is not None for variant in variants) else "rate"
+    wanted = "rate" if all(variant.is_rate for variant in variants) else "mass"
     example = "200 mg" if wanted == "mass" else "100 mg/h"
     values: dict[str, float | None] = {}
     for key in ("at_most", "at_least", "round_to"):
         given: Quantity | None = getattr(section, key)
+        if key == "round_to":
+            given = _drawn_up(section.round_to, protocol, say)
         values[key] = None if given is None else given.value
         if given is not None and given.kind != wanted:
             say(key, f'"{given.text}"', f'the kind of the dose itself, such as "{example}"')
@@ -206,3 +256,21 @@ def _limits(section: DoseSection, variants: tuple[DoseVariant, ...], say: Callab
         say("at_most", f"a cap ({section.at_most.text}) below the floor ({section.at_least.text})",
             "a cap at or above the floor")
     return values
+
+
+def _drawn_up(given: Quantity | str | None, protocol: ProtocolSection, say: Callable) -> Quantity | None:
+    """Rounding as an amount or a rate of drug: a volume, a flow or a whole vial is turned into it by the strength."""
+    if given is None or (isinstance(given, Quantity) and given.kind in ("mass", "rate")):
+        return given
+    if given == WHOLE_VIALS:
+        if protocol.strength is None or protocol.vial is None:
+            say("round_to", f'"{WHOLE_VIALS}"', "only beside strength and vial", 'strength = "10 mg/mL", vial = "50 mL"')
+            return None
+        vial_mg = protocol.vial.value * protocol.strength.value
+        return Quantity(vial_mg, "mass", "mg", WHOLE_VIALS)
+    if protocol.strength is None:
+        say("round_to", f'"{given.text}" without strength', "a volume or flow beside strength",
+            'add strength = "10 mg/mL" to the protocol')
+        return None
+    kind = "mass" if given.kind == "volume" else "rate"
+    return Quantity(given.value * protocol.strength.value, kind, "mg" if kind == "mass" else "mg/min", given.text)

@@ -8,10 +8,11 @@ import numpy as np
 import pandas as pd
 
 from popsim import solve
-from popsim.compare import against_reference, protocol_pairs
-from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
+from popsim.compare import against_reference, between_models, protocol_pairs, quartile_pairs
+from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, wilson
+from popsim.measures import responses, values
 from popsim.records import Protocol, Study
-from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
+from popsim.tally import ONE, Findings, Tally, TargetTally, decimal_quantile, decimal_value, range_names
 
 FEW_PATIENTS = 400
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
@@ -40,8 +41,29 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "ever_far_above": int(counts.far_above[g]) / everyone,
                 "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
+                **_errors(counts, g, n - failed),
+                "ever_below": int(counts.ever_below[g]) / everyone, "ever_above": int(counts.ever_above[g]) / everyone,
+                **_by_model(study, tally, m, counts, g, n),
+                "mic": mic.mg_per_l if (mic := study.targets[t].mic) else math.nan,
                 "note": _note(n, failed)})
     return pd.DataFrame(rows)
+
+
+def _errors(counts: TargetTally, g: int, judged: int) -> dict[str, float]:
+    """Monte Carlo standard errors of the mean shares of the window."""
+    whole = judged * ONE or math.nan
+    return {f"{name}_error": mean_error(int(getattr(counts, side)[g]) / whole,
+                                        int(getattr(counts, f"{side}_squared")[g]) / whole, judged)
+            for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above"))}
+
+
+def _by_model(study: Study, tally: Tally, m: int, counts: TargetTally, g: int, patients: int) -> dict[str, float]:
+    """Attainment among those inside and outside the people the model was built on; empty where there are none."""
+    if not range_names(study.models[m]):
+        return {"attained_inside_model": math.nan, "attained_outside_model": math.nan}
+    outside, attained_outside = int(tally.outside[m][g]), int(counts.attained_outside[g])
+    return {"attained_inside_model": (int(counts.attained[g]) - attained_outside) / (patients - outside or math.nan),
+            "attained_outside_model": attained_outside / (outside or math.nan)}
 
 
 def _note(patients: int, failed: int) -> str:
@@ -55,15 +77,20 @@ def _note(patients: int, failed: int) -> str:
 def over_time(study: Study, tally: Tally) -> pd.DataFrame:
     """One row per model, protocol, group, target and time: shares of patients, percentiles of the course quantity.
 
-    Failed and undosed patients are left out, as they are of the mean times.
+    Failed and undosed patients are left out, as they are of the mean times. An area, peak, trough or average has the
+    percentiles of plasma and no shares; of several MICs only the first has rows.
     """
     grid, parts = study.grid_min(), []
     for (m, p, t), counts in tally.targets.items():
+        if not study.targets[t].over_time:
+            continue
         quantiles = solve.percentiles_from_bins(counts.bins, PERCENTILES)
         for g, group in enumerate(study.group_names):
             solved = counts.over_time[g].sum(axis=1)
             with np.errstate(invalid="ignore"):
                 shares = counts.over_time[g] / solved[:, None]
+            if study.targets[t].summary:
+                shares = np.full_like(shares, np.nan)
             parts.append(pd.DataFrame({
                 "model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
                 "target": study.targets[t].name, "time_min": grid,
@@ -74,7 +101,7 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
 
 COMPARISON_COLUMNS = ("model", "group", "target", "protocol_a", "protocol_b", "patients", "failed", "attained_a",
                       "attained_b", "difference", "difference_low", "difference_high", "only_a", "only_b", "both",
-                      "neither", "verdict", "better")
+                      "neither", "verdict", "better", "median_gain", "median_gain_low", "median_gain_high")
 GROUP_COLUMNS = ("model", "protocol", "target", "group", "reference", "patients", "reference_patients", "attained",
                  "reference_attained", "difference", "difference_low", "difference_high", "failed", "reference_failed",
                  "note")
@@ -99,14 +126,17 @@ def doses(study: Study, tally: Tally) -> pd.DataFrame:
             for measure, keys in counts.doses.items():
                 row |= {f"{measure}_{name}": decimal_quantile(keys[g], share)
                         for name, share in zip(PERCENTILE_NAMES, PERCENTILES, strict=True)}
-            row |= {f"share_{name}": int(values[g]) / n if n else math.nan for name, values in counts.counts.items()}
-            rows.append(row | _prepared(protocol, row, counts.doses["total_mg"][g]))
+            shares = {name: int(counted[g]) / n if n else math.nan for name, counted in counts.counts.items()}
+            vials = shares.pop("vials")
+            row |= {f"share_{name}": share for name, share in shares.items()}
+            rows.append(row | _prepared(protocol, row, counts.doses["total_mg"][g], vials))
     return pd.DataFrame(rows)
 
 
-def _prepared(protocol: Protocol, row: dict, counted: np.ndarray) -> dict:
+def _prepared(protocol: Protocol, row: dict, counted: np.ndarray, vials_mean: float) -> dict:
     """Volumes and vials from the same quantiles, and the mean left over in opened vials; empty where the study gives
-    no strength or vial."""
+    no strength or vial. vials_p05 ... and waste_ml_mean: containers are shared by all administrations of a patient;
+    vials_each_mean and waste_each_ml_mean: each administration opens its own."""
     cells: dict = {}
     for name in ("p05", "p50", "p95"):
         total = row[f"total_mg_{name}"]
@@ -115,7 +145,17 @@ def _prepared(protocol: Protocol, row: dict, counted: np.ndarray) -> dict:
         whole = protocol.vial_ml is not None and not math.isnan(volume)
         cells[f"vials_{name}"] = math.ceil(volume / protocol.vial_ml - 1e-9) if whole else math.nan
     cells["waste_ml_mean"] = _mean_waste_ml(protocol, counted)
+    has_vials = protocol.strength_mg_per_ml is not None and protocol.vial_ml is not None and counted.any()
+    cells["vials_each_mean"] = vials_mean if has_vials else math.nan
+    cells["waste_each_ml_mean"] = (vials_mean * protocol.vial_ml - _mean_volume_ml(protocol, counted) if has_vials
+                                   else math.nan)
     return cells
+
+
+def _mean_volume_ml(protocol: Protocol, counted: np.ndarray) -> float:
+    keys = np.flatnonzero(counted)
+    whole = math.fsum(int(counted[key]) * decimal_value(int(key)) for key in keys)
+    return whole / int(counted.sum()) / protocol.strength_mg_per_ml
 
 
 def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
@@ -129,11 +169,14 @@ def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
 
 
 TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses}
+WHERE_ASKED = {"values": values, "responses": responses, "quartiles": quartile_pairs, "models": between_models}
 
 
 def all_tables(study: Study, tally: Tally) -> dict[str, pd.DataFrame]:
-    """Every table of a run that has no row per patient, by name."""
-    return {name: build(study, tally) for name, build in TABLES.items()}
+    """Every table of a run that has no row per patient, by name; those of WHERE_ASKED where they have rows."""
+    tables = {name: build(study, tally) for name, build in TABLES.items()}
+    asked = {name: pd.DataFrame(rows(study, tally)) for name, rows in WHERE_ASKED.items()}
+    return tables | {name: table for name, table in asked.items() if len(table)}
 
 
 def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
@@ -148,7 +191,9 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "
                      f"({solve.STATUS[code]}): not attained.")
     for p, protocol in enumerate(study.protocols):
-        for name, what in (("impossible", "with a dose that comes out as zero"), ("undosed", "without any dose")):
+        for name, what in (("impossible", "with a dose that comes out as zero"),
+                           ("too_fast", "with an infusion faster than the pump can give, simulated as written"),
+                           ("undosed", "without any dose")):
             count = int(tally.doses[p].counts[name][0])
             if count:
                 notes.append(f'"{protocol.name}": {_patients(count)} {what}.')

@@ -15,8 +15,10 @@ from popsim.records import Judged, Received, Study
 ONE = 2**32  # a share of 1 as a fixed-point integer
 DIGITS = 4  # doses are counted to four significant digits
 LOWEST_DECADE, DECADES = -9, 18
-MANTISSAS = 9 * 10 ** (DIGITS - 1)
-KEY_COUNT = 1 + DECADES * MANTISSAS
+KEY_COUNT = 1 + DECADES * 9 * 10 ** (DIGITS - 1)
+MEASURE_DIGITS = 3  # times and values of each patient are counted to three
+MEASURE_KEYS = 2 + DECADES * 9 * 10 ** (MEASURE_DIGITS - 1)
+STEPS_OF_SHARE = 1000  # differences of shares are counted in thousandths
 HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
 MOST_BYTES = 8 * 2**30
 
@@ -32,42 +34,74 @@ class TargetTally:
     above: np.ndarray
     far_below: np.ndarray
     far_above: np.ndarray
+    ever_below: np.ndarray
+    ever_above: np.ndarray
+    attained_outside: np.ndarray  # of those outside the people the model was built on
+    below_squared: np.ndarray
+    inside_squared: np.ndarray
+    above_squared: np.ndarray
     over_time: np.ndarray  # (groups, times, 3): below, in range, above
     bins: np.ndarray  # (groups, times, bins) of the course quantity
+    measures: dict[str, np.ndarray] = field(default_factory=dict)  # (groups, keys) of `measure_keys`
 
-    def add(self, judged: Judged, members: np.ndarray) -> None:
+    def add(self, judged: Judged, members: np.ndarray, outside: np.ndarray) -> None:
         fine = ~judged.failed
         below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
                          for share in (judged.below, judged.inside))
         columns = {"failed": judged.failed, "attained": judged.attained, "below": below, "inside": inside,
                    "above": np.where(fine, ONE - below - inside, 0), "far_below": judged.far_below,
-                   "far_above": judged.far_above}
+                   "far_above": judged.far_above, "ever_below": judged.ever_below, "ever_above": judged.ever_above,
+                   "attained_outside": judged.attained & outside}
+        columns |= {f"{name}_squared": np.rint((columns[name] / ONE) ** 2 * ONE)
+                    for name in ("below", "inside", "above")}
         for name, values in columns.items():
             getattr(self, name)[:] += members.T @ values.astype(np.int64)
+        for name, values in judged.measures.items():
+            counts = self.measures.setdefault(name, np.zeros((members.shape[1], MEASURE_KEYS), dtype=np.int64))
+            _count(counts, measure_keys(values), members * ~np.isnan(values)[:, None])
+
+
+@dataclass
+class ShareTally:
+    """A share of each patient; (groups,) integers."""
+
+    total: np.ndarray
+    squared: np.ndarray
+
+    def add(self, share: np.ndarray, members: np.ndarray) -> None:
+        self.total += members.T @ np.rint(share * ONE).astype(np.int64)
+        self.squared += members.T @ np.rint(share**2 * ONE).astype(np.int64)
 
 
 @dataclass
 class PairTally:
-    """Two protocols in the same patients under one model and target; (groups,) integers."""
+    """Two protocols in the same patients under one model and target; (groups,) integers.
+
+    gained  (groups, steps) counts of the difference b - a in the share of the window in range, -1 to 1 in thousandths
+    """
 
     failed: np.ndarray
     both: np.ndarray
     only_a: np.ndarray
     only_b: np.ndarray
     neither: np.ndarray
+    gained: np.ndarray
 
     def add(self, a: Judged, b: Judged, members: np.ndarray) -> None:
         columns = {"failed": a.failed | b.failed, "both": a.attained & b.attained, "only_a": a.attained & ~b.attained,
                    "only_b": ~a.attained & b.attained, "neither": ~a.attained & ~b.attained}
         for name, values in columns.items():
             getattr(self, name)[:] += members.T @ values.astype(np.int64)
+        gained = np.nan_to_num(b.inside) - np.nan_to_num(a.inside)
+        keys = np.rint(STEPS_OF_SHARE * (1 + gained)).astype(np.int64)
+        _count(self.gained, keys, members * ~columns["failed"][:, None])
 
 
 @dataclass
 class DoseTally:
     """What one protocol gives; doses counted by group to four significant digits."""
 
-    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, undosed: (groups,)
+    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, too_fast, undosed, vials: (groups,)
     doses: dict[str, np.ndarray]  # total_mg, mg_per_kg_total, mg_per_kg_lean: (groups, keys)
 
     def add(self, received: Received, per: dict[str, np.ndarray], members: np.ndarray) -> None:
@@ -75,9 +109,7 @@ class DoseTally:
         for name, counts in self.counts.items():
             counts += members.T @ getattr(received, name).astype(np.int64)
         for name, divisor in {"total_mg": 1.0, **per}.items():
-            keys = decimal_keys(received.total_mg / divisor)
-            for group in range(members.shape[1]):
-                np.add.at(self.doses[name][group], keys[members[:, group] > 0], 1)
+            _count(self.doses[name], decimal_keys(received.total_mg / divisor), members)
 
 
 @dataclass
@@ -90,26 +122,38 @@ class Tally:
     long_infusion: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
     targets: dict[tuple[int, int, int], TargetTally]  # model, protocol, target
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
+    pairs_inside: dict[tuple[int, int, int, int], PairTally]  # without those outside the model's people
+    quartile_pairs: dict[tuple[int, int, int, int], PairTally]  # by quartiles of covariates: (quartiles,)
+    quartile_patients: np.ndarray  # (quartiles,)
+    cuts: dict[str, np.ndarray]  # covariate -> its three quartiles
+    responses: dict[tuple[int, int, str], ShareTally]  # model, protocol, targets of one distribution of MICs
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int) -> Tally:
+    def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray]) -> Tally:
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
-        def zeros() -> np.ndarray:
-            return np.zeros(groups, dtype=np.int64)
+        def zeros(size: int = groups) -> np.ndarray:
+            return np.zeros(size, dtype=np.int64)
 
-        def target_tally() -> TargetTally:
-            return TargetTally(*(zeros() for _ in range(7)),
-                               over_time=np.zeros((groups, times, 3), dtype=np.int64),
-                               bins=np.zeros((groups, times, solve.BIN_COUNT), dtype=np.int32))
+        def target_tally(t: int) -> TargetTally:
+            rows = times if study.targets[t].over_time else 0
+            return TargetTally(*(zeros() for _ in range(13)),
+                               over_time=np.zeros((groups, rows, 3), dtype=np.int64),
+                               bins=np.zeros((groups, rows, solve.BIN_COUNT), dtype=np.int32))
+
+        def pair_tallies(size: int) -> dict[tuple[int, int, int, int], PairTally]:
+            return {(m, t, a, b): PairTally(*(zeros(size) for _ in range(5)),
+                                            gained=np.zeros((size, 2 * STEPS_OF_SHARE + 1), dtype=np.int64))
+                    for m in models for t in targets for a, b in combinations(protocols, 2)}
 
         def dose_tally() -> DoseTally:
             return DoseTally(
-                {name: zeros() for name in ("capped", "floored", "rounded", "impossible", "undosed")},
+                {name: zeros() for name in ("capped", "floored", "rounded", "impossible", "too_fast", "undosed",
+                                            "vials")},
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
@@ -118,15 +162,23 @@ class Tally:
             outside={m: zeros() for m in models},
             beyond={(m, name): zeros() for m in models for name in range_names(study.models[m])},
             long_infusion={(m, p): zeros() for m in models for p in protocols},
-            targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
-            pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
-                   for m in models for t in targets for a, b in combinations(protocols, 2)},
+            targets={(m, p, t): target_tally(t) for m in models for p in protocols for t in targets},
+            pairs=pair_tallies(groups),
+            pairs_inside=pair_tallies(groups),
+            quartile_pairs=pair_tallies(4 * len(cuts)),
+            quartile_patients=zeros(4 * len(cuts)),
+            cuts=cuts,
+            responses={(m, p, family): ShareTally(zeros(), zeros())
+                       for m in models for p in protocols for family in study.families},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
         )
 
     def merge(self, other: Tally) -> None:
         """Add another thread's counts to this one's."""
+        for key, counts in other.targets.items():
+            for name, theirs in counts.measures.items():
+                self.targets[key].measures.setdefault(name, np.zeros_like(theirs))
         for mine, theirs in zip(_arrays(self), _arrays(other), strict=True):
             mine += theirs
         for key, count in other.statuses.items():
@@ -158,12 +210,14 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap]
+    found = [tally.patients, tally.overlap, tally.quartile_patients]
     for table in (tally.outside, tally.beyond, tally.long_infusion):
         found += table.values()
-    for table in (tally.targets, tally.pairs):
+    for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses):
         for entry in table.values():
-            found += vars(entry).values()
+            found += (counts for counts in vars(entry).values() if isinstance(counts, np.ndarray))
+    for entry in tally.targets.values():
+        found += (entry.measures[name] for name in sorted(entry.measures))
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
     return found
@@ -171,12 +225,27 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
 
 def check_room(study: Study, times: int) -> None:
     """Raise ProblemsError where the counts of one thread would outgrow any ordinary machine's memory."""
-    courses = len(study.models) * len(study.targets) * times * (4 * solve.BIN_COUNT + 3 * 8)
-    needed = len(study.group_names) * len(study.protocols) * (courses + 3 * 8 * KEY_COUNT)
+    courses = len(study.models) * sum(target.over_time for target in study.targets) * times * (4 * solve.BIN_COUNT + 3 * 8)
+    measures = len(study.models) * len(study.targets) * 2 * 8 * MEASURE_KEYS
+    needed = len(study.group_names) * len(study.protocols) * (courses + measures + 3 * 8 * KEY_COUNT)
     if needed > MOST_BYTES:
         raise ProblemsError(Problem(
             "run: every", f"counts of {needed / 2**30:.0f} GB, by group, protocol, model, target and time",
             f"at most {MOST_BYTES / 2**30:.0f} GB", "a longer step, or fewer groups, protocols, models or targets"))
+
+
+def _count(counts: np.ndarray, keys: np.ndarray, members: np.ndarray) -> None:
+    """Count each patient's key in every group (rows of `counts`) that they belong to."""
+    for group, row in enumerate(counts):
+        row += np.bincount(keys[members[:, group] > 0], minlength=row.size)
+
+
+def measure_keys(values: np.ndarray) -> np.ndarray:
+    """Each value rounded to three significant digits, as an index: 0 for zero (and all under 1e-9), then ascending;
+    the last for what never happens (inf) or lies beyond 1e9. NaN is given an index that means nothing."""
+    never = values >= HIGHEST
+    known = np.where(np.isnan(values) | never | (values < 10.0**LOWEST_DECADE), 0.0, values)
+    return np.where(never, MEASURE_KEYS - 1, _keys(known, MEASURE_DIGITS))
 
 
 def decimal_keys(values: np.ndarray) -> np.ndarray:
@@ -184,35 +253,51 @@ def decimal_keys(values: np.ndarray) -> np.ndarray:
 
     Raises ProblemsError for a dose that cannot be counted: not a number, below zero, or outside 1e-9 to 1e9.
     """
-    positive = values > 0
     within = (values >= 10.0**LOWEST_DECADE) & (values < HIGHEST)
     if not (within | (values == 0)).all():
         wrong = values[~(within | (values == 0))][0]
         raise ProblemsError(Problem("doses", f"a total of {wrong:g} mg, or mg/kg, in a patient",
                                     f"0, or {10.0**LOWEST_DECADE:g} to {HIGHEST:g}", "check the units of the doses"))
+    return _keys(values, DIGITS)
+
+
+def _keys(values: np.ndarray, digits: int) -> np.ndarray:
+    positive = values > 0
     safe = np.where(positive, values, 1.0)
     decade = np.floor(np.log10(safe)).astype(np.int64)
-    mantissa = np.rint(safe / 10.0 ** (decade - DIGITS + 1)).astype(np.int64)
-    carried = mantissa >= 10**DIGITS  # 9999.7 rounds up into the next decade
-    decade, mantissa = np.where(carried, decade + 1, decade), np.where(carried, 10 ** (DIGITS - 1), mantissa)
-    short = mantissa < 10 ** (DIGITS - 1)  # log10 may round up just below a power of ten
-    mantissa = np.where(short, 10 ** (DIGITS - 1), mantissa)
-    keys = 1 + (decade - LOWEST_DECADE) * MANTISSAS + mantissa - 10 ** (DIGITS - 1)
+    mantissa = np.rint(safe / 10.0 ** (decade - digits + 1)).astype(np.int64)
+    carried = mantissa >= 10**digits  # 9999.7 rounds up into the next decade
+    decade, mantissa = np.where(carried, decade + 1, decade), np.where(carried, 10 ** (digits - 1), mantissa)
+    short = mantissa < 10 ** (digits - 1)  # log10 may round up just below a power of ten
+    mantissa = np.where(short, 10 ** (digits - 1), mantissa)
+    keys = 1 + (decade - LOWEST_DECADE) * _mantissas(digits) + mantissa - 10 ** (digits - 1)
     return np.where(positive, keys, 0)
 
 
-def decimal_value(key: int) -> float:
-    """The value of a key of `decimal_keys`: 600.0 for the key of 600.04."""
+def _mantissas(digits: int) -> int:
+    return 9 * 10 ** (digits - 1)
+
+
+def decimal_value(key: int, digits: int = DIGITS) -> float:
+    """The value of a key: 600.0 for the key of 600.04 to four digits."""
     if key == 0:
         return 0.0
-    decade, mantissa = divmod(key - 1, MANTISSAS)
-    return float(f"{mantissa + 10 ** (DIGITS - 1)}e{decade + LOWEST_DECADE - DIGITS + 1}")
+    decade, mantissa = divmod(key - 1, _mantissas(digits))
+    return float(f"{mantissa + 10 ** (digits - 1)}e{decade + LOWEST_DECADE - digits + 1}")
+
+
+def measure_value(key: int) -> float:
+    """The value of a key of `measure_keys`: inf for what never happens."""
+    return float("inf") if key == MEASURE_KEYS - 1 else decimal_value(key, MEASURE_DIGITS)
 
 
 def decimal_quantile(counts: np.ndarray, share: float) -> float:
     """Smallest counted value with at least `share` of the counts at or below it; NaN without counts."""
     total = int(counts.sum())
-    if total == 0:
-        return float("nan")
-    needed = max(int(np.ceil(share * total - 1e-9)), 1)
-    return decimal_value(int(np.searchsorted(np.cumsum(counts), needed)))
+    return float("nan") if total == 0 else decimal_value(key_of_rank(counts, share * total))
+
+
+def key_of_rank(counts: np.ndarray, rank: float) -> int:
+    """The key of the value of this rank, from 1 for the smallest; ranks beyond either end are brought to it."""
+    until = np.cumsum(counts)
+    return int(np.searchsorted(until, min(max(int(np.ceil(rank - 1e-9)), 1), int(until[-1]))))

@@ -8,8 +8,9 @@ from dataclasses import dataclass
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
+from covariates.sheet import parameters_of
 from covariates.units import Quantity
-from popsim.records import DoseStep, DoseVariant, Protocol, Received, Timeline
+from popsim.records import DoseStep, DoseVariant, Loading, Protocol, Received, Timeline
 
 GAP_MIN = 1e-9  # between two infusions: no pause, but the rounding of start + duration
 ROUNDING_SLACK = 1e-9  # 0.15 mg in steps of 0.1 mg is 1.4999999999999998 steps, and must round up
@@ -35,10 +36,11 @@ class Changes:
     floored: np.ndarray
     rounded: np.ndarray
     impossible: np.ndarray
+    too_fast: np.ndarray
 
     @classmethod
     def none(cls, n: int) -> Changes:
-        return cls(*(np.zeros(n, dtype=bool) for _ in range(4)))
+        return cls(*(np.zeros(n, dtype=bool) for _ in range(5)))
 
 
 def build_timeline(protocol: Protocol, lookup: Lookup, n: int, until_min: float) -> tuple[Timeline, Received]:
@@ -58,8 +60,29 @@ def build_timeline(protocol: Protocol, lookup: Lookup, n: int, until_min: float)
     for administration in administrations:
         total += _within_run(administration, until_min)
     received = Received(total, changes.capped, changes.floored, changes.rounded, changes.impossible, total == 0,
-                        longest)
+                        longest, changes.too_fast, _vials(protocol, administrations, n, until_min),
+                        _last_given(administrations, n, until_min))
     return timeline, received
+
+
+def _vials(protocol: Protocol, administrations: list[Administration], n: int, until_min: float) -> np.ndarray:
+    """Containers opened when each administration opens its own; 0 without a strength and a vial."""
+    vials = np.zeros(n, dtype=np.int64)
+    if protocol.strength_mg_per_ml is None or protocol.vial_ml is None:
+        return vials
+    for administration in administrations:
+        volume = _within_run(administration, until_min) / protocol.strength_mg_per_ml
+        vials += np.ceil(volume / protocol.vial_ml - ROUNDING_SLACK).astype(np.int64)
+    return vials
+
+
+def _last_given(administrations: list[Administration], n: int, until_min: float) -> np.ndarray:
+    """When each patient's last dose or infusion ends, at most the run's end; 0 for who gets none."""
+    last = np.zeros(n)
+    for administration in administrations:
+        given = administration.gets_it & (administration.amount_mg > 0)
+        last = np.where(given, np.maximum(last, administration.start_min + administration.duration_min), last)
+    return np.minimum(last, until_min)
 
 
 def administrations_of(protocol: Protocol, lookup: Lookup, n: int,
@@ -69,7 +92,22 @@ def administrations_of(protocol: Protocol, lookup: Lookup, n: int,
     administrations: list[Administration] = []
     for step in protocol.steps:
         administrations += _of_step(protocol, step, lookup, n, until_min, changes)
+    if protocol.pump_mg_per_min is not None:
+        for administration in administrations:
+            allowed = protocol.pump_mg_per_min * administration.duration_min * (1 + ROUNDING_SLACK)
+            changes.too_fast |= (administration.duration_min > 0) & (administration.amount_mg > allowed)
+    if protocol.impossible_refused and (impossible := changes.impossible | changes.too_fast).any():
+        raise _impossible(protocol, changes, impossible)
     return administrations, changes
+
+
+def _impossible(protocol: Protocol, changes: Changes, who: np.ndarray) -> ProblemsError:
+    what = [words for words, marked in (("comes out as zero", changes.impossible),
+                                        ("is faster than the pump can give", changes.too_fast)) if marked.any()]
+    return ProblemsError(Problem(
+        f'protocol "{protocol.name}"', f"a dose that {' or '.join(what)} in {who.sum():,} of {len(who):,} patients "
+        "looked at", "doses that can be given to everyone",
+        'impossible = "warn" in the protocol counts these patients instead'))
 
 
 def as_given(wanted: np.ndarray, at_least: float | None, at_most: float | None,
@@ -131,34 +169,55 @@ def _left_out(protocol: Protocol, nothing_covers: str, who: np.ndarray) -> Probl
         'no_dose = "allowed" in the protocol, if going without is meant'))
 
 
+def loading_mg(loading: Loading, step: DoseStep, lookup: Lookup, gets_it: np.ndarray) -> np.ndarray:
+    """mg that bring each patient's stated or typical volume to the concentration: 25 mg/L in 50 L is 1250 mg."""
+    if loading.model is None:
+        return loading.concentration.value * loading.litres_per_kg * _size(step, lookup, gets_it, loading.text)
+    typical = parameters_of(loading.model, lookup, {}, len(gets_it))
+    volumes = ("V1", "V2", "V3") if loading.volume == "Vss" else ("V1",)
+    litres = sum(typical[name] for name in volumes if name in typical)
+    unfit = gets_it & ~((litres > 0) & np.isfinite(litres))
+    if unfit.any():
+        raise ProblemsError(Problem(f"dose {step.number}: {loading.text}", f"no volume in {unfit.sum():,} patients",
+                                    "a volume above zero", "state a volume, or let where leave these patients out"))
+    return loading.concentration.value * litres
+
+
 def _scaled(quantity: Quantity, step: DoseStep, lookup: Lookup, gets_it: np.ndarray) -> np.ndarray:
     """mg or mg/min for each patient; a size by which nobody can be dosed is refused."""
     if quantity.kind in ("mass", "rate"):
         return np.full(len(gets_it), quantity.value)
+    return quantity.value * _size(step, lookup, gets_it, quantity.text)
+
+
+def _size(step: DoseStep, lookup: Lookup, gets_it: np.ndarray, written: str) -> np.ndarray:
     size = np.broadcast_to(lookup(step.by), gets_it.shape)
     if size.dtype.kind not in "fiu":
-        raise ProblemsError(Problem(f"dose {step.number}: {quantity.text} by {step.by}", f"{step.by} is no number",
+        raise ProblemsError(Problem(f"dose {step.number}: {written} by {step.by}", f"{step.by} is no number",
                                     "a size, such as weight"))
     unfit = gets_it & ~((size > 0) & np.isfinite(size))
     if unfit.any():
-        raise ProblemsError(Problem(f"dose {step.number}: {quantity.text} by {step.by}",
+        raise ProblemsError(Problem(f"dose {step.number}: {written} by {step.by}",
                                     f"{step.by} is zero, negative or unknown in {unfit.sum():,} patients",
                                     "a size above zero", "dose by another size, or let where leave these patients out"))
-    return quantity.value * size
+    return size
 
 
 def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, gets_it: np.ndarray, until_min: float,
                         changes: Changes) -> tuple[np.ndarray, np.ndarray]:
     """Amount in mg and duration in min of each administration of a step."""
     n = len(gets_it)
-    wanted = _scaled(variant.amount or variant.rate, step, lookup, gets_it)
+    if variant.loading is not None:
+        wanted = loading_mg(variant.loading, step, lookup, gets_it)
+    else:
+        wanted = _scaled(variant.amount or variant.rate, step, lookup, gets_it)
     given, floored, capped, rounded = as_given(wanted, step.at_least, step.at_most, step.round_to)
     changes.floored |= floored & gets_it
     changes.capped |= capped & gets_it
     changes.rounded |= rounded & gets_it
     changes.impossible |= ~(given > 0) & gets_it
     given = np.where(gets_it, given, 0.0)
-    if variant.amount is None:
+    if variant.is_rate:
         end = variant.at_min + step.over_min if step.over_min is not None else step.until_min
         duration = np.full(n, end - variant.at_min)
         return given * duration, duration

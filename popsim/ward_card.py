@@ -6,11 +6,11 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from covariates.units import Quantity, show, to_unit
+from covariates.units import show, to_unit
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
 from popsim.records import DoseStep, DoseVariant, Protocol, Study
-from popsim.timeline import Administration, administrations_of
+from popsim.timeline import Administration, administrations_of, loading_mg
 from popsim.words import clock
 
 # People of our own choosing, to show a card on; serum creatinine is the survey's median for their sex and age.
@@ -66,8 +66,8 @@ def step_as_written(step: DoseStep) -> str:
         doses = "; ".join(f"{_dose(variant)} where {variant.where.text}" for variant in step.variants)
     else:
         doses = _dose(step.variants[0])
-    per_min = step.variants[0].amount is None
-    unit = (step.variants[0].amount or step.variants[0].rate).unit.replace("/kg", "").replace("/m2", "")
+    per_min = step.variants[0].is_rate
+    unit = _plain_unit(step.variants[0])
     limits = [f"{word} {show(limit, unit, 'rate' if per_min else 'mass')}"
               for word, limit in (("at least", step.at_least), ("at most", step.at_most),
                                   ("in steps of", step.round_to))
@@ -76,7 +76,14 @@ def step_as_written(step: DoseStep) -> str:
 
 
 def _dose(variant: DoseVariant) -> str:
-    return " at ".join(dose.text for dose in (variant.amount, variant.rate) if dose is not None)
+    return " at ".join(dose.text for dose in (variant.loading, variant.amount, variant.rate) if dose is not None)
+
+
+def _plain_unit(variant: DoseVariant) -> str:
+    """The unit of what is given: mg for "mg/kg", mg/h for "mg/kg/h"; a loading dose is in mg."""
+    if variant.loading is not None:
+        return "mg"
+    return (variant.amount or variant.rate).unit.replace("/kg", "").replace("/m2", "")
 
 
 def card_lines(study: Study, protocol: Protocol, attributes: dict[str, np.ndarray]) -> list[list[CardLine | None]]:
@@ -99,21 +106,21 @@ def _line(protocol: Protocol, step: DoseStep, given: list[Administration], perso
     first = given[0]
     amount, duration = float(first.amount_mg[0]), float(first.duration_min[0])
     variant = _variant(step, person)
-    written = variant.amount or variant.rate
-    text, volume = _amount(amount, written, protocol) if variant.amount else _rate(amount / duration, written, protocol)
-    if variant.amount and variant.rate and duration > 0:
-        rate, per_hour = _rate(amount / duration, variant.rate, protocol)
+    unit = _plain_unit(variant)
+    text, volume = _rate(amount / duration, unit, protocol) if variant.is_rate else _amount(amount, unit, protocol)
+    if not variant.is_rate and variant.rate and duration > 0:
+        rate, per_hour = _rate(amount / duration, variant.rate.unit.replace("/kg", "").replace("/m2", ""), protocol)
         text, volume = f"{text} at {rate}", " at ".join(part for part in (volume, per_hour) if part)
     when = f"at {clock(first.start_min)}"
     if variant.rate and duration > 0:
-        end = round(first.start_min + duration, 1) if variant.amount else _tidy(first.start_min + duration)
+        end = _tidy(first.start_min + duration) if variant.is_rate else round(first.start_min + duration, 1)
         when = f"{clock(first.start_min)} to {clock(end)}"
     elif duration > 0:
         when += f", over {clock(duration)}"
     if len(given) > 1:
         when += f", {len(given)} times, every {clock(_tidy(given[1].start_min - first.start_min))}"
     return CardLine(step.number, when, text, volume,
-                    _remark(step, written, person, amount if variant.amount else amount / duration))
+                    _remark(protocol, step, variant, person, amount, duration))
 
 
 def _variant(step: DoseStep, person: dict) -> DoseVariant:
@@ -123,13 +130,11 @@ def _variant(step: DoseStep, person: dict) -> DoseVariant:
                 if variant.where is None or bool(np.all(variant.where.evaluate(lookup))))
 
 
-def _amount(amount_mg: float, written: Quantity, protocol: Protocol) -> tuple[str, str]:
-    unit = written.unit.replace("/kg", "").replace("/m2", "")
+def _amount(amount_mg: float, unit: str, protocol: Protocol) -> tuple[str, str]:
     return f"{_number(to_unit(amount_mg, unit, 'mass'))} {unit}", _volume(protocol, amount_mg, "mL")
 
 
-def _rate(rate_mg_per_min: float, written: Quantity, protocol: Protocol) -> tuple[str, str]:
-    unit = written.unit.replace("/kg", "").replace("/m2", "")
+def _rate(rate_mg_per_min: float, unit: str, protocol: Protocol) -> tuple[str, str]:
     return f"{_number(to_unit(rate_mg_per_min, unit, 'rate'))} {unit}", _volume(protocol, rate_mg_per_min * 60, "mL/h")
 
 
@@ -137,13 +142,20 @@ def _volume(protocol: Protocol, mg: float, unit: str) -> str:
     return "" if protocol.strength_mg_per_ml is None else f"{_number(mg / protocol.strength_mg_per_ml)} {unit}"
 
 
-def _remark(step: DoseStep, written: Quantity, person: dict, given: float) -> str:
-    """How the dose came about: "x 74 kg, capped"; `given` in mg, or mg/min for a rate."""
-    wanted, words = written.value, []
-    if "_per_" in written.kind:
+def _remark(protocol: Protocol, step: DoseStep, variant: DoseVariant, person: dict, amount_mg: float,
+            duration_min: float) -> str:
+    """How the dose came about: "x 74 kg, capped"."""
+    given, words = amount_mg / duration_min if variant.is_rate else amount_mg, []
+    written = variant.amount or variant.rate
+    if variant.loading is not None:
+        wanted = float(loading_mg(variant.loading, step, Lookup(person), np.ones(1, dtype=bool))[0])
+        words.append(f"into {_number(wanted / variant.loading.concentration.value)} L")
+    elif "_per_" in written.kind:
         size = float(Lookup(person)(step.by)[0])
         wanted = written.value * size
         words.append(f"x {_number(size)} {'m2' if 'm2' in written.kind else 'kg'}")
+    else:
+        wanted = written.value
     if step.at_least is not None and wanted < step.at_least:
         words.append("raised to the floor")
         wanted = step.at_least
@@ -154,6 +166,9 @@ def _remark(step: DoseStep, written: Quantity, person: dict, given: float) -> st
         words.append("ROUNDED TO NOTHING")
     elif abs(given - wanted) > 1e-9 * max(wanted, given):
         words.append("rounded")
+    if protocol.pump_mg_per_min is not None and duration_min > 0 and (
+            amount_mg > protocol.pump_mg_per_min * duration_min * (1 + 1e-9)):
+        words.append("TOO FAST FOR THE PUMP")
     return ", ".join(words)
 
 

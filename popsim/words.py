@@ -8,6 +8,7 @@ from typing import TYPE_CHECKING
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
 from popsim.records import Protocol, Study, Target
+from popsim.study_targets import quantity_words
 
 if TYPE_CHECKING:  # a third of a second that `popsim check` does without
     import pandas as pd
@@ -45,15 +46,22 @@ def clock(minutes: float) -> str:
 def window(target: Target) -> str:
     """The window of a target: "15 min to 60 min", or an instant."""
     start, end = (edge if isinstance(edge, str) else clock(edge) for edge in (target.start, target.end))
+    if target.summary == "trough":
+        return f"just before {end}"
     return f"at {start}" if target.instant else f"{start} to {end}"
 
 
 def target_line(target: Target) -> str:
-    quantity = {"effect_site": "effect site", "plasma": "plasma", "effect": "effect"}[target.quantity]
+    quantity = "measured " * target.measured + quantity_words(target.quantity) + " per 24 h" * target.per_day
+    if target.response is not None:
+        quantity += (f" to {quantity_words(target.response.follows)} (50 % at "
+                     f"{target.response.half_mg_per_l:g} mg/L, steepness {target.response.steepness:g})")
     described = f"{quantity} {target.range_text}"
     # a target that the study does not name is called by its range already
     name = target.name if target.name.endswith(target.range_text) else f"{target.name}: {described}"
-    return f"{name}, {window(target)}, attained when in range {target.rule_text}"
+    if target.per_day and name == target.name:
+        name += ", per 24 h"
+    return f"{name}, {window(target)}, attained when in range {target.rule_text}".rstrip()
 
 
 def sides_line(target: Target, model: DrugModel) -> str:
@@ -69,6 +77,8 @@ def per_kg_line(protocol: Protocol) -> str:
     scaled = {("m2" if "m2" in dose.kind else "kg", step.by)
               for step in protocol.steps for variant in step.variants for dose in (variant.amount, variant.rate)
               if dose is not None and "_per_" in dose.kind}
+    scaled |= {("kg", step.by) for step in protocol.steps for variant in step.variants
+               if variant.loading is not None and variant.loading.litres_per_kg is not None}
     if not scaled:
         return "not scaled by body size"
     return " and ".join(f"per {unit} of {'total body weight' if by == 'weight' else by.replace('_', ' ')}"

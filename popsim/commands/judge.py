@@ -40,6 +40,7 @@ def judge(study: Path, out: Path | None, overwrite: bool, tables_only: bool, no_
 
     from popsim.progress import bar, warmed_up
     from popsim.provenance import record_of
+    from popsim.robustness import robustness
     from popsim.run import simulate
     from popsim.tables import all_tables, notes_of
     from popsim.terminal import as_json_text, summary
@@ -51,6 +52,8 @@ def judge(study: Path, out: Path | None, overwrite: bool, tables_only: bool, no_
             findings = simulate(resolved, threads or default_threads(), keep_courses, sink, progress)
         sink.close()
         tables = all_tables(resolved, findings.tally)
+        if resolved.robustness:
+            tables["robustness"] = robustness(resolved, threads or default_threads())
         notes = notes_of(findings, tables)
         write_tables(aside, tables, kind)
         record = record_of(findings, f"popsim judge {study.name}", notes)

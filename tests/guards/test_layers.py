@@ -13,9 +13,9 @@ POPSIM = Path(popsim.__file__).parent
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
-    "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
+    "patients.listed", "patients.draw", "study_file", "study_loading", "study_protocols", "study_targets", "study",
+    "groups", "slices", "parameters", "timeline", "solve", "effect", "target", "judging", "estimate",
+    "tally", "run", "compare", "measures", "tables", "robustness", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "commands.new", "commands.check", "commands.judge", "cli",
 ]  # fmt: skip

@@ -191,7 +191,7 @@ BAD = [
      "dose 1: band", "some bands repeat", "two steps"),
     # targets
     ([("effect_site", "efect_site")], "target: quantity", "efect_site", 'did you mean "effect_site"?'),
-    ([("effect_site", "peak")], "target: quantity", "peak", "does not have it yet"),
+    ([("effect_site", "peak")], "target: attained_when", "of the time", "one value in range or not"),
     ([("effect_site", "effect"), (MODEL, 'model = "propofol_schnider_1998"')],
      "target: quantity", "describes no effect",
      "propofol_eleveld_2018"),

@@ -97,8 +97,8 @@ def card(study):
 
 def test_the_card_says_what_each_example_person_gets(card):
     # 55, 90, 50 and 118 kg; 27.5 ug rounds half up to 30, 25 ug is raised to 26 and then rounds to 25
-    assert card() == '''"card" (per kg of total body weight, 0.05 mg/mL)
-==========================================================
+    assert card() == '''"card" (per kg of total body weight, 50 ug/mL)
+========================================================
 1  at 0 min, over 30 s: 0.5 ug/kg, at least 26 ug, at most 40 ug, in steps of 5
    ug
      lean young adult  30 ug = 0.6 mL  [x 55 kg, rounded]

@@ -72,6 +72,8 @@ def test_one_row_per(run):
         "comparison": 4 * 2,
         "groups": 2 * 2 * 2,
         "doses": 2 * 4,
+        "values": 2 * 4,  # minutes until the effect site first reaches the range
+        "quartiles": 3 * 4 * 2,  # age, weight, bmi
     }
     for name, keys in {
         "attainment": ["model", "protocol", "group", "target"],

@@ -85,7 +85,7 @@ def test_quantile_of_nobody():
 
 
 def zeros():
-    return [np.zeros(2, dtype=np.int64) for _ in range(7)]
+    return [np.zeros(2, dtype=np.int64) for _ in range(13)]
 
 
 def some_judged(n: int, seed: int) -> Judged:
@@ -93,24 +93,33 @@ def some_judged(n: int, seed: int) -> Judged:
     shares = luck.dirichlet([1, 2, 1], n).T
     failed = luck.random(n) < 0.1
     shares[:, failed] = np.nan
-    flags = (luck.random((3, n)) < 0.5) & ~failed
-    return Judged(failed, flags[0], *shares, flags[1], flags[2])
+    flags = (luck.random((5, n)) < 0.5) & ~failed
+    value = np.where(failed, np.nan, np.where(flags[4], np.inf, shares[1]))
+    return Judged(failed, flags[0], *shares, *flags[1:], {"value": value})
 
 
 def part(judged: Judged, rows) -> Judged:
-    return Judged(**{name: values[rows] for name, values in vars(judged).items()})
+    arrays = {name: values[rows] for name, values in vars(judged).items() if name != "measures"}
+    return Judged(**arrays, measures={name: values[rows] for name, values in judged.measures.items()})
 
 
 def test_sums_are_fixed_point_and_do_not_depend_on_order():
     judged = some_judged(5000, 1)
     members = np.stack([np.ones(5000, dtype=np.int64), (np.arange(5000) % 3 == 0).astype(np.int64)], axis=1)
     whole, parts = TargetTally(*zeros(), None, None), TargetTally(*zeros(), None, None)
-    whole.add(judged, members)
+    outside = np.arange(5000) % 7 == 0
+    whole.add(judged, members, outside)
     order = np.random.default_rng(2).permutation(5000)
     for rows in np.array_split(order, 7):
-        parts.add(part(judged, rows), members[rows])
-    for name in ("failed", "attained", "below", "inside", "above", "far_below", "far_above"):
-        assert getattr(whole, name).tolist() == getattr(parts, name).tolist()
+        parts.add(part(judged, rows), members[rows], outside[rows])
+    for name, counts in vars(whole).items():
+        if isinstance(counts, np.ndarray):
+            assert counts.tolist() == getattr(parts, name).tolist(), name
+    assert (whole.measures["value"] == parts.measures["value"]).all()
+    assert whole.attained_outside[0] == (judged.attained & outside).sum()
+    assert whole.measures["value"].sum(axis=1)[0] == (~judged.failed).sum()
+    assert whole.measures["value"][0, -1] == np.isinf(judged.measures["value"]).sum()
+    assert whole.inside_squared[0] / ONE == pytest.approx((judged.inside[~judged.failed] ** 2).sum(), abs=1e-5)
     fine = ~judged.failed
     assert (whole.below + whole.inside + whole.above)[0] == int(fine.sum()) * ONE
     assert whole.inside[0] / ONE == pytest.approx(judged.inside[fine].sum(), abs=5000 * 2**-33)
@@ -120,21 +129,22 @@ def test_sums_are_fixed_point_and_do_not_depend_on_order():
 def test_pairs_by_hand():
     def with_attained(attained, failed):
         blank = np.zeros(4)
-        return Judged(np.array(failed), np.array(attained), blank, blank, blank, blank > 0, blank > 0)
+        return Judged(np.array(failed), np.array(attained), blank, blank, blank, *[blank > 0] * 4)
 
-    pair = PairTally(*(np.zeros(1, dtype=np.int64) for _ in range(5)))
+    pair = PairTally(*(np.zeros(1, dtype=np.int64) for _ in range(5)), gained=np.zeros((1, 2001), dtype=np.int64))
     pair.add(
         with_attained([True, True, False, False], [False] * 4),
         with_attained([True, False, True, False], [False, True, False, False]),
         np.ones((4, 1), dtype=np.int64),
     )
-    assert {name: int(value[0]) for name, value in vars(pair).items()} == {
+    assert {name: int(value[0]) for name, value in vars(pair).items() if name != "gained"} == {
         "failed": 1,
         "both": 1,
         "only_a": 1,
         "only_b": 1,
         "neither": 1,
     }
+    assert pair.gained.sum() == pair.gained[0, 1000] == 3  # nobody gains; the failed one has no share
 
 
 def test_merged_counts_equal_those_of_one(tmp_path):
@@ -147,7 +157,7 @@ def test_merged_counts_equal_those_of_one(tmp_path):
     for mine, theirs in zip(_arrays(one.tally), _arrays(three.tally), strict=True):
         assert (mine == theirs).all()
     assert one.tally.statuses == three.tally.statuses
-    twice = Tally.empty(asked, len(asked.grid_min()))
+    twice = Tally.empty(asked, len(asked.grid_min()), one.tally.cuts)
     twice.merge(one.tally)
     twice.merge(three.tally)
     assert twice.patients.tolist() == (2 * one.tally.patients).tolist()

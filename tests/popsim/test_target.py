@@ -25,7 +25,7 @@ def course(inside=(1.0,), below=None, above=None, touched=True, lowest=4.0, high
     below = 1 - inside if below is None else np.array(below, dtype=float)
     above = np.zeros(n) if above is None else np.array(above, dtype=float)
     return WindowCourse(
-        below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in (touched, lowest, highest, at_end, status))
+        below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in (touched, lowest, highest, at_end, status, 0.0, 0.0))
     )
 
 
@@ -148,6 +148,6 @@ def test_a_window_past_the_runs_end_is_refused(minutes):
 
 def test_the_course_quantity():
     plasma, site = np.array([[1.0, 2.0]]), np.array([[0.0, 3.0]])
-    assert course_values(target(quantity="plasma"), BIS, person(), plasma, site) is plasma
-    assert course_values(target(), BIS, person(), plasma, site) is site
+    assert course_values(target(quantity="plasma"), BIS, person(), plasma, site).tolist() == plasma.tolist()
+    assert course_values(target(), BIS, person(), plasma, site).tolist() == site.tolist()
     assert course_values(target(quantity="effect"), BIS, person(), plasma, site).tolist() == [[93.0, 46.5]]

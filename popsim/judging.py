@@ -1,0 +1,70 @@
+"""One target judged in one block: the solver's courses and areas turned into what the target asks."""
+
+from __future__ import annotations
+
+from dataclasses import replace
+
+import numpy as np
+
+from popsim import solve
+from popsim.lookup import Lookup
+from popsim.records import Disposition, IndividualParameters, Judged, Patients, Received, Study, Target, Timeline
+from popsim.streams import normals
+from popsim.target import (
+    concentration_limits, course_of, judge, judge_value, measured_level, recovery_limits, summary_value, window_of,
+)  # fmt: skip
+
+JUST_BEFORE_MIN = 1.0  # a trough is looked at from so long before; any time would do
+
+
+def judge_target(study: Study, m: int, target: Target, patients: Patients, parameters: IndividualParameters,
+                 disposition: Disposition, timeline: Timeline, received: Received,
+                 lookup: Lookup) -> tuple[Judged, np.ndarray]:
+    """What a target finds in each patient of a block under model `m`, and each patient's status."""
+    model, n = study.models[m], len(disposition)
+    start, end = window_of(target, lookup, n, study.until_min)
+    if target.summary or target.measured:
+        level, status = _one_number(target, disposition, timeline, start, end)
+        if target.measured:
+            luck = (normals(study.seed, f"assay {name}", patients.block)[patients.slots]
+                    for name in ("proportional", "additive"))
+            level = measured_level(model, level, *luck)
+        return judge_value(target, summary_value(target, model, level, end - start), status, received.undosed), status
+    low, high = concentration_limits(target, model, parameters.values, n)
+    course = solve.window_course(disposition, timeline, course_of(target), low, high, start, end)
+    judged = judge(target, model, parameters.values, course, received.undosed)
+    if target.over_time:
+        more = _times(study, target, m, parameters, disposition, timeline, received, low, end)
+        judged = replace(judged, measures=judged.measures | {
+            name: np.where(judged.failed, np.nan, minutes) for name, minutes in more.items()})
+    return judged, course.status
+
+
+def _one_number(target: Target, disposition: Disposition, timeline: Timeline, start: np.ndarray,
+                end: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
+    """The area (mg/L min), or the peak, the trough or the level (mg/L), of plasma in the window."""
+    if target.summary in ("area_under_curve", "average"):
+        return solve.area_under_curve(disposition, timeline, start, end)
+    anything = np.full(len(disposition), -np.inf), np.full(len(disposition), np.inf)
+    if target.summary == "trough":
+        start = np.maximum(end - JUST_BEFORE_MIN, 0.0)
+    course = solve.window_course(disposition, timeline, "plasma", *anything, start, end)
+    return (course.highest if target.summary == "peak" else course.at_end), course.status
+
+
+def _times(study: Study, target: Target, m: int, parameters: IndividualParameters, disposition: Disposition,
+           timeline: Timeline, received: Received, low: np.ndarray, end: np.ndarray) -> dict[str, np.ndarray]:
+    """Minutes from time 0 until the course first reaches the range's lower limit (inf: not before the window's end),
+    and from the last dose until it has recovered (inf: not before the run's end)."""
+    n, found = len(disposition), {}
+    anything = np.full(n, np.inf)
+    if np.isfinite(low).any():
+        reach = solve.window_course(disposition, timeline, course_of(target), low, anything, np.zeros(n), end)
+        found["first_reached_min"] = reach.first_inside_min
+    if target.recovers_at is not None:
+        level = recovery_limits(target, study.models[m], parameters.values, n)
+        after = solve.window_course(disposition, timeline, course_of(target), -anything, level,
+                                    received.last_given_min, np.full(n, study.until_min))
+        waited = np.maximum(after.last_above_min - received.last_given_min, 0.0)
+        found["recovery_min"] = np.where(after.at_end > level, np.inf, waited)
+    return found
