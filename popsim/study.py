@@ -17,6 +17,7 @@ from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Popul
 from popsim.records import Study, Target, Variability
 from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
 from popsim.study_protocols import covariate_fault, resolve_protocols
+from popsim.study_salvage import beside
 from popsim.study_targets import resolve_targets
 
 ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
@@ -26,7 +27,7 @@ WORDS = {"number": "a number", "condition": "true or false", "text": "text"}
 
 def read_study(path: Path) -> Study:
     """Read and check a study file; ProblemsError lists all that the user can mend."""
-    section = read_study_file(path)
+    section, faults = read_study_file(path)
     problems: list[Problem] = []
     models = _models(section, path, problems)
     brought = _brought(section.population, path, problems)
@@ -45,8 +46,8 @@ def read_study(path: Path) -> Study:
     _check_model_needs(models, attributes, path, problems)
     variability = _variability(section.variability, models, path, problems)
     _check_compare(section, [name for name, _ in groups], path, problems)
-    if problems:
-        raise ProblemsError(problems)
+    if faults or problems:
+        raise ProblemsError([*faults, *beside(problems, faults)])
     return Study(
         path=path,
         digest=hashlib.sha256(path.read_bytes()).hexdigest(),

@@ -13,7 +13,7 @@ POPSIM = Path(popsim.__file__).parent
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_file", "study_protocols", "study_targets", "study",
+    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
     "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
     "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
