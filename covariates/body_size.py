@@ -332,27 +332,6 @@ def pharmacokinetic_mass_shibutani(weight_kg):
     return 52.0 / (1.0 + (196.4 * np.exp(-0.025 * weight) - 53.66) / 100.0)
 
 
-def allometric_size(weight_kg, exponent=0.75):
-    """How large a clearance is for that weight, relative to an adult of 70 kg.
-
-    Arguments:
-        weight_kg: total body weight [kg], scalar or (n,).
-        exponent: of the power [number without unit], 0.75 for clearances, scalar or (n,).
-    Returns:
-        relative size [number without unit], same shape.
-    Raises:
-        ProblemsError: an impossible weight, or an exponent that is not above 0.
-    Formula: (W / 70)^exponent, exponent 0.75 in the catalogue
-    People: anyone beyond infancy; in severe obesity total weight overstates it.
-    Source: common practice (from memory).
-
-    >>> round(float(allometric_size(120)), 3)
-    1.498
-    """
-    weight, power = possible(weight_kg=weight_kg, exponent=exponent)
-    return (weight / 70.0) ** power
-
-
 def _by_sex(sex, female: float, male: float) -> np.ndarray:
     return np.where(is_female(sex), female, male)
 

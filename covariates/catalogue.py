@@ -170,7 +170,7 @@ _ALL = [
     ),
     Equation(
         "allometric_size",
-        body_size.allometric_size,
+        maturation.allometric_size,
         "",
         (_WEIGHT,),
         "anyone beyond infancy; in severe obesity total weight overstates it",

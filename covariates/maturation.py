@@ -1,4 +1,4 @@
-"""Maturation with postmenstrual age (time since the mother's last period began), and ageing."""
+"""Maturation with postmenstrual age (time since the mother's last period began), ageing, allometry."""
 
 from __future__ import annotations
 
@@ -120,3 +120,24 @@ def linear_ageing(age_years, change_per_year, reference_years):
     """
     age, reference = possible(age_years=age_years, reference_years=reference_years)
     return 1.0 + np.asarray(change_per_year, dtype=np.float64) * (age - reference)
+
+
+def allometric_size(weight_kg, exponent=0.75):
+    """How large a clearance is for that weight, relative to an adult of 70 kg.
+
+    Arguments:
+        weight_kg: total body weight [kg], scalar or (n,).
+        exponent: of the power [number without unit], 0.75 for clearances, scalar or (n,).
+    Returns:
+        relative size [number without unit], same shape.
+    Raises:
+        ProblemsError: an impossible weight, or an exponent that is not above 0.
+    Formula: (W / 70)^exponent, exponent 0.75 in the catalogue
+    People: anyone beyond infancy; in severe obesity total weight overstates it.
+    Source: common practice (from memory).
+
+    >>> round(float(allometric_size(120)), 3)
+    1.498
+    """
+    weight, power = possible(weight_kg=weight_kg, exponent=exponent)
+    return (weight / 70.0) ** power

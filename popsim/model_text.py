@@ -26,10 +26,10 @@ def list_text(models: Iterable[DrugModel]) -> str:
         if model.drug != drug:
             drug = model.drug
             lines += ["", drug.upper()]
-        lines += [f"  {model.name}", *_wrapped(model.title, "    "), *_wrapped(model.source["citation"], "    source    ")]
-        lines += _wrapped(model.built_on.people, "    built on  ")
-        lines += _wrapped(f"{variability(model)}; {parts(model)}", "    has       ")
-        lines += _wrapped(evidence(model), "    evidence  ")
+        lines += [f"  {model.name}", *wrapped(model.title, "    "), *wrapped(model.source["citation"], "    source    ")]
+        lines += wrapped(model.built_on.people, "    built on  ")
+        lines += wrapped(f"{variability(model)}; {parts(model)}", "    has       ")
+        lines += wrapped(evidence(model), "    evidence  ")
     return "\n".join(lines[1:])
 
 
@@ -59,61 +59,62 @@ def evidence(model: DrugModel) -> str:
 
 def sheet_text(model: DrugModel) -> str:
     """One sheet whole, then what follows from it in one example person."""
-    lines = [model.name, "=" * len(model.name), *_wrapped(model.title), ""]
+    lines = [model.name, "=" * len(model.name), *wrapped(model.title), ""]
     lines += _source(model) + _people(model) + _measured(model)
     for heading, body in (("Needs", _needs(model)), ("Equations", _equations(model)), ("Effect", _effect(model)),
                           ("Between-subject variability", _spread(model)), ("Measurement error", _error(model)),
-                          ("Cautions", [line for text in model.cautions for line in _wrapped(text, "  - ")]),
+                          ("Cautions", [line for text in model.cautions for line in wrapped(text, "  - ")]),
                           ("What follows from it", _follows(model))):
         if body:
             lines += ["", heading, *body]
     return "\n".join(line.rstrip() for line in lines)
 
 
-def _wrapped(text: str, lead: str = "") -> list[str]:
+def wrapped(text: str, lead: str = "") -> list[str]:
+    """Lines of the terminal's width, those after the first indented as far as the lead."""
     return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead),
                          break_long_words=False, break_on_hyphens=False)
 
 
 def _source(model: DrugModel) -> list[str]:
-    lines = _wrapped(str(model.source["citation"]), "Source      ")
+    lines = wrapped(str(model.source["citation"]), "Source      ")
     if "doi" in model.source:
-        lines += _wrapped(f"doi {model.source['doi']} ({model.source.get('doi_evidence', 'evidence not said')})",
+        lines += wrapped(f"doi {model.source['doi']} ({model.source.get('doi_evidence', 'evidence not said')})",
                           "            ")
     for further in model.source["further"]:
-        lines += _wrapped(further, "            ")
-    return lines + _wrapped(f"{model.evidence} (the weakest grade of its equations). {evidence(model)}",
+        lines += wrapped(further, "            ")
+    return lines + wrapped(f"{model.evidence} (the weakest grade of its equations). {evidence(model)}",
                             "Evidence    ")
 
 
 def _people(model: DrugModel) -> list[str]:
     built = model.built_on
-    lines = _wrapped(built.people, "Built on    ")
+    lines = wrapped(built.people, "Built on    ")
     known = [f"{name.replace('_', ' ')} {limits.text}" for name, limits in built.ranges.items()]
     known += [f"{built.sex} only"] if built.sex else []
     known += [f"{built.sampling} samples"] if built.sampling else []
     known += [f"infusions of up to {built.longest_infusion_min:g} min"] if built.longest_infusion_min else []
     known += [f"up to {built.largest_total.text} in all"] if built.largest_total else []
     if known:
-        lines += _wrapped("; ".join(known), "            ")
+        lines += wrapped("; ".join(known), "            ")
     for remark in (built.doses and f"doses: {built.doses}", built.note, built.evidence and f"({built.evidence})"):
-        lines += _wrapped(remark, "            ") if remark else []
+        lines += wrapped(remark, "            ") if remark else []
     return lines
 
 
 def _measured(model: DrugModel) -> list[str]:
     found = model.measured_in
     unbound = f", fraction unbound {found['fraction_unbound']:g}" if "fraction_unbound" in found else ""
-    lines = _wrapped(f"{found['fluid']}{unbound} ({found.get('evidence', 'evidence not said')})", "Measured in ")
-    return lines + (_wrapped(str(found["note"]), "            ") if "note" in found else [])
+    lines = wrapped(f"{found['fluid']}{unbound} ({found.get('evidence', 'evidence not said')})", "Measured in ")
+    return lines + (wrapped(str(found["note"]), "            ") if "note" in found else [])
 
 
 def _needs(model: DrugModel) -> list[str]:
-    lines = _wrapped(", ".join(sorted(model.needs)) or "nothing of a patient", "  ")
+    lines = wrapped(", ".join(sorted(model.needs)) or "nothing of a patient", "  ")
     for name, meaning in model.switches.items():
-        lines += _wrapped(f"{name}: {meaning}", "  ")
+        lines += wrapped(f"{name}: {meaning}", "  ")
     for name, number in model.numbers.items():
-        lines += _wrapped(f"{name}: a number, {number.means}", "  ")
+        lines += wrapped(f"{name}: a number, {number.means}", "  ")
     return lines
 
 
@@ -121,8 +122,8 @@ def _equations(model: DrugModel) -> list[str]:
     lines = []
     for equation in model.equations:
         unit = f" {equation.unit}" if equation.unit else ""
-        lines += _wrapped(f"{equation.name} = {equation.formula.text}{unit}  [{equation.evidence}]", "  ")
-        lines += _wrapped(equation.note, "      ") if equation.note else []
+        lines += wrapped(f"{equation.name} = {equation.formula.text}{unit}  [{equation.evidence}]", "  ")
+        lines += wrapped(equation.note, "      ") if equation.note else []
     return lines
 
 
@@ -135,7 +136,7 @@ def _effect(model: DrugModel) -> list[str]:
     text = (f"{effect.name}{f' ({effect.unit})' if effect.unit else ''} = {effect.baseline} + ({effect.at_infinity} - "
             f"{effect.baseline}) Ce^g / ({half}^g + Ce^g), g = {g}{above}; below a range is {effect.low_means}, above it "
             f"{effect.high_means}")
-    return _wrapped(text, "  ")
+    return wrapped(text, "  ")
 
 
 def _spread(model: DrugModel) -> list[str]:
@@ -143,12 +144,12 @@ def _spread(model: DrugModel) -> list[str]:
     for name, printed in model.printed_spread.items():
         text = (f"{name:<4} {printed.value:g} read as {printed.printed_as}: SD of ln {printed.omega:.3g}, "
                 f"CV {100 * float(cv_from_omega(printed.omega)):.3g} %  [{printed.evidence}]")
-        lines += _wrapped(text, "  ")
+        lines += wrapped(text, "  ")
     for (first, second), value in model.correlations.items():
         lines.append(f"  correlation of {first} and {second}: {value:g}")
     if len(model.spread) > 1:
-        lines += _wrapped("Correlations that are not listed are taken to be 0.", "  ")
-    return lines + (_wrapped(model.spread_note, "  ") if model.spread_note else [])
+        lines += wrapped("Correlations that are not listed are taken to be 0.", "  ")
+    return lines + (wrapped(model.spread_note, "  ") if model.spread_note else [])
 
 
 def _error(model: DrugModel) -> list[str]:
@@ -156,7 +157,7 @@ def _error(model: DrugModel) -> list[str]:
     words = [f"proportional {100 * found['proportional']:g} %"] if "proportional" in found else []
     words += [f"additive {found['additive']:g} mg/L"] if "additive" in found else []
     text = " and ".join(words) + (f"  [{found['evidence']}]" if "evidence" in found else "")
-    return (_wrapped(text, "  ") if words else []) + (_wrapped(str(found["note"]), "  ") if "note" in found else [])
+    return (wrapped(text, "  ") if words else []) + (wrapped(str(found["note"]), "  ") if "note" in found else [])
 
 
 def _example(model: DrugModel) -> tuple[str, dict[str, np.ndarray]]:
@@ -173,18 +174,18 @@ def _follows(model: DrugModel) -> list[str]:
     words, person = _example(model)
     found = parameters_of(model, lambda name: person[name] if name in person else compute(name, person), {}, 1)
     values = {name: float(value[0]) for name, value in found.items()}
-    lines = _wrapped(f"In {words}, typical values:", "  ")
-    lines += _wrapped(", ".join(parameter_words(values)), "  ")
+    lines = wrapped(f"In {words}, typical values:", "  ")
+    lines += wrapped(", ".join(parameter_words(values)), "  ")
     disposition = Disposition(values)
-    lines += _wrapped(f"half-lives {', '.join(map(minutes_text, half_lives(disposition)))}; volume at steady state "
+    lines += wrapped(f"half-lives {', '.join(map(minutes_text, half_lives(disposition)))}; volume at steady state "
                       f"{steady_state_volume(disposition):.4g} L", "  ")
     if "ke0" in values:
         peak = minutes_text(time_to_peak(disposition, values["ke0"]))
-        lines += _wrapped(f"peak of the effect site {peak} after an instantaneous bolus; half-time of ke0 "
+        lines += wrapped(f"peak of the effect site {peak} after an instantaneous bolus; half-time of ke0 "
                           f"{minutes_text(np.log(2) / values['ke0'])}", "  ")
     if "ka" in values:
         peak = time_to_peak(disposition, values["ka"]) + values.get("lag", 0.0)
-        lines += _wrapped(f"peak in plasma {minutes_text(peak)} after a dose by mouth", "  ")
+        lines += wrapped(f"peak in plasma {minutes_text(peak)} after a dose by mouth", "  ")
     if model.compartments > 1:
         lines += _half_time_table(disposition)
     return lines

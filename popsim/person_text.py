@@ -4,7 +4,6 @@ from __future__ import annotations
 
 import csv
 import io
-import textwrap
 from collections.abc import Iterable, Mapping
 
 import numpy as np
@@ -15,11 +14,9 @@ from covariates.flags import flags_of
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel, parameters_of
 from popsim.lookup import Lookup
-from popsim.model_text import parameter_words
+from popsim.model_text import parameter_words, wrapped
 from popsim.parameters import outside_ranges
 from popsim.ward_card import describe
-
-WIDTH = 80
 
 
 def person_text(person: Mapping[str, np.ndarray], models: Iterable[DrugModel]) -> str:
@@ -37,11 +34,11 @@ def person_text(person: Mapping[str, np.ndarray], models: Iterable[DrugModel]) -
         lines.append(f"{'!' if name in flagged else ' '} {name:<{width}}  {shown}")
     lines += [""] if marks else []
     for equation, words in marks:
-        lines += _wrapped(f"{equation}: for people who are {words}.", "! ")
+        lines += wrapped(f"{equation} misleads in people who are {words}.", "! ")
     unknown = [name for name in EQUATIONS if name not in names]
     if unknown:
         lacking = sorted({attribute for name in unknown for attribute in attributes_needed(name, person)})
-        lines += ["", *_wrapped(f"Not shown for want of {', '.join(lacking)}: {', '.join(unknown)}.", "")]
+        lines += ["", *wrapped(f"Not shown for want of {', '.join(lacking)}: {', '.join(unknown)}.", "")]
     for model in models:
         lines += ["", *_model_lines(model, person, lookup)]
     return "\n".join(line.rstrip() for line in lines)
@@ -87,13 +84,13 @@ def flags_in(people: Mapping[str, np.ndarray], lookup: Lookup, names: Iterable[s
 
 def _model_lines(model: DrugModel, person: Mapping[str, np.ndarray], lookup: Lookup) -> list[str]:
     values = {name: float(value[0]) for name, value in parameters_of(model, lookup, {}, 1).items()}
-    lines = [f"{model.name}, typical values", *_wrapped(", ".join(parameter_words(values)), "  ")]
+    lines = [f"{model.name}, typical values", *wrapped(", ".join(parameter_words(values)), "  ")]
     wrong = [name for name in ("V1", "V2", "V3", "CL") if name in values and not 0 < values[name] < np.inf]
     if wrong:
-        lines += _wrapped(f"{', '.join(wrong)} not above 0: the model cannot be used in this person.", "  ! ")
+        lines += wrapped(f"{', '.join(wrong)} not above 0: the model cannot be used in this person.", "  ! ")
     beyond = [name for name, mark in outside_ranges(model, lookup).items() if mark[0]]
     if beyond:
-        lines += _wrapped(f"outside the people that it was built on by {', '.join(beyond)}", "  ! ")
+        lines += wrapped(f"outside the people that it was built on by {', '.join(beyond)}", "  ! ")
     return lines
 
 
@@ -117,8 +114,3 @@ def _cells(column: Iterable) -> list[object]:
     """As written to a file: switches as true and false, floats so that they come back the same."""
     values = column.tolist() if isinstance(column, np.ndarray) else column
     return [str(value).lower() if isinstance(value, bool) else value for value in values]
-
-
-def _wrapped(text: str, lead: str) -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead),
-                         break_long_words=False, break_on_hyphens=False)

@@ -180,9 +180,3 @@ def test_adjusted_weight_with_another_fraction_by_hand():
     assert body_size.adjusted_body_weight(120, 70, 0.25) == pytest.approx(70 + 12.5, rel=1e-15)
     with pytest.raises(ProblemsError, match="excess_fraction"):
         body_size.adjusted_body_weight(120, 70, 0)
-
-
-def test_allometric_size_by_hand():
-    assert body_size.allometric_size(70) == 1
-    assert body_size.allometric_size(140, 1) == pytest.approx(2, rel=1e-15)
-    assert body_size.allometric_size(140) == pytest.approx(2**0.75, rel=1e-15)

@@ -80,3 +80,9 @@ def test_ageing_by_hand():
     assert maturation.linear_ageing(np.array([43.0, 200.0 - 80]), -0.02, 43).tolist() == pytest.approx([1, -0.54])
     with pytest.raises(ProblemsError, match="age_years"):
         maturation.exponential_ageing(-1, -0.01, 35)
+
+
+def test_allometric_size_by_hand():
+    assert maturation.allometric_size(70) == 1
+    assert maturation.allometric_size(140, 1) == pytest.approx(2, rel=1e-15)
+    assert maturation.allometric_size(140) == pytest.approx(2**0.75, rel=1e-15)

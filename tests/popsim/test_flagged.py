@@ -7,6 +7,7 @@ from types import SimpleNamespace
 import pytest
 
 from covariates.problems import ProblemsError
+from covariates.sheet import example_people, read_sheet, shipped_sheets
 from popsim.flagged import flag_notes
 from popsim.tables import notes_of
 
@@ -75,3 +76,18 @@ def test_a_model_with_a_number_of_its_own(tmp_path):
         asked = cases.study(tmp_path, **more, population=listed + "\n[population.set]\nsepsis = false")
         shares.append(cases.judged(asked)[1]["attainment"]["time_in_range"].item())
     assert shares[1] > shares[0]  # clearance falls with the days, so concentrations stay up longer
+
+
+@pytest.mark.parametrize("name", shipped_sheets())
+def test_every_shipped_sheet_can_be_judged(tmp_path, name):
+    """Its example people, 100 mg once, with variability where the sheet has it: nobody fails, everybody is above nothing."""
+    model = read_sheet(name)
+    people = example_people(model)
+    rows = [",".join(str(value).lower() for value in row) for row in zip(*(column.tolist() for column in (
+        people[key] if len(people[key]) == 2 else people[key].repeat(2) for key in people)), strict=True)]
+    target = ('quantity = "plasma"\nlow = "0.001 ng/mL"\nduring = "1 min to 30 min"\nattained_when = "always"',)
+    study = cases.study(tmp_path, model=name, population=cases.people(tmp_path, rows, ",".join(people)), groups={},
+                        variability="" if model.spread else "between_subject = false", targets=target,
+                        protocols={"once": 'amount = "100 mg"'})
+    row = cases.judged(study)[1]["attainment"].iloc[0]
+    assert (row["patients"], row["failed"], row["attained"]) == (2, 0, 1.0)
