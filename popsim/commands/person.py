@@ -43,6 +43,8 @@ def person(sex: str | None, age: str | None, weight: str | None, height: str | N
         listed = read_list(file)
         labels = listed.rows + 1 if listed.labels is None else listed.labels
         people = {name: np.full(len(listed.rows), value) for name, value in _settings(settings).items()}
+        if twice := sorted(people.keys() & listed.attributes.keys()):
+            raise ProblemsError(Problem("--set", f"{', '.join(twice)}, which the list has too", "one of the two"))
         click.echo(people_csv(people | listed.attributes, labels.tolist(), models))
         return
     if not brought:
@@ -74,14 +76,14 @@ def _settings(settings: tuple[str, ...]) -> dict[str, bool | float]:
     """"opioid=true" -> {"opioid": True}."""
     from covariates.catalogue import ATTRIBUTES, EQUATIONS
     from covariates.problems import Problem, ProblemsError
+    from popsim.patients.listed import NUMBER
 
     values: dict[str, bool | float] = {}
     for setting in settings:
         name, _, text = setting.partition("=")
         if not name.isidentifier() or name in ATTRIBUTES or name in EQUATIONS:
             raise ProblemsError(Problem("--set", f'"{setting}"', "a name of a model's own: opioid=true"))
-        try:
-            values[name] = text == "true" if text in ("true", "false") else float(text)
-        except ValueError:
-            raise ProblemsError(Problem("--set", f'"{setting}"', "NAME=true, NAME=false or NAME=number")) from None
+        if text not in ("true", "false") and not NUMBER.fullmatch(text):
+            raise ProblemsError(Problem("--set", f'"{setting}"', "NAME=true, NAME=false or NAME=number"))
+        values[name] = float(text) if NUMBER.fullmatch(text) else text == "true"
     return values

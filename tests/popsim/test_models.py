@@ -114,6 +114,7 @@ def test_person_with_models(capsys):
         ([*WOMAN[:-3], "110 lb", *WOMAN[-2:]], "unknown unit"),
         ([*WOMAN, "--set", "bmi=40"], "opioid=true"),
         ([*WOMAN, "--set", "opioid=perhaps"], "NAME=true"),
+        ([*WOMAN, "--set", "days_after_burn=nan"], "NAME=number"),
         (["--file", "absent.csv", "--sex", "female"], "a list, or one person"),
         (["--file", "absent.csv"], "absent.csv"),
     ],
@@ -129,6 +130,7 @@ def test_a_list_of_people(capsys, tmp_path):
     code, out, _ = said(capsys, "person", "--file", str(people), "--model", "propofol_eleveld_2018",
                         "--set", "venous_sampling=false")
     assert code == DONE
+    assert "which the list has too" in said(capsys, "person", "--file", str(people), "--set", "opioid=true")[2]
     first, second = csv.DictReader(io.StringIO(out))
     assert (first["patient"], first["opioid"], second["opioid"], second["venous_sampling"]) == ("A", "true", "false", "false")
     expected = compute("lean_body_mass_james", {"sex": "female", "weight": 110.0, "height": 160.0})
