@@ -276,6 +276,11 @@ class Target:
         return self.mic is None or self.mic.first
 
 
+def quantity_words(quantity: str) -> str:
+    """"unbound_area_under_curve" is "unbound area under the curve"."""
+    return quantity.replace("_", " ").replace("under curve", "under the curve")
+
+
 def needs_effect_site(target: Target) -> bool:
     """Whether a target follows the effect site; else it follows plasma."""
     follows = target.response.follows if target.response else target.quantity

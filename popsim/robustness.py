@@ -76,12 +76,11 @@ def other_models(study: Study) -> list[DrugModel]:
     main, has = study.models[0], next(iter(blocks(study.population, study.seed))).attributes
     found = []
     for model in (read_sheet(name) for name in shipped_sheets()):
-        needs = model.needs | set(model.switches) | set(model.built_on.ranges)
-        needs |= {"sex"} if model.built_on.sex else set()
+        needs = model.needs | set(model.built_on.ranges) | ({"sex"} if model.built_on.sex else set())
         varies = model.spread or study.variability.from_model or not study.variability.between_subject
         if (model.drug == main.drug and model.name != main.name and varies and _same_fluid(study, model)
-                and not any(name not in has and attributes_needed(name, has) for name in needs - set(model.switches))
-                and all(name in has for name in model.switches)):
+                and not any(attributes_needed(name, has) for name in needs)
+                and has >= {*model.switches, *model.numbers}):
             found.append(model)
     return found
 

@@ -17,6 +17,7 @@ import numpy as np
 from covariates.catalogue import attributes_needed
 from popsim import solve
 from popsim.effect import effect_at
+from popsim.flagged import beyond_total, flag_counts
 from popsim.groups import members as group_members
 from popsim.judging import judge_target
 from popsim.lookup import Lookup
@@ -119,6 +120,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     quarters = quartile_members(tally.cuts, lookup, len(patients)).astype(np.int64)
     tally.quartile_patients += quarters.sum(axis=0)
     tally.overlap += members.T @ members
+    tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, (_, received) in enumerate(given):
@@ -136,6 +138,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if model.built_on.longest_infusion_min is not None:
                 tally.long_infusion[m, p] += members.T @ (
                     received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
+            tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
             for t, target in enumerate(study.targets):
                 judged[p, t], found = judge_target(study, m, target, patients, parameters, disposition, timeline,
                                                    received, lookup)

@@ -17,6 +17,7 @@ from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Popul
 from popsim.records import Study, Target, Variability, needs_effect_site
 from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
 from popsim.study_protocols import covariate_fault, resolve_protocols
+from popsim.study_salvage import beside
 from popsim.study_targets import resolve_targets
 
 ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
@@ -26,7 +27,7 @@ WORDS = {"number": "a number", "condition": "true or false", "text": "text"}
 
 def read_study(path: Path) -> Study:
     """Read and check a study file; ProblemsError lists all that the user can mend."""
-    section = read_study_file(path)
+    section, faults = read_study_file(path)
     problems: list[Problem] = []
     models = _with_fraction_unbound(section, _models(section, path, problems), path, problems)
     brought = _brought(section.population, path, problems)
@@ -46,8 +47,8 @@ def read_study(path: Path) -> Study:
     _check_model_needs(models, attributes, path, problems)
     variability = _variability(section.variability, models, path, problems)
     _check_compare(section, [name for name, _ in groups], path, problems)
-    if problems:
-        raise ProblemsError(problems)
+    if faults or problems:
+        raise ProblemsError([*faults, *beside(problems, faults)])
     return Study(
         path=path,
         digest=hashlib.sha256(path.read_bytes()).hexdigest(),
@@ -230,6 +231,10 @@ def _check_model_needs(models: tuple[DrugModel, ...], attributes: dict[str, str]
             elif attributes[name] not in ("", "condition"):
                 problems.append(Problem(f"{path.name}: population: set", f"{name} is {WORDS[attributes[name]]}",
                                         f"true or false ({meaning})", f"under [population.set]: {name} = true"))
+        for name, number in model.numbers.items():
+            if attributes.get(name) not in ("", "number"):
+                problems.append(Problem(f"{path.name}: population", f"no number {name}, and {model.name} needs it",
+                                        number.means, f"under [population.set], or a column of the list: {name}"))
         asked = model.needs | set(model.built_on.ranges) | ({"sex"} if model.built_on.sex else set())
         lacking = set().union(*(attributes_needed(name, attributes) for name in asked))
         for name in sorted(lacking):

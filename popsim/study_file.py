@@ -12,6 +12,7 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, 
 from covariates.formula import Formula, compile_formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity, Range, allowed_kinds, parse_quantity, parse_range
+from popsim.study_salvage import without_faults
 
 DOSE_AMOUNTS = ("mass", "mass_per_kg", "mass_per_m2")
 DOSE_RATES = ("rate", "rate_per_kg", "rate_per_m2")
@@ -258,15 +259,27 @@ class StudyFile(Section):
     run: RunSection
 
 
-def read_study_file(path: Path) -> StudyFile:
-    """The study file as written, each value parsed; ProblemsError names every key that does not fit."""
+def read_study_file(path: Path) -> tuple[StudyFile, list[Problem]]:
+    """The study file as written, each value parsed, and every key that does not fit.
+
+    Where keys do not fit, the file comes back without them if the rest still makes a study, so that its meaning can be
+    checked too; else ProblemsError.
+    """
     raw = _toml(path)
     if isinstance(raw.get("target"), dict):
         raw["target"] = [raw["target"]]
     try:
-        return StudyFile.model_validate(raw)
+        return StudyFile.model_validate(raw), []
     except ValidationError as error:
-        raise ProblemsError(_problem(path.name, raw, entry) for entry in error.errors()) from None
+        entries = error.errors()
+    faults = [_problem(path.name, raw, entry) for entry in entries]
+    mended = without_faults(raw, [entry["loc"] for entry in entries])
+    try:
+        if mended is not None:
+            return StudyFile.model_validate(mended), faults
+    except ValidationError:
+        pass
+    raise ProblemsError(faults)
 
 
 def _toml(path: Path) -> dict[str, Any]:

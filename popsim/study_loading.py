@@ -45,7 +45,7 @@ def resolve_loading(section: DoseSection, attributes: dict[str, str],
         say("volume_of", error.problems[0].found, error.problems[0].allowed, error.problems[0].advice)
         return lambda concentration: None
     lacking = set().union(*(attributes_needed(name, attributes) for name in model.needs))
-    lacking |= {name for name in model.switches if name not in attributes}
+    lacking |= {name for name in (*model.switches, *model.numbers) if name not in attributes}
     if lacking:
         say("volume_of", f"{model.name} needs {', '.join(sorted(lacking))}", "patients who have it",
             "give it under [population.set] or in the list, or state a volume")

@@ -9,7 +9,7 @@ from dataclasses import replace
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from covariates.units import Quantity, Range, parse_quantity, parse_range
-from popsim.records import SUMMARIES, Mic, ResponseCurve, Target
+from popsim.records import SUMMARIES, Mic, ResponseCurve, Target, quantity_words
 from popsim.study_file import TargetSection, key_path
 
 RULES = '"80 % of the time", "at any time", "always" or "at the end"'
@@ -160,11 +160,6 @@ def _effect_name(section: TargetSection, models: tuple[DrugModel, ...]) -> str:
     if section.quantity == "effect" and models and models[0].effect is not None:
         return models[0].effect.name
     return quantity_words(section.quantity)
-
-
-def quantity_words(quantity: str) -> str:
-    """"unbound_area_under_curve" is "unbound area under the curve"."""
-    return quantity.replace("_", " ").replace("under curve", "under the curve")
 
 
 def _check_names(targets: list[Target], file: str, problems: list[Problem]) -> None:

@@ -13,11 +13,13 @@ POPSIM = Path(popsim.__file__).parent
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_file", "study_loading", "study_protocols", "study_targets", "study",
-    "groups", "slices", "parameters", "timeline", "solve", "effect", "target", "judging", "estimate",
-    "tally", "run", "compare", "measures", "tables", "robustness", "words", "headlines", "ward_card", "provenance", "output",
+    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_loading", "study_protocols",
+    "study_targets", "study", "groups", "slices", "parameters", "flagged", "timeline", "solve", "effect", "target",
+    "judging", "estimate", "tally", "run", "compare", "measures", "tables", "robustness", "words", "headlines", "ward_card",
+    "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
-    "commands.new", "commands.check", "commands.judge", "cli",
+    "derived", "model_text", "person_text",
+    "commands.new", "commands.check", "commands.judge", "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
