@@ -31,6 +31,7 @@ EPSILON = 2.220446049250313e-16
 LANE = 32  # patients that step together
 CHUNK = 32  # grid times that a lane walks before its values are read: they stay in the first-level cache
 MOST_STEPS = 200  # of any root search; halving alone ends well before
+PATIENT_STEPS = 8  # of it, in which Newton's method need not get faster
 
 KE0, KA = 6, 7  # in a patient's row, after rates 0 to 2 and weights 3 to 5
 TIME, BOLUS, ORAL, FLOW = 0, 1, 2, 3  # in an event's row
@@ -703,68 +704,100 @@ def _slopes(state, rate, drug):
 
 
 @_compiled
-def _function(kind, t, state, rate, slopes, drug):
-    """Plasma, effect site, or (times a positive factor) plasma's slope, what precedes it, or plasma less effect site,
-    t minutes on."""
-    if kind == PLASMA:
-        x1, x2, x3, _, _ = _after(state, rate, drug, 0.0, t)
-        return x1 + x2 + x3
+def _seen(kind, state, rate, drug):
+    """Plasma or effect site in a state, and its slope."""
+    x1, x2, x3, site, depot = state
     if kind == EFFECT_SITE:
-        return _after(state, rate, drug, drug[KE0], t)[3]
-    total, slowest, fed = 0.0, slopes[4], slopes[5]
-    if kind == THREE_TERMS:
-        for i in range(3):
-            if slopes[6 + i] != 0.0:
-                total += slopes[6 + i] * math.exp(-(drug[i] - slowest) * t)
-        return total
-    if kind == SLOPE:
-        for i in range(3):
-            if slopes[i] != 0.0:
-                total += slopes[i] * math.exp(-(drug[i] - slowest) * t)
-            if drug[3 + i] > 0.0:
-                total -= fed * t * drug[3 + i] * _passed_on(drug[i] - slowest, drug[KA] - slowest, t)
-        return total
-    ke0 = drug[KE0]
-    slowest = min(slowest, ke0)
-    for i in range(3):
-        if slopes[i] != 0.0:
-            total += slopes[i] * _passed_on(drug[i] - slowest, ke0 - slowest, t)
-        if fed > 0.0 and drug[3 + i] > 0.0:
-            total -= fed * t * drug[3 + i] * _second_of_three(drug[i] - slowest, drug[KA] - slowest, ke0 - slowest, t)
-    return slopes[3] * math.exp(-(ke0 - slowest) * t) + total * t
+        return site, drug[KE0] * (x1 + x2 + x3 - site)
+    flow = rate + drug[KA] * depot
+    falls = drug[0] * x1 + drug[1] * x2 + drug[2] * x3
+    return x1 + x2 + x3, (drug[3] + drug[4] + drug[5]) * flow - falls
 
 
 @_compiled
-def _root(kind, level, a, b, fa, fb, state, rate, slopes, drug):
-    """Where the function passes `level` between a and b, where it lies on either side (fa, fb: less the level).
+def _function(kind, t, state, rate, slopes, drug):
+    """A function of time, t minutes on, and its slope: plasma or effect site; or, times a positive factor, plasma's
+    slope, the three terms before it, or plasma less effect site.
 
-    Method: Chandrupatla 1997, Advances in Engineering Software 28:145 (inverse quadratic steps, else halving).
+    Of these last the slope is that of the function times the growing exponential under which it turns where the one
+    before it is zero; both are scaled alike.
+    """
+    if kind <= EFFECT_SITE:
+        return _seen(kind, _after(state, rate, drug, drug[KE0] if kind == EFFECT_SITE else 0.0, t), rate, drug)
+    ka, ke0, fed = drug[KA], drug[KE0], slopes[5]
+    slowest = min(slopes[4], ke0) if kind == BEHIND else slopes[4]
+    left_depot, left_site = 0.0, 0.0
+    if fed > 0.0:
+        left_depot = math.exp(-(ka - slowest) * t)
+    if kind == BEHIND:
+        left_site = math.exp(-(ke0 - slowest) * t)
+    terms, turning, slope, behind = 0.0, 0.0, 0.0, slopes[3] * left_site
+    for i in range(3):
+        if slopes[i] == 0.0 and (fed == 0.0 or drug[3 + i] == 0.0):
+            continue
+        left = math.exp(-(drug[i] - slowest) * t)
+        terms += slopes[6 + i] * left
+        turning += (slowest - drug[i]) * slopes[6 + i] * left
+        slope += slopes[i] * left
+        if fed > 0.0 and kind > THREE_TERMS:
+            slope -= fed * t * drug[3 + i] * _passed_of(abs(drug[i] - ka) * t, left, left_depot)
+        if kind == BEHIND:
+            behind += slopes[i] * t * _passed_of(abs(drug[i] - ke0) * t, left, left_site)
+            if fed > 0.0:
+                twice = _second_of_three(drug[i] - slowest, ka - slowest, ke0 - slowest, t)
+                behind -= fed * t * drug[3 + i] * t * twice
+    if kind == THREE_TERMS:
+        return terms, turning
+    if kind == SLOPE:
+        return slope, terms + (slowest - ka) * slope
+    return behind, slope + (slowest - ke0) * behind
+
+
+@_compiled
+def _root(kind, level, a, b, fa, fb, slope_a, slope_b, state, rate, slopes, drug):
+    """Where the function passes `level` between a and b, where it lies on either side (fa, fb: less the level; slopes).
+
+    Newton's method from an end whose tangent stays between them, of the logarithm where a course falls, kept inside a bracket and else halving it.
     """
     if fa == 0.0:
         return a
     if fb == 0.0:
         return b
-    smallest = 1e-18 * abs(b - a)
-    t = 0.5
-    for _ in range(MOST_STEPS):
-        x = a + t * (b - a)
-        f = _function(kind, x, state, rate, slopes, drug) - level
-        if (f > 0.0) == (fa > 0.0):
-            c, fc = a, fa
+    logarithmic = kind <= EFFECT_SITE and fa > 0.0 and level > 0.0 and level + fb > 0.0
+    off_a, off_b = fa, fb
+    if logarithmic:
+        off_a, off_b = (level + fa) * math.log1p(fa / level), (level + fb) * math.log1p(fb / level)
+    x = a - off_a / slope_a
+    if not a < x < b:
+        x = b - off_b / slope_b
+        if not a < x < b:
+            x = a + (b - a) * (fa / (fa - fb))
+    moved, steps, high_at_a = b - a, 0, fa > 0.0
+    for tried in range(MOST_STEPS):
+        value, slope = _function(kind, x, state, rate, slopes, drug)
+        off = value - level
+        if off == 0.0:
+            return x
+        if (off > 0.0) == high_at_a:
+            a = x
         else:
-            c, fc, b, fb = b, fb, a, fa
-        a, fa = x, f
-        best, least = (a, fa) if abs(fa) < abs(fb) else (b, fb)
-        width = abs(b - a)
-        tolerance = EPSILON * abs(best) + smallest
-        if least == 0.0 or width <= 2.0 * tolerance:
-            return best
-        xi, phi = (a - b) / (c - b), (fa - fb) / (fc - fb)
-        t = 0.5
-        if phi * phi < xi and (1.0 - phi) * (1.0 - phi) < 1.0 - xi:
-            t = fa / (fb - fa) * (fc / (fb - fc)) + (c - a) / (b - a) * (fa / (fc - fa)) * (fb / (fc - fb))
-        t = min(1.0 - tolerance / width, max(tolerance / width, t))
-    return best
+            b = x
+        if logarithmic and value > 0.0:
+            off = value * math.log1p(off / level)
+        following = x - off / slope
+        step = abs(following - x)
+        if a <= following <= b and (step <= 0.5 * moved or tried < PATIENT_STEPS):
+            steps += 1
+        else:
+            following, steps = a + 0.5 * (b - a), 0
+            step = abs(following - x)
+        # two steps of Newton in a row show how fast they shrink, and so what is left
+        if steps > 1 and step * (step / moved) * (step / moved) <= EPSILON * following:
+            return following
+        if b - a <= EPSILON * b:
+            return following
+        x, moved = following, step
+    return x
 
 
 @_compiled
@@ -776,13 +809,14 @@ def _opposite(fa, fb):
 def _between(kind, cuts, count, roots, state, rate, slopes, drug):
     """Sign changes of the function between neighbouring cuts, written to `roots`; returns how many."""
     found = 0
-    fa = _function(kind, cuts[0], state, rate, slopes, drug)
+    fa, slope_a = _function(kind, cuts[0], state, rate, slopes, drug)
     for j in range(1, count):
-        fb = _function(kind, cuts[j], state, rate, slopes, drug)
+        fb, slope_b = _function(kind, cuts[j], state, rate, slopes, drug)
         if _opposite(fa, fb):
-            roots[found] = _root(kind, 0.0, cuts[j - 1], cuts[j], fa, fb, state, rate, slopes, drug)
+            roots[found] = _root(kind, 0.0, cuts[j - 1], cuts[j], fa, fb, slope_a, slope_b,
+                                 state, rate, slopes, drug)  # fmt: skip
             found += 1
-        fa = fb
+        fa, slope_a = fb, slope_b
     return found
 
 
@@ -815,26 +849,29 @@ def _monotone_cuts(kind, length, cuts, roots, state, rate, slopes, drug):
 
 
 @_compiled
-def _passage(kind, level, a, b, ya, yb, state, rate, slopes, drug):
+def _passage(kind, level, a, b, ya, yb, slope_a, slope_b, state, rate, slopes, drug):
     """When a course that is monotone from ya at a to yb at b passes the level; a or b where it lies on one side."""
     if math.isinf(level) or not _opposite(ya - level, yb - level):
         rising_over = yb > ya and ya >= level
         falling_under = yb <= ya and ya <= level
         return a if rising_over or falling_under else b
-    return _root(kind, level, a, b, ya - level, yb - level, state, rate, slopes, drug)
+    return _root(kind, level, a, b, ya - level, yb - level, slope_a, slope_b, state, rate, slopes, drug)
 
 
 @_compiled
-def _interval(kind, now, length, low, high, cuts, roots, tally, state, rate, drug):
-    """Add an interval from `now` to a window's tally: 0-2 minutes below, in, above; 3, 4 lowest and highest value, 5,
+def _interval(kind, now, length, low, high, cuts, roots, tally, state, after, rate, drug):
+    """Add an interval from `now`, between two states, to a window's tally: 0-2 minutes below, in, above; 3, 4 lowest and highest value, 5,
     6 when; 7 the last value; 8 when first in range; 9 when last above it."""
     slopes = _slopes(state, rate, drug)
     count = _monotone_cuts(kind, length, cuts, roots, state, rate, slopes, drug)
     a = cuts[0]
-    ya = _function(kind, a, state, rate, slopes, drug)
+    ya, slope_a = _seen(kind, state, rate, drug)
     for j in range(1, count):
         b = cuts[j]
-        yb = _function(kind, b, state, rate, slopes, drug)
+        if j == count - 1:
+            yb, slope_b = _seen(kind, after, rate, drug)
+        else:
+            yb, slope_b = _function(kind, b, state, rate, slopes, drug)
         least, most = min(ya, yb), max(ya, yb)
         rising = yb > ya
         at_low, at_high = a, a
@@ -846,8 +883,8 @@ def _interval(kind, now, length, low, high, cuts, roots, tally, state, rate, dru
             tally[2] += b - a
             at_high = b
         else:
-            at_low = _passage(kind, low, a, b, ya, yb, state, rate, slopes, drug)
-            at_high = _passage(kind, high, a, b, ya, yb, state, rate, slopes, drug)
+            at_low = _passage(kind, low, a, b, ya, yb, slope_a, slope_b, state, rate, slopes, drug)
+            at_high = _passage(kind, high, a, b, ya, yb, slope_a, slope_b, state, rate, slopes, drug)
             tally[0] += (at_low - a) if rising else (b - at_low)
             tally[1] += abs(at_high - at_low)
             tally[2] += (b - at_high) if rising else (at_high - a)
@@ -860,7 +897,7 @@ def _interval(kind, now, length, low, high, cuts, roots, tally, state, rate, dru
         if most > high:
             tally[9] = now + (b if rising else at_high)
         tally[7] = yb
-        a, ya = b, yb
+        a, ya, slope_a = b, yb, slope_b
 
 
 @_compiled
@@ -870,7 +907,7 @@ def _one_window(kind, begin, end, low, high, cuts, roots, tally, given, start, d
     tally[3], tally[4], tally[8], tally[9] = math.inf, -math.inf, math.inf, -math.inf
     state, flow, event = _reached(start, begin, given, drug)
     if begin == end:
-        value = state[3] if kind == EFFECT_SITE else state[0] + state[1] + state[2]
+        value, _ = _seen(kind, state, flow, drug)
         zone = 0 if value < low else (2 if value > high else 1)
         tally[zone] = 1.0
         tally[3], tally[4], tally[5], tally[6], tally[7] = value, value, begin, begin, value
@@ -879,9 +916,10 @@ def _one_window(kind, begin, end, low, high, cuts, roots, tally, given, start, d
     now = begin
     while now < end:
         until = min(end, given[event, TIME]) if event < given.shape[0] else end
-        _interval(kind, now, until - now, low, high, cuts, roots, tally, state, flow, drug)
+        after = _after(state, flow, drug, drug[KE0], until - now)
+        _interval(kind, now, until - now, low, high, cuts, roots, tally, state, after, flow, drug)
         if until < end:
-            state, flow, event = _met(state, flow, event, now, until, given, drug)
+            state, flow, event = _met(after, flow, event, until, until, given, drug)
         now = until
 
 
