@@ -29,7 +29,6 @@ NO_ABSORPTION = 8
 
 EPSILON = 2.220446049250313e-16
 LANE = 32  # patients that step together
-CHUNK = 32  # grid times that a lane walks before its values are read: they stay in the first-level cache
 MOST_STEPS = 200  # of any root search; halving alone ends well before
 PATIENT_STEPS = 8  # of it, in which Newton's method need not get faster
 
@@ -445,15 +444,15 @@ def steady_starts(drug, events, interval, status, start):
 @_compiled
 def _lane_moved(s):
     """One grid step for all patients of a lane. Rows of the flat scratch `s`, LANE numbers each, at constant offsets
-    so that the compiler vectorises: 0-2 modes, 3 depot, 4 rate, 5 plasma, 6 effect site, 7-22 factors, 23-29 the first
-    seven before the step."""
+    so that the compiler vectorises: 0-2 modes, 3 depot, 4 rate, 5 plasma, 6 effect site, 7 effect, 8-23 factors, 24-30
+    the first seven before the step."""
     for p in range(LANE):
         x1, x2, x3, rate = s[p], s[LANE + p], s[2 * LANE + p], s[4 * LANE + p]
-        passed = x1 * s[13 * LANE + p] + x2 * s[14 * LANE + p] + x3 * s[15 * LANE + p]
-        s[6 * LANE + p] = s[6 * LANE + p] * s[16 * LANE + p] + passed + rate * s[17 * LANE + p]
-        x1 = x1 * s[7 * LANE + p] + rate * s[10 * LANE + p]
-        x2 = x2 * s[8 * LANE + p] + rate * s[11 * LANE + p]
-        x3 = x3 * s[9 * LANE + p] + rate * s[12 * LANE + p]
+        passed = x1 * s[14 * LANE + p] + x2 * s[15 * LANE + p] + x3 * s[16 * LANE + p]
+        s[6 * LANE + p] = s[6 * LANE + p] * s[17 * LANE + p] + passed + rate * s[18 * LANE + p]
+        x1 = x1 * s[8 * LANE + p] + rate * s[11 * LANE + p]
+        x2 = x2 * s[9 * LANE + p] + rate * s[12 * LANE + p]
+        x3 = x3 * s[10 * LANE + p] + rate * s[13 * LANE + p]
         s[p], s[LANE + p], s[2 * LANE + p], s[5 * LANE + p] = x1, x2, x3, x1 + x2 + x3
 
 
@@ -462,10 +461,10 @@ def _lane_absorbed(s):
     """What the depots of a lane add to that step."""
     for p in range(LANE):
         depot = s[3 * LANE + p]
-        x1, x2 = s[p] + depot * s[18 * LANE + p], s[LANE + p] + depot * s[19 * LANE + p]
-        x3 = s[2 * LANE + p] + depot * s[20 * LANE + p]
-        s[6 * LANE + p] += depot * s[21 * LANE + p]
-        s[3 * LANE + p] = depot * s[22 * LANE + p]
+        x1, x2 = s[p] + depot * s[19 * LANE + p], s[LANE + p] + depot * s[20 * LANE + p]
+        x3 = s[2 * LANE + p] + depot * s[21 * LANE + p]
+        s[6 * LANE + p] += depot * s[22 * LANE + p]
+        s[3 * LANE + p] = depot * s[23 * LANE + p]
         s[p], s[LANE + p], s[2 * LANE + p], s[5 * LANE + p] = x1, x2, x3, x1 + x2 + x3
 
 
@@ -512,63 +511,33 @@ def _lane_begun(first, width, s, table, upcoming, event, drug, status, events, s
 
 
 @_compiled
-def _lane_walked(begin, end, first, width, s, table, loaded, upcoming, event, drug, events, grid, length_of, oral, values):
-    """Walk a lane from grid time `begin` to before `end`: `values` gets 2 * LANE numbers a time, plasma, effect site.
-
-    length_of[t] is the index in the table of the step from grid[t] to grid[t + 1]; `loaded`, and what is returned, the
-    one whose factors stand in the scratch. Only a patient whose event falls inside a step walks it alone.
-    """
-    before, earliest = s[23 * LANE :], upcoming.min()
-    for t in range(begin, end):
-        if t > 0:
-            if length_of[t - 1] != loaded:
-                loaded = length_of[t - 1]
-                s[7 * LANE : 23 * LANE] = table[loaded]
-            eventful = earliest <= grid[t]
-            if eventful:
-                before[:] = s[: 7 * LANE]
-            _lane_moved(s)
-            if oral:
-                _lane_absorbed(s)
-            if eventful:
-                for p in range(width):
-                    if upcoming[p] > grid[t]:
-                        continue
-                    i, since, state = first + p, grid[t], _lane_state(s, p)
-                    if upcoming[p] < grid[t]:
-                        since, state = grid[t - 1], _lane_state(before, p)
-                    state, flow, event[p] = _met(state, s[4 * LANE + p], event[p], since, grid[t], events[i], drug[i])
-                    _lane_set(s, p, state, flow)
-                    upcoming[p] = events[i, event[p], TIME] if event[p] < events.shape[1] else math.inf
-                earliest = upcoming.min()
-        place = (t - begin) * 2 * LANE
-        for p in range(2 * LANE):
-            values[place + p] = s[5 * LANE + p]
-    return loaded
+def _lane_met(first, width, s, upcoming, event, since, until, drug, events):
+    """Walk alone, from `since` to `until`, the patients of a lane whose events lie between; returns the next event."""
+    before = s[24 * LANE :]
+    for p in range(width):
+        if upcoming[p] > until:
+            continue
+        i, begin, state = first + p, until, _lane_state(s, p)
+        if upcoming[p] < until:
+            begin, state = since, _lane_state(before, p)
+        state, flow, event[p] = _met(state, s[4 * LANE + p], event[p], begin, until, events[i], drug[i])
+        _lane_set(s, p, state, flow)
+        upcoming[p] = events[i, event[p], TIME] if event[p] < events.shape[1] else math.inf
+    return upcoming.min()
 
 
 @_compiled
-def courses(drug, status, events, start, grid, length_of, lengths, plasma, effect_site):
-    """Both courses at every grid time, just after doses at that time; NaN for patients with a status."""
-    s, table, values = np.empty(30 * LANE), np.empty((lengths.size, 16 * LANE)), np.empty(CHUNK * 2 * LANE)
-    upcoming, event, oral = np.empty(LANE), np.empty(LANE, np.int64), _by_mouth(events, start)
-    for first in range(0, status.size, LANE):
-        width = min(LANE, status.size - first)
-        _lane_begun(first, width, s, table, upcoming, event, drug, status, events, start, grid[0], lengths, oral)
-        loaded = -1
-        for begin in range(0, grid.size, CHUNK):
-            end = min(begin + CHUNK, grid.size)
-            loaded = _lane_walked(begin, end, first, width, s, table, loaded, upcoming, event, drug, events, grid,
-                                  length_of, oral, values)  # fmt: skip
-            for p in range(width):
-                fine = status[first + p] == FINE
-                for t in range(begin, end):
-                    place = (t - begin) * 2 * LANE + p
-                    plasma[first + p, t] = values[place] if fine else math.nan
-                    effect_site[first + p, t] = values[place + LANE] if fine else math.nan
-
-
-# ---- counts over time ----
+def _lane_members(first, width, status, low, high, members, limits, words, who, whose):
+    """Set a lane's limits, its members as bytes of words, and as pairs of patient and group; how many pairs."""
+    limits[:], words[:], pairs = 0.0, 0, 0
+    for p in range(width):
+        limits[p], limits[LANE + p] = low[first + p], high[first + p]
+        for g in range(members.shape[1]):
+            if members[first + p, g] and status[first + p] == FINE:
+                words[g // 8 * LANE + p] += 1 << (g % 8 * 8)
+                who[pairs], whose[pairs] = p, g
+                pairs += 1
+    return pairs
 
 
 @_compiled
@@ -581,32 +550,15 @@ def _effect(concentration, curve, i):
 
 
 @_compiled
-def _lane_counted(values, shift, begin, end, limits, words, w, packed):
-    """Add a lane's members below, in and above the range from grid time `begin` on: eight groups at once, a byte each
-    of a word."""
-    for t in range(end - begin):
-        place, below, above, there = t * 2 * LANE + shift, 0, 0, 0
-        for p in range(LANE):
-            value, word = values[place + p], words[w * LANE + p]
-            below += word if value < limits[p] else 0
-            above += word if value > limits[LANE + p] else 0
-            there += word if value == value else 0
-        packed[w, begin + t, 0] += below
-        packed[w, begin + t, 1] += there - below - above
-        packed[w, begin + t, 2] += above
-
-
-@_compiled
-def _lane_binned(values, bits, place, bins_at):
-    """Each value's bin: `bits` is `values` seen as int64; exponent and first 7 bits of the mantissa. -1 for NaN."""
-    lowest = ((1023 + LOWEST_OCTAVE) << BINS_PER_OCTAVE_LOG2) - FIRST_BIN
+def _lane_counted(s, row, limits, words, w):
+    """Members below, in and above the range: eight groups at once, a byte each of a word."""
+    below, above, there = 0, 0, 0
     for p in range(LANE):
-        value = values[place + p]
-        at = (bits[place + p] >> (52 - BINS_PER_OCTAVE_LOG2)) - lowest
-        at = max(UNDER_BIN, min(at, OVER_BIN))
-        at = ZERO_BIN if value == 0.0 else at
-        at = NEGATIVE_BIN if value < 0.0 else at
-        bins_at[p] = at if value == value else -1
+        value, word = s[row * LANE + p], words[w * LANE + p]
+        below += word if value < limits[p] else 0
+        above += word if value > limits[LANE + p] else 0
+        there += word if value == value else 0
+    return below, there - below - above, above
 
 
 @_compiled
@@ -620,47 +572,72 @@ def _unpacked(packed, counts):
 
 
 @_compiled
-def over_time(kind, drug, status, events, start, grid, length_of, lengths, curve, low, high, members, counts, bins):
-    """Add every patient's course to the counts (below, in, above) and bins of the groups it belongs to, at every time
-    of the grid; no course is kept. Patients with a status are passed over; so are NaN values. Bins may be empty."""
-    s, table, values = np.empty(30 * LANE), np.empty((lengths.size, 16 * LANE)), np.empty(CHUNK * 2 * LANE)
+def _lane_binned(s, bits, row, bins_at):
+    """Each value's bin: `bits` is `s` seen as int64; exponent and first 7 bits of the mantissa. -1 for NaN."""
+    lowest = ((1023 + LOWEST_OCTAVE) << BINS_PER_OCTAVE_LOG2) - FIRST_BIN
+    for p in range(LANE):
+        value = s[row * LANE + p]
+        at = (bits[row * LANE + p] >> (52 - BINS_PER_OCTAVE_LOG2)) - lowest
+        at = max(UNDER_BIN, min(at, OVER_BIN))
+        at = ZERO_BIN if value == 0.0 else at
+        at = NEGATIVE_BIN if value < 0.0 else at
+        bins_at[p] = at if value == value else -1
+
+
+@_compiled
+def on_grid(kind, drug, status, events, start, grid, length_of, lengths, curve, low, high, members, counts, bins,
+            plasma, effect_site):  # fmt: skip
+    """Walk every patient through the grid; values are those just after doses at that time.
+
+    length_of[t] is the index in `lengths` of the step from grid[t] to grid[t + 1]. Patients go in lanes of LANE: time
+    is the outer loop, patients the inner one; only a patient whose event falls inside a step walks it alone. Each of
+    these may be empty: `counts` (below, in, above) and `bins` of the groups a patient belongs to, added to from the
+    course `kind`; `plasma` and `effect_site`, the courses kept. Patients with a status are passed over (kept: NaN);
+    NaN values are not counted.
+    """
+    s, table = np.empty(31 * LANE), np.empty((lengths.size, 16 * LANE))
     upcoming, event, oral = np.empty(LANE), np.empty(LANE, np.int64), _by_mouth(events, start)
-    groups, bits = members.shape[1], values.view(np.int64)
+    groups, bits, row = members.shape[1], s.view(np.int64), 5 + kind
     limits, words = np.empty(2 * LANE), np.empty((groups + 7) // 8 * LANE, np.int64)
     packed, lanes = np.zeros(((groups + 7) // 8, grid.size, 3), np.int64), 0
     who, whose, bins_at = np.empty(groups * LANE, np.int64), np.empty(groups * LANE, np.int64), np.empty(LANE, np.int64)
-    shift = 0 if kind == PLASMA else LANE
     for first in range(0, status.size, LANE):
         width = min(LANE, status.size - first)
         _lane_begun(first, width, s, table, upcoming, event, drug, status, events, start, grid[0], lengths, oral)
-        limits[:], words[:], belonging = 0.0, 0, 0
-        for p in range(width):
-            limits[p], limits[LANE + p] = low[first + p], high[first + p]
-            for g in range(groups):
-                if members[first + p, g] and status[first + p] == FINE:
-                    words[g // 8 * LANE + p] += 1 << (g % 8 * 8)
-                    who[belonging], whose[belonging] = p, g
-                    belonging += 1
-        loaded = -1
-        for begin in range(0, grid.size, CHUNK):
-            end = min(begin + CHUNK, grid.size)
-            loaded = _lane_walked(begin, end, first, width, s, table, loaded, upcoming, event, drug, events, grid,
-                                  length_of, oral, values)  # fmt: skip
+        belonging = _lane_members(first, width, status, low, high, members, limits, words, who, whose)
+        loaded, earliest = -1, upcoming.min()
+        for t in range(grid.size):
+            if t > 0:
+                if length_of[t - 1] != loaded:
+                    loaded = length_of[t - 1]
+                    s[8 * LANE : 24 * LANE] = table[loaded]
+                eventful = earliest <= grid[t]
+                if eventful:
+                    s[24 * LANE :] = s[: 7 * LANE]
+                _lane_moved(s)
+                if oral:
+                    _lane_absorbed(s)
+                if eventful:
+                    earliest = _lane_met(first, width, s, upcoming, event, grid[t - 1], grid[t], drug, events)
             if kind == EFFECT:
                 for p in range(width):
-                    for t in range(end - begin):
-                        place = t * 2 * LANE + shift + p
-                        values[place] = _effect(values[place], curve, first + p)
+                    s[7 * LANE + p] = _effect(s[6 * LANE + p], curve, first + p)
             for w in range(packed.shape[0]):
-                _lane_counted(values, shift, begin, end, limits, words, w, packed)
+                below, inside, above = _lane_counted(s, row, limits, words, w)
+                packed[w, t, 0] += below
+                packed[w, t, 1] += inside
+                packed[w, t, 2] += above
             if bins.shape[2] > 0:
-                for t in range(begin, end):
-                    _lane_binned(values, bits, (t - begin) * 2 * LANE + shift, bins_at)
-                    for m in range(belonging):
-                        if bins_at[who[m]] >= 0:
-                            bins[whose[m], t, bins_at[who[m]]] += 1
+                _lane_binned(s, bits, row, bins_at)
+                for m in range(belonging):
+                    if bins_at[who[m]] >= 0:
+                        bins[whose[m], t, bins_at[who[m]]] += 1
+            if plasma.shape[1] > 0:
+                for p in range(width):
+                    plasma[first + p, t] = s[5 * LANE + p] if status[first + p] == FINE else math.nan
+                    effect_site[first + p, t] = s[6 * LANE + p] if status[first + p] == FINE else math.nan
         lanes += 1
-        if lanes * LANE > 255 - LANE:  # a byte holds no more
+        if (lanes + 1) * LANE > 255:  # a byte holds no more
             _unpacked(packed, counts)
             lanes = 0
     _unpacked(packed, counts)

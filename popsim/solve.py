@@ -89,7 +89,10 @@ def courses_on_grid(
     _within_interval(grid, given.interval)
     plasma = np.empty((len(disposition), grid.size))
     effect_site = np.empty_like(plasma)
-    kernels.courses(given.drug, given.status, given.events, given.start, grid, *_steps(grid), plasma, effect_site)
+    n, nothing = len(disposition), np.empty(len(disposition))
+    nobody, uncounted = np.empty((n, 0), dtype=np.bool_), np.empty((0, grid.size, 0), dtype=np.int64)
+    kernels.on_grid(kernels.PLASMA, *given[:4], grid, *_steps(grid), np.empty((0, 5)), nothing, nothing, nobody, uncounted,
+                    uncounted.astype(np.int32), plasma, effect_site)  # fmt: skip
     return plasma, effect_site
 
 
@@ -182,10 +185,11 @@ def count_over_time(
         kind, curve = kernels.EFFECT, np.stack([_array("an effect's curve", column, (n,)) for column in course], axis=1)
         if curve.shape != (n, 5):
             raise ValueError(f"an effect's curve has {curve.shape[1]} parameters, not 5")
-    drug, status, events, start, interval = _given(disposition, timeline)
-    _within_interval(grid, interval)
-    kernels.over_time(kind, drug, status, events, start, grid, *_steps(grid), curve, low, high,
-                      np.ascontiguousarray(members), counts, bins)  # fmt: skip
+    given = _given(disposition, timeline)
+    _within_interval(grid, given.interval)
+    unkept = np.empty((0, 0))
+    kernels.on_grid(kind, *given[:4], grid, *_steps(grid), curve, low, high, np.ascontiguousarray(members), counts, bins,
+                    unkept, unkept)  # fmt: skip
 
 
 def bin_layout() -> np.ndarray:
