@@ -442,18 +442,30 @@ def steady_starts(drug, events, interval, status, start):
 
 
 @_compiled
+def _lane_loaded(s, table, step):
+    """Set the factors of a lane's step; those that infuse times the rate, once and not at every step."""
+    for q in range(16 * LANE):
+        s[8 * LANE + q] = table[step, q]
+    for p in range(LANE):
+        rate = s[4 * LANE + p]
+        s[11 * LANE + p] *= rate
+        s[12 * LANE + p] *= rate
+        s[13 * LANE + p] *= rate
+        s[18 * LANE + p] *= rate
+
+
+@_compiled
 def _lane_moved(s):
     """One grid step for all patients of a lane. Rows of the flat scratch `s`, LANE numbers each, at constant offsets
     so that the compiler vectorises: 0-2 modes, 3 depot, 4 rate, 5 plasma, 6 effect site, 7 effect, 8-23 factors, 24-30
     the first seven before the step."""
     for p in range(LANE):
-        x1, x2, x3, rate = s[p], s[LANE + p], s[2 * LANE + p], s[4 * LANE + p]
+        x1, x2, x3 = s[p], s[LANE + p], s[2 * LANE + p]
         passed = x1 * s[14 * LANE + p] + x2 * s[15 * LANE + p] + x3 * s[16 * LANE + p]
-        s[6 * LANE + p] = s[6 * LANE + p] * s[17 * LANE + p] + passed + rate * s[18 * LANE + p]
-        x1 = x1 * s[8 * LANE + p] + rate * s[11 * LANE + p]
-        x2 = x2 * s[9 * LANE + p] + rate * s[12 * LANE + p]
-        x3 = x3 * s[10 * LANE + p] + rate * s[13 * LANE + p]
-        s[p], s[LANE + p], s[2 * LANE + p], s[5 * LANE + p] = x1, x2, x3, x1 + x2 + x3
+        s[6 * LANE + p] = s[6 * LANE + p] * s[17 * LANE + p] + passed + s[18 * LANE + p]
+        s[p] = x1 * s[8 * LANE + p] + s[11 * LANE + p]
+        s[LANE + p] = x2 * s[9 * LANE + p] + s[12 * LANE + p]
+        s[2 * LANE + p] = x3 * s[10 * LANE + p] + s[13 * LANE + p]
 
 
 @_compiled
@@ -461,11 +473,18 @@ def _lane_absorbed(s):
     """What the depots of a lane add to that step."""
     for p in range(LANE):
         depot = s[3 * LANE + p]
-        x1, x2 = s[p] + depot * s[19 * LANE + p], s[LANE + p] + depot * s[20 * LANE + p]
-        x3 = s[2 * LANE + p] + depot * s[21 * LANE + p]
+        s[p] += depot * s[19 * LANE + p]
+        s[LANE + p] += depot * s[20 * LANE + p]
+        s[2 * LANE + p] += depot * s[21 * LANE + p]
         s[6 * LANE + p] += depot * s[22 * LANE + p]
         s[3 * LANE + p] = depot * s[23 * LANE + p]
-        s[p], s[LANE + p], s[2 * LANE + p], s[5 * LANE + p] = x1, x2, x3, x1 + x2 + x3
+
+
+@_compiled
+def _lane_plasma(s):
+    """The sum of the modes."""
+    for p in range(LANE):
+        s[5 * LANE + p] = s[p] + s[LANE + p] + s[2 * LANE + p]
 
 
 @_compiled
@@ -477,7 +496,7 @@ def _lane_state(s, p):
 def _lane_set(s, p, state, flow):
     x1, x2, x3, site, depot = state
     s[p], s[LANE + p], s[2 * LANE + p], s[6 * LANE + p], s[3 * LANE + p] = x1, x2, x3, site, depot
-    s[4 * LANE + p], s[5 * LANE + p] = flow, x1 + x2 + x3
+    s[4 * LANE + p] = flow
 
 
 @_compiled
@@ -610,7 +629,7 @@ def on_grid(kind, drug, status, events, start, grid, length_of, lengths, curve, 
             if t > 0:
                 if length_of[t - 1] != loaded:
                     loaded = length_of[t - 1]
-                    s[8 * LANE : 24 * LANE] = table[loaded]
+                    _lane_loaded(s, table, loaded)
                 eventful = earliest <= grid[t]
                 if eventful:
                     s[24 * LANE :] = s[: 7 * LANE]
@@ -619,6 +638,9 @@ def on_grid(kind, drug, status, events, start, grid, length_of, lengths, curve, 
                     _lane_absorbed(s)
                 if eventful:
                     earliest = _lane_met(first, width, s, upcoming, event, grid[t - 1], grid[t], drug, events)
+                    _lane_loaded(s, table, loaded)
+            if kind == PLASMA:
+                _lane_plasma(s)
             if kind == EFFECT:
                 for p in range(width):
                     s[7 * LANE + p] = _effect(s[6 * LANE + p], curve, first + p)
