@@ -142,7 +142,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if keep_courses:
                 kept = _courses(grid, model, parameters, disposition, timeline)
                 courses.append((model.name, study.protocols[p].name, *kept))
-        tally.add_statuses(m, status)
+        tally.add_statuses(m, status, patients.first)
         for t in range(len(study.targets)):
             for a, b in combinations(range(len(study.protocols)), 2):
                 tally.pairs[m, t, a, b].add(judged[a, t], judged[b, t], members)
