@@ -756,7 +756,8 @@ def _function(kind, t, state, rate, slopes, drug):
 def _root(kind, level, a, b, fa, fb, slope_a, slope_b, state, rate, slopes, drug):
     """Where the function passes `level` between a and b, where it lies on either side (fa, fb: less the level; slopes).
 
-    Newton's method from an end whose tangent stays between them, of the logarithm where a course falls, kept inside a bracket and else halving it.
+    Newton's method from an end whose tangent stays between them, of the logarithm where a course falls, kept inside a
+    bracket and else halving it.
     """
     if fa == 0.0:
         return a
@@ -859,8 +860,8 @@ def _passage(kind, level, a, b, ya, yb, slope_a, slope_b, state, rate, slopes, d
 
 @_compiled
 def _interval(kind, now, length, low, high, cuts, roots, tally, state, after, rate, drug):
-    """Add an interval from `now`, between two states, to a window's tally: 0-2 minutes below, in, above; 3, 4 lowest and highest value, 5,
-    6 when; 7 the last value; 8 when first in range; 9 when last above it."""
+    """Add an interval from `now`, between two states, to a window's tally: 0-2 minutes below, in, above; 3, 4 lowest
+    and highest value, 5, 6 when; 7 the last value; 8 when first in range; 9 when last above it."""
     slopes = _slopes(state, rate, drug)
     count = _monotone_cuts(kind, length, cuts, roots, state, rate, slopes, drug)
     a = cuts[0]

@@ -91,8 +91,8 @@ def courses_on_grid(
     effect_site = np.empty_like(plasma)
     n, nothing = len(disposition), np.empty(len(disposition))
     nobody, uncounted = np.empty((n, 0), dtype=np.bool_), np.empty((0, grid.size, 0), dtype=np.int64)
-    kernels.on_grid(kernels.PLASMA, *given[:4], grid, *_steps(grid), np.empty((0, 5)), nothing, nothing, nobody, uncounted,
-                    uncounted.astype(np.int32), plasma, effect_site)  # fmt: skip
+    kernels.on_grid(kernels.PLASMA, *given[:4], grid, *_steps(grid), np.empty((0, 5)), nothing, nothing, nobody,
+                    uncounted, uncounted.astype(np.int32), plasma, effect_site)  # fmt: skip
     return plasma, effect_site
 
 
@@ -188,8 +188,8 @@ def count_over_time(
     given = _given(disposition, timeline)
     _within_interval(grid, given.interval)
     unkept = np.empty((0, 0))
-    kernels.on_grid(kind, *given[:4], grid, *_steps(grid), curve, low, high, np.ascontiguousarray(members), counts, bins,
-                    unkept, unkept)  # fmt: skip
+    kernels.on_grid(kind, *given[:4], grid, *_steps(grid), curve, low, high, np.ascontiguousarray(members), counts,
+                    bins, unkept, unkept)  # fmt: skip
 
 
 def bin_layout() -> np.ndarray:

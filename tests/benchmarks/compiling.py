@@ -32,7 +32,8 @@ def main() -> None:
     with tempfile.TemporaryDirectory() as folder:
         for label in ("compiling every kernel", "loading them"):
             print(f"{label:24}", end="", flush=True)
-            subprocess.run([sys.executable, "-c", EVERY_KERNEL], check=True, env={**os.environ, "NUMBA_CACHE_DIR": folder})
+            environment = {**os.environ, "NUMBA_CACHE_DIR": folder}
+            subprocess.run([sys.executable, "-c", EVERY_KERNEL], check=True, env=environment)
 
 
 if __name__ == "__main__":

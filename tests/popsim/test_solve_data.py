@@ -81,8 +81,8 @@ def test_two_compartments_after_a_bolus(package, item, time, dose, start, wanted
 @given(st.lists(st.tuples(st.floats(0, 90), st.floats(0, 200), st.floats(0, 20)), min_size=1, max_size=5).map(sorted),
        st.integers(0, 2**31), st.booleans())  # fmt: skip
 def test_no_regimen_spreads_people_more_than_a_bolus_does(events, seed, at_effect_site):
-    """A theorem of linear pharmacokinetics: given the same doses, the SD over the mean among people at time t is at most
-    the largest SD over mean, up to t, after a bolus (published with 1,000 simulated patients; the SD of a sum of
+    """A theorem of linear pharmacokinetics: given the same doses, the SD over the mean among people at time t is at
+    most the largest SD over mean, up to t, after a bolus (published with 1,000 simulated patients; the SD of a sum of
     nonnegative weights times bolus responses is at most that sum of SDs)."""
     n = 40 if cases.SLOW else 200
     d = solve.disposition(cases.varied(n, seed))

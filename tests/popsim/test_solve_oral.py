@@ -101,8 +101,9 @@ def test_lag_and_bioavailability_shift_and_scale_that_patient_alone():
 def test_an_infusion_runs_on_while_a_dose_waits_out_its_lag():
     """Superposition: the lagged dose neither stops the infusion nor is lost at its end."""
     d = cases.people({**ORAL, "lag": 7.3})
-    together = both(d, by_mouth((0.0, 10.0, 4.0, 0.0), (5.0, 0.0, 2.0, 100.0), (9.0, 0.0, 6.0, 0.0), (30.0, 0.0, 0.0, 50.0)))
-    infusion = both(d, by_mouth((0.0, 10.0, 4.0, 0.0), (5.0, 0.0, 2.0, 0.0), (9.0, 0.0, 6.0, 0.0), (30.0, 0.0, 0.0, 0.0)))
+    steps = (0.0, 10.0, 4.0), (5.0, 0.0, 2.0), (9.0, 0.0, 6.0), (30.0, 0.0, 0.0)
+    together = both(d, by_mouth(*((*step, oral) for step, oral in zip(steps, (0.0, 100.0, 0.0, 50.0), strict=True))))
+    infusion = both(d, by_mouth(*((*step, 0.0) for step in steps)))
     doses = both(d, by_mouth((5.0, 0.0, 0.0, 100.0), (30.0, 0.0, 0.0, 50.0)))
     assert (doses[0, 0, GRID < 12.3] == 0).all()
     np.testing.assert_allclose(together, infusion + doses, rtol=1e-13)

@@ -102,8 +102,8 @@ def test_it_is_where_doses_given_one_by_one_lead(name):
 @few
 @given(st.floats(0.1, 1e5), st.floats(1.0, 1e3), st.floats(0.01, 3.0), st.floats(0.0, 2.0), st.floats(-6, 2))
 def test_the_average_level_is_the_dose_over_clearance_and_interval(interval, dose, lasts, lag, ka_power):
-    """Over one interval at steady state what comes in goes out: CL x area = F x dose, in plasma and effect site, however
-    long an infusion or a lag lasts (in intervals). Textbook."""
+    """Over one interval at steady state what comes in goes out: CL x area = F x dose, in plasma and effect site,
+    however long an infusion or a lag lasts (in intervals). Textbook."""
     d = cases.people({**ORAL, "lag": lag * interval, "ka": 10.0**ka_power})
     infused = (0.3 * interval, 0.0, dose / (lasts * interval), lasts * interval)
     once = one_by_one([infused, (0.9 * interval, dose, math.nan, 0.0), (0.0, dose, 0.0, 0.0)], interval, 1)
@@ -127,8 +127,8 @@ def test_patients_who_repeat_and_who_do_not_stand_side_by_side():
     line.interval_min[:] = np.inf, 60.0, 90.0
     found = window(d, line, "plasma", 1.0, 4.0, 0.0, 60.0)
     for i, interval in enumerate((np.inf, 60.0, 90.0)):
-        alone = window(cases.people(cases.PROPOFOL), repeated(cases.timeline((0.0, 100.0, 3.0), (20.0, 0.0, 0.0)), interval),
-                       "plasma", 1.0, 4.0, 0.0, 60.0)  # fmt: skip
+        one = repeated(cases.timeline((0.0, 100.0, 3.0), (20.0, 0.0, 0.0)), interval)
+        alone = window(cases.people(cases.PROPOFOL), one, "plasma", 1.0, 4.0, 0.0, 60.0)
         assert found.inside[i] == alone.inside[0]
         assert found.lowest[i] == alone.lowest[0]
 
