@@ -44,7 +44,7 @@ def _one_number(target: Target, disposition: Disposition, timeline: Timeline, st
                 end: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """The area (mg/L min), or the peak, the trough or the level (mg/L), of plasma in the window."""
     if target.summary in ("area_under_curve", "average"):
-        return solve.area_under_curve(disposition, timeline, start, end)
+        return solve.area_under_curve(disposition, timeline, "plasma", start, end)
     anything = np.full(len(disposition), -np.inf), np.full(len(disposition), np.inf)
     if target.summary == "trough":
         start = np.maximum(end - JUST_BEFORE_MIN, 0.0)

@@ -14,6 +14,7 @@ from popsim.flagged import flag_notes
 from popsim.measures import responses, values
 from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, TargetTally, decimal_quantile, decimal_value, range_names
+from popsim.target import in_target_unit
 
 FEW_PATIENTS = 400
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
@@ -87,6 +88,8 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
         if not study.targets[t].over_time:
             continue
         quantiles = solve.percentiles_from_bins(counts.bins, PERCENTILES)
+        if study.targets[t].quantity != "effect":  # counted as the solver's concentrations: monotone, so percentiles stay
+            quantiles = in_target_unit(study.targets[t], study.models[m], {}, quantiles)
         for g, group in enumerate(study.group_names):
             solved = counts.over_time[g].sum(axis=1)
             with np.errstate(invalid="ignore"):

@@ -8,7 +8,7 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
-from popsim.effect import concentration_at, effect_at, falls
+from popsim.effect import concentration_at, effect_at, effect_curve, falls
 from popsim.records import MINUTES_A_DAY, Judged, Target, WindowCourse, needs_effect_site
 
 SHARE_SLACK = 1e-9  # a share found to 1e-12 of the window must not miss "80 %" by rounding
@@ -146,11 +146,18 @@ def _judged(target: Target, failed: np.ndarray, attained: np.ndarray, shares: tu
     )
 
 
-def course_values(target: Target, model: DrugModel, values: Mapping[str, np.ndarray], plasma: np.ndarray,
-                  effect_site: np.ndarray) -> np.ndarray:
-    """The target's course quantity at each time of the grid, (n, times); of a summary, the plasma it sums up."""
-    course = effect_site if course_of(target) == "effect_site" else plasma
-    return in_target_unit(target, model, values, course)
+def grid_course(target: Target, model: DrugModel, values: Mapping[str, np.ndarray]) -> str | tuple[np.ndarray, ...]:
+    """What `solve.count_over_time` is to count for a target: a course in the solver's mg/L, or an effect's curve."""
+    return effect_curve(model, values) if target.quantity == "effect" else course_of(target)
+
+
+def grid_limits(target: Target, model: DrugModel, n: int) -> tuple[np.ndarray, np.ndarray]:
+    """The range in the unit that is counted, (n,) each; without limits for a summary, which no instant has."""
+    if target.summary:
+        return np.full(n, -np.inf), np.full(n, np.inf)
+    if target.quantity == "effect":
+        return np.full(n, target.low), np.full(n, target.high)
+    return concentration_limits(target, model, {}, n)
 
 
 def summary_value(target: Target, model: DrugModel, course: np.ndarray, minutes: np.ndarray) -> np.ndarray:
