@@ -14,26 +14,39 @@ from popsim.target import (
     concentration_limits, course_of, judge, judge_value, measured_level, recovery_limits, summary_value, window_of,
 )  # fmt: skip
 
+AREAS = ("area_under_curve", "average")
 JUST_BEFORE_MIN = 1.0  # a trough is looked at from so long before; any time would do
 
 
 def judge_target(study: Study, m: int, target: Target, patients: Patients, parameters: IndividualParameters,
                  disposition: Disposition, timeline: Timeline, received: Received,
-                 lookup: Lookup) -> tuple[Judged, np.ndarray]:
-    """What a target finds in each patient of a block under model `m`, and each patient's status."""
+                 lookup: Lookup, steady: Timeline | None) -> tuple[Judged, np.ndarray]:
+    """What a target finds in each patient of a block under model `m`, and each patient's status.
+
+    steady   the regimen as repeated for ever, None where it is not repeated
+    """
     model, n = study.models[m], len(disposition)
-    start, end = window_of(target, lookup, n, study.until_min)
+    if target.steady:
+        assert steady is not None
+        timeline, start, end = steady, np.zeros(n), steady.interval_min
+    else:
+        start, end = window_of(target, lookup, n, study.until_min)
     if target.summary or target.measured:
         level, status = _one_number(target, disposition, timeline, start, end)
         if target.measured:
             luck = (normals(study.seed, f"assay {name}", patients.block)[patients.slots]
                     for name in ("proportional", "additive"))
             level = measured_level(model, level, *luck)
-        return judge_value(target, summary_value(target, model, level, end - start), status, received.undosed), status
+        judged = judge_value(target, summary_value(target, model, level, end - start), status, received.undosed)
+        if steady is not None and not target.steady and target.summary in AREAS:
+            at_steady, _ = solve.area_under_curve(disposition, steady, "plasma", np.zeros(n), steady.interval_min)
+            share = level / (end - start) / (at_steady / steady.interval_min)
+            judged = replace(judged, measures=judged.measures | {"of_steady_state": share})
+        return judged, status
     low, high = concentration_limits(target, model, parameters.values, n)
     course = solve.window_course(disposition, timeline, course_of(target), low, high, start, end)
     judged = judge(target, model, parameters.values, course, received.undosed)
-    if target.over_time:
+    if target.over_time and not target.steady:
         more = _times(study, target, m, parameters, disposition, timeline, received, low, end)
         judged = replace(judged, measures=judged.measures | {
             name: np.where(judged.failed, np.nan, minutes) for name, minutes in more.items()})
@@ -43,7 +56,7 @@ def judge_target(study: Study, m: int, target: Target, patients: Patients, param
 def _one_number(target: Target, disposition: Disposition, timeline: Timeline, start: np.ndarray,
                 end: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
     """The area (mg/L min), or the peak, the trough or the level (mg/L), of plasma in the window."""
-    if target.summary in ("area_under_curve", "average"):
+    if target.summary in AREAS:
         return solve.area_under_curve(disposition, timeline, "plasma", start, end)
     anything = np.full(len(disposition), -np.inf), np.full(len(disposition), np.inf)
     if target.summary == "trough":

@@ -32,6 +32,8 @@ def values(study: Study, tally: Tally) -> list[dict]:
 
 def measure_unit(target: Target, measure: str) -> str:
     """The unit of a measure in the tables."""
+    if measure == "of_steady_state":
+        return ""
     if measure.endswith("_min"):
         return "min"
     if target.summary == "area_under_curve":

@@ -78,8 +78,9 @@ def draw_all(study: Study, tables: dict[str, pd.DataFrame], folder: Path) -> lis
                     rows_where(tables[name], model=model.name, target=target.name)
                     for name in ("attainment", "over_time", "comparison")))
                 ending = endings[model.name, target.name]
-                pictures += [_by_group(shown, folder / f"attainment_by_group{ending}.svg"),
-                             _over_time(shown, folder / f"attainment_over_time{ending}.svg")]
+                pictures.append(_by_group(shown, folder / f"attainment_by_group{ending}.svg"))
+                if target.over_time and not target.summary:
+                    pictures.append(_over_time(shown, folder / f"attainment_over_time{ending}.svg"))
     return pictures
 
 
@@ -324,7 +325,7 @@ def _panel(axes: Axes, shown: Shown, lines: dict[int, tuple[np.ndarray, ...]], g
 
 
 def _shade(axes: Axes, target: Target) -> None:
-    if isinstance(target.start, str) or isinstance(target.end, str):
+    if target.steady or isinstance(target.start, str) or isinstance(target.end, str):
         return
     if target.instant:
         axes.axvline(target.start, color=FAINT, linewidth=1, linestyle=(0, (2, 2)))
@@ -337,6 +338,8 @@ def _shade(axes: Axes, target: Target) -> None:
 
 
 def _window_said(target: Target) -> str:
+    if target.steady:
+        return "The target is judged at steady state, which these courses may not have reached."
     if isinstance(target.start, str) or isinstance(target.end, str):
         return f"The target's window ({window(target)}) differs between patients and is not shaded."
     if target.instant:

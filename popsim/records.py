@@ -173,7 +173,10 @@ class DoseVariant:
 
 @dataclass(frozen=True)
 class DoseStep:
-    """One line of the ward card. Caps, floors and rounding are in mg, or mg/min when the step has only a rate."""
+    """One line of the ward card. Caps, floors and rounding are in mg, or mg/min when the step has only a rate.
+
+    maintained   whether it repeats to the run's end: what a steady state is made of
+    """
 
     number: int
     where: Formula | None
@@ -185,6 +188,8 @@ class DoseStep:
     at_most: float | None
     at_least: float | None
     round_to: float | None
+    oral: bool = False
+    maintained: bool = False
 
     @property
     def banded(self) -> bool:
@@ -256,6 +261,7 @@ class Target:
     rule          share, any, always, end; `share_needed` goes with share
     per_day       whether an area is brought to 24 h
     measured      whether levels as an assay would measure them are judged, its error included
+    steady        whether the window is one interval of the repeated regimen at steady state (end is then inf)
     recovers_at   level by which a course has recovered after the last dose; None where not asked
     """
 
@@ -275,6 +281,7 @@ class Target:
     response: ResponseCurve | None = None
     measured: bool = False
     recovers_at: float | None = None
+    steady: bool = False
 
     @property
     def instant(self) -> bool:

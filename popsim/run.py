@@ -36,7 +36,7 @@ from popsim.records import (
 from popsim.slices import quartile_cuts, quartile_members
 from popsim.tally import Findings, Tally, check_room
 from popsim.target import grid_course, grid_limits
-from popsim.timeline import build_timeline
+from popsim.timeline import build_timeline, steady_timeline
 
 LEAN = "lean_body_mass_janmahasatian"
 
@@ -121,6 +121,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     tally.overlap += members.T @ members
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
+    steady = [steady_timeline(protocol, lookup, len(patients)) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, (_, received) in enumerate(given):
         tally.doses[p].add(received, per, members)
@@ -140,7 +141,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
             for t, target in enumerate(study.targets):
                 judged[p, t], found = judge_target(study, m, target, patients, parameters, disposition, timeline,
-                                                   received, lookup)
+                                                   received, lookup, steady[p])
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members, parameters.outside)
             _add_responses(study, m, p, judged, members, tally)

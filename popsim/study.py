@@ -14,7 +14,7 @@ from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from popsim.patients.listed import list_columns, read_list
 from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
-from popsim.records import Study, Target, Variability, needs_effect_site
+from popsim.records import Protocol, Study, Target, Variability, needs_effect_site
 from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
 from popsim.study_protocols import covariate_fault, resolve_protocols
 from popsim.study_salvage import beside
@@ -40,7 +40,9 @@ def read_study(path: Path) -> Study:
     groups = _groups(section, path, problems)
     protocols = resolve_protocols(section.protocol, until_min, attributes, path.name, problems)
     _check_unique("protocol", [protocol.name for protocol in protocols], path, problems)
+    _check_routes(protocols, models, path, problems)
     targets = resolve_targets(section.target, models, until_min, attributes, path.name, problems)
+    _check_steady(protocols, targets, path, problems)
     _check_set_windows(section, targets, until_min, path, problems)
     _check_listed_windows(section, targets, path, problems)
     _check_formulas(section, attributes, path, problems)
@@ -286,11 +288,30 @@ def _check_listed_windows(section: StudyFile, targets: tuple[Target, ...], path:
                                     "a column that counts minutes or hours"))
 
 
+def _check_routes(protocols: tuple[Protocol, ...], models: tuple[DrugModel, ...], path: Path,
+                  problems: list[Problem]) -> None:
+    for protocol in protocols:
+        if any(step.oral for step in protocol.steps):
+            for model in models:
+                if not model.has_absorption:
+                    problems.append(Problem(f'{path.name}: protocol "{protocol.name}": route',
+                                            f'"oral", but {model.name} has no absorption', "a model with ka, or iv"))
+
+
+def _check_steady(protocols: tuple[Protocol, ...], targets: tuple[Target, ...], path: Path,
+                  problems: list[Problem]) -> None:
+    for protocol in protocols if any(target.steady for target in targets) else ():
+        if not any(step.maintained for step in protocol.steps):
+            problems.append(Problem(f"{path.name}: target: during", f'"steady state", but nothing in "{protocol.name}" '
+                                    "repeats to the run's end", "a step with every, and without times",
+                                    'every = "12 h"'))
+
+
 def _check_set_windows(section: StudyFile, targets: tuple[Target, ...], until_min: float, path: Path,
                        problems: list[Problem]) -> None:
     """A window whose end is set for everyone can be checked now; one from a list's column only with the patients."""
     values = {name: value * (60.0 if name.endswith("_h") else 1.0) for name, value in section.population.set.items()}
-    for target in targets:
+    for target in (target for target in targets if not target.steady):
         start, end = (values.get(edge, edge) for edge in (target.start, target.end))
         known = not isinstance(start, str) and not isinstance(end, str)
         if known and not 0 <= start <= end <= until_min:

@@ -13,7 +13,6 @@ from popsim.study_loading import is_given, resolve_loading
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
 SIZES = {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}
-ROUTE_ADVICE = "only intravenous doses can be judged; give the dose iv"
 
 Report = Callable[..., None]
 
@@ -97,13 +96,15 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
     _check_bands(section, variants, say)
     _check_duration(section, variants, say)
     _check_repeats(section, variants, run_until_min, say)
-    if section.route == "oral":
-        say("route", '"oral"', '"iv"', ROUTE_ADVICE)
+    if section.route == "oral" and (section.rate is not None or section.over is not None
+                                    or any(variant.rate is not None for variant in variants)):
+        say("route", '"oral" with a rate or over', "an amount alone, swallowed at once")
     for variant in variants:
         if variant.at_min > run_until_min:
             say("at", f"{variant.at_min:g} min, after the run's end", f"at most {run_until_min:g} min",
                 "move the dose or lengthen [run] until")
-        for key, dose in (("amount", variant.amount), ("rate", variant.rate)):
+        concentration = variant.loading.concentration if variant.loading else None
+        for key, dose in (("amount", variant.amount), ("rate", variant.rate), ("amount_for", concentration)):
             if dose is not None and dose.value == 0:
                 say(key, f'"{dose.text}"', "above zero", "leave the step out, or let where say who gets it")
     limits = _limits(section, protocol, variants, say)
@@ -115,6 +116,9 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
         over_min=section.over.value if section.over else None,
         until_min=section.until.value if section.until else None,
         times=section.times,
+        oral=section.route == "oral",
+        maintained=section.times is None and (section.until is None or section.until.value >= run_until_min)
+        and all(variant.every_min is not None for variant in variants),
         **limits,
     )
 

@@ -14,6 +14,7 @@ from popsim.study_file import TargetSection, key_path
 
 RULES = '"80 % of the time", "at any time", "always" or "at the end"'
 AREA_UNIT = "mg.h/L"
+STEADY = "steady state"
 
 
 def resolve_targets(sections: list[TargetSection], models: tuple[DrugModel, ...], run_until_min: float,
@@ -49,7 +50,8 @@ def _of_section(section: TargetSection, models: tuple[DrugModel, ...], run_until
         name=section.name or _default_name(section, models, limits), quantity=section.quantity, low=limits.low,
         high=limits.high, unit=limits.unit, range_text=limits.text, start=window[0], end=window[1], rule=rule[0],
         share_needed=rule[1], rule_text=rule[2], per_day=section.per is not None, response=response,
-        measured=section.levels == "measured", recovers_at=recovers_at)
+        measured=section.levels == "measured", recovers_at=recovers_at,
+        steady=section.during.strip() == STEADY)
     return [_at_mic(target, *mic, first=number == 0) for number, mic in enumerate(mics)] if mics else [target]
 
 
@@ -141,6 +143,8 @@ def _recovers_at(section: TargetSection, report: Callable) -> float | None:
 def _check_keys(section: TargetSection, window: tuple | None, models: tuple[DrugModel, ...], report: Callable) -> None:
     """Keys that only some quantities have, and windows that a quantity cannot do with."""
     word = section.quantity.removeprefix("unbound_")
+    if section.recovers_at is not None and section.during.strip() == STEADY:
+        report("recovers_at", "beside a steady state", "a window of the run: a steady regimen never stops")
     if section.per is not None and word != "area_under_curve":
         report("per", section.per, "only with an area under the curve")
     instant = window is not None and window[0] == window[1]
@@ -244,10 +248,8 @@ def _window(section: TargetSection, run_until_min: float, attributes: dict[str, 
             report: Callable) -> tuple[float | str, float | str] | None:
     """Start and end in minutes; an end may name an attribute that ends in _min or _h."""
     text = section.during.strip()
-    if text == "steady state":
-        report("during", '"steady state"', 'a window such as "24 h to 48 h"',
-               "this version of popsim does not have it yet")
-        return None
+    if text == STEADY:
+        return (0.0, float("inf"))
     parts = re.split(r"\s+to\s+", text)
     if len(parts) > 2:
         report("during", f'"{text}"', 'a window "5 min to 60 min" or an instant "60 min"')

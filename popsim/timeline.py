@@ -2,19 +2,17 @@
 
 from __future__ import annotations
 
-from collections.abc import Callable
-from dataclasses import dataclass
+from dataclasses import dataclass, replace
 
 import numpy as np
 
+from covariates.formula import Formula
 from covariates.problems import Problem, ProblemsError
-from covariates.sheet import parameters_of
-from covariates.units import Quantity
-from popsim.records import DoseStep, DoseVariant, Loading, Protocol, Received, Timeline
+from popsim.amounts import ROUNDING_SLACK, Lookup, as_given, loading_mg, scaled_dose
+from popsim.records import DoseStep, DoseVariant, Protocol, Received, Timeline
 
+FAR_MIN = 1e9  # no run is as long
 GAP_MIN = 1e-9  # between two infusions: no pause, but the rounding of start + duration
-ROUNDING_SLACK = 1e-9  # 0.15 mg in steps of 0.1 mg is 1.4999999999999998 steps, and must round up
-Lookup = Callable[[str], np.ndarray]
 
 
 @dataclass(frozen=True)
@@ -26,6 +24,7 @@ class Administration:
     duration_min: np.ndarray
     amount_mg: np.ndarray
     gets_it: np.ndarray
+    oral: bool
 
 
 @dataclass
@@ -110,43 +109,44 @@ def _impossible(protocol: Protocol, changes: Changes, who: np.ndarray) -> Proble
         'impossible = "warn" in the protocol counts these patients instead'))
 
 
-def as_given(wanted: np.ndarray, at_least: float | None, at_most: float | None,
-             round_to: float | None) -> tuple[np.ndarray, np.ndarray, np.ndarray, np.ndarray]:
-    """Floor, cap, round half up, never above the cap: (given, floored, capped, rounded).
+def steady_timeline(protocol: Protocol, lookup: Lookup, n: int) -> Timeline | None:
+    """One interval of what a protocol keeps repeating to the run's end, as if repeated for ever; None where nothing is.
 
-    105 mg with a cap of 100 mg and steps of 15 mg is given as 90 mg: 100 would round up to 105, above the cap.
+    The interval begins with the first dose of the first such step; what is given only for a time is left out. A
+    patient whom no repeated step reaches has an endless interval. Raises ProblemsError where a patient would have two
+    different intervals.
     """
-    given = np.array(wanted, dtype=np.float64)
-    floored = np.zeros(len(given), dtype=bool)
-    capped = np.zeros(len(given), dtype=bool)
-    rounded = np.zeros(len(given), dtype=bool)
-    if at_least is not None:
-        floored = given < at_least
-        given[floored] = at_least
-    if at_most is not None:
-        capped = given > at_most
-        given[capped] = at_most
-    if round_to is not None:
-        steps = np.floor(given / round_to + 0.5 + ROUNDING_SLACK)
-        if at_most is not None:
-            steps = np.minimum(steps, np.floor(at_most / round_to + ROUNDING_SLACK))
-        in_steps = steps * round_to
-        rounded = np.abs(in_steps - given) > ROUNDING_SLACK * np.maximum(given, round_to)
-        given = np.where(rounded, in_steps, given)
-    return given, floored, capped, rounded
+    kept = [step for step in protocol.steps if step.maintained]
+    if not kept:
+        return None
+    interval = np.full(n, np.inf)
+    for step in kept:
+        for variant in step.variants:
+            gets_it = holds(step.where, lookup, n) & holds(variant.where, lookup, n)
+            if (np.isfinite(interval) & (interval != variant.every_min) & gets_it).any():
+                raise ProblemsError(Problem(f'protocol "{protocol.name}"', "steps that repeat at different intervals",
+                                            "one interval for each patient, for a target at steady state"))
+            interval[gets_it] = variant.every_min
+    first = min(variant.at_min for variant in kept[0].variants)
+    once = tuple(replace(step, times=1, until_min=None, variants=tuple(
+        replace(variant, at_min=(variant.at_min - first) % variant.every_min) for variant in step.variants))
+        for step in kept)
+    administrations, _ = administrations_of(replace(protocol, steps=once, no_dose_allowed=True), lookup, n, FAR_MIN)
+    timeline, _ = _events(administrations, n, FAR_MIN)
+    return replace(timeline, interval_min=interval)
 
 
 def _of_step(protocol: Protocol, step: DoseStep, lookup: Lookup, n: int, until_min: float,
              changes: Changes) -> list[Administration]:
-    reach = np.ones(n, dtype=bool) if step.where is None else _holds(step.where, lookup, n)
+    reach = holds(step.where, lookup, n)
     covered = np.zeros(n, dtype=np.int64)
     administrations = []
     for variant in step.variants:
-        gets_it = reach if variant.where is None else reach & _holds(variant.where, lookup, n)
+        gets_it = reach & holds(variant.where, lookup, n)
         covered += gets_it
         if gets_it.any():
             amount, duration = _one_administration(step, variant, lookup, gets_it, until_min, changes)
-            administrations += [Administration(step.number, start, duration, amount, gets_it)
+            administrations += [Administration(step.number, start, duration, amount, gets_it, step.oral)
                                 for start in _starts(step, variant, until_min)]
     if (covered > 1).any():
         raise ProblemsError(Problem(f'protocol "{protocol.name}", dose {step.number}: band',
@@ -158,7 +158,10 @@ def _of_step(protocol: Protocol, step: DoseStep, lookup: Lookup, n: int, until_m
     return administrations
 
 
-def _holds(condition, lookup: Lookup, n: int) -> np.ndarray:
+def holds(condition: Formula | None, lookup: Lookup, n: int) -> np.ndarray:
+    """Whom a condition is true of, (n,) bool; everyone where there is none."""
+    if condition is None:
+        return np.ones(n, dtype=bool)
     return np.broadcast_to(np.asarray(condition.evaluate(lookup), dtype=bool), (n,))
 
 
@@ -169,40 +172,6 @@ def _left_out(protocol: Protocol, nothing_covers: str, who: np.ndarray) -> Probl
         'no_dose = "allowed" in the protocol, if going without is meant'))
 
 
-def loading_mg(loading: Loading, step: DoseStep, lookup: Lookup, gets_it: np.ndarray) -> np.ndarray:
-    """mg that bring each patient's stated or typical volume to the concentration: 25 mg/L in 50 L is 1250 mg."""
-    if loading.model is None:
-        return loading.concentration.value * loading.litres_per_kg * _size(step, lookup, gets_it, loading.text)
-    typical = parameters_of(loading.model, lookup, {}, len(gets_it))
-    volumes = ("V1", "V2", "V3") if loading.volume == "Vss" else ("V1",)
-    litres = sum(typical[name] for name in volumes if name in typical)
-    unfit = gets_it & ~((litres > 0) & np.isfinite(litres))
-    if unfit.any():
-        raise ProblemsError(Problem(f"dose {step.number}: {loading.text}", f"no volume in {unfit.sum():,} patients",
-                                    "a volume above zero", "state a volume, or let where leave these patients out"))
-    return loading.concentration.value * litres
-
-
-def _scaled(quantity: Quantity, step: DoseStep, lookup: Lookup, gets_it: np.ndarray) -> np.ndarray:
-    """mg or mg/min for each patient; a size by which nobody can be dosed is refused."""
-    if quantity.kind in ("mass", "rate"):
-        return np.full(len(gets_it), quantity.value)
-    return quantity.value * _size(step, lookup, gets_it, quantity.text)
-
-
-def _size(step: DoseStep, lookup: Lookup, gets_it: np.ndarray, written: str) -> np.ndarray:
-    size = np.broadcast_to(lookup(step.by), gets_it.shape)
-    if size.dtype.kind not in "fiu":
-        raise ProblemsError(Problem(f"dose {step.number}: {written} by {step.by}", f"{step.by} is no number",
-                                    "a size, such as weight"))
-    unfit = gets_it & ~((size > 0) & np.isfinite(size))
-    if unfit.any():
-        raise ProblemsError(Problem(f"dose {step.number}: {written} by {step.by}",
-                                    f"{step.by} is zero, negative or unknown in {unfit.sum():,} patients",
-                                    "a size above zero", "dose by another size, or let where leave these patients out"))
-    return size
-
-
 def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, gets_it: np.ndarray, until_min: float,
                         changes: Changes) -> tuple[np.ndarray, np.ndarray]:
     """Amount in mg and duration in min of each administration of a step."""
@@ -210,7 +179,7 @@ def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, ge
     if variant.loading is not None:
         wanted = loading_mg(variant.loading, step, lookup, gets_it)
     else:
-        wanted = _scaled(variant.amount or variant.rate, step, lookup, gets_it)
+        wanted = scaled_dose(variant.amount or variant.rate, step, lookup, gets_it)
     given, floored, capped, rounded = as_given(wanted, step.at_least, step.at_most, step.round_to)
     changes.floored |= floored & gets_it
     changes.capped |= capped & gets_it
@@ -223,7 +192,7 @@ def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, ge
         return given * duration, duration
     if variant.rate is not None:
         duration = np.zeros(n)
-        np.divide(given, _scaled(variant.rate, step, lookup, gets_it), out=duration, where=gets_it)
+        np.divide(given, scaled_dose(variant.rate, step, lookup, gets_it), out=duration, where=gets_it)
         return given, duration
     return given, np.full(n, step.over_min or 0.0)
 
@@ -253,7 +222,7 @@ def _events(administrations: list[Administration], n: int, until_min: float) -> 
     ends = [bool((one.duration_min > 0)[one.gets_it].any()) for one in administrations]  # a bolus has no end of its own
     columns = len(administrations) + sum(ends) or 1
     time = np.full((n, columns), np.inf)
-    bolus = np.zeros((n, columns))
+    bolus, oral = np.zeros((n, columns)), np.zeros((n, columns))
     rate_change = np.zeros((n, columns))
     running = np.zeros((n, columns), dtype=np.int8)
     begin = 0
@@ -263,7 +232,7 @@ def _events(administrations: list[Administration], n: int, until_min: float) -> 
         rate = np.zeros(n)
         np.divide(administration.amount_mg, administration.duration_min, out=rate, where=infused)
         time[administration.gets_it, begin] = administration.start_min
-        bolus[at_once, begin] = administration.amount_mg[at_once]
+        (oral if administration.oral else bolus)[at_once, begin] = administration.amount_mg[at_once]
         rate_change[:, begin] = rate
         running[rate > 0, begin] = 1
         if has_end:
@@ -272,13 +241,13 @@ def _events(administrations: list[Administration], n: int, until_min: float) -> 
             running[rate > 0, begin + 1] = -1
         begin += 1 + has_end
     order = np.argsort(time, axis=1, kind="stable")
-    time, bolus, rate_change, running = (np.take_along_axis(array, order, axis=1)
-                                         for array in (time, bolus, rate_change, running))
+    time, bolus, oral, rate_change, running = (np.take_along_axis(array, order, axis=1)
+                                               for array in (time, bolus, oral, rate_change, running))
     active = np.cumsum(running, axis=1, dtype=np.int64)
     # no infusion running is exactly no rate, whatever the rounding of the sum
     rate = np.where(active > 0, np.maximum(np.cumsum(rate_change, axis=1), 0.0), 0.0)
     used = max(int(np.isfinite(time).any(axis=0).sum()), 1)
-    timeline = Timeline(*(np.ascontiguousarray(array[:, :used]) for array in (time, bolus, rate)))
+    timeline = Timeline(*(np.ascontiguousarray(array[:, :used]) for array in (time, bolus, rate, oral)))
     return timeline, _longest_infusion(timeline, until_min)
 
 

@@ -44,6 +44,8 @@ def clock(minutes: float) -> str:
 
 def window(target: Target) -> str:
     """The window of a target: "15 min to 60 min", or an instant."""
+    if target.steady:
+        return "at steady state, one interval"
     start, end = (edge if isinstance(edge, str) else clock(edge) for edge in (target.start, target.end))
     if target.summary == "trough":
         return f"just before {end}"
