@@ -16,6 +16,7 @@ from markupsafe import Markup
 from covariates.sheet import DrugModel
 from covariates.units import to_unit
 from popsim.headlines import has_headline, rows_where
+from popsim.holds import further, numbers
 from popsim.pictures import INTERVALS_SAY, Picture
 from popsim.records import Protocol, Study, Target
 from popsim.ward_card import card_lines, describe, example_people, step_as_written
@@ -38,6 +39,7 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
         record=record,
         intervals_say=INTERVALS_SAY,
         targets=[target_line(target) for target in study.targets],
+        further=further(study, tables),
         answers=[_answer(study, tables, model, target) for model in study.models for target in study.targets],
         pictures=[{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
                   for number, picture in enumerate(pictures, 1)],
@@ -65,6 +67,7 @@ def _answer(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel, tar
         model.effect.low_means, model.effect.high_means)
     return {
         "title": _about(study, model, target),
+        "numbers": numbers(study, tables, model.name, target),
         "sentences": [finding(study, pairs, attainment, group, target.name, model.name) for group in study.group_names],
         "attainment": [(group, [(row, has_headline(row)) for row in rows.itertuples()]) for group, rows in by_group],
         "sides": sides,

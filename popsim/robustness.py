@@ -80,7 +80,7 @@ def other_models(study: Study) -> list[DrugModel]:
         varies = model.spread or study.variability.from_model or not study.variability.between_subject
         if (model.drug == main.drug and model.name != main.name and varies and _same_fluid(study, model)
                 and not any(attributes_needed(name, has) for name in needs)
-                and has >= {*model.switches, *model.numbers}):
+                and has.keys() >= {*model.switches, *model.numbers}):
             found.append(model)
     return found
 

@@ -11,6 +11,7 @@ import pandas as pd
 from covariates.sheet import DrugModel
 from popsim.cautions import CAUTIONS
 from popsim.estimate import no_headline
+from popsim.holds import further, numbers
 from popsim.records import Study, Target
 from popsim.words import finding, per_kg_line, percent, points, sides_line, target_line
 
@@ -32,6 +33,8 @@ def summary(study: Study, tables: dict[str, pd.DataFrame], notes: Iterable[str],
     for model in study.models:
         for target in study.targets:
             lines += ["", *_one_target(study, tables, model, target, heading)]
+    for title, sentences in further(study, tables):
+        lines += ["", heading(title), *(line for sentence in sentences for line in _wrapped(sentence, "- "))]
     lines += ["", heading("Outside the people the model was built on")]
     for model in study.models:
         lines += _outside(study, tables["attainment"], model)
@@ -59,6 +62,9 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
     lines += ["", heading("Attained, with 95 % simulation interval; mean share of the window (%)")]
     lines += _wrapped(sides_line(target, model))
     lines += _attainment_table(attainment, study.group_names)
+    own = numbers(study, tables, model.name, target)
+    if own:
+        lines += ["", heading("Each patient's own numbers, all patients"), *(line for one in own for line in _wrapped(one))]
     if len(pairs):
         lines += ["", heading("Same patients, difference in attainment (percentage points)"), *_pair_table(pairs)]
     return lines
@@ -145,6 +151,6 @@ def _cut(text: str, width: int) -> str:
 def as_json_text(study: Study, tables: dict[str, pd.DataFrame], notes: Iterable[str]) -> str:
     """The numbers of the summary for programs: rows of the tables as they stand in the CSV files; NaN is null."""
     shown = {name: tables[name].astype(object).where(tables[name].notna(), None).to_dict(orient="records")
-             for name in ("attainment", "comparison", "groups", "doses")}
+             for name in tables if name != "over_time"}
     return json.dumps({"title": study.title, "question": study.question, "seed": study.seed, **shown,
                        "notes": list(notes), "cautions": list(CAUTIONS)}, indent=2, ensure_ascii=False)

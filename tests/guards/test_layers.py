@@ -15,7 +15,7 @@ FLOW = [
     "patients.survey", "patients.population", "patients.fit_survey", "records",
     "patients.listed", "patients.draw", "study_salvage", "study_file", "study_loading", "study_protocols",
     "study_targets", "study", "groups", "slices", "parameters", "flagged", "amounts", "timeline", "solve", "effect", "target",
-    "judging", "estimate", "tally", "run", "compare", "measures", "tables", "robustness", "words", "headlines", "ward_card",
+    "judging", "estimate", "tally", "run", "compare", "measures", "tables", "robustness", "words", "holds", "headlines", "ward_card",
     "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "derived", "model_text", "person_text",

@@ -1,0 +1,109 @@
+"""Further findings in sentences, the same for terminal and report: does the answer hold, each patient's own numbers,
+cumulative fractions of response, the spread between models."""
+
+from __future__ import annotations
+
+import math
+
+import pandas as pd
+
+from covariates.units import to_unit
+from popsim.records import Study, Target
+from popsim.words import clock, percent, points
+
+MEASURES = {"first_reached_min": "first reached after", "recovery_min": "recovered after the last dose in"}
+
+
+def holds(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
+    """One sentence per way of asking again: in which groups the answer is another one, and by how much all patients."""
+    table = tables.get("robustness")
+    if table is None or len(table) == 0:
+        return []
+    lines = []
+    for asked, rows in table[table["asked"] != "as written"].groupby("asked", sort=False):
+        other = rows[rows["same_answer"] == "no"]
+        everyone = rows[rows["group"] == "all"]
+        if len(study.protocols) == 1:
+            lines.append(f"{asked}: " + "; ".join(_attained(study, row) for row in everyone.itertuples()))
+        elif len(other) == 0:
+            lines.append(f"{asked}: the same answer everywhere")
+        else:
+            which = "; ".join(_other(study, row) for row in list(other.itertuples())[:3])
+            more = f"; and {len(other) - 3} more in robustness.csv" if len(other) > 3 else ""
+            lines.append(f"{asked}: another answer in {len(other)} of {len(rows)}: {which}{more}")
+    return lines
+
+
+def _attained(study: Study, row) -> str:
+    of = f"{row.target}: " if len(study.targets) > 1 else ""
+    return (f"{of}{percent(row.attained_a)} % of all attain "
+            f"({percent(row.attained_low)} to {percent(row.attained_high)} %)")
+
+
+def _other(study: Study, row) -> str:
+    of = f", {row.target}" if len(study.targets) > 1 else ""
+    pair = f', "{row.protocol_b}" less "{row.protocol_a}"' if len(study.protocols) > 2 else ""
+    return f"{row.group}{of}{pair} {points(row.difference)}" + (f" ({row.verdict})" if row.verdict else "")
+
+
+def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: Target) -> list[str]:
+    """Median and middle 90 % of each patient's own numbers among all patients, protocol by protocol."""
+    table = tables.get("values")
+    if table is None:
+        return []
+    name = target.mic.family if target.mic else target.name
+    rows = table[(table["model"] == model) & (table["target"] == name) & (table["group"] == "all")]
+    return [f'"{row.protocol}": {_said(target, row)}' for row in rows.itertuples()
+            if row.patients and target.over_time]
+
+
+def _said(target: Target, row) -> str:
+    if row.measure in MEASURES:
+        half, most = (_minutes(value) for value in (row.p50, row.p95))
+        never = f"; {percent(row.never)} % not by the end" if row.never else ""
+        return f"{MEASURES[row.measure]} {half} (median), {most} (95 % of patients){never}"
+    if row.measure == "of_steady_state":
+        return (f"the window has {percent(row.p50, 0)} % of its value at steady state (median; "
+                f"{percent(row.p05, 0)} to {percent(row.p95, 0)} %)")
+    kind = "area" if target.summary == "area_under_curve" else "concentration"
+    if target.quantity == "response":
+        return f"mean probability of response {percent(row.mean)} % (Monte Carlo error {percent(row.mean_error)})"
+    if target.quantity == "effect":
+        low, half, high = (f"{value:.3g}" for value in (row.p05, row.p50, row.p95))
+        return f"median {half} (5 to 95 %: {low} to {high})"
+    low, half, high = (f"{to_unit(value, target.unit, kind):.3g}" for value in (row.p05, row.p50, row.p95))
+    return f"median {half} {target.unit} (5 to 95 %: {low} to {high})"
+
+
+def _minutes(value: float) -> str:
+    return "never" if math.isinf(value) else clock(float(f"{value:.3g}"))
+
+
+def responses(tables: dict[str, pd.DataFrame]) -> list[str]:
+    """Cumulative fractions of response of all patients."""
+    table = tables.get("responses")
+    if table is None:
+        return []
+    return [f'{row.target}, "{row.protocol}" ({row.model}): {percent(row.response)} % '
+            f"({percent(row.response_low)} to {percent(row.response_high)} %)"
+            for row in table[table["group"] == "all"].itertuples()]
+
+
+def between_models(tables: dict[str, pd.DataFrame]) -> list[str]:
+    """The spread of attainment between models beside the simulation interval, of all patients."""
+    table = tables.get("models")
+    if table is None:
+        return []
+    return [f'{row.target}, "{row.protocol}": {percent(row.lowest)} % ({row.lowest_model}) to {percent(row.highest)} % '
+            f"({row.highest_model}); the simulation interval is {percent(row.simulation_interval)} points wide"
+            for row in table[table["group"] == "all"].itertuples()]
+
+
+FURTHER = (("Does the answer hold?", holds),
+           ("Cumulative fraction of response", lambda study, tables: responses(tables)),
+           ("Between models: how far the answer leans on the model", lambda study, tables: between_models(tables)))
+
+
+def further(study: Study, tables: dict[str, pd.DataFrame]) -> list[tuple[str, list[str]]]:
+    """Headings with their sentences; only those that have any."""
+    return [(title, lines) for title, build in FURTHER if (lines := build(study, tables))]
