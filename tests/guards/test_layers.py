@@ -14,7 +14,7 @@ FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
     "patients.listed", "patients.draw", "study_salvage", "study_file", "study_loading", "study_protocols",
-    "study_targets", "study", "groups", "slices", "parameters", "flagged", "amounts", "timeline", "solve", "effect", "target",
+    "study_targets", "study_fit", "study", "groups", "slices", "parameters", "flagged", "amounts", "timeline", "solve", "effect", "target",
     "judging", "estimate", "tally", "run", "compare", "measures", "tables", "robustness", "words", "holds", "headlines", "ward_card",
     "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",

@@ -9,10 +9,12 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy.stats import binomtest
+from scipy.stats import binom, binomtest
 from statsmodels.stats.proportion import confint_proportions_2indep
 
-from popsim.estimate import no_headline, paired_difference, unpaired_difference, verdict, wilson
+from popsim.estimate import (
+    mean_error, no_headline, paired_difference, quantile_ranks, unpaired_difference, verdict, wilson,
+)  # fmt: skip
 
 
 @pytest.mark.parametrize(
@@ -157,3 +159,19 @@ def test_no_verdict_where_nothing_is_said_to_matter_or_nobody_is_there():
 def test_over_one_percent_failed_leaves_no_headline():
     assert no_headline(11, 1000) and not no_headline(10, 1000) and not no_headline(0, 0)
     assert no_headline(np.array([1, 0]), np.array([99, 99])).tolist() == [True, False]
+
+
+def test_error_of_a_mean_against_numpy():
+    values = np.random.default_rng(3).random(500)
+    error = mean_error(values.mean(), (values**2).mean(), 500)
+    assert error == pytest.approx(values.std(ddof=1) / np.sqrt(500))
+    assert np.isnan(mean_error(0.5, 0.5, 1))
+
+
+@pytest.mark.parametrize("share", [0.05, 0.5, 0.95])
+def test_interval_of_a_quantile_covers_it_in_95_of_100_samples(share):
+    """Ranks against the binomial distribution of scipy: the chance that the true quantile lies between them."""
+    n = 2000
+    rank, low, high = quantile_ranks(share, n)
+    covered = binom.cdf(np.ceil(high) - 1, n, share) - binom.cdf(np.ceil(low) - 1, n, share)
+    assert rank == n * share and covered == pytest.approx(0.95, abs=0.01)
