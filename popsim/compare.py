@@ -65,6 +65,25 @@ def quartile_pairs(study: Study, tally: Tally) -> list[dict]:
     return rows
 
 
+def all_of_them(study: Study, tally: Tally) -> list[dict]:
+    """One row per model, protocol and group: who attains all targets, and the paired difference to the first protocol."""
+    rows = []
+    for (m, a, b), tallied in tally.together.items():
+        names = (study.protocols[a].name, study.protocols[b].name)
+        for g, group in enumerate(study.group_names):
+            n = int(tally.patients[g])
+            pair = pair_row(tallied, g, n, names, study.matters)
+            low, high = wilson(int(tallied.both[g] + tallied.only_b[g]), n)
+            first = a == b
+            rows.append({"model": study.models[m].name, "protocol": names[1], "group": group, "patients": n,
+                         "failed": pair["failed"], "attained": pair["attained_b"], "attained_low": float(low),
+                         "attained_high": float(high), "compared_with": "" if first else names[0],
+                         **{name: float("nan") if first else pair[name]
+                            for name in ("difference", "difference_low", "difference_high")},
+                         "verdict": "" if first else pair["verdict"], "better": "" if first else pair["better"]})
+    return rows
+
+
 def between_models(study: Study, tally: Tally) -> list[dict]:
     """One row per protocol, group and target: the spread of attainment between models beside the simulation interval.
 

@@ -99,7 +99,49 @@ def between_models(tables: dict[str, pd.DataFrame]) -> list[str]:
             for row in table[table["group"] == "all"].itertuples()]
 
 
-FURTHER = (("Does the answer hold?", holds),
+def together(tables: dict[str, pd.DataFrame]) -> list[str]:
+    """Who attains all targets at once, in every group."""
+    table = tables.get("together")
+    if table is None:
+        return []
+    return [f'"{row.protocol}" ({row.model}), {row.group}: {percent(row.attained)} % '
+            f"({percent(row.attained_low)} to {percent(row.attained_high)} %)"
+            for row in table[table["patients"] > 0].itertuples()]
+
+
+def gains(tables: dict[str, pd.DataFrame]) -> list[str]:
+    """For each pair and covariate the quarters that gain most and least from the second protocol."""
+    table = tables.get("quartiles")
+    if table is None:
+        return []
+    lines = []
+    for (model, target, a, b, covariate), rows in table[table["patients"] > 0].groupby(
+            ["model", "target", "protocol_a", "protocol_b", "covariate"], sort=False):
+        least, most = rows.loc[rows["difference"].idxmin()], rows.loc[rows["difference"].idxmax()]
+        lines.append(f'{target}, "{b}" less "{a}" ({model}), by {covariate.replace("_", " ")}: {points(least.difference)} '
+                     f"points in {_quarter(least)}, {points(most.difference)} in {_quarter(most)}")
+    return lines
+
+
+def _quarter(row: pd.Series) -> str:
+    if math.isinf(row.above):
+        return f"the lowest quarter (up to {row.up_to:.3g})"
+    if math.isinf(row.up_to):
+        return f"the highest quarter (above {row.above:.3g})"
+    return f"the quarter from {row.above:.3g} to {row.up_to:.3g}"
+
+
+MOST_GAINS = 8  # lines in a summary; all stand in quartiles.csv
+
+
+def _few_gains(tables: dict[str, pd.DataFrame]) -> list[str]:
+    lines = gains(tables)
+    return lines if len(lines) <= MOST_GAINS else [*lines[:MOST_GAINS], "all others: quartiles.csv"]
+
+
+FURTHER = (("All targets at once", lambda study, tables: together(tables)),
+           ("Who gains and who loses", lambda study, tables: _few_gains(tables)),
+           ("Does the answer hold?", holds),
            ("Cumulative fraction of response", lambda study, tables: responses(tables)),
            ("Between models: how far the answer leans on the model", lambda study, tables: between_models(tables)))
 

@@ -17,7 +17,7 @@ from covariates.problems import Problem, ProblemsError
 from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles", "models",
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles", "together", "models",
                "robustness", "patients", "courses")
 OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 

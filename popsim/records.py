@@ -352,6 +352,14 @@ class Study:
                                    if target.mic is not None and target.mic.weight is not None))
 
     @property
+    def joint_targets(self) -> tuple[int, ...]:
+        """Places of the targets that a patient may be asked to attain together: all but lists of MICs; none for one."""
+        families = [target.mic.family for target in self.targets if target.mic is not None]
+        places = tuple(t for t, target in enumerate(self.targets)
+                       if target.mic is None or families.count(target.mic.family) == 1)
+        return places if len(places) > 1 else ()
+
+    @property
     def group_names(self) -> tuple[str, ...]:
         return ("all", *(name for name, _ in self.groups))
 

@@ -35,7 +35,7 @@ from popsim.records import (
 )
 from popsim.slices import quartile_cuts, quartile_members
 from popsim.tally import Findings, Tally, check_room
-from popsim.target import grid_course, grid_limits
+from popsim.target import all_attained, grid_course, grid_limits
 from popsim.timeline import build_timeline, steady_timeline
 
 LEAN = "lean_body_mass_janmahasatian"
@@ -152,6 +152,10 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if keep_courses:
                 kept = _courses(grid, model, parameters, disposition, timeline)
                 courses.append((model.name, study.protocols[p].name, *kept))
+        if study.joint_targets:
+            joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
+            for p, one in enumerate(joint):
+                tally.together[m, 0, p].add(joint[0], one, members)
         tally.add_statuses(m, status, patients.first)
         for t in range(len(study.targets)):
             for a, b in combinations(range(len(study.protocols)), 2):

@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 
 from popsim import solve
-from popsim.compare import against_reference, between_models, protocol_pairs, quartile_pairs
+from popsim.compare import against_reference, all_of_them, between_models, protocol_pairs, quartile_pairs
 from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, wilson
 from popsim.flagged import flag_notes
 from popsim.measures import responses, values
@@ -174,7 +174,8 @@ def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
 
 
 TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses}
-WHERE_ASKED = {"values": values, "responses": responses, "quartiles": quartile_pairs, "models": between_models}
+WHERE_ASKED = {"values": values, "responses": responses, "quartiles": quartile_pairs, "together": all_of_them,
+               "models": between_models}
 
 
 def all_tables(study: Study, tally: Tally) -> dict[str, pd.DataFrame]:

@@ -129,6 +129,7 @@ class Tally:
     quartile_patients: np.ndarray  # (quartiles,)
     cuts: dict[str, np.ndarray]  # covariate -> its three quartiles
     responses: dict[tuple[int, int, str], ShareTally]  # model, protocol, targets of one distribution of MICs
+    together: dict[tuple[int, int, int], PairTally]  # model, first protocol, protocol: all targets
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
@@ -149,9 +150,12 @@ class Tally:
                                over_time=np.zeros((groups, rows, 3), dtype=np.int64),
                                bins=np.zeros((groups, rows, solve.BIN_COUNT), dtype=np.int32))
 
+        def pair_tally(size: int) -> PairTally:
+            return PairTally(*(zeros(size) for _ in range(5)),
+                             gained=np.zeros((size, 2 * STEPS_OF_SHARE + 1), dtype=np.int64))
+
         def pair_tallies(size: int) -> dict[tuple[int, int, int, int], PairTally]:
-            return {(m, t, a, b): PairTally(*(zeros(size) for _ in range(5)),
-                                            gained=np.zeros((size, 2 * STEPS_OF_SHARE + 1), dtype=np.int64))
+            return {(m, t, a, b): pair_tally(size)
                     for m in models for t in targets for a, b in combinations(protocols, 2)}
 
         def dose_tally() -> DoseTally:
@@ -175,6 +179,7 @@ class Tally:
             cuts=cuts,
             responses={(m, p, family): ShareTally(zeros(), zeros())
                        for m in models for p in protocols for family in study.families},
+            together={(m, 0, p): pair_tally(groups) for m in models for p in protocols if study.joint_targets},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
         )
@@ -227,7 +232,7 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
     found = [tally.patients, tally.overlap, tally.quartile_patients]
     for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
-    for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses):
+    for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses, tally.together):
         for entry in table.values():
             found += (counts for counts in vars(entry).values() if isinstance(counts, np.ndarray))
     for entry in tally.targets.values():

@@ -146,6 +146,14 @@ def _judged(target: Target, failed: np.ndarray, attained: np.ndarray, shares: tu
     )
 
 
+def all_attained(judged: list[Judged]) -> Judged:
+    """Several targets as one: attained, and in range all the time, where every one of them is; failed where any is."""
+    failed = np.any([one.failed for one in judged], axis=0)
+    attained = np.all([one.attained for one in judged], axis=0)
+    inside, none = attained.astype(np.float64), np.zeros(len(failed), dtype=bool)
+    return Judged(failed, attained, 1 - inside, inside, 0 * inside, none, none, none, none)
+
+
 def grid_course(target: Target, model: DrugModel, values: Mapping[str, np.ndarray]) -> str | tuple[np.ndarray, ...]:
     """What `solve.count_over_time` is to count for a target: a course in the solver's mg/L, or an effect's curve."""
     return effect_curve(model, values) if target.quantity == "effect" else course_of(target)

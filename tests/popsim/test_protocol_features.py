@@ -153,3 +153,16 @@ def test_more_dose_never_lowers_above(tmp_path):
     found = cases.judged(asked)[1]["attainment"]
     assert set(found["attained"]) <= {0.0, 1.0} and found["time_above"].is_monotonic_increasing
     assert math.isclose(found["time_above"].iloc[-1], 1.0) and found["time_below"].iloc[0] == 1.0
+
+
+def test_all_targets_at_once(tmp_path):
+    """Efficacy at a peak of 8 to 12 mg/L, safety at a trough of at most 1 mg/L: both are met with 100 mg alone."""
+    cases.sheet(tmp_path)
+    doses = {f"{mg} mg": f'amount = "{mg} mg"' for mg in (50, 100, 300)}
+    targets = ('name = "works"\nquantity = "peak"\nlow = "8 mg/L"\nduring = "0 min to 60 min"',
+               'name = "safe"\nquantity = "trough"\nhigh = "1 mg/L"\nduring = "60 min"')
+    asked = cases.study(tmp_path, count=40, model="one.toml", groups={}, protocols=doses, targets=targets,
+                        variability="between_subject = false", compare='matters = "5 %"')
+    table = cases.judged(asked)[1]["together"]
+    assert table["attained"].tolist() == [0.0, 1.0, 0.0]
+    assert table["difference"].tolist()[1:] == [1.0, 0.0] and table["better"].tolist() == ["", "100 mg", ""]

@@ -74,6 +74,7 @@ def test_one_row_per(run):
         "doses": 2 * 4,
         "values": 2 * 4,  # minutes until the effect site first reaches the range
         "quartiles": 3 * 4 * 2,  # age, weight, bmi
+        "together": 2 * 4,
     }
     for name, keys in {
         "attainment": ["model", "protocol", "group", "target"],
