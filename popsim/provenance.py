@@ -55,7 +55,7 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
 def _model_record(study, model: DrugModel) -> dict[str, Any]:
     return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
             "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
-            "spread_note": model.spread_note, "cautions": list(model.cautions)}
+            "spread_note": model.spread_note, "cautions": list(model.cautions), "effect": plain(model.effect)}
 
 
 def plain(value: Any) -> Any:

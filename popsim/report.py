@@ -16,7 +16,7 @@ from markupsafe import Markup
 from covariates.sheet import DrugModel
 from covariates.units import to_unit
 from popsim.headlines import has_headline, rows_where
-from popsim.pictures import INTERVALS_SAY, Picture
+from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.records import Protocol, Study, Target
 from popsim.ward_card import card_lines, describe, example_people, step_as_written
 from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line

@@ -114,6 +114,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
+    cell = tally.population.add_patients(patients.attributes, members)
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, (_, received) in enumerate(given):
@@ -124,6 +125,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
         disposition = solve.disposition(parameters.values)
         status = disposition.status
         tally.outside[m] += members.T @ parameters.outside
+        tally.population.add_outside(m, cell, parameters.outside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -135,6 +137,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
+                tally.population.add_judged((m, p, t), cell, judged[p, t])
             counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
             kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)
             if keep_courses:

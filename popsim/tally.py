@@ -10,6 +10,7 @@ import numpy as np
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.population_tally import PopulationTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -92,6 +93,7 @@ class Tally:
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
+    population: PopulationTally
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
 
     @classmethod
@@ -123,6 +125,7 @@ class Tally:
                    for m in models for t in targets for a, b in combinations(protocols, 2)},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
+            population=PopulationTally.empty(study),
         )
 
     def merge(self, other: Tally) -> None:
@@ -158,7 +161,7 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap]
+    found = [tally.patients, tally.overlap, *tally.population.arrays()]
     for table in (tally.outside, tally.beyond, tally.long_infusion):
         found += table.values()
     for table in (tally.targets, tally.pairs):
