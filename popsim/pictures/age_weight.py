@@ -17,6 +17,7 @@ from popsim.pictures.shown import ROOM, Picture, Shown, finish, head
 FEW_IN_CELL = 50
 MOST_OUTSIDE = 0.5
 SHADES = LinearSegmentedColormap.from_list("attained", ["#f2f6fa", "#6aaed6", "#08415c"])  # lighter to darker in grey too
+HATCH = "#a6a6a6"
 DARK = 0.6  # shares above this stand in cells too dark for dark letters
 COLUMNS, GAP, AXIS_ROOM, CELL_HEIGHT = 2, 0.3, 0.62, 0.2
 
@@ -66,7 +67,7 @@ def _cell(axes: Axes, cell, i: int, j: int) -> None:
     outside = cell.outside_model >= MOST_OUTSIDE
     colour = "white" if few else SHADES(cell.attained)
     dark = not few and cell.attained > DARK
-    axes.add_patch(Rectangle((i, j), 1, 1, facecolor=colour, edgecolor="white" if dark else FAINT if outside else RULE,
+    axes.add_patch(Rectangle((i, j), 1, 1, facecolor=colour, edgecolor="white" if dark else HATCH,
                              hatch="////" if outside else None, linewidth=0))
     axes.add_patch(Rectangle((i, j), 1, 1, facecolor="none", edgecolor=RULE if few else "white", linewidth=0.8))
     axes.text(i + 0.5, j + 0.48, f"{100 * cell.attained:.0f}", fontsize=7.5, ha="center", va="center_baseline",

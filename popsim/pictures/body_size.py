@@ -91,7 +91,7 @@ def _heaviest(rows: pd.DataFrame, sex: str) -> str:
     total = rows_where(of, measure="weight").sort_values("weight_from").iloc[-1]
     others = of[(of["weight_from"] == total.weight_from) & (of["measure"] != "weight")]
     said = ", ".join(f"{_words(row.measure)} {row.p50:.0f}" for row in others.itertuples())
-    return f"{WORDS[sex]} of {total.p50:.0f} kg, in the median: {said} kg"
+    return f"In {WORDS[sex].lower()} of {total.p50:.0f} kg the measures part: {said} kg (medians)"
 
 
 def _told(rows: pd.DataFrame) -> str:

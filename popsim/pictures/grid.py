@@ -11,7 +11,8 @@ from popsim.drawing import MARGIN, Page, time_axis, wrapped
 from popsim.pictures.shown import ROOM, Shown, group_label
 
 MOST_COLUMNS = 4
-AXIS_ROOM, GAP, HEIGHT = 0.68, 0.14, 1.2
+AXIS_ROOM, GAP, HEIGHT = 0.68, 0.2, 1.2
+ROW_NAME = 0.2
 
 
 @dataclass(frozen=True)
@@ -37,12 +38,11 @@ def panels(page: Page, shown: Shown, y_label: str) -> Iterator[Panel]:
             left = MARGIN + AXIS_ROOM + column * (width + GAP)
             for k, line in enumerate(lines):
                 page.text(left, page.top + 0.16 * (k + max(map(len, names)) - len(lines)), line, 9, weight="bold")
-        page.top += 0.16 * max(map(len, names)) + 0.22
+        page.top += 0.16 * max(map(len, names)) + 0.04
         for protocol in shown.protocols:
             if len(shown.protocols) > 1:
-                page.text(MARGIN, page.top - 0.15, wrapped(protocol, AXIS_ROOM + width, 8.5, most_lines=1)[0], 8.5,
-                          va="center_baseline")
-                page.top += 0.08
+                page.text(MARGIN, page.top, wrapped(protocol, AXIS_ROOM + width, 8.5, most_lines=1)[0], 8.5)
+            page.top += ROW_NAME
             for column, group in enumerate(row_of_groups):
                 axes = page.axes(MARGIN + AXIS_ROOM + column * (width + GAP), page.top, width, HEIGHT)
                 time_axis(axes, until)
@@ -54,5 +54,5 @@ def panels(page: Page, shown: Shown, y_label: str) -> Iterator[Panel]:
                     axes.tick_params(labelleft=False)
                 else:
                     axes.set_ylabel(y_label, fontsize=8, labelpad=3)
-            page.top += HEIGHT + 0.2
-        page.top += 0.38
+            page.top += HEIGHT + 0.12
+        page.top += 0.42
