@@ -99,8 +99,7 @@ def _table(path: Path, rows: int | None = None) -> pd.DataFrame:
     """A table to the last bit; empty text stays empty, and a group called NA or 1 stays a name."""
     if path.suffix == ".parquet":
         return pd.read_parquet(path)
-    table = pd.read_csv(path, nrows=rows, dtype=dict.fromkeys(TEXT_COLUMNS, str), keep_default_na=False, na_values=[""],
-                        float_precision="round_trip")
+    table = pd.read_csv(path, nrows=rows, dtype=dict.fromkeys(TEXT_COLUMNS, str), keep_default_na=False, na_values=[""])
     texts = [name for name in TEXT_COLUMNS if name in table]
     return table.fillna(dict.fromkeys(texts, ""))
 

@@ -148,10 +148,10 @@ def _groups_of_people(study: Study, tables: dict[str, pd.DataFrame], record: dic
             for group in study.group_names]
 
 
-def _quantiles_cell(row: pd.Series, measure: str) -> str:
-    """Median with the 5th and 95th percentile: "48.6 (23.0 to 79.3)"."""
+def _quantiles_cell(row: pd.Series, measure: str) -> tuple[str, str]:
+    """Median, and the 5th and 95th percentile: "48.6", "23.0 to 79.3"."""
     low, median, high = (row[f"{measure}_{name}"] for name in ("p05", "p50", "p95"))
-    return "-" if pd.isna(median) else f"{median:.1f} ({low:.1f} to {high:.1f})"
+    return ("-", "") if pd.isna(median) else (f"{median:.1f}", f"{low:.1f} to {high:.1f}")
 
 
 def _cards(study: Study) -> dict[str, Any]:
