@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 from matplotlib.colors import LinearSegmentedColormap
 from matplotlib.patches import Rectangle
 
-from popsim.drawing import FAINT, INK, MARGIN, RULE, Page, wrapped
+from popsim.drawing import FAINT, MARGIN, RULE, Page, wrapped
 from popsim.headlines import rows_where
 from popsim.pictures.shown import ROOM, Picture, Shown, finish, head
 
@@ -18,7 +18,7 @@ FEW_IN_CELL = 50
 MOST_OUTSIDE = 0.5
 SHADES = LinearSegmentedColormap.from_list("attained", ["#f2f6fa", "#6aaed6", "#08415c"])  # lighter to darker in grey too
 HATCH = "#a6a6a6"
-DARK = 0.6  # shares above this stand in cells too dark for dark letters
+DARK = 0.725  # above it letters are white, below it black: each stands out at least 4.5 to 1
 COLUMNS, GAP, AXIS_ROOM, CELL_HEIGHT = 2, 0.3, 0.62, 0.2
 
 
@@ -71,7 +71,7 @@ def _cell(axes: Axes, cell, i: int, j: int) -> None:
                              hatch="////" if outside else None, linewidth=0))
     axes.add_patch(Rectangle((i, j), 1, 1, facecolor="none", edgecolor=RULE if few else "white", linewidth=0.8))
     axes.text(i + 0.5, j + 0.48, f"{100 * cell.attained:.0f}", fontsize=7.5, ha="center", va="center_baseline",
-              color="white" if dark else FAINT if few else INK,
+              color="white" if dark else FAINT if few else "black",
               bbox={"facecolor": colour, "edgecolor": "none", "pad": 0.8} if outside else None)
 
 

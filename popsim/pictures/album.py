@@ -10,7 +10,7 @@ from popsim.drawing import house_style
 from popsim.finished import FinishedRun
 from popsim.pictures.age_weight import age_weight
 from popsim.pictures.bands import bands
-from popsim.pictures.body_size import body_size
+from popsim.pictures.body_size import body_size, shown_rows
 from popsim.pictures.by_group import by_group
 from popsim.pictures.mic import mic
 from popsim.pictures.models import models
@@ -36,9 +36,9 @@ def _each_target(run: FinishedRun, folder: Path, kind: str) -> Iterator[Picture]
             shown = Shown(run, model, target)
             drawn = [("attainment_by_group", by_group)]
             if len(shown.rows("over_time")):
-                drawn += [("attainment_over_time", over_time)] if shown.rows("over_time")["in_range"].notna().any() else []
-                drawn += [("below_in_above", sides)] if shown.rows("over_time")["in_range"].notna().any() else []
-                drawn += [("concentration_bands", bands)]
+                if shown.rows("over_time")["in_range"].notna().any():
+                    drawn += [("attainment_over_time", over_time), ("below_in_above", sides)]
+                drawn.append(("concentration_bands", bands))
             if len(shown.rows("attainment_map")):
                 drawn.append(("attainment_map", age_weight))
             for name, draw in drawn:
@@ -62,8 +62,7 @@ def _whole_run(run: FinishedRun, folder: Path, kind: str) -> Iterator[Picture]:
     for number, target in enumerate(comparable if len(run.models) > 1 else (), 1):
         ending = f"_{number}" * (len(comparable) > 1)
         yield models(run, target, folder / f"models_compared{ending}.{kind}")
-    sizes = run.tables.get("body_size")
-    if sizes is not None and sizes["doses"].any():
+    if len(shown_rows(run)):
         yield body_size(run, folder / f"body_size.{kind}")
 
 

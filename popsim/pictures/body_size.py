@@ -14,14 +14,21 @@ from popsim.pictures.shown import ROOM, Picture, finish, head
 
 FEW_IN_BIN = 50
 WORDS = {"female": "Women", "male": "Men"}
-AXIS_ROOM, LABEL_ROOM, GAP, HEIGHT = 0.6, 1.05, 0.25, 2.7
+AXIS_ROOM, LABEL_ROOM, GAP, HEIGHT = 0.6, 1.35, 0.2, 2.7
 LABEL_SIZE = 8
+
+
+def shown_rows(run: FinishedRun) -> pd.DataFrame:
+    """The rows of body_size.csv with enough patients; none where no protocol doses by body size."""
+    rows = run.tables.get("body_size")
+    if rows is None or not rows["doses"].any():
+        return pd.DataFrame()
+    return rows[rows["patients"] >= FEW_IN_BIN]
 
 
 def body_size(run: FinishedRun, path: Path) -> Picture:
     """A panel for each sex: medians with the middle nine tenths, each line named at its end."""
-    rows = run.tables["body_size"]
-    rows = rows[rows["patients"] >= FEW_IN_BIN]
+    rows = shown_rows(run)
     title, page = _title(rows), Page()
     head(page, title, f"Measures of body size against total body weight, in the study's patients ({FEW_IN_BIN} or more in "
          f"each 10 kg)")
@@ -58,15 +65,17 @@ def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame) -> None:
         look, at = strokes(index), total.loc[one["weight_from"]]
         axes.fill_between(at, one["p05"], one["p95"], color=look.colour, alpha=0.14, linewidth=0)
         axes.plot(at, one["p50"], color=look.colour, linestyle=look.dash, marker=look.marker, markersize=3.5)
-        ends[name] = (float(one["p50"].iloc[-1]), look.colour)
+        ends[name] = (float(one["p50"].iloc[-1]), look)
     step = 1.35 * LABEL_SIZE / 72 / HEIGHT * high * 1.02
     floor = float("-inf")
-    for name, (end, colour) in sorted(ends.items(), key=lambda item: item[1][0]):
-        lines = wrapped(_words(name), LABEL_ROOM - 0.12, LABEL_SIZE, most_lines=2)
+    for name, (end, look) in sorted(ends.items(), key=lambda item: item[1][0]):
+        lines = wrapped(_words(name), LABEL_ROOM - 0.42, LABEL_SIZE, most_lines=2)
         middle = max(end, floor + step * len(lines) / 2)
         floor = middle + step * len(lines) / 2
-        axes.annotate("\n".join(lines), (1, middle), xycoords=axes.get_yaxis_transform(), xytext=(7, 0),
-                      textcoords="offset points", fontsize=LABEL_SIZE, color=colour, va="center", annotation_clip=False)
+        axes.plot([1.02, 1.06, 1.1], [middle] * 3, color=look.colour, linestyle=look.dash, marker=look.marker,
+                  markersize=3.5, markevery=[1], transform=axes.get_yaxis_transform(), clip_on=False)
+        axes.annotate("\n".join(lines), (1.1, middle), xycoords=axes.get_yaxis_transform(), xytext=(4, 0),
+                      textcoords="offset points", fontsize=LABEL_SIZE, va="center", annotation_clip=False)
 
 
 def _measures(rows: pd.DataFrame) -> list[str]:
@@ -80,8 +89,6 @@ def _words(measure: str) -> str:
 
 
 def _title(rows: pd.DataFrame) -> str:
-    if rows.empty:
-        return f"No 10 kg of total weight hold {FEW_IN_BIN} patients of one sex"
     return _heaviest(rows, "female" if (rows["sex"] == "female").any() else "male")
 
 

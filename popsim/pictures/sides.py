@@ -79,4 +79,4 @@ def _window_line(panel: Panel, shown: Shown) -> None:
         axes.plot([target.start, target.end], [1.035, 1.035], color=FAINT, linewidth=2.5, clip_on=False,
                   transform=axes.get_xaxis_transform(), solid_capstyle="butt")
     if panel.protocol == shown.protocols[0]:
-        name_window(axes, target, 5)
+        name_window(axes, target, 6)
