@@ -35,8 +35,8 @@ def _each_target(run: FinishedRun, folder: Path, kind: str) -> Iterator[Picture]
                 continue
             shown = Shown(run, model, target)
             drawn = [("attainment_by_group", by_group)]
-            if len(shown.rows("over_time")):
-                if shown.rows("over_time")["in_range"].notna().any():
+            if len(shown.over_time):
+                if shown.over_time["in_range"].notna().any():
                     drawn += [("attainment_over_time", over_time), ("below_in_above", sides)]
                 drawn.append(("concentration_bands", bands))
             if len(shown.rows("attainment_map")):

@@ -110,7 +110,7 @@ def _at_end(shown: Shown, group: str, protocol: str) -> str:
 
 def _end(shown: Shown) -> float:
     """The last moment of the grid within the window."""
-    times = np.unique(shown.rows("over_time")["time_min"])
+    times = np.unique(shown.over_time["time_min"])
     end = shown.target.end if fixed_window(shown.target) else shown.run.until_min
     return float(times[times <= end * (1 + 1e-12)][-1])
 

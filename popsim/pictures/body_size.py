@@ -39,14 +39,14 @@ def body_size(run: FinishedRun, path: Path) -> Picture:
         left = MARGIN + column * (width + AXIS_ROOM + LABEL_ROOM + GAP) + AXIS_ROOM
         axes = page.axes(left, page.top, width, HEIGHT)
         page.text(left, page.top - 0.24, WORDS[sex], 9, weight="bold")
-        _panel(axes, rows_where(rows, sex=sex), rows)
+        _panel(axes, rows_where(rows, sex=sex), rows, width)
     page.top += HEIGHT + 0.5
     foot = ("Lines: median of the patients of each 10 kg of total weight; bands: 5 to 95 %. Grey line: total weight itself. "
             "Lean, ideal and adjusted weight in adults only. Numbers: body_size.csv.")
     return finish(page, path, title, f"Lines that rise with total weight, more slowly than it does. {_told(rows)}", foot)
 
 
-def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame) -> None:
+def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame, width: float) -> None:
     total = rows_where(rows, measure="weight").set_index("weight_from")["p50"]
     low, high = every.loc[every["measure"] == "weight", "p50"].agg(["min", "max"])
     axes.set(xlim=(low, high), ylim=(0, high * 1.02))
@@ -72,9 +72,9 @@ def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame) -> None:
         lines = wrapped(_words(name), LABEL_ROOM - 0.42, LABEL_SIZE, most_lines=2)
         middle = max(end, floor + step * len(lines) / 2)
         floor = middle + step * len(lines) / 2
-        axes.plot([1.02, 1.06, 1.1], [middle] * 3, color=look.colour, linestyle=look.dash, marker=look.marker,
+        axes.plot([1 + inches / width for inches in (0.06, 0.2, 0.34)], [middle] * 3, color=look.colour, linestyle=look.dash, marker=look.marker,
                   markersize=3.5, markevery=[1], transform=axes.get_yaxis_transform(), clip_on=False)
-        axes.annotate("\n".join(lines), (1.1, middle), xycoords=axes.get_yaxis_transform(), xytext=(4, 0),
+        axes.annotate("\n".join(lines), (1 + 0.34 / width, middle), xycoords=axes.get_yaxis_transform(), xytext=(4, 0),
                       textcoords="offset points", fontsize=LABEL_SIZE, va="center", annotation_clip=False)
 
 

@@ -21,7 +21,7 @@ VALUE_SIZE = 8.5
 def by_group(shown: Shown, path: Path) -> Picture:
     """Dots with intervals, groups down the side; beside them the paired difference where there are two protocols."""
     run, groups, paired = shown.run, _sorted(shown), len(shown.protocols) == 2
-    title = attainment_headline(run, shown.rows("comparison"), shown.rows("attainment"))
+    title = attainment_headline(run, shown.comparison, shown.attainment)
     width = WIDTH - 2 * MARGIN - GROUP_WIDTH - (DIFFERENCE_WIDTH if paired else 0.1)
     named = _names_fit(shown, width)
     page = Page()
@@ -127,7 +127,7 @@ def _difference_header(page: Page, shown: Shown) -> None:
 
 
 def _difference(page: Page, shown: Shown, group: str, left: float, middle: float) -> None:
-    pair = rows_where(shown.rows("comparison"), group=group).iloc[0]
+    pair = rows_where(shown.comparison, group=group).iloc[0]
     if not all(has_headline(shown.row(group, protocol)) for protocol in shown.protocols):
         page.text(left, middle, "none given", 8, color=FAINT, va="center_baseline")
         return

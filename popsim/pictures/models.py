@@ -14,7 +14,7 @@ from popsim.pictures.shown import INTERVALS_SAY, ROOM, Picture, finish, group_la
 from popsim.records import Target
 from popsim.words import percent, target_line
 
-NAME_WIDTH, SPREAD_WIDTH, STEP = 2.6, 1.25, 0.3
+NAME_WIDTH, SPREAD_WIDTH, STEP = 3.0, 1.25, 0.3
 
 
 def models(run: FinishedRun, target: Target, path: Path) -> Picture:

@@ -24,7 +24,7 @@ def over_time(shown: Shown, path: Path) -> Picture:
     """One small panel for each group, one line with its band for each protocol, the target's window shaded."""
     run, groups = shown.run, shown.run.group_names
     columns = {1: 1, 2: 2, 4: 2}.get(len(groups), 3)
-    title = range_headline(run, shown.rows("comparison"), shown.rows("attainment"), shown.target)
+    title = range_headline(run, shown.comparison, shown.attainment, shown.target)
     page = Page()
     head(page, title, f"Share of patients in range at each moment, one panel for each group. {shown.about}")
     width = (WIDTH - 2 * MARGIN - 0.08 - (columns - 1) * PANEL_GAP) / columns - AXIS_ROOM

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from collections.abc import Callable
 from dataclasses import dataclass
+from functools import cached_property
 from pathlib import Path
 
 import numpy as np
@@ -45,16 +46,28 @@ class Shown:
         found = self.run.tables.get(table)
         return pd.DataFrame() if found is None else rows_where(found, model=self.model.name, target=self.target.name)
 
+    @cached_property
+    def attainment(self) -> pd.DataFrame:
+        return self.rows("attainment")
+
+    @cached_property
+    def over_time(self) -> pd.DataFrame:
+        return self.rows("over_time")
+
+    @cached_property
+    def comparison(self) -> pd.DataFrame:
+        return self.rows("comparison")
+
     @property
     def protocols(self) -> tuple[str, ...]:
         return self.run.protocols
 
     def row(self, group: str, protocol: str) -> pd.Series:
-        return rows_where(self.rows("attainment"), group=group, protocol=protocol).iloc[0]
+        return rows_where(self.attainment, group=group, protocol=protocol).iloc[0]
 
     def course(self, group: str, protocol: str) -> pd.DataFrame:
         """The over-time rows of one group and protocol; none where too many failed to show a result."""
-        rows = rows_where(self.rows("over_time"), group=group, protocol=protocol)
+        rows = rows_where(self.over_time, group=group, protocol=protocol)
         return rows if has_headline(self.row(group, protocol)) else rows.iloc[:0]
 
     @property

@@ -22,7 +22,7 @@ LABEL_SIZE = 8
 
 def sides(shown: Shown, path: Path) -> Picture:
     """How many patients are on which side of the range at each moment."""
-    title = sides_headline(shown.rows("attainment"), shown.target)
+    title = sides_headline(shown.attainment, shown.target)
     page = Page()
     head(page, title, f"Share of patients below (at the bottom), in and above the range at each moment. {shown.about}")
     for panel in panels(page, shown, "Patients (%)"):
