@@ -12,7 +12,7 @@ from popsim.pictures.shown import ROOM, Shown, group_label
 
 MOST_COLUMNS = 4
 AXIS_ROOM, GAP, HEIGHT = 0.68, 0.2, 1.2
-ROW_NAME = 0.2
+ROW_NAME, WINDOW_NAME = 0.2, 0.14  # the window is named above the first row only
 
 
 @dataclass(frozen=True)
@@ -41,8 +41,8 @@ def panels(page: Page, shown: Shown, y_label: str) -> Iterator[Panel]:
         page.top += 0.16 * max(map(len, names)) + 0.04
         for protocol in shown.protocols:
             if len(shown.protocols) > 1:
-                page.text(MARGIN, page.top, wrapped(protocol, AXIS_ROOM + width, 8.5, most_lines=1)[0], 8.5)
-            page.top += ROW_NAME
+                page.text(MARGIN, page.top, wrapped(protocol, ROOM, 8.5, most_lines=1)[0], 8.5)
+            page.top += ROW_NAME + (WINDOW_NAME if protocol == shown.protocols[0] else 0)
             for column, group in enumerate(row_of_groups):
                 axes = page.axes(MARGIN + AXIS_ROOM + column * (width + GAP), page.top, width, HEIGHT)
                 time_axis(axes, until)
