@@ -35,6 +35,7 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
             "patients": int(tally.patients[0]),
             "candidates_seen": findings.candidates_seen,
             "candidates_eligible": findings.candidates_eligible,
+            "share_of_candidates_eligible": findings.share_eligible,
             "list_rows_skipped": findings.rows_skipped,
             "groups": {name: int(count) for name, count in zip(study.group_names, tally.patients, strict=True)},
             "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count}

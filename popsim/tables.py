@@ -26,7 +26,8 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     """
     rows = []
     for (m, p, t), counts in tally.targets.items():
-        low, high = wilson(counts.attained, tally.patients)
+        worth = tally.worth((m, p, t))
+        low, high = wilson(counts.attained * worth, tally.patients * worth)
         for g, group in enumerate(study.group_names):
             n, failed = int(tally.patients[g]), int(counts.failed[g])
             everyone, judged = n or math.nan, (n - failed) * ONE or math.nan

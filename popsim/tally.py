@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.clusters import ClusterTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -93,9 +94,10 @@ class Tally:
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
 
     @classmethod
-    def empty(cls, study: Study, times: int) -> Tally:
+    def empty(cls, study: Study, times: int, origins: int = 0) -> Tally:
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -113,6 +115,7 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
+        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -123,6 +126,7 @@ class Tally:
                    for m in models for t in targets for a, b in combinations(protocols, 2)},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
+            clusters=clusters,
         )
 
     def merge(self, other: Tally) -> None:
@@ -131,6 +135,16 @@ class Tally:
             mine += theirs
         for key, count in other.statuses.items():
             self.statuses[key] = self.statuses.get(key, 0) + count
+
+    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
+        """(groups,) what one patient is worth in independent draws, for the share attained of a model, protocol, target."""
+        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+
+    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
+        """Likewise for the difference of protocols b and a in one group."""
+        pair = self.pairs[m, t, a, b]
+        unequal = int(pair.only_a[group] + pair.only_b[group])
+        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
 
     def add_statuses(self, model: int, status: np.ndarray) -> None:
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
@@ -149,6 +163,7 @@ class Findings:
     rows_skipped: int
     seconds: float
     threads: int
+    share_eligible: float = float("nan")  # of the people within the limits of age and sex
 
 
 def range_names(model: DrugModel) -> list[str]:
@@ -166,6 +181,8 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
             found += vars(entry).values()
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
+    if tally.clusters is not None:
+        found += tally.clusters.arrays()
     return found
 
 

@@ -12,9 +12,10 @@ POPSIM = Path(popsim.__file__).parent
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
-    "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
+    "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
+    "patients.draw", "study_salvage", "study_file", "study_population", "study_protocols", "study_targets", "study",
+    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate", "clusters",
     "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "commands.new", "commands.check", "commands.judge", "cli",
