@@ -8,7 +8,7 @@ from __future__ import annotations
 import hashlib
 import tomllib
 from collections.abc import Callable, Mapping
-from dataclasses import dataclass, replace
+from dataclasses import dataclass, field, replace
 from importlib import resources
 from pathlib import Path
 
@@ -24,6 +24,7 @@ from covariates.sheet_reading import (
     read_source, read_spread,
 )  # fmt: skip
 from covariates.sheet_section import Section
+from covariates.variability import with_effect
 
 
 @dataclass(frozen=True)
@@ -47,6 +48,8 @@ class DrugModel:
     switches             name -> what it means when true; the study must set each of them
     measurement_error    proportional (number), additive (mg/L), evidence, note; what the sheet gives of these
     digest, text         SHA-256 of the file's bytes, and the file
+    spread_forms         equation name -> form of its random effect (`variability.FORMS`), where it is not lognormal:
+                         `spread` is then the SD of that effect
     """
 
     name: str
@@ -69,6 +72,7 @@ class DrugModel:
     cautions: tuple[str, ...]
     digest: str
     text: str
+    spread_forms: dict[str, str] = field(default_factory=dict)
 
     @property
     def has_effect_site(self) -> bool:
@@ -136,7 +140,7 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     check_structure(section, equations, effect.names if effect else ())
     _check_effect(top, effect, section)
     _check_evidence(top, evidence, equations)
-    spread, spread_note, correlations = read_spread(top, equations)
+    spread, spread_note, correlations, spread_forms = read_spread(top, equations)
     measurement_error = read_error(top)
     cautions_section = top.section("cautions")
     cautions = cautions_section.texts("list")
@@ -149,7 +153,7 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     compartments = 1 + ("V2" in equations) + ("V3" in equations)
     model = DrugModel(
         name, drug, title, evidence, source, built_on, measured_in, compartments, effect, ordered, reference, spread,
-        spread_note, correlations, needs, switches, measurement_error, cautions, digest, text,
+        spread_note, correlations, needs, switches, measurement_error, cautions, digest, text, spread_forms,
     )  # fmt: skip
     _try_out(model, f"{where}: equations")
     return model
@@ -188,12 +192,14 @@ def parameters_of(
     lookup: Callable[[str], np.ndarray],
     effects: Mapping[str, np.ndarray],
     count: int | None = None,
+    forms: Mapping[str, str] | None = None,
 ) -> dict[str, np.ndarray]:
     """Individual parameters, each random effect applied before its parameter is used by another equation.
 
     lookup   name of an attribute, covariate or switch -> array (n,)
     effects  equation name -> (n,) random effect on its logarithm; empty for typical patients
     count    n, needed only where the equations use nothing of the patients
+    forms    equation name -> form of its effect, where it is not lognormal; the sheet's own if not given
 
     Returns `model.outputs` -> (n,) float64 in L, L/min, 1/min; a concentration of the effect model in mg/L, its other
     parameters as they are. In equations, NAME is the individual value and NAME_typical the value that the same person
@@ -207,8 +213,8 @@ def parameters_of(
         raise ValueError(f"random effects on what is no equation of {model.name}: {sorted(unknown)}")
     outside = {name: np.asarray(lookup(name)) for name in sorted(model.needs | set(model.switches))}
     outside |= {name: np.asarray(number) for name, number in model.reference.items()}
-    typical = _evaluated(model, outside, {}, {})
-    individual = _evaluated(model, outside, effects, typical) if effects else typical
+    typical = _evaluated(model, outside, {}, {}, {})
+    individual = _evaluated(model, outside, effects, model.spread_forms if forms is None else forms, typical) if effects else typical
     factors = {equation.name: equation.factor for equation in model.equations}
     shapes = {np.shape(value) for value in (*outside.values(), *individual.values())}
     everyone = (count,) if count is not None else np.broadcast_shapes((1,), *shapes)
@@ -219,6 +225,7 @@ def _evaluated(
     model: DrugModel,
     outside: Mapping[str, np.ndarray],
     effects: Mapping[str, np.ndarray],
+    forms: Mapping[str, str],
     typical: Mapping[str, np.ndarray],
 ) -> dict[str, np.ndarray]:
     """Every equation once, in order; without `typical` the values found are the typical ones themselves."""
@@ -227,7 +234,7 @@ def _evaluated(
     for equation in model.equations:
         value = equation.formula.evaluate(values)
         if equation.name in effects:
-            value = value * np.exp(effects[equation.name])
+            value = with_effect(value, effects[equation.name], forms.get(equation.name, "lognormal"))
         found[equation.name] = values[equation.name] = value
         values.setdefault(equation.name + TYPICAL, value)
     return found

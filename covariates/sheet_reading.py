@@ -20,8 +20,15 @@ _RANGES = {
     "age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",
     "serum_creatinine": "creatinine", "postmenstrual_age_weeks": "postmenstrual_age",
 }  # fmt: skip
-_TO_OMEGA = {"sd of ln": float, "variance of ln": omega_from_variance, "cv": omega_from_cv}
-_LARGEST_SPREAD = 3.0
+# distribution and how its spread is printed -> the SD of the random effect, and the form in which the effect acts
+_TO_SD = {
+    "lognormal": {"sd of ln": (float, "lognormal"), "variance of ln": (omega_from_variance, "lognormal"),
+                  "cv": (omega_from_cv, "lognormal")},
+    "normal": {"sd": (float, "normal"), "variance": (omega_from_variance, "normal"), "cv": (float, "normal, relative")},
+    "logit-normal": {"sd of logit": (float, "logit-normal"), "variance of logit": (omega_from_variance, "logit-normal")},
+}  # fmt: skip
+_PRINTED_AS = tuple(dict.fromkeys(way for ways in _TO_SD.values() for way in ways))
+_LARGEST_SPREAD, _LARGEST_IN_OWN_UNIT = 3.0, 1e6
 
 
 @dataclass(frozen=True)
@@ -162,38 +169,49 @@ def read_effect(top: Section) -> EffectModel | None:
     return EffectModel(unit=str(unit), steepness_above=above, **texts, **parts)
 
 
-def read_spread(top: Section, equations: Collection[str]) -> tuple[dict[str, float], str, dict[tuple[str, str], float]]:
-    """[spread] and [spread_together]: omegas, the note, correlations."""
+def read_spread(
+    top: Section, equations: Collection[str]
+) -> tuple[dict[str, float], str, dict[tuple[str, str], float], dict[str, str]]:
+    """[spread] and [spread_together]: omegas, the note, correlations, the forms that are not lognormal."""
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
-    usual = section.text("printed_as", among=_TO_OMEGA)
-    omegas = {}
+    usual = section.text("printed_as", among=_PRINTED_AS)
+    omegas, forms = {}, {}
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
-        omega = _read_omega(entry, usual)
+        found = read_one_spread(entry, usual)
         if name not in equations:
             section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
-        elif omega is not None:
-            omegas[name] = omega
+        elif found is not None:
+            omegas[name], form = found
+            if form != "lognormal":
+                forms[name] = form
         entry.close()
     if "spread" in top.table and published and not omegas:
         section.problem("published", "no spread given", "values, or published = false")
     if not published and omegas:
         section.problem("published", "false, yet values are given", "published = true")
-    return omegas, note, _read_together(top, omegas)
+    return omegas, note, _read_together(top, omegas), forms
 
 
-def _read_omega(entry: Section, usual: str | None) -> float | None:
-    """One spread as omega, whatever way it was printed."""
-    advice = "write 0.26 for 26 %"
-    value = entry.number("value", 0, _LARGEST_SPREAD, needed=True, advice=advice)
-    printed_as = entry.text("printed_as", among=_TO_OMEGA) or usual
+def read_one_spread(entry: Section, usual: str | None = None) -> tuple[float, str] | None:
+    """One spread as the SD of its random effect, whatever way it was printed, and the form of the effect.
+
+    usual  how it was printed where the entry does not say
+    """
+    distribution = entry.text("distribution", among=_TO_SD) or "lognormal"
+    ways = _TO_SD[distribution]
+    printed_as = entry.text("printed_as", among=ways) or (usual if usual in ways else None)
+    own_unit = printed_as in ("sd", "variance")
+    advice = "" if own_unit else "write 0.26 for 26 %"
+    value = entry.number("value", 0, _LARGEST_IN_OWN_UNIT if own_unit else _LARGEST_SPREAD, needed=True, advice=advice)
     entry.text("evidence")
     entry.text("note")
     if printed_as is None:
-        entry.problem("printed_as", "missing", ", ".join(_TO_OMEGA))
+        entry.problem("printed_as", "missing", ", ".join(ways))
         return None
-    return None if value is None else float(_TO_OMEGA[printed_as](value))
+    to_sd, form = ways[printed_as]
+    return None if value is None else (float(to_sd(value)), form)
 
 
 def _read_together(top: Section, omegas: dict[str, float]) -> dict[tuple[str, str], float]:

@@ -194,11 +194,13 @@ class Target:
 
 @dataclass(frozen=True)
 class Variability:
-    """between_subject False: typical patients. `from_model`: the sheet whose variability is borrowed, or None."""
+    """between_subject False: typical patients. `from_model`: the sheet whose variability is borrowed, or None.
+    `own`: parameter -> SD of its random effect (0: none) and the effect's form, in place of what the sheets say."""
 
     between_subject: bool
     scale: float
     from_model: DrugModel | None
+    own: dict[str, tuple[float, str]] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

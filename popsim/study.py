@@ -10,8 +10,10 @@ from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
 from covariates.formula import Formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
+from covariates.sheet_reading import read_one_spread
+from covariates.sheet_section import Section
 from popsim.records import Study, Target, Variability
-from popsim.study_file import StudyFile, VariabilitySection, key_path, read_study_file
+from popsim.study_file import StudyFile, VariabilitySection, key_path, read_study_file, shown
 from popsim.study_population import resolve_population
 from popsim.study_protocols import covariate_fault, resolve_protocols
 from popsim.study_salvage import beside
@@ -177,15 +179,40 @@ def _variability(section: VariabilitySection, models: tuple[DrugModel, ...], pat
                 "a sheet with between-subject variability")
         if borrowed is not None and models and borrowed.drug != models[0].drug:
             say("variability: from", f"{borrowed.name}, a model of {borrowed.drug}", f"a model of {models[0].drug}")
-    elif section.between_subject:
+    own = _own_variability(section, models, f"{path.name}: variability: parameters", problems)
+    if borrowed is None and section.from_ is None and section.between_subject:
         for model in models:
-            if not model.spread:
+            if not model.spread and not own.keys() & {equation.name for equation in model.equations}:
                 lenders = [name for name in shipped_sheets()
                            if (other := read_sheet(name)).drug == model.drug and other.spread]
                 say("variability", f"{model.name} publishes no between-subject variability",
                     "between_subject = false (typical patients), or from = another sheet",
                     f"sheets of {model.drug} with variability: {', '.join(lenders)}" if lenders else "")
-    return Variability(section.between_subject, section.scale, borrowed)
+    return Variability(section.between_subject, section.scale, borrowed, own)
+
+
+def _own_variability(section: VariabilitySection, models: tuple[DrugModel, ...], where: str,
+                     problems: list[Problem]) -> dict[str, tuple[float, str]]:
+    """The variability that a study gives itself, parameter by parameter; "none" takes it away."""
+    example = '{ value = 0.3, printed_as = "cv" }, or "none"'
+    known = {equation.name for model in models for equation in model.equations}
+    own = {}
+    for name, value in section.parameters.items():
+        if not section.between_subject:
+            problems.append(Problem(where, f"{name}, given with between_subject = false", "one of the two"))
+        elif models and name not in known:
+            problems.append(Problem(where, f'"{name}"', ", ".join(sorted(known)), nearest(name, known)))
+        elif value == "none":
+            own[name] = 0.0, "lognormal"
+        elif not isinstance(value, dict):
+            problems.append(Problem(f"{where}: {name}", shown(value), example))
+        else:
+            entry = Section(value, f"{where}: {name}", problems)
+            found = read_one_spread(entry)
+            entry.close()
+            if found is not None:
+                own[name] = found
+    return own
 
 
 def _check_set_windows(section: StudyFile, targets: tuple[Target, ...], until_min: float, path: Path,
@@ -216,6 +243,10 @@ def _warnings(models: tuple[DrugModel, ...], targets: tuple[Target, ...], variab
     if variability.from_model is not None and variability.between_subject:
         yield (f"Between-subject variability is borrowed from {variability.from_model.name} (volumes and clearances; "
                "correlations that it does not give are taken to be 0).")
+    if variability.own:
+        said = ", ".join(f"{name} {f'{omega:g} ({form})' if omega else 'none'}"
+                         for name, (omega, form) in variability.own.items())
+        yield f"The study sets between-subject variability itself (SD of the random effect): {said}."
     if not variability.between_subject:
         yield "Typical patients: no between-subject variability, so these shares say nothing about single patients."
     elif variability.scale != 1:

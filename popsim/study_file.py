@@ -147,6 +147,7 @@ class VariabilitySection(Section):
     between_subject: StrictBool = True
     scale: _number(0, 10, 1.3) = 1.0
     from_: Name | None = Field(default=None, alias="from")
+    parameters: dict[str, Any] = {}
 
 
 class GroupSection(Section):

@@ -168,10 +168,10 @@ def _described(section: PopulationSection, where: str, problems: list[Problem]) 
     if len(problems) == before:
         _check_body(numbers, table)
         correlations = _correlations(section.together, numbers, f"{where}: together", problems)
-        _check_children(numbers, correlations, where, problems)
+        described = Described(share, numbers, switches, correlations)
+        _check_children(described, where, problems)
     if len(problems) > before:
         return None
-    described = Described(share, numbers, switches, correlations)
     try:
         described.factor
     except ValueError as error:
@@ -193,7 +193,7 @@ def _marginal(name: str, entry: Section) -> Marginal | None:
         figures |= {"p25": quartiles.low, "p75": quartiles.high}
     figures = {key: value for key, value in figures.items() if value is not None}
     given = figures.keys()
-    if not (given == {"mean", "sd"} or ("median" in given and not {"mean", "sd"} & given and 2 <= len(given) <= 3)):
+    if len(entry.problems) == before and not (given == {"mean", "sd"} or ("median" in given and not {"mean", "sd"} & given and 2 <= len(given) <= 3)):
         entry.problems.append(Problem(entry.where, ", ".join(given) or "no figures",
                                       "mean and sd, or median with quartiles, p05 or p95", EXAMPLE))
     for key, value in figures.items():
@@ -248,17 +248,14 @@ def _correlations(together: Mapping[str, float], numbers: Mapping[str, object], 
     return correlations
 
 
-def _check_children(numbers: Mapping[str, tuple[Marginal, Marginal]], correlations: Mapping[tuple[str, str], float],
-                    where: str, problems: list[Problem]) -> None:
-    """In children size goes with age so closely that it cannot be left to a default."""
-    if "age" not in numbers or min(marginal.low for marginal in numbers["age"]) >= ADULT_YEARS:
-        return
-    given = {frozenset(pair) for pair in correlations}
-    for name in BODY[:2]:
-        if name in numbers and frozenset(("age", name)) not in given:
-            problems.append(Problem(f"{where}: together", f"no correlation of age and {name}, and there may be children",
-                                    f'"age, {name}" = 0.9 or what it is',
-                                    f'for adults: a range of age that begins at {ADULT_YEARS:g} years or later'))
+def _check_children(described: Described, where: str, problems: list[Problem]) -> None:
+    """In children age and size go together so closely that it cannot be left to a default."""
+    given = {frozenset(pair) for pair in described.correlations}
+    for pair in (("age", "weight"), ("age", "height"), ("weight", "height")):
+        if not described.adults and set(pair) <= described.numbers.keys() and frozenset(pair) not in given:
+            problems.append(Problem(f"{where}: together", f"no correlation of {' and '.join(pair)}, and there may be children",
+                                    f'"{", ".join(pair)}" = 0.9 or what it is',
+                                    f"for adults: a range of age that begins at {ADULT_YEARS:g} years or later"))
 
 
 def _people_are_possible(described: Described, where: str, problems: list[Problem]) -> bool:

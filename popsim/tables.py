@@ -14,6 +14,7 @@ from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
 FEW_PATIENTS = 400
+RARE_SHARE = 0.1
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
 PERCENTILE_NAMES = ("p05", "p25", "p50", "p75", "p95")
 
@@ -143,6 +144,8 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
     notes = list(study.warnings)
     for name, factor in study.population.scale.items():
         notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
+    if findings.share_eligible < RARE_SHARE and study.population.source in ("survey", "described"):
+        notes.append(f"These patients are rare: {100 * findings.share_eligible:.2g} % of those within the limits of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
     for (m, code), count in sorted(tally.statuses.items()):

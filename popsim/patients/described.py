@@ -17,7 +17,7 @@ from functools import cached_property
 import numpy as np
 
 from covariates.variability import cholesky_factor, covariance_from
-from popsim.patients.possible import completed, completed_names, impossible
+from popsim.patients.possible import ADULT_YEARS, completed, completed_names, impossible
 from popsim.patients.survey import box_cox_ln_ratio
 from popsim.streams import normals, uniforms
 
@@ -149,8 +149,15 @@ class Described:
         """All that these people bring."""
         return [*completed_names(["sex", *self.numbers]), *self.switches]
 
+    @property
+    def adults(self) -> bool:
+        """Whether nobody can be a child; taken to be so where age is not described."""
+        return "age" not in self.numbers or min(marginal.low for marginal in self.numbers["age"]) >= ADULT_YEARS
+
     def from_survey(self) -> dict[tuple[str, str], float]:
-        """Correlations that are taken from the survey because the study gives none."""
+        """Correlations of adults that are taken from the survey because the study gives none."""
+        if not self.adults:
+            return {}
         mixed = 0.0 < self.female_share < 1.0
         apart = {name for name, (women, men) in self.numbers.items() if women is not men or not mixed}
         given = {frozenset(pair) for pair in self.correlations}
