@@ -12,6 +12,7 @@ from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.judge import judge
 from popsim.commands.new import new
+from popsim.commands.patients import patients
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
 INTERRUPTED = 130  # what a shell expects of a program that was stopped
@@ -25,6 +26,7 @@ def popsim() -> None:
     \b
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
+    popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
 
     A simulation for appraising protocols, not for dosing a person. Follow the
@@ -32,7 +34,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, judge):
+for command in (new, check, patients, judge):
     popsim.add_command(command)
 
 

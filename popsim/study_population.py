@@ -70,7 +70,8 @@ def resolve_population(section: PopulationSection, path: Path, problems: list[Pr
         lattice=lattice or {},
         each=section.each or 1,
     )
-    said = tuple(problem.where for problem in problems)
+    said = [problem.where for problem in problems]
+    said += [f"{where}: {key}" for key, table in (("described", section.described), ("lattice", section.lattice)) if table]
     problems.extend(replace(problem, where=full) for problem in population.problems()
                     if (full := f"{path.name}: {problem.where}") and not any(place.startswith(full) for place in said))
     return population, brought
