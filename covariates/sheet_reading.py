@@ -27,7 +27,6 @@ _TO_SD = {
     "normal": {"sd": (float, "normal"), "variance": (omega_from_variance, "normal"), "cv": (float, "normal, relative")},
     "logit-normal": {"sd of logit": (float, "logit-normal"), "variance of logit": (omega_from_variance, "logit-normal")},
 }  # fmt: skip
-_PRINTED_AS = tuple(dict.fromkeys(way for ways in _TO_SD.values() for way in ways))
 _LARGEST_SPREAD, _LARGEST_IN_OWN_UNIT = 3.0, 1e6
 
 
@@ -176,7 +175,7 @@ def read_spread(
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
-    usual = section.text("printed_as", among=_PRINTED_AS)
+    usual = section.text("printed_as", among=_TO_SD["lognormal"])
     omegas, forms = {}, {}
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
         found = read_one_spread(entry, usual)
@@ -197,11 +196,11 @@ def read_spread(
 def read_one_spread(entry: Section, usual: str | None = None) -> tuple[float, str] | None:
     """One spread as the SD of its random effect, whatever way it was printed, and the form of the effect.
 
-    usual  how it was printed where the entry does not say
+    usual  how a lognormal spread was printed where the entry does not say
     """
     distribution = entry.text("distribution", among=_TO_SD) or "lognormal"
     ways = _TO_SD[distribution]
-    printed_as = entry.text("printed_as", among=ways) or (usual if usual in ways else None)
+    printed_as = entry.text("printed_as", among=ways) or (usual if distribution == "lognormal" else None)
     own_unit = printed_as in ("sd", "variance")
     advice = "" if own_unit else "write 0.26 for 26 %"
     value = entry.number("value", 0, _LARGEST_IN_OWN_UNIT if own_unit else _LARGEST_SPREAD, needed=True, advice=advice)

@@ -244,7 +244,7 @@ def _warnings(models: tuple[DrugModel, ...], targets: tuple[Target, ...], variab
         yield (f"Between-subject variability is borrowed from {variability.from_model.name} (volumes and clearances; "
                "correlations that it does not give are taken to be 0).")
     if variability.own:
-        said = ", ".join(f"{name} {f'{omega:g} ({form})' if omega else 'none'}"
+        said = ", ".join(f"{name} {f'{omega:.4g} ({form})' if omega else 'none'}"
                          for name, (omega, form) in variability.own.items())
         yield f"The study sets between-subject variability itself (SD of the random effect): {said}."
     if not variability.between_subject:

@@ -292,7 +292,7 @@ def _axis(name: str, values: object, where: str) -> tuple:
     if name == "sex":
         found = [value for value in values if value in ("female", "male")]
         if len(found) != len(values) or len(set(found)) != len(found):
-            raise ProblemsError(Problem(where, shown(values), '["female", "male"], or one of them'))
+            raise ProblemsError(Problem(where, ", ".join(map(shown, values)), '["female", "male"], or one of them'))
     elif all(isinstance(value, bool) for value in values):
         found = values
     else:

@@ -27,7 +27,7 @@ def patients(study: Path, out: Path, overwrite: bool, no_picture: bool, quiet: b
 
     resolved = read_study(study)
     picture = None if no_picture else out.with_suffix(".svg")
-    _check(out, picture, overwrite)
+    _check(out, picture, overwrite, resolved.population.file)
 
     from popsim.groups import members
     from popsim.lookup import Lookup
@@ -60,13 +60,15 @@ def patients(study: Path, out: Path, overwrite: bool, no_picture: bool, quiet: b
         click.echo(f"\nPatients in {out}" + (f", picture in {picture}" if picture else ""), err=True)
 
 
-def _check(out: Path, picture: Path | None, overwrite: bool) -> None:
+def _check(out: Path, picture: Path | None, overwrite: bool, own_list: Path | None) -> None:
     from covariates.problems import Problem, ProblemsError
 
     if out.suffix not in (".csv", ".parquet"):
         raise ProblemsError(Problem("--out", f'"{out}"', "a file that ends in .csv or .parquet", f"--out {out.stem}.csv"))
     if not out.parent.is_dir():
         raise ProblemsError(Problem("--out", f'"{out.parent}", no such folder', "a folder that is there"))
+    if own_list is not None and out.exists() and out.samefile(own_list):
+        raise ProblemsError(Problem("--out", f'"{out}", the study\'s own list', "another file"))
     there = [path for path in (out, picture) if path is not None and path.exists()]
     if there and not overwrite:
         raise ProblemsError(Problem(str(there[0]), "a file that is there already", "a new name", "or --overwrite"))
