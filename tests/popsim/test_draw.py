@@ -1,6 +1,7 @@
 """Drawing: only eligible people, numbered, as many as asked for, and nobody changed by anything but the seed."""
 
 import doctest
+import tracemalloc
 
 import numpy as np
 import pytest
@@ -157,3 +158,16 @@ def test_enough_in_the_last_block_is_enough(monkeypatch):
     population = Population("survey", 1, where=compile_formula("bmi > 60", "where"))
     monkeypatch.setattr(draw, "RARE_AFTER_BLOCKS", 1)
     assert len(everyone(population)["age"]) == 1
+
+
+def test_memory_does_not_grow_with_the_patients():
+    def most(count):
+        tracemalloc.start()
+        for _ in blocks(Population("survey", count), 1):
+            pass
+        found = tracemalloc.get_traced_memory()[1]
+        tracemalloc.stop()
+        return found
+
+    most(10_000)  # what is kept for later use
+    assert most(160_000) < 1.2 * most(20_000)
