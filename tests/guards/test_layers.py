@@ -15,10 +15,11 @@ FLOW = [
     "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
     "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
     "patients.draw", "study_salvage", "study_file", "study_population", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate", "clusters",
+    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate", "clusters",
     "tally", "people", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "patient_pictures", "report", "terminal", "check_text", "progress",
-    "commands.new", "commands.check", "commands.patients", "commands.judge", "cli",
+    "derived", "model_text", "person_text",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
