@@ -1,5 +1,6 @@
 """[population] and [variability] of a study file, from text to patients."""
 
+import re
 import runpy
 from pathlib import Path
 from types import SimpleNamespace
@@ -205,3 +206,12 @@ def test_variability_that_cannot_be(tmp_path, variability, where, found):
     with pytest.raises(ProblemsError) as caught:
         cases.study(tmp_path, variability=variability)
     assert any(where in problem.where and found in problem.found for problem in caught.value.problems), caught.value
+
+
+def test_populations_of_the_readme_can_be_drawn(tmp_path):
+    readme = (Path(__file__).resolve().parents[2] / "README.md").read_text(encoding="utf-8")
+    shown = [text.partition("[population]\n")[2] for text in re.findall(r"```toml\n(.*?)```", readme, re.DOTALL)
+             if text.startswith("[population]")]
+    assert len(shown) == 2
+    for population in shown:
+        assert len(people(cases.study(tmp_path, population=population))["age"]) in (10_000, 44)
