@@ -25,7 +25,8 @@ _TO_SD = {
     "lognormal": {"sd of ln": (float, "lognormal"), "variance of ln": (omega_from_variance, "lognormal"),
                   "cv": (omega_from_cv, "lognormal")},
     "normal": {"sd": (float, "normal"), "variance": (omega_from_variance, "normal"), "cv": (float, "normal, relative")},
-    "logit-normal": {"sd of logit": (float, "logit-normal"), "variance of logit": (omega_from_variance, "logit-normal")},
+    "logit-normal": {"sd of logit": (float, "logit-normal"),
+                     "variance of logit": (omega_from_variance, "logit-normal")},
 }  # fmt: skip
 _LARGEST_SPREAD, _LARGEST_IN_OWN_UNIT = 3.0, 1e6
 

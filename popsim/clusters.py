@@ -33,8 +33,11 @@ class ClusterTally:
 
     @classmethod
     def empty(cls, rows: int, groups: int, keys: Iterable[tuple[int, int, int]]) -> ClusterTally:
-        return cls(np.zeros(rows, dtype=np.int64), np.zeros((rows, groups), dtype=bool),
-                   {key: np.zeros(rows, dtype=np.int64) for key in keys})
+        return cls(
+            np.zeros(rows, dtype=np.int64),
+            np.zeros((rows, groups), dtype=bool),
+            {key: np.zeros(rows, dtype=np.int64) for key in keys},
+        )
 
     def add_people(self, origins: np.ndarray, members: np.ndarray) -> None:
         """A block: the row of each patient, and (n, groups) whether they belong to each group."""
@@ -52,7 +55,7 @@ class ClusterTally:
         return np.array([worth_of(self.attained[key][chosen], self.drawn[chosen]) for chosen in self.inside.T])
 
     def worth_paired(self, a: tuple[int, int, int], b: tuple[int, int, int], group: int, unequal: int) -> float:
-        """Likewise for the difference of two shares in the same draws of one group, `unequal` of which attain only one."""
+        """Likewise for the difference of two shares in the same draws of a group; `unequal` of them attain only one."""
         chosen = self.inside[:, group]
         return worth_of(self.attained[b][chosen] - self.attained[a][chosen], self.drawn[chosen], unequal)
 

@@ -46,8 +46,10 @@ def spread_used(model: DrugModel, variability: Variability) -> dict[str, float]:
 
 def forms_used(model: DrugModel, variability: Variability) -> dict[str, str]:
     """Parameter -> form of its random effect, where it is not lognormal."""
-    forms = {**(variability.from_model or model).spread_forms, **{name: form for name, (_, form) in variability.own.items()}}
-    return {name: form for name, form in forms.items() if form != "lognormal" and name in spread_used(model, variability)}
+    own = {name: form for name, (_, form) in variability.own.items()}
+    forms = {**(variability.from_model or model).spread_forms, **own}
+    used = spread_used(model, variability)
+    return {name: form for name, form in forms.items() if form != "lognormal" and name in used}
 
 
 def random_effects(model: DrugModel, variability: Variability, seed: int, patients: Patients) -> dict[str, np.ndarray]:

@@ -28,22 +28,39 @@ def draw_people(study: Study, people: People, path: Path) -> None:
         if clouds:
             shown = len(next(iter(people.sample.values())))
             note = f"The first {shown:,} of them, " + ", ".join(
-                f"{sex} {'circles' if marker == 'o' else 'crosses'}" for sex, (_, marker) in SEX_LOOK.items())
+                f"{sex} {'circles' if marker == 'o' else 'crosses'}" for sex, (_, marker) in SEX_LOOK.items()
+            )
             page.lines([note], 9, color=FAINT)
             page.top += 0.1
             for place, cloud in enumerate(clouds):
-                _cloud(page.axes(LEFT + place * (PANEL + GAP + 0.3), page.top, PANEL + 0.3, PANEL), people.sample, *cloud)
+                _cloud(
+                    page.axes(LEFT + place * (PANEL + GAP + 0.3), page.top, PANEL + 0.3, PANEL), people.sample, *cloud
+                )
             page.top += PANEL + 0.55
         _strips(page, people)
-        save(page, path, title, "Age against body mass index and height against weight of some patients; below, by group, the "
-             "5th, 25th, 50th, 75th and 95th percentile of each measure.")
+        save(
+            page,
+            path,
+            title,
+            "Age against body mass index and height against weight of some patients; below, by group, the "
+            "5th, 25th, 50th, 75th and 95th percentile of each measure.",
+        )
 
 
 def _cloud(axes: Axes, sample: dict[str, np.ndarray], x: str, y: str, x_words: str, y_words: str) -> None:
     for sex, (colour, marker) in SEX_LOOK.items():
         of = sample["sex"] == sex if "sex" in sample else np.full(len(sample[x]), sex == "male")
-        axes.plot(sample[x][of], sample[y][of], linestyle="none", marker=marker, markersize=2.2, color=colour,
-                  markeredgewidth=0.5, fillstyle="none", alpha=0.6)
+        axes.plot(
+            sample[x][of],
+            sample[y][of],
+            linestyle="none",
+            marker=marker,
+            markersize=2.2,
+            color=colour,
+            markeredgewidth=0.5,
+            fillstyle="none",
+            alpha=0.6,
+        )
     axes.set_xlabel(x_words, labelpad=2)
     axes.set_ylabel(y_words, labelpad=3)
     axes.grid(True)
@@ -59,7 +76,7 @@ def _strips(page: Page, people: People) -> None:
     height, columns = ROW * len(names) + 0.1, 3
     width = (WIDTH - 2 * MARGIN - room - 0.2 * columns) / columns
     for first in range(0, len(measures), columns):
-        for place, measure in enumerate(measures[first:first + columns]):
+        for place, measure in enumerate(measures[first : first + columns]):
             axes = page.axes(MARGIN + room + place * (width + 0.2), page.top, width, height)
             for row in range(len(names)):
                 p05, p25, p50, p75, p95 = people.quantiles(measure, row)

@@ -35,8 +35,10 @@ MEASURES = (
     Measure("lean_body_mass_janmahasatian", "lean mass", "kg", True),
     Measure("creatinine_clearance_cockcroft_gault_adjusted", "clearance", "mL/min", True),
 )
-FOOTNOTE = ("lean mass by Janmahasatian 2005; clearance of creatinine by Cockcroft and Gault 1976 with adjusted body weight; "
-            "both in adults only")
+FOOTNOTE = (
+    "lean mass by Janmahasatian 2005; clearance of creatinine by Cockcroft and Gault 1976 with adjusted body weight; "
+    "both in adults only"
+)
 
 
 class People:
@@ -60,9 +62,14 @@ class People:
         adults = patients.attributes["age"] >= ADULT_YEARS if "age" in patients.attributes else everyone
         for measure in MEASURES:
             of = adults if measure.adults_only else everyone
-            if not attributes_needed(measure.covariate, patients.attributes) <= patients.attributes.keys() or not of.any():
+            if (
+                not attributes_needed(measure.covariate, patients.attributes) <= patients.attributes.keys()
+                or not of.any()
+            ):
                 continue
-            keys = decimal_keys(compute(measure.covariate, {name: all_of[of] for name, all_of in patients.attributes.items()}))
+            keys = decimal_keys(
+                compute(measure.covariate, {name: all_of[of] for name, all_of in patients.attributes.items()})
+            )
             counts = self.counts.setdefault(measure, np.zeros((len(self.names), KEY_COUNT), dtype=np.int32))
             for group in range(len(self.names)):
                 np.add.at(counts[group], keys[members[of, group]], 1)
@@ -94,5 +101,8 @@ def _three_digits(value: float) -> str:
 
 
 def _notes(study: Study) -> list[str]:
-    return [line for note in study.population.notes()
-            for line in textwrap.wrap(note, WIDTH, initial_indent="- ", subsequent_indent="  ")]
+    return [
+        line
+        for note in study.population.notes()
+        for line in textwrap.wrap(note, WIDTH, initial_indent="- ", subsequent_indent="  ")
+    ]

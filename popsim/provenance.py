@@ -35,7 +35,7 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
             "patients": int(tally.patients[0]),
             "candidates_seen": findings.candidates_seen,
             "candidates_eligible": findings.candidates_eligible,
-            "share_of_candidates_eligible": findings.share_eligible,
+            "share_eligible": findings.share_eligible,
             "list_rows_skipped": findings.rows_skipped,
             "groups": {name: int(count) for name, count in zip(study.group_names, tally.patients, strict=True)},
             "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count}
@@ -58,7 +58,8 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
 def _model_record(study, model: DrugModel) -> dict[str, Any]:
     return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
             "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
-            "spread_not_lognormal": forms_used(model, study.variability), "spread_note": model.spread_note, "cautions": list(model.cautions)}
+            "spread_not_lognormal": forms_used(model, study.variability),
+            "spread_note": model.spread_note, "cautions": list(model.cautions)}
 
 
 def plain(value: Any) -> Any:

@@ -6,7 +6,7 @@ import hashlib
 from collections.abc import Iterable
 from pathlib import Path
 
-from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
+from covariates.catalogue import ATTRIBUTES, attributes_needed
 from covariates.formula import Formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets

@@ -2,37 +2,31 @@
 
 from __future__ import annotations
 
-import re
 from collections.abc import Mapping
 from dataclasses import replace
 from pathlib import Path
 
 from covariates.catalogue import EQUATIONS
 from covariates.formula import FUNCTIONS
-from covariates.problems import Problem, ProblemsError, nearest
+from covariates.problems import Problem, ProblemsError
 from covariates.sheet_section import Section
 from covariates.units import parse_quantity, parse_range
 from popsim.patients.ages import OLDEST_YEARS, YOUNGEST_YEARS
-from popsim.patients.described import Described, Marginal, fit_marginal
+from popsim.patients.described import Described
 from popsim.patients.listed import list_columns
 from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
-from popsim.patients.possible import ADULT_YEARS, POSSIBLE, completed_names
+from popsim.patients.possible import POSSIBLE, completed_names
+from popsim.study_described import ATTRIBUTE_NAME, BODY, KINDS, read_described, share_of_women
 from popsim.study_file import PopulationSection, shown
 
-ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
-KINDS = {"age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",
-         "serum_creatinine": "creatinine", "postmenstrual_age_weeks": "postmenstrual_age",
-         "gestational_age_weeks": "postmenstrual_age"}  # fmt: skip
-BODY = ("weight", "height", "bmi")
-SHAPES = {"normal": 1.0, "lognormal": 0.0, "box-cox": None}
-NORMAL_BY_DEFAULT = ("age", "height", "gestational_age_weeks", "postmenstrual_age_weeks")
 OWN_SOURCE = {"file": "list", "on_bad_row": "list", "units": "list", "described": "described", "together": "described",
               "lattice": "lattice", "each": "lattice", "age_mix": "survey"}  # fmt: skip
-EXAMPLE = '{ mean = "64 years", sd = "11 years", range = "18 to 95 years" }'
 MOST_VALUES = 10_000  # on one axis of a lattice
 
 
-def resolve_population(section: PopulationSection, path: Path, problems: list[Problem]) -> tuple[Population, dict[str, str]]:
+def resolve_population(
+    section: PopulationSection, path: Path, problems: list[Problem]
+) -> tuple[Population, dict[str, str]]:
     """The population, and what each patient brings: attribute -> "number", "condition" or "text"; "" for a column
     that only the list itself can tell."""
     where = f"{path.name}: population"
@@ -44,11 +38,14 @@ def resolve_population(section: PopulationSection, path: Path, problems: list[Pr
         if section.source != source and getattr(section, key) not in (None, {}):
             say(key, f'given with source = "{section.source}"', f'only with source = "{source}"')
     if section.female_share is not None and (section.source not in ("survey", "described") or section.sex):
-        say("female_share", "given with one sex only, or with people whose sex is given",
-            'only with source = "survey" or "described", and without sex')
+        say(
+            "female_share",
+            "given with one sex only, or with people whose sex is given",
+            'only with source = "survey" or "described", and without sex',
+        )
     described = lattice = None
     if section.source == "described" and section.described:
-        described = _described(section, where, problems)
+        described = read_described(section, where, problems)
     if section.source == "lattice" and section.lattice:
         lattice = _lattice(section.lattice, f"{where}: lattice", problems)
     brought = _brought(section, described, lattice, path, problems)
@@ -65,20 +62,30 @@ def resolve_population(section: PopulationSection, path: Path, problems: list[Pr
         on_bad_row=section.on_bad_row or "stop",
         units=dict(section.units),
         age_mix=_age_mix(section.age_mix, f"{where}: age_mix", problems),
-        female_share=_share(section) if section.source == "survey" else None,
+        female_share=share_of_women(section) if section.source == "survey" else None,
         described=described,
         lattice=lattice or {},
         each=section.each or 1,
     )
     said = [problem.where for problem in problems]
-    said += [f"{where}: {key}" for key, table in (("described", section.described), ("lattice", section.lattice)) if table]
-    problems.extend(replace(problem, where=full) for problem in population.problems()
-                    if (full := f"{path.name}: {problem.where}") and not any(place.startswith(full) for place in said))
+    said += [
+        f"{where}: {key}" for key, table in (("described", section.described), ("lattice", section.lattice)) if table
+    ]
+    problems.extend(
+        replace(problem, where=full)
+        for problem in population.problems()
+        if (full := f"{path.name}: {problem.where}") and not any(place.startswith(full) for place in said)
+    )
     return population, brought
 
 
-def _brought(section: PopulationSection, described: Described | None, lattice: Mapping[str, tuple] | None, path: Path,
-             problems: list[Problem]) -> dict[str, str]:
+def _brought(
+    section: PopulationSection,
+    described: Described | None,
+    lattice: Mapping[str, tuple] | None,
+    path: Path,
+    problems: list[Problem],
+) -> dict[str, str]:
     def kind(name: str, value: object = 0.0) -> str:
         return "text" if name == "sex" else "condition" if isinstance(value, bool) else "number"
 
@@ -86,7 +93,9 @@ def _brought(section: PopulationSection, described: Described | None, lattice: M
     if described is not None:
         return {name: kind(name, True if name in described.switches else 0.0) for name in described.attributes()}
     if lattice is not None:
-        return {name: kind(name, lattice[name][0] if name in lattice else 0.0) for name in completed_names(list(lattice))}
+        return {
+            name: kind(name, lattice[name][0] if name in lattice else 0.0) for name in completed_names(list(lattice))
+        }
     if section.source != "list" or section.file is None:
         return usual
     try:
@@ -100,17 +109,17 @@ def _brought(section: PopulationSection, described: Described | None, lattice: M
 def _check_set_and_scale(section: PopulationSection, brought: Mapping[str, str], say) -> None:
     for name in section.set:
         if name in brought or name in EQUATIONS:
-            say("set", f'"{name}"', "an attribute that the patients do not bring themselves",
-                "to narrow the population, give limits (age, weight, height, bmi, sex, where)")
+            say(
+                "set",
+                f'"{name}"',
+                "an attribute that the patients do not bring themselves",
+                "to narrow the population, give limits (age, weight, height, bmi, sex, where)",
+            )
         elif not ATTRIBUTE_NAME.fullmatch(name) or name in (*FUNCTIONS, "true", "false", "patient", "label"):
             say("set", shown(name), "a name of letters, digits and _ that no function has, such as opioid")
     for name in section.scale:
         if name in SCALED and name not in brought:
             say("scale", f'"{name}", which these patients do not have', ", ".join(brought))
-
-
-def _share(section: PopulationSection) -> float | None:
-    return None if section.female_share is None else section.female_share.value / 100
 
 
 def _age_mix(mix: object, where: str, problems: list[Problem]) -> tuple[tuple[float, float, float], ...]:
@@ -138,135 +147,6 @@ def _age_mix(mix: object, where: str, problems: list[Problem]) -> tuple[tuple[fl
             found = f"shares that add up to {100 * sum(share for *_, share in bands):g} %"
             problems.append(Problem(where, found, "100 % in all"))
     return tuple(bands)
-
-
-def _described(section: PopulationSection, where: str, problems: list[Problem]) -> Described | None:
-    before = len(problems)
-    table = Section(section.described, f"{where}: described", problems)
-    numbers, switches = {}, {}
-    for name, entry in table.entries(EXAMPLE):
-        if not ATTRIBUTE_NAME.fullmatch(name) or name in (*FUNCTIONS, "sex", "true", "false", "patient", "label") or (
-                name in EQUATIONS and name not in KINDS):
-            advice = "female_share gives the share of women" if name == "sex" else ""
-            table.problem(name, "no name for an attribute", "age, weight, height, or a name of its own", advice)
-        elif "share" in entry.table:
-            share = entry.quantity("share", "percent")
-            if share is not None and share > 100:
-                entry.problem("share", f"{share:g} %", "0 % to 100 %")
-            switches[name] = (share or 0.0) / 100
-            entry.close()
-        elif {"female", "male"} & entry.table.keys():
-            women, men = (_marginal(name, entry.section(sex, needed=True)) for sex in ("female", "male"))
-            entry.close()
-            numbers[name] = women, men
-        else:
-            together = _marginal(name, entry)
-            numbers[name] = together, together
-    share = {"female": 1.0, "male": 0.0}.get(section.sex, _share(section))
-    if share is None or not 0 <= share <= 1:
-        found = "missing" if share is None else f"{100 * share:g} %"
-        problems.append(Problem(f"{where}: female_share", found, 'the share of women, such as female_share = "45 %"'))
-    if len(problems) == before:
-        _check_body(numbers, table)
-        correlations = _correlations(section.together, numbers, f"{where}: together", problems)
-        described = Described(share, numbers, switches, correlations)
-        _check_children(described, where, problems)
-    if len(problems) > before:
-        return None
-    try:
-        described.factor
-    except ValueError as error:
-        taken = ", ".join(f"{one} with {other} {value:g}" for (one, other), value in described.from_survey().items())
-        problems.append(Problem(f"{where}: together", str(error), "correlations that can hold together",
-                                f"beside those given stand those of US adults: {taken}" if taken else ""))
-        return None
-    return described if _people_are_possible(described, where, problems) else None
-
-
-def _marginal(name: str, entry: Section) -> Marginal | None:
-    """The distribution that one entry describes; None where it noted problems."""
-    before, kind = len(entry.problems), KINDS.get(name, "number")
-    figures = {key: entry.quantity(key, kind) for key in ("mean", "sd", "median", "p05", "p95")}
-    quartiles, limits = entry.range("quartiles", kind), entry.range("range", kind)
-    chosen = entry.text("distribution", among=SHAPES)
-    entry.close()
-    if quartiles is not None:
-        figures |= {"p25": quartiles.low, "p75": quartiles.high}
-    figures = {key: value for key, value in figures.items() if value is not None}
-    given = figures.keys()
-    if len(entry.problems) == before and not (given == {"mean", "sd"} or ("median" in given and not {"mean", "sd"} & given and 2 <= len(given) <= 3)):
-        entry.problems.append(Problem(entry.where, ", ".join(given) or "no figures",
-                                      "mean and sd, or median with quartiles, p05 or p95", EXAMPLE))
-    for key, value in figures.items():
-        if not 0 < value < float("inf"):
-            entry.problem(key, f"{value:g}", "a number above 0")
-    shape = SHAPES[chosen] if chosen else _usual_shape(name, given)
-    if shape is None and len(figures) == 2:
-        entry.problem("distribution", "box-cox with two figures", "three figures, such as median and quartiles")
-    low, high = POSSIBLE[name][:2] if name in POSSIBLE else (0.0, float("inf"))
-    if limits is not None:
-        if limits.low > high or (limits.high < low) or 0 <= limits.low < low or high < limits.high < float("inf"):
-            entry.problem("range", f'"{limits.text}"', f"within {low:g} to {high:g}")
-        low, high = max(low, limits.low), min(high, limits.high)
-    if len(entry.problems) > before:
-        return None
-    try:
-        return fit_marginal(figures, low, high, shape)
-    except ValueError as error:
-        entry.problems.append(Problem(entry.where, str(error), "figures that hold together",
-                                      "another distribution, another range, or check the figures and their units"))
-        return None
-
-
-def _usual_shape(name: str, given) -> float | None:
-    if len(given) == 3:
-        return None
-    return 1.0 if name in NORMAL_BY_DEFAULT else 0.0
-
-
-def _check_body(numbers: Mapping[str, tuple[Marginal, Marginal]], table: Section) -> None:
-    body = [name for name in BODY if name in numbers]
-    if len(body) == 3:
-        table.problem("bmi", "described beside weight and height, from which it follows", "two of weight, height and bmi")
-    if len({numbers[name][0] is numbers[name][1] for name in body}) > 1:
-        table.problem(body[0], f"{' and '.join(body)}, one for each sex and one for both together",
-                      "both for each sex, or both together")
-
-
-def _correlations(together: Mapping[str, float], numbers: Mapping[str, object], where: str,
-                  problems: list[Problem]) -> dict[tuple[str, str], float]:
-    correlations: dict[tuple[str, str], float] = {}
-    for key, value in together.items():
-        pair = tuple(part.strip() for part in key.split(","))
-        unknown = [name for name in pair if name not in numbers]
-        if len(pair) != 2 or pair[0] == pair[1] or unknown:
-            problems.append(Problem(where, f'"{key}"', 'two described numbers: "weight, height" = 0.4',
-                                    nearest(unknown[0], numbers) if unknown else ""))
-        elif {frozenset(pair)} & {frozenset(other) for other in correlations}:
-            problems.append(Problem(where, f'"{key}" twice', "each pair once"))
-        else:
-            correlations[pair] = value
-    return correlations
-
-
-def _check_children(described: Described, where: str, problems: list[Problem]) -> None:
-    """In children age and size go together so closely that it cannot be left to a default."""
-    given = {frozenset(pair) for pair in described.correlations}
-    for pair in (("age", "weight"), ("age", "height"), ("weight", "height")):
-        if not described.adults and set(pair) <= described.numbers.keys() and frozenset(pair) not in given:
-            problems.append(Problem(f"{where}: together", f"no correlation of {' and '.join(pair)}, and there may be children",
-                                    f'"{", ".join(pair)}" = 0.9 or what it is',
-                                    f"for adults: a range of age that begins at {ADULT_YEARS:g} years or later"))
-
-
-def _people_are_possible(described: Described, where: str, problems: list[Problem]) -> bool:
-    """Whether the figures, each possible, give people who are."""
-    possible = described.candidates(0, 0)["possible"].mean()
-    if possible >= 0.9:
-        return True
-    found = f"{100 * (1 - possible):.0f} % of people so described cannot be true (weight, height and age together)"
-    problems.append(Problem(f"{where}: described", found, "at most 10 %", "check the figures, their units and correlations"))
-    return False
 
 
 def _lattice(table: Mapping[str, object], where: str, problems: list[Problem]) -> dict[str, tuple] | None:
@@ -317,7 +197,9 @@ def _steps(name: str, table: dict, where: str) -> tuple:
     span, step = entry.range("range", kind), entry.quantity("step", kind)
     entry.close()
     if not entry.problems and (span is None or not step or not span.high < float("inf") or not span.low >= 0):
-        entry.problems.append(Problem(where, shown(table), '{ range = "40 to 160 kg", step = "10 kg" }, or a list of values'))
+        entry.problems.append(
+            Problem(where, shown(table), '{ range = "40 to 160 kg", step = "10 kg" }, or a list of values')
+        )
     if entry.problems:
         raise ProblemsError(entry.problems)
     count = int((span.high - span.low) / step * (1 + 1e-12)) + 1

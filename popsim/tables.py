@@ -147,7 +147,8 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
     for name, factor in study.population.scale.items():
         notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
     if findings.share_eligible < RARE_SHARE and study.population.source in ("survey", "described"):
-        notes.append(f"These patients are rare: {100 * findings.share_eligible:.2g} % of those within the limits of age and sex.")
+        notes.append(f"These patients are rare: {100 * findings.share_eligible:.2g} % of those within the limits "
+                     "of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))

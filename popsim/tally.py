@@ -145,7 +145,7 @@ class Tally:
             self.flags[flag] = self.flags.get(flag, 0) + count
 
     def worth(self, key: tuple[int, int, int]) -> np.ndarray:
-        """(groups,) what one patient is worth in independent draws, for the share attained of a model, protocol, target."""
+        """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
         return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
 
     def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:

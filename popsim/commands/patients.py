@@ -9,8 +9,14 @@ import click
 
 @click.command()
 @click.argument("study", type=click.Path(path_type=Path, dir_okay=False))
-@click.option("--out", type=click.Path(path_type=Path, dir_okay=False), default=Path("people.csv"), show_default=True,
-              metavar="FILE", help="The patients, a .csv or .parquet file; the picture stands beside it as .svg.")
+@click.option(
+    "--out",
+    type=click.Path(path_type=Path, dir_okay=False),
+    default=Path("people.csv"),
+    show_default=True,
+    metavar="FILE",
+    help="The patients, a .csv or .parquet file; the picture stands beside it as .svg.",
+)
 @click.option("--overwrite", is_flag=True, help="Replace FILE and its picture.")
 @click.option("--no-picture", is_flag=True, help="No picture.")
 @click.option("--quiet", is_flag=True, help="No summary.")
@@ -64,7 +70,9 @@ def _check(out: Path, picture: Path | None, overwrite: bool, own_list: Path | No
     from covariates.problems import Problem, ProblemsError
 
     if out.suffix not in (".csv", ".parquet"):
-        raise ProblemsError(Problem("--out", f'"{out}"', "a file that ends in .csv or .parquet", f"--out {out.stem}.csv"))
+        raise ProblemsError(
+            Problem("--out", f'"{out}"', "a file that ends in .csv or .parquet", f"--out {out.stem}.csv")
+        )
     if not out.parent.is_dir():
         raise ProblemsError(Problem("--out", f'"{out.parent}", no such folder', "a folder that is there"))
     if own_list is not None and out.exists() and out.samefile(own_list):

@@ -4,7 +4,7 @@ everybody, given that they lie within limits of height, weight and body mass ind
 Sex, age and height are cut into cells. In each, a bound on the share whose body mass index can lie within the limits
 follows from the cell's edges alone, since all constants move in straight lines within it. A cell is drawn by its people
 times its bound, a person within the cell, and that person is kept with probability true share over bound; the body mass
-index then comes from its distribution between the limits. The result is exact, whatever the bounds; they only save work.
+index then comes from its distribution between the limits. The result is exact, whatever the bounds: they save work.
 
 Source: rejection from a piecewise constant envelope, and inversion of the normal distribution (textbook methods).
 """
@@ -62,13 +62,21 @@ class Corner:
     def _bounds(self) -> np.ndarray:
         """For each cell a bound on the share of its people whose body mass index is within the limits."""
         ends = [survey.constants_at(survey.constants(), self._female, age) for age in self._age]
-        heights = np.array([at["height_mean"] + at_sd["height_sd"] * step
-                            for at in ends for at_sd in ends for step in self._step])
+        heights = np.array(
+            [at["height_mean"] + at_sd["height_sd"] * step for at in ends for at_sd in ends for step in self._step]
+        )
         shortest, tallest = (np.clip(edge, *self._height) for edge in (heights.min(axis=0), heights.max(axis=0)))
         possible = (heights.min(axis=0) <= self._height[1]) & (heights.max(axis=0) >= self._height[0])
         low, high = self._bmi_within(tallest)[0], self._bmi_within(shortest)[1]
-        luck = [[_own_luck(bmi, {**at, "bmi_spread": at_spread["bmi_spread"]}, self._female, step)
-                 for at in ends for at_spread in ends for step in self._step] for bmi in (low, high)]
+        luck = [
+            [
+                _own_luck(bmi, {**at, "bmi_spread": at_spread["bmi_spread"]}, self._female, step)
+                for at in ends
+                for at_spread in ends
+                for step in self._step
+            ]
+            for bmi in (low, high)
+        ]
         return np.where(possible & (low < high), _share_between(np.min(luck[0], axis=0), np.max(luck[1], axis=0)), 0.0)
 
     def _bmi_within(self, height: np.ndarray) -> tuple[np.ndarray, np.ndarray]:
@@ -83,7 +91,9 @@ class Corner:
         """
         if not self.share > 0:
             raise ValueError("nobody can be within these limits")
-        luck = {name: uniforms(seed, f"survey.corner.{name}", block) for name in ("cell", "age", "height", "keep", "bmi")}
+        luck = {
+            name: uniforms(seed, f"survey.corner.{name}", block) for name in ("cell", "age", "height", "keep", "bmi")
+        }
         cell = np.searchsorted(self._upto, luck["cell"] * self._upto[-1], side="right")
         cell = np.minimum(cell, len(self._upto) - 1)  # rounding must not lead beyond the last cell
         female, (young, old) = self._female[cell], (edge[cell] for edge in self._age)

@@ -1,9 +1,10 @@
 """Patients as a paper's table 1 describes them: each variable by a few figures, tied together by correlations.
 
-Every variable follows one family, value = median (1 + L S z)^(1/L): normal where the shape L is 1, lognormal where it is
-0, Box-Cox in between and beyond. Median, spread S and, where three figures tell it, the shape are found so that people
-within the limits have just the figures that are printed. Variables are tied by a normal copula; sex takes part in it,
-as an unseen normal number with a threshold, so that women are smaller than men while the whole group keeps its figures.
+Every variable follows one family, value = median (1 + L S z)^(1/L): normal where the shape L is 1, lognormal where it
+is 0, Box-Cox in between and beyond. Median, spread S and, where three figures tell it, the shape are found so that
+people within the limits have just the figures that are printed. Variables are tied by a normal copula; sex takes part
+in it, as an unseen normal number with a threshold, so that women are smaller than men while the whole group keeps its
+figures.
 
 Source: Box-Cox distribution (Cole and Green 1992, Stat Med 11:1305); normal copula and inversion (textbook methods).
 """
@@ -101,13 +102,19 @@ def fit_marginal(figures: Mapping[str, float], low: float, high: float, shape: f
     start = [np.log(middle), np.log(spread), *([0.1] if shape is None else [])]
 
     def marginal(vector: np.ndarray) -> Marginal:
-        return Marginal(shape if shape is not None else float(vector[2]), float(np.exp(vector[0])),
-                        float(np.exp(vector[1])), low, high)
+        return Marginal(
+            shape if shape is not None else float(vector[2]),
+            float(np.exp(vector[0])),
+            float(np.exp(vector[1])),
+            low,
+            high,
+        )
 
     def misfits(vector: np.ndarray) -> np.ndarray:
         found = marginal(vector)
-        return np.nan_to_num([np.log(found.figure(name) / value) for name, value in figures.items()], nan=9.0, posinf=9.0,
-                             neginf=-9.0)
+        return np.nan_to_num(
+            [np.log(found.figure(name) / value) for name, value in figures.items()], nan=9.0, posinf=9.0, neginf=-9.0
+        )
 
     room = [5.0, 5.0, *([4.0] if shape is None else [])]
     bounds = ([at - by for at, by in zip(start, room)], [at + by for at, by in zip(start, room)])
@@ -120,7 +127,9 @@ def fit_marginal(figures: Mapping[str, float], low: float, high: float, shape: f
         nearest = ", ".join(f"{name} {found.figure(name):.4g}" for name in figures)
         raise ValueError(f"no {kind} distribution from {low:g} to {high:g} has {printed}; the nearest has {nearest}")
     if found.inside() < 0.5:
-        raise ValueError(f"the limits, {low:g} to {high:g}, would cut off {100 * (1 - found.inside()):.0f} % of the people")
+        raise ValueError(
+            f"the limits, {low:g} to {high:g}, would cut off {100 * (1 - found.inside()):.0f} % of the people"
+        )
     return found
 
 
@@ -187,8 +196,9 @@ class Described:
         people = {"sex": np.where(female, "female", "male")}
         for name, numbers in zip(self.names[1:], luck[1:]):
             women, men = self.numbers[name]
-            people[name] = men.values(numbers) if women is men else np.where(
-                female, women.values(numbers), men.values(numbers))
+            people[name] = (
+                men.values(numbers) if women is men else np.where(female, women.values(numbers), men.values(numbers))
+            )
         for name, share in self.switches.items():
             people[name] = uniforms(seed, f"described.{name}", block) < share
         people = completed(people)

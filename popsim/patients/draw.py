@@ -81,9 +81,14 @@ class Draw:
         if limits:
             corner = Corner(limits, curve, ages, population.sex)
             if corner.share < RAREST_CORNER:
-                raise ProblemsError(Problem(
-                    "population", "fewer than one adult in 100 million is within these limits",
-                    "limits that more people are within", "widen the limits, or bring a list"))
+                raise ProblemsError(
+                    Problem(
+                        "population",
+                        "fewer than one adult in 100 million is within these limits",
+                        "limits that more people are within",
+                        "widen the limits, or bring a list",
+                    )
+                )
             if corner.share < CORNER_BELOW:
                 self._drawn_from = corner.share
                 return lambda block: corner.candidates(seed, block)
@@ -162,8 +167,11 @@ def _before_scale(population: Population) -> dict[str, tuple[float, float]]:
     """The limits of weight, height and bmi as they are for people who are not yet scaled."""
     weight, height = (population.scale.get(name, 1.0) for name in ("weight", "height"))
     factors = {"weight": weight, "height": height, "bmi": weight / height**2}
-    return {name: tuple(edge / factors[name] for edge in population.limits[name])
-            for name in factors if name in population.limits}
+    return {
+        name: tuple(edge / factors[name] for edge in population.limits[name])
+        for name in factors
+        if name in population.limits
+    }
 
 
 def _in_blocks(rows: np.ndarray, attributes: dict[str, np.ndarray], labels: np.ndarray | None) -> Iterator[Patients]:

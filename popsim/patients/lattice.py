@@ -40,7 +40,14 @@ def impossible_points(people: Mapping[str, np.ndarray]) -> Problem | None:
     if not len(wrong):
         return None
     shown = ("sex", "age", "weight", "height", "bmi", "serum_creatinine", "postmenstrual_age_weeks")
-    first = ", ".join(f"{name} {people[name][wrong[0]]:.4g}" if name != "sex" else str(people[name][wrong[0]])
-                      for name in shown if name in people)
-    return Problem("population: lattice", f"{len(wrong):,} points that cannot be people, the first: {first}",
-                   "possible people only", "give height and bmi instead of weight, or leave the corners out by limits")
+    first = ", ".join(
+        f"{name} {people[name][wrong[0]]:.4g}" if name != "sex" else str(people[name][wrong[0]])
+        for name in shown
+        if name in people
+    )
+    return Problem(
+        "population: lattice",
+        f"{len(wrong):,} points that cannot be people, the first: {first}",
+        "possible people only",
+        "give height and bmi instead of weight, or leave the corners out by limits",
+    )

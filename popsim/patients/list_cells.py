@@ -9,7 +9,16 @@ from pathlib import Path
 
 from covariates.problems import Problem, ProblemsError, nearest
 
-KNOWN = ("sex", "age", "weight", "height", "serum_creatinine", "bmi", "postmenstrual_age_weeks", "gestational_age_weeks")
+KNOWN = (
+    "sex",
+    "age",
+    "weight",
+    "height",
+    "serum_creatinine",
+    "bmi",
+    "postmenstrual_age_weeks",
+    "gestational_age_weeks",
+)
 ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]*")
 
 
@@ -48,8 +57,14 @@ def _parquet_cells(path: Path) -> tuple[list[str], list[str], list[list[str]]]:
         from pyarrow import ArrowException
         from pyarrow.parquet import read_table
     except ImportError:
-        raise ProblemsError(Problem(path.name, "pyarrow is not installed", "a CSV file",
-                                    'Parquet needs the optional extra: pip install "popsim[parquet]"')) from None
+        raise ProblemsError(
+            Problem(
+                path.name,
+                "pyarrow is not installed",
+                "a CSV file",
+                'Parquet needs the optional extra: pip install "popsim[parquet]"',
+            )
+        ) from None
     if not path.is_file():
         raise FileNotFoundError(2, "No such file or directory", str(path))
     try:

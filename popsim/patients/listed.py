@@ -35,7 +35,8 @@ class ListedPeople:
 
     rows        (n,) int64, ascending: place of each in the file (0 = first row under the header), the key to their
                 luck; skipping one row changes nobody else's
-    attributes  name -> (n,) array: `sex` text, switches bool, numbers float64; with what follows from them, as `completed` adds it
+    attributes  name -> (n,) array: `sex` text, switches bool, numbers float64, and what
+                follows from them (`completed`)
     labels      (n,) text from the column `patient`, or None
     skipped     how many rows were left out
     """
@@ -65,8 +66,9 @@ def read_list(path: Path, on_bad_row: str = "stop", units: Mapping[str, str] | N
     header, places, cells = read_cells(path)
     strangers = [name for name in units or {} if name not in header]
     if strangers:
-        raise ProblemsError(Problem(f"{path.name}: units", f'"{name}", which is no column', ", ".join(header))
-                            for name in strangers)
+        raise ProblemsError(
+            Problem(f"{path.name}: units", f'"{name}", which is no column', ", ".join(header)) for name in strangers
+        )
     columns: dict[str, np.ndarray] = {}
     faults = list(_length_faults(header, cells))
     for place, name in enumerate(header):
@@ -104,8 +106,13 @@ class _Fault:
 def _length_faults(header: list[str], cells: list[list[str]]) -> Iterator[_Fault]:
     for row, texts in enumerate(cells):
         if len(texts) != len(header):
-            yield _Fault(row, "", f"{len(texts)} cells", f"{len(header)}, as many as the header has",
-                         "decimal commas? write 72.5" if len(texts) > len(header) else "")
+            yield _Fault(
+                row,
+                "",
+                f"{len(texts)} cells",
+                f"{len(header)}, as many as the header has",
+                "decimal commas? write 72.5" if len(texts) > len(header) else "",
+            )
 
 
 def _read_column(name: str, texts: list[str], unit: str | None) -> tuple[np.ndarray, list[_Fault]]:
@@ -116,12 +123,14 @@ def _read_column(name: str, texts: list[str], unit: str | None) -> tuple[np.ndar
     if name == "sex":
         return np.array(words), [
             _missing(row, name, "female, male") if not word else _Fault(row, name, f'"{texts[row]}"', "female, male")
-            for row, word in enumerate(words) if word not in ("female", "male")
+            for row, word in enumerate(words)
+            if word not in ("female", "male")
         ]
     if name not in KNOWN and any(word in ("true", "false") for word in words):
         return np.array([word == "true" for word in words]), [
             _missing(row, name, "true, false") if not word else _Fault(row, name, f'"{texts[row]}"', "true, false")
-            for row, word in enumerate(words) if word not in ("true", "false")
+            for row, word in enumerate(words)
+            if word not in ("true", "false")
         ]
     factor = float(UNITS[UNIT_KINDS[name]][normal_unit(unit)]) if unit else 1.0
     values, faults = np.full(len(texts), np.nan), []
@@ -167,8 +176,13 @@ def _joint_faults(columns: dict[str, np.ndarray], named: set[tuple[int, str]]) -
         with np.errstate(divide="ignore", invalid="ignore"):
             bmi = columns["weight"] / (columns["height"] / 100.0) ** 2
         for row in np.flatnonzero(np.abs(columns["bmi"] / bmi - 1.0) > BMI_AGREES_WITHIN):
-            yield _Fault(int(row), "bmi", f"{columns['bmi'][row]:g}", f"{bmi[row]:.1f}, from weight and height",
-                         "correct one of the three, or leave the column out")
+            yield _Fault(
+                int(row),
+                "bmi",
+                f"{columns['bmi'][row]:g}",
+                f"{bmi[row]:.1f}, from weight and height",
+                "correct one of the three, or leave the column out",
+            )
 
 
 def _pounds_faults(columns: dict[str, np.ndarray]) -> Iterator[_Fault]:
@@ -181,6 +195,10 @@ def _pounds_faults(columns: dict[str, np.ndarray]) -> Iterator[_Fault]:
     heavy = np.flatnonzero(adult & (bmi > POUNDS_ABOVE_BMI) & (bmi <= POSSIBLE["bmi"][1]))
     if len(heavy) > POUNDS_SHARE * adult.sum():
         for row in heavy:
-            yield _Fault(int(row), "weight", f"a body mass index of {bmi[row]:.0f}, as of {len(heavy)} people of the list",
-                         f"at most one adult in {1 / POUNDS_SHARE:.0f} above {POUNDS_ABOVE_BMI:g} kg/m2",
-                         'are these pounds? give kg; if they are kg, say units = { weight = "kg" }')
+            yield _Fault(
+                int(row),
+                "weight",
+                f"a body mass index of {bmi[row]:.0f}, as of {len(heavy)} people of the list",
+                f"at most one adult in {1 / POUNDS_SHARE:.0f} above {POUNDS_ABOVE_BMI:g} kg/m2",
+                'are these pounds? give kg; if they are kg, say units = { weight = "kg" }',
+            )

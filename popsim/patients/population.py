@@ -80,22 +80,30 @@ class Population:
     def notes(self) -> Iterator[str]:
         """What every output says of where these patients come from."""
         if self.source == "survey" and self.limits.get("age", (0.0, math.inf))[1] > LAST_DECADE_YEARS:
-            yield ("Patients over 80 are extrapolated: the national tables end with one band for 80 and over; within it ages "
-                   f"thin out up to {OLDEST_YEARS:g} years and sizes stay those of the band.")
+            yield (
+                "Patients over 80 are extrapolated: the national tables end with one band for 80 and over; in it ages "
+                f"thin out up to {OLDEST_YEARS:g} years and sizes stay those of the band."
+            )
         if self.age_mix:
             yield "Ages are mixed as the study says, not as in the nation."
         if self.female_share is not None and self.source == "survey":
             yield f"The share of women is set to {100 * self.female_share:g} %."
         if self.source == "described":
-            taken = ", ".join(f"{'sex' if one == 'male' else one} with {other} {value:g}"
-                              for (one, other), value in self.described.from_survey().items())
-            yield ("Patients are described by summary figures; correlations that the study does not give are "
-                   + (f"taken from US adults ({taken}), all others 0." if taken else "taken to be 0."))
+            taken = ", ".join(
+                f"{'sex' if one == 'male' else one} with {other} {value:g}"
+                for (one, other), value in self.described.from_survey().items()
+            )
+            yield (
+                "Patients are described by summary figures; correlations that the study does not give are "
+                + (f"taken from US adults ({taken}), all others 0." if taken else "taken to be 0.")
+            )
         if self.source == "lattice":
             yield "Patients are points of a lattice, not a population: shares and intervals speak of the grid."
         if self.resampled:
-            yield ("Patients are drawn from a list again and again: intervals count its people, not the draws "
-                   "(cluster formula).")
+            yield (
+                "Patients are drawn from a list again and again: intervals count its people, not the draws "
+                "(cluster formula)."
+            )
 
     def problems(self) -> Iterator[Problem]:
         """Everything that keeps these patients from being drawn, so far as it shows before drawing."""
@@ -108,9 +116,11 @@ class Population:
             yield Problem("population: count", found, "nothing", "each = 100 puts 100 people at each point")
         if self.count is not None and self.count < 1:
             yield Problem("population: count", str(self.count), "1 or more")
-        for source, key, example in (("list", "file", 'file = "people.csv"'),
-                                     ("described", "described", "a section [population.described]"),
-                                     ("lattice", "lattice", "a section [population.lattice]")):
+        for source, key, example in (
+            ("list", "file", 'file = "people.csv"'),
+            ("described", "described", "a section [population.described]"),
+            ("lattice", "lattice", "a section [population.lattice]"),
+        ):
             if self.source == source and not getattr(self, key):
                 yield Problem(f"population: {key}", "missing", example)
         if self.on_bad_row not in ("stop", "skip"):
@@ -151,8 +161,11 @@ class Population:
             except ValueError:
                 somebody = False
             if not somebody:
-                yield Problem("population: age_mix", "nobody within the limits of age and sex",
-                              "a mix and a share of women that leave somebody")
+                yield Problem(
+                    "population: age_mix",
+                    "nobody within the limits of age and sex",
+                    "a mix and a share of women that leave somebody",
+                )
 
     def _attribute_problems(self) -> Iterator[Problem]:
         for name in self.set:

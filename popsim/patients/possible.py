@@ -48,7 +48,7 @@ def completed(people: Mapping[str, np.ndarray]) -> dict[str, np.ndarray]:
     """The attributes of people, and what follows from them: the third of weight, height and body mass index;
     postmenstrual age from gestational age at birth and age since."""
     found = dict(people)
-    for name in completed_names(list(people))[len(people):]:
+    for name in completed_names(list(people))[len(people) :]:
         one, other, equation = DERIVED[name]
         found[name] = equation(people[one], people[other])
     return found
@@ -64,12 +64,17 @@ def contradictions(people: Mapping[str, np.ndarray]) -> Iterator[tuple[np.ndarra
     if {"weight", "age"} <= people.keys():
         age, weight = people["age"], people["weight"]
         for years, heaviest in HEAVIEST_CHILD:
-            yield (age < years) & (weight > heaviest), ("weight", "age"), f"at most {heaviest:g} kg below {years:g} years"
+            yield (
+                (age < years) & (weight > heaviest),
+                ("weight", "age"),
+                f"at most {heaviest:g} kg below {years:g} years",
+            )
         light = (age >= ADULT_YEARS) & (weight < LIGHTEST_ADULT_KG)
         yield light, ("weight", "age"), f"at least {LIGHTEST_ADULT_KG:g} kg from {ADULT_YEARS:g} years"
     if {"postmenstrual_age_weeks", "age"} <= people.keys():
-        at_birth = people["postmenstrual_age_weeks"] - (postmenstrual_age_weeks(np.nan_to_num(
-            np.clip(people["age"], *POSSIBLE["age"][:2]))) - WEEKS_AT_TERM)
+        at_birth = people["postmenstrual_age_weeks"] - (
+            postmenstrual_age_weeks(np.nan_to_num(np.clip(people["age"], *POSSIBLE["age"][:2]))) - WEEKS_AT_TERM
+        )
         low, high, allowed, _ = POSSIBLE["gestational_age_weeks"]
         slack = 0.5 + 0.02 * np.abs(people["age"]) * 52.143  # ages in completed years or months say no more
         wrong = (at_birth < low - slack) | (at_birth > high + slack)

@@ -1,4 +1,4 @@
-"""How fast patients are drawn, in seconds of one processor, with six lognormal parameters; and how much memory a block needs.
+"""How fast patients are drawn, in seconds of one processor, with six lognormal parameters; and the memory it needs.
 
 Run `python tests/benchmarks/patients.py`; figures drift from machine to machine.
 """
@@ -24,8 +24,13 @@ SIX = ("V1", "V2", "V3", "CL", "Q2", "Q3")
 
 
 def described() -> Described:
-    age, height = (fit_marginal(figures, low, high, 1.0) for figures, low, high in (
-        ({"mean": 64.0, "sd": 11.0}, 18.0, 95.0), ({"mean": 170.0, "sd": 10.0}, 100.0, 250.0)))
+    age, height = (
+        fit_marginal(figures, low, high, 1.0)
+        for figures, low, high in (
+            ({"mean": 64.0, "sd": 11.0}, 18.0, 95.0),
+            ({"mean": 170.0, "sd": 10.0}, 100.0, 250.0),
+        )
+    )
     weight = fit_marginal({"median": 88.0, "p25": 75.0, "p75": 103.0}, 30.0, 300.0, None)
     return Described(0.45, {"age": (age, age), "height": (height, height), "weight": (weight, weight)})
 
@@ -37,7 +42,8 @@ def main() -> None:
     populations = {
         "survey": Population("survey", COUNT),
         "women over 80, BMI 45 and over": Population(
-            "survey", COUNT, limits={"age": (80.0, np.inf), "bmi": (45.0, np.inf)}, sex="female"),
+            "survey", COUNT, limits={"age": (80.0, np.inf), "bmi": (45.0, np.inf)}, sex="female"
+        ),
         "described": Population("described", COUNT, described=described()),
     }
     for name, population in populations.items():

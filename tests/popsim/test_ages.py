@@ -45,8 +45,11 @@ def test_a_share_of_women(limits):
     assert (found["sex"] == "female").mean() == pytest.approx(0.7, abs=0.01)
     for sex, below in zip(ages.SEXES, national().below):  # each sex keeps the nation's ages
         low, high = limits.get("age", (20.0, 100.0))
-        middle = np.interp((np.interp(low, national().ages, below) + np.interp(high, national().ages, below)) / 2, below,
-                           national().ages)
+        middle = np.interp(
+            (np.interp(low, national().ages, below) + np.interp(high, national().ages, below)) / 2,
+            below,
+            national().ages,
+        )
         assert np.median(found["age"][found["sex"] == sex]) == pytest.approx(middle, abs=0.8)
 
 

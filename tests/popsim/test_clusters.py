@@ -71,11 +71,16 @@ def test_people_alike_are_worth_their_draws():
 def ward(tmp_path_factory):
     folder = tmp_path_factory.mktemp("ward")
     rng = np.random.default_rng(2)
-    rows = [f"{rng.choice(['female', 'male'])},{rng.integers(30, 90)},{rng.integers(50, 130)},{rng.integers(150, 190)}"
-            for _ in range(60)]
+    rows = [
+        f"{rng.choice(['female', 'male'])},{rng.integers(30, 90)},{rng.integers(50, 130)},{rng.integers(150, 190)}"
+        for _ in range(60)
+    ]
     (folder / "people.csv").write_text("sex,age,weight,height\n" + "\n".join(rows), encoding="utf-8")
-    return cases.study(folder, population='source = "list"\nfile = "people.csv"\ncount = 20000',
-                 groups={"under 65": "age < 65", "65 and over": "age >= 65"})
+    return cases.study(
+        folder,
+        population='source = "list"\nfile = "people.csv"\ncount = 20000',
+        groups={"under 65": "age < 65", "65 and over": "age >= 65"},
+    )
 
 
 def test_a_resampled_list_is_as_sure_as_its_people(ward):

@@ -64,7 +64,9 @@ def test_wide_limits_keep_the_people_of_the_unrestricted_survey():
 
 
 def test_limits_are_meant_after_scaling():
-    population = Population("survey", 3000, limits={"bmi": (48.0, 50.0), "weight": (120.0, 130.0)}, scale={"weight": 1.25})
+    population = Population(
+        "survey", 3000, limits={"bmi": (48.0, 50.0), "weight": (120.0, 130.0)}, scale={"weight": 1.25}
+    )
     drawn = blocks(population, 1)
     people = next(drawn).attributes
     assert people["bmi"].min() >= 48 and people["bmi"].max() <= 50 and people["weight"].max() <= 130
@@ -84,7 +86,9 @@ def spans(lowest, highest, narrowest):
 
 @settings(max_examples=40, deadline=None)
 @given(
-    limits=st.fixed_dictionaries({}, optional={"weight": spans(40, 200, 5), "height": spans(145, 195, 2), "bmi": spans(14, 70, 1)}),
+    limits=st.fixed_dictionaries(
+        {}, optional={"weight": spans(40, 200, 5), "height": spans(145, 195, 2), "bmi": spans(14, 70, 1)}
+    ),
     ages=spans(20, 95, 1).filter(lambda ages: ages[1] <= 100),
     uniform=st.booleans(),
 )

@@ -70,6 +70,7 @@ def test_figures_come_out_of_many_people():
 
 def test_women_are_smaller_as_among_adults_of_the_survey():
     """The men's height above the women's, in SDs of both together, and the correlation within a sex."""
+
     def told(people):
         women = people["sex"] == "female"
         gap = (people["height"][~women].mean() - people["height"][women].mean()) / people["height"].std()
@@ -92,8 +93,11 @@ def test_default_correlations_are_those_of_the_survey():
     everyone, share = np.ones(len(men), dtype=bool), men.mean()
     biserial = np.sqrt(share * (1 - share)) / stats.norm.pdf(stats.norm.ppf(share))
     for (one, other), value in TOGETHER.items():
-        found = (np.corrcoef(men, scores(other, everyone))[0, 1] * biserial if one == "male"
-                 else np.corrcoef(scores(one, everyone), scores(other, everyone))[0, 1])
+        found = (
+            np.corrcoef(men, scores(other, everyone))[0, 1] * biserial
+            if one == "male"
+            else np.corrcoef(scores(one, everyone), scores(other, everyone))[0, 1]
+        )
         assert found == pytest.approx(value, abs=0.03), (one, other)
     for (one, other), value in APART.items():
         found = np.mean([np.corrcoef(scores(one, of), scores(other, of))[0, 1] for of in (men, ~men)])
@@ -117,8 +121,11 @@ def test_a_given_correlation_wins():
 
 
 def test_a_further_variable_changes_nobody_else():
-    more = Described(0.45, {**WARD.numbers, "closure_min": both(fit_marginal({"median": 180.0, "p95": 360.0}, 0, np.inf, 0.0))},
-                     {"opioid": 0.3, "smoker": 0.2})
+    more = Described(
+        0.45,
+        {**WARD.numbers, "closure_min": both(fit_marginal({"median": 180.0, "p95": 360.0}, 0, np.inf, 0.0))},
+        {"opioid": 0.3, "smoker": 0.2},
+    )
     one, other = people(WARD, blocks=1), people(more, blocks=1)
     for name in one:
         assert np.array_equal(one[name], other[name]), name
@@ -157,14 +164,22 @@ middles = st.fixed_dictionaries({"age": st.floats(30, 80), "height": st.floats(1
 
 
 @settings(max_examples=40, deadline=None)
-@given(middle=middles, cv=st.floats(0.02, 0.3), female=st.floats(0, 1), seed=st.integers(0, 2**32),
-       shape=st.sampled_from([0.0, 1.0]), tie=st.floats(-0.5, 0.5))
+@given(
+    middle=middles,
+    cv=st.floats(0.02, 0.3),
+    female=st.floats(0, 1),
+    seed=st.integers(0, 2**32),
+    shape=st.sampled_from([0.0, 1.0]),
+    tie=st.floats(-0.5, 0.5),
+)
 def test_any_description_yields_only_possible_people_and_its_own_figures(middle, cv, female, seed, shape, tie):
     limits = {"age": (18.0, 110.0), "height": (100.0, 250.0), "weight": (30.0, 300.0)}
     spread = {"age": cv, "height": min(cv, 0.06), "weight": cv}
     try:
-        numbers = {name: both(fit_marginal({"mean": mean, "sd": mean * spread[name]}, *limits[name], shape))
-                   for name, mean in middle.items()}
+        numbers = {
+            name: both(fit_marginal({"mean": mean, "sd": mean * spread[name]}, *limits[name], shape))
+            for name, mean in middle.items()
+        }
     except ValueError:
         assume(False)  # limits that no such figures fit into
     population = Described(female, numbers, correlations={("age", "weight"): tie})

@@ -12,7 +12,13 @@ from popsim.patients.draw import blocks
 from popsim.patients.lattice import MOST_POINTS, lattice_people
 from popsim.patients.population import Population
 
-AXES = {"sex": ("female", "male"), "age": (30.0, 60.0, 90.0), "height": (160.0, 175.0), "bmi": (20.0, 45.0), "opioid": (True,)}
+AXES = {
+    "sex": ("female", "male"),
+    "age": (30.0, 60.0, 90.0),
+    "height": (160.0, 175.0),
+    "bmi": (20.0, 45.0),
+    "opioid": (True,),
+}
 
 
 def test_examples_in_the_docstrings():
@@ -23,7 +29,9 @@ def test_every_combination_once():
     (people,) = blocks(Population("lattice", None, lattice=AXES), 1)
     rows = set(zip(*(people.attributes[name].tolist() for name in AXES)))
     assert len(people) == len(rows) == 24
-    assert people.attributes["weight"] == pytest.approx(people.attributes["bmi"] * (people.attributes["height"] / 100) ** 2)
+    assert people.attributes["weight"] == pytest.approx(
+        people.attributes["bmi"] * (people.attributes["height"] / 100) ** 2
+    )
     assert people.attributes["opioid"].dtype == bool
 
 
@@ -41,10 +49,13 @@ def test_many_at_each_point():
     assert len({(part.block, slot) for part in parts for slot in part.slots.tolist()}) == 24_000
 
 
-@pytest.mark.parametrize("axes, found", [
-    ({"height": (150.0, 200.0), "weight": (20.0, 180.0)}, "weight 20, height 200, bmi 5"),
-    ({"age": (0.5,), "weight": (90.0,)}, "age 0.5, weight 90"),
-])
+@pytest.mark.parametrize(
+    "axes, found",
+    [
+        ({"height": (150.0, 200.0), "weight": (20.0, 180.0)}, "weight 20, height 200, bmi 5"),
+        ({"age": (0.5,), "weight": (90.0,)}, "age 0.5, weight 90"),
+    ],
+)
 def test_points_that_cannot_be_people_are_named(axes, found):
     with pytest.raises(ProblemsError, match=found):
         blocks(Population("lattice", None, lattice=axes), 1)

@@ -200,7 +200,8 @@ def test_units_that_are_said(write):
     path = write("sex,age,weight,height,serum_creatinine\nmale,600,70000,1.75,88.42\n")
     units = {"age": "months", "weight": "g", "height": "m", "serum_creatinine": "umol/L"}
     people = read_list(path, units=units).attributes
-    assert [people[name][0] for name in ("age", "weight", "height", "serum_creatinine")] == pytest.approx([50, 70, 175, 1])
+    found = [people[name][0] for name in ("age", "weight", "height", "serum_creatinine")]
+    assert found == pytest.approx([50, 70, 175, 1])
     with pytest.raises(ProblemsError) as caught:
         read_list(path, units={**units, "serum_creatinine": "mg/dL"})
     assert "88.42 mg/dL" in str(caught.value)

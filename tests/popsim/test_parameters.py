@@ -146,7 +146,8 @@ def test_typical_values_in_print():
 
 
 def test_a_study_may_set_variability_parameter_by_parameter():
-    own = Variability(True, 1.3, None, {"CL": (0.5, "lognormal"), "V3": (0.0, "lognormal"), "V1": (0.2, "normal, relative")})
+    set_by_study = {"CL": (0.5, "lognormal"), "V3": (0.0, "lognormal"), "V1": (0.2, "normal, relative")}
+    own = Variability(True, 1.3, None, set_by_study)
     assert spread_used(MINTO, own)["CL"] == pytest.approx(0.65)
     assert "V3" not in spread_used(MINTO, own) and forms_used(MINTO, own) == {"V1": "normal, relative"}
     found, typical, plain = (drawn(MINTO, variability).values for variability in (own, TYPICAL, OWN))
@@ -165,7 +166,7 @@ def test_a_normal_parameter_that_falls_below_zero_is_not_clipped():
 
 
 def test_every_luck_of_a_patient_is_independent_of_every_other():
-    """All streams that a survey patient under two models uses: largest of the correlations within 4.5 standard errors."""
+    """All streams that a survey patient under two models uses: every correlation within 4.5 standard errors."""
     names = [f"survey.{name}" for name in ("height", "bmi", "serum_creatinine")]
     names += [f"spread {name}" for name in {*BIS.spread, *MINTO.spread}]
     luck = np.stack([np.concatenate([normals(5, name, block) for block in range(10)]) for name in names])

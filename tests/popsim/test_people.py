@@ -60,12 +60,18 @@ def test_quantiles_are_those_of_the_people(study):
 def test_adult_equations_are_not_used_in_children(tmp_path, monkeypatch, capsys):
     monkeypatch.chdir(tmp_path)
     rows = ["female,0.1,4,54,0.4", "male,3,15,96,0.4", "male,30,80,180,1.0"]
-    cases.study(tmp_path, population=cases.people(tmp_path, rows, "sex,age,weight,height,serum_creatinine"), groups={},
-                model="propofol_marsh_1991", variability="between_subject = false",
-                targets=('quantity = "plasma"\nrange = "2 to 4 ug/mL"\nduring = "5 min to 50 min"\nattained_when = "always"',))
+    cases.study(
+        tmp_path,
+        population=cases.people(tmp_path, rows, "sex,age,weight,height,serum_creatinine"),
+        groups={},
+        model="propofol_marsh_1991",
+        variability="between_subject = false",
+        targets=('quantity = "plasma"\nrange = "2 to 4 ug/mL"\nduring = "5 min to 50 min"\nattained_when = "always"',),
+    )
     assert run(["patients", "study.toml", "--out", "them.csv", "--no-picture"]) == 0
     lines = [line for line in capsys.readouterr().out.splitlines() if "lean mass (kg)" in line]
-    only = f"{compute('lean_body_mass_janmahasatian', {'sex': np.array(['male']), 'weight': 80.0, 'height': 180.0})[0]:.3g}"
+    adult = {"sex": np.array(["male"]), "weight": 80.0, "height": 180.0}
+    only = f"{compute('lean_body_mass_janmahasatian', adult)[0]:.3g}"
     assert lines[0].split()[-5:] == [only] * 5
     assert not (tmp_path / "them.svg").exists()
     assert run(["patients", "study.toml", "--out", "people.csv", "--overwrite"]) == 2  # never over the list itself
@@ -78,11 +84,14 @@ def test_parquet(study, tmp_path):
     assert len(pd.read_parquet(tmp_path / "people.parquet")) == 9000
 
 
-@pytest.mark.parametrize("arguments, said", [
-    (["--out", "people.txt"], "ends in .csv or .parquet"),
-    (["--out", "none/people.csv"], "no such folder"),
-    (["--out", "study.csv"], "there already"),
-])
+@pytest.mark.parametrize(
+    "arguments, said",
+    [
+        (["--out", "people.txt"], "ends in .csv or .parquet"),
+        (["--out", "none/people.csv"], "no such folder"),
+        (["--out", "study.csv"], "there already"),
+    ],
+)
 def test_what_the_user_can_mend(study, tmp_path, capsys, arguments, said):
     (tmp_path / "study.csv").write_text("mine")
     assert run(["patients", "study.toml", *arguments]) == 2

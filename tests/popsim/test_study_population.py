@@ -84,9 +84,16 @@ def test_every_source_is_judged_checked_and_reported(tmp_path, population):
 
 
 def test_newborns(tmp_path):
-    found = people(cases.study(tmp_path, population=NEWBORN, model="propofol_marsh_1991", groups={"early": "age < 0.02"},
-                               variability="between_subject = false",
-                               targets=(cases.EFFECT_SITE.replace("effect_site", "plasma"),)))
+    found = people(
+        cases.study(
+            tmp_path,
+            population=NEWBORN,
+            model="propofol_marsh_1991",
+            groups={"early": "age < 0.02"},
+            variability="between_subject = false",
+            targets=(cases.EFFECT_SITE.replace("effect_site", "plasma"),),
+        )
+    )
     assert found["age"].max() <= 60 / 365 and found["weight"].max() < 6
     assert found["postmenstrual_age_weeks"].min() >= 24
 
@@ -122,9 +129,13 @@ def test_rare_people_are_said_to_be_rare(tmp_path):
 
 
 def test_variability_of_the_study_itself(tmp_path):
-    study = cases.study(tmp_path, variability='scale = 1.0\nparameters = { CL = { value = 0.5, printed_as = "cv" }, V3 = "none" }')
+    study = cases.study(
+        tmp_path, variability='scale = 1.0\nparameters = { CL = { value = 0.5, printed_as = "cv" }, V3 = "none" }'
+    )
     assert study.variability.own["CL"] == (pytest.approx(np.sqrt(np.log(1.25))), "lognormal")
-    assert study.variability.own["V3"][0] == 0 and any("CL 0.4724 (lognormal), V3 none" in said for said in study.warnings)
+    assert study.variability.own["V3"][0] == 0 and any(
+        "CL 0.4724 (lognormal), V3 none" in said for said in study.warnings
+    )
     without = 'parameters = { CL = { value = 0.3, printed_as = "sd of ln" } }'
     target = cases.EFFECT_SITE.replace("effect_site", "plasma")
     assert cases.study(tmp_path, model="propofol_marsh_1991", variability=without, targets=(target,)).variability.own
@@ -144,14 +155,24 @@ BAD = [
     (swap(DESCRIBED, ('sd = "11 years"', 'sd = "0 years"')), "described.age.sd", "0"),
     (swap(DESCRIBED, ('sd = "11 years"', 'sd = "60 years"')), "described.age", "no normal distribution"),
     (swap(DESCRIBED, ('quartiles = "75 to 103 kg"', 'quartiles = "89 to 103 kg"')), "described.weight", "no Box-Cox"),
-    (swap(DESCRIBED, ('quartiles = "75 to 103 kg"', 'quartiles = "40 to 103 kg", distribution = "lognormal"')),
-     "described.weight", "no lognormal"),
+    (
+        swap(DESCRIBED, ('quartiles = "75 to 103 kg"', 'quartiles = "40 to 103 kg", distribution = "lognormal"')),
+        "described.weight",
+        "no lognormal",
+    ),
     (swap(DESCRIBED, ('range = "18 to 95 years"', 'range = "18 to 130 years"')), "described.age.range", "130"),
     (swap(DESCRIBED, ('range = "18 to 95 years"', 'range = "10 to 95 years"')), "together", "there may be children"),
-    (swap(DESCRIBED, ('mean = "170 cm", sd = "10 cm"', 'mean = "1.7 m", sdd = "10 cm"')), "described.height.sdd", "unknown key"),
+    (
+        swap(DESCRIBED, ('mean = "170 cm", sd = "10 cm"', 'mean = "1.7 m", sdd = "10 cm"')),
+        "described.height.sdd",
+        "unknown key",
+    ),
     (swap(DESCRIBED, ('mean = "170 cm"', 'mean = "40 cm"'), ("range = ", "range =")), "population", ""),
-    (swap(DESCRIBED, ("closure_min", "bmi"), ("30, p95 = 50, range = \"10 to 59\"", '"30 kg/m2", p95 = "45 kg/m2"')),
-     "described.bmi", "from which it follows"),
+    (
+        swap(DESCRIBED, ("closure_min", "bmi"), ('30, p95 = 50, range = "10 to 59"', '"30 kg/m2", p95 = "45 kg/m2"')),
+        "described.bmi",
+        "from which it follows",
+    ),
     (swap(DESCRIBED, ("opioid", "sex")), "described.sex", "no name"),
     (swap(DESCRIBED, ("opioid", "lean_body_mass_james")), "described.lean_body_mass_james", "no name"),
     (swap(DESCRIBED, ('"30 %"', '"130 %"')), "described.opioid.share", "130"),
@@ -159,11 +180,22 @@ BAD = [
     (swap(DESCRIBED, ("count = 3000", "")), "count", "missing"),
     (swap(DESCRIBED, ('"age, weight"', '"age, wieght"')), "together", "age, wieght"),
     (swap(DESCRIBED, ("-0.1", "-1.5")), "together", "-1.5"),
-    (swap(DESCRIBED, ('"age, weight" = -0.1', '"age, weight" = -0.9\n"age, height" = 0.9\n"weight, height" = 0.9')), "together",
-     "cannot hold together"),
-    (swap(DESCRIBED, ('height = { mean = "170 cm", sd = "10 cm" }',
-                      'height = { female = { mean = "160 cm", sd = "7 cm" }, male = { mean = "175 cm", sd = "7 cm" } }')),
-     "described.weight", "one for each sex"),
+    (
+        swap(DESCRIBED, ('"age, weight" = -0.1', '"age, weight" = -0.9\n"age, height" = 0.9\n"weight, height" = 0.9')),
+        "together",
+        "cannot hold together",
+    ),
+    (
+        swap(
+            DESCRIBED,
+            (
+                'height = { mean = "170 cm", sd = "10 cm" }',
+                'height = { female = { mean = "160 cm", sd = "7 cm" }, male = { mean = "175 cm", sd = "7 cm" } }',
+            ),
+        ),
+        "described.weight",
+        "one for each sex",
+    ),
     (swap(NEWBORN, ('"age, weight" = 0.3', "")), "together", "no correlation of age and weight"),
     (swap(LATTICE, ("each = 2", "each = 0")), "each", "0"),
     (swap(LATTICE, ("each = 2", "count = 2")), "count", "lattice"),
@@ -192,16 +224,21 @@ def test_what_cannot_be_is_told_where_and_what(tmp_path, population, where, foun
     cases.people(tmp_path, ["female,40,70,165"])
     with pytest.raises(ProblemsError) as caught:
         cases.study(tmp_path, population=population)
-    assert any(where in problem.where and found in problem.found + problem.allowed for problem in caught.value.problems), caught.value
+    assert any(
+        where in problem.where and found in problem.found + problem.allowed for problem in caught.value.problems
+    ), caught.value
 
 
-@pytest.mark.parametrize("variability, where, found", [
-    ('parameters = { CLX = { value = 0.5, printed_as = "cv" } }', "parameters", "CLX"),
-    ("parameters = { CL = 0.5 }", "parameters: CL", "0.5"),
-    ("parameters = { CL = { value = 0.5 } }", "parameters: CL", "missing"),
-    ('parameters = { CL = { value = 50, printed_as = "cv" } }', "parameters: CL", "50"),
-    ('between_subject = false\nparameters = { CL = "none" }', "parameters", "between_subject = false"),
-])
+@pytest.mark.parametrize(
+    "variability, where, found",
+    [
+        ('parameters = { CLX = { value = 0.5, printed_as = "cv" } }', "parameters", "CLX"),
+        ("parameters = { CL = 0.5 }", "parameters: CL", "0.5"),
+        ("parameters = { CL = { value = 0.5 } }", "parameters: CL", "missing"),
+        ('parameters = { CL = { value = 50, printed_as = "cv" } }', "parameters: CL", "50"),
+        ('between_subject = false\nparameters = { CL = "none" }', "parameters", "between_subject = false"),
+    ],
+)
 def test_variability_that_cannot_be(tmp_path, variability, where, found):
     with pytest.raises(ProblemsError) as caught:
         cases.study(tmp_path, variability=variability)
@@ -210,8 +247,11 @@ def test_variability_that_cannot_be(tmp_path, variability, where, found):
 
 def test_populations_of_the_readme_can_be_drawn(tmp_path):
     readme = (Path(__file__).resolve().parents[2] / "README.md").read_text(encoding="utf-8")
-    shown = [text.partition("[population]\n")[2] for text in re.findall(r"```toml\n(.*?)```", readme, re.DOTALL)
-             if text.startswith("[population]")]
+    shown = [
+        text.partition("[population]\n")[2]
+        for text in re.findall(r"```toml\n(.*?)```", readme, re.DOTALL)
+        if text.startswith("[population]")
+    ]
     assert len(shown) == 2
     for population in shown:
         assert len(people(cases.study(tmp_path, population=population))["age"]) in (10_000, 44)

