@@ -10,7 +10,7 @@ import numpy as np
 from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.problems import nearest
 from covariates.sheet_section import Section
-from covariates.units import Range
+from covariates.units import Quantity, Range
 from covariates.variability import covariance_from, omega_from_cv, omega_from_variance
 
 FLUIDS = ("total plasma", "unbound plasma", "whole blood")
@@ -20,8 +20,15 @@ _RANGES = {
     "age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",
     "serum_creatinine": "creatinine", "postmenstrual_age_weeks": "postmenstrual_age",
 }  # fmt: skip
-_TO_OMEGA = {"sd of ln": float, "variance of ln": omega_from_variance, "cv": omega_from_cv}
-_LARGEST_SPREAD = 3.0
+# distribution and how its spread is printed -> the SD of the random effect, and the form in which the effect acts
+_TO_SD = {
+    "lognormal": {"sd of ln": (float, "lognormal"), "variance of ln": (omega_from_variance, "lognormal"),
+                  "cv": (omega_from_cv, "lognormal")},
+    "normal": {"sd": (float, "normal"), "variance": (omega_from_variance, "normal"), "cv": (float, "normal, relative")},
+    "logit-normal": {"sd of logit": (float, "logit-normal"),
+                     "variance of logit": (omega_from_variance, "logit-normal")},
+}  # fmt: skip
+_LARGEST_SPREAD, _LARGEST_IN_OWN_UNIT = 3.0, 1e6
 
 
 @dataclass(frozen=True)
@@ -32,7 +39,9 @@ class BuiltOn:
     count                 how many, or None where not known
     ranges                attribute or bmi -> Range (years, kg, cm, kg/m2, mg/dL, wk); only what is known
     sex                   "female" or "male" where only they were studied, else None
+    doses                 the doses that were studied, in words, or empty
     longest_infusion_min  or None where not known
+    largest_total         most that anyone was given in all, mg or mg/kg, or None where not known
     sampling              "arterial", "venous", "arterial and venous", or empty
     evidence, note        how far this is known
     """
@@ -41,10 +50,34 @@ class BuiltOn:
     count: int | None
     ranges: dict[str, Range]
     sex: str | None
+    doses: str
     longest_infusion_min: float | None
+    largest_total: Quantity | None
     sampling: str
     evidence: str
     note: str
+
+
+@dataclass(frozen=True)
+class NeededNumber:
+    """A number that the patients must bring: what it means, and an example to show the model with."""
+
+    means: str
+    example: float
+
+
+@dataclass(frozen=True)
+class PrintedSpread:
+    """Between-subject variability of one equation as it was printed; `printed_as` says which number that is.
+
+    omega  SD of the random effect; `form` (`variability.FORMS`) says how the effect acts
+    """
+
+    value: float
+    printed_as: str
+    evidence: str
+    omega: float
+    form: str = "lognormal"
 
 
 @dataclass(frozen=True)
@@ -95,11 +128,12 @@ def read_built_on(top: Section) -> BuiltOn:
     count = section.whole_number("count")
     ranges = {name: found for name, kind in _RANGES.items() if (found := section.range(name, kind)) is not None}
     sex = section.text("sex", among=_SEXES)
-    longest = section.quantity("longest_infusion", "time")
+    doses, longest = section.text("doses") or "", section.quantity("longest_infusion", "time")
+    largest = section.measure("largest_total", ("mass", "mass_per_kg"))
     sampling = section.text("sampling", among=SAMPLING) or ""
     evidence, note = section.text("evidence") or "", section.text("note") or ""
     section.close()
-    return BuiltOn(people, count, ranges, sex, longest, sampling, evidence, note)
+    return BuiltOn(people, count, ranges, sex, doses, longest, largest, sampling, evidence, note)
 
 
 def read_measured_in(top: Section) -> dict[str, object]:
@@ -111,13 +145,16 @@ def read_measured_in(top: Section) -> dict[str, object]:
         "evidence": section.text("evidence"),
         "note": section.text("note"),
     }
+    if found["fluid"] == "unbound plasma" and found["fraction_unbound"] is not None:
+        allowed = "none: the concentrations are unbound already, and the fraction is never applied twice"
+        section.problem("fraction_unbound", f"{found['fraction_unbound']:g}", allowed)
     section.close()
     return {key: value for key, value in found.items() if value is not None}
 
 
-def read_reference_person(top: Section) -> dict[str, np.ndarray]:
-    """[reference_person]: attribute -> array of one, empty where the sheet has none."""
-    section = top.section("reference_person")
+def read_person(top: Section, key: str) -> dict[str, np.ndarray]:
+    """[reference_person] or [example_person]: attribute -> array of one, empty where the sheet has none."""
+    section = top.section(key)
     sex = section.text("sex", among=_SEXES)
     person = {} if sex is None else {"sex": np.array([sex])}
     for name, kind in _RANGES.items():
@@ -142,6 +179,20 @@ def read_needs(top: Section) -> dict[str, str]:
     return switches
 
 
+def read_numbers(top: Section, switches: Collection[str]) -> dict[str, NeededNumber]:
+    """[needs_numbers]: attribute of the sheet's own -> what it means, and an example."""
+    section = top.section("needs_numbers")
+    numbers = {}
+    for name, entry in section.entries('{ means = "days since the burn", example = 10 }'):
+        means, example = entry.text("means", needed=True), entry.number("example", -np.inf, np.inf, needed=True)
+        entry.close()
+        if name in ATTRIBUTES or name in EQUATIONS or name in switches or not name.isidentifier():
+            section.problem(name, "no name for an attribute of its own", "a name of its own, such as days_after_burn")
+        elif means is not None and example is not None:
+            numbers[name] = NeededNumber(means, example)
+    return numbers
+
+
 def read_effect(top: Section) -> EffectModel | None:
     """[effect]: what the effect is called and which equations it uses."""
     section = top.section("effect")
@@ -162,38 +213,47 @@ def read_effect(top: Section) -> EffectModel | None:
     return EffectModel(unit=str(unit), steepness_above=above, **texts, **parts)
 
 
-def read_spread(top: Section, equations: Collection[str]) -> tuple[dict[str, float], str, dict[tuple[str, str], float]]:
-    """[spread] and [spread_together]: omegas, the note, correlations."""
+def read_spread(
+    top: Section, equations: Collection[str]
+) -> tuple[dict[str, PrintedSpread], str, dict[tuple[str, str], float]]:
+    """[spread] and [spread_together]: what was printed, the note, correlations."""
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
-    usual = section.text("printed_as", among=_TO_OMEGA)
-    omegas = {}
+    usual = section.text("printed_as", among=_TO_SD["lognormal"])
+    printed = {}
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
-        omega = _read_omega(entry, usual)
+        spread = read_one_spread(entry, usual)
         if name not in equations:
             section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
-        elif omega is not None:
-            omegas[name] = omega
+        elif spread is not None:
+            printed[name] = spread
         entry.close()
-    if "spread" in top.table and published and not omegas:
+    if "spread" in top.table and published and not printed:
         section.problem("published", "no spread given", "values, or published = false")
-    if not published and omegas:
+    if not published and printed:
         section.problem("published", "false, yet values are given", "published = true")
-    return omegas, note, _read_together(top, omegas)
+    return printed, note, _read_together(top, {name: spread.omega for name, spread in printed.items()})
 
 
-def _read_omega(entry: Section, usual: str | None) -> float | None:
-    """One spread as omega, whatever way it was printed."""
-    advice = "write 0.26 for 26 %"
-    value = entry.number("value", 0, _LARGEST_SPREAD, needed=True, advice=advice)
-    printed_as = entry.text("printed_as", among=_TO_OMEGA) or usual
-    entry.text("evidence")
+def read_one_spread(entry: Section, usual: str | None = None) -> PrintedSpread | None:
+    """One spread, whatever way it was printed.
+
+    usual  how a lognormal spread was printed where the entry does not say
+    """
+    distribution = entry.text("distribution", among=_TO_SD) or "lognormal"
+    ways = _TO_SD[distribution]
+    printed_as = entry.text("printed_as", among=ways) or (usual if distribution == "lognormal" else None)
+    own_unit = printed_as in ("sd", "variance")
+    advice = "" if own_unit else "write 0.26 for 26 %"
+    value = entry.number("value", 0, _LARGEST_IN_OWN_UNIT if own_unit else _LARGEST_SPREAD, needed=True, advice=advice)
+    evidence = entry.text("evidence") or ""
     entry.text("note")
     if printed_as is None:
-        entry.problem("printed_as", "missing", ", ".join(_TO_OMEGA))
+        entry.problem("printed_as", "missing", ", ".join(ways))
         return None
-    return None if value is None else float(_TO_OMEGA[printed_as](value))
+    to_sd, form = ways[printed_as]
+    return None if value is None else PrintedSpread(value, printed_as, evidence, float(to_sd(value)), form)
 
 
 def _read_together(top: Section, omegas: dict[str, float]) -> dict[tuple[str, str], float]:

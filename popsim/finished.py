@@ -33,7 +33,8 @@ class FinishedModel:
 class FinishedRun:
     """What a run was about, and its tables by name; a table that the run did not leave is missing.
 
-    courses  the first few patients' courses where the run kept them, else None
+    resampled  whether its patients are people of a list drawn again and again, who are no independent draws
+    courses    the first few patients' courses where the run kept them, else None
     """
 
     title: str
@@ -43,6 +44,7 @@ class FinishedRun:
     until_min: float
     models: tuple[FinishedModel, ...]
     targets: tuple[Target, ...]
+    resampled: bool
     tables: dict[str, pd.DataFrame]
     courses: pd.DataFrame | None = None
 
@@ -60,6 +62,7 @@ def finished_run(record: dict[str, Any], tables: dict[str, pd.DataFrame]) -> Fin
             models=tuple(FinishedModel(model["name"], model["effect"] and EffectModel(**model["effect"]))
                          for model in record["models"]),
             targets=tuple(_target(target) for target in study["targets"]),
+            resampled=study["population"]["source"] == "list" and study["population"]["count"] is not None,
             tables=tables,
         )
     except (KeyError, TypeError, ValueError) as error:

@@ -46,11 +46,12 @@ MAP_COLUMNS = ("model", "protocol", "target", "age_from", "age_to", "weight_from
 def attainment_map(study: Study, tally: Tally) -> pd.DataFrame:
     """One row per model, protocol, target and cell of age (years) and total weight (kg) that holds patients.
 
-    A cell takes in its lower limits; the last ones are open (inf). Failed patients count as not attained.
+    A cell takes in its lower limits; the last ones are open (inf). Failed patients count as not attained. No intervals
+    for a list that is drawn from again and again: a cell may hold one person many times.
     """
     counts, rows = tally.population, []
     for (m, p, t), attained in counts.attained.items():
-        low, high = wilson(attained, counts.cells)
+        low, high = wilson(attained, np.where(tally.clusters is None, counts.cells, 0))
         for i, j in zip(*np.nonzero(counts.cells), strict=True):
             n = int(counts.cells[i, j])
             known = bool(range_names(study.models[m]))

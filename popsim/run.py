@@ -17,6 +17,7 @@ import numpy as np
 from covariates.catalogue import attributes_needed
 from popsim import solve
 from popsim.effect import effect_at
+from popsim.flagged import beyond_total, flag_counts
 from popsim.groups import members as group_members
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
@@ -54,7 +55,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid))
+                tally = tally or Tally.empty(study, len(grid), drawn.origins)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -73,7 +74,8 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
     total, *others = [tally for tally in tallies if tally is not None]
     for other in others:
         total.merge(other)
-    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads)
+    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads,
+                    drawn.share_eligible)
 
 
 class _Queue:
@@ -115,6 +117,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
     cell = tally.population.add_patients(patients.attributes, members)
+    if tally.clusters is not None:
+        tally.clusters.add_people(patients.origins, members)
+    tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, (_, received) in enumerate(given):
@@ -133,11 +138,14 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if model.built_on.longest_infusion_min is not None:
                 tally.long_infusion[m, p] += members.T @ (
                     received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
+            tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
             for t in range(len(study.targets)):
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
                 tally.population.add_judged((m, p, t), cell, judged[p, t])
+                if tally.clusters is not None:
+                    tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
             counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
             kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)
             if keep_courses:

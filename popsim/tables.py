@@ -10,11 +10,13 @@ import pandas as pd
 from popsim import solve
 from popsim.compare import against_reference, protocol_pairs
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
+from popsim.flagged import flag_notes
 from popsim.population_tables import POPULATION_TABLES
 from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
 FEW_PATIENTS = 400
+RARE_SHARE = 0.1
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
 PERCENTILE_NAMES = ("p05", "p25", "p50", "p75", "p95")
 
@@ -27,7 +29,8 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     """
     rows = []
     for (m, p, t), counts in tally.targets.items():
-        low, high = wilson(counts.attained, tally.patients)
+        worth = tally.worth((m, p, t))
+        low, high = wilson(counts.attained * worth, tally.patients * worth)
         for g, group in enumerate(study.group_names):
             n, failed = int(tally.patients[g]), int(counts.failed[g])
             everyone, judged = n or math.nan, (n - failed) * ONE or math.nan
@@ -41,6 +44,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "ever_far_above": int(counts.far_above[g]) / everyone,
                 "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
+                "total_beyond_model": int(tally.large_total[m, p][g]) / everyone,
                 "note": _note(n, failed)})
     return pd.DataFrame(rows)
 
@@ -144,8 +148,12 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
     notes = list(study.warnings)
     for name, factor in study.population.scale.items():
         notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
+    if findings.share_eligible < RARE_SHARE and study.population.source in ("survey", "described"):
+        notes.append(f"These patients are rare: {100 * findings.share_eligible:.2g} % of those within the limits "
+                     "of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
+    notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "
                      f"({solve.STATUS[code]}): not attained.")

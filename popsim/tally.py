@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.clusters import ClusterTally
 from popsim.population_tally import PopulationTally
 from popsim.records import Judged, Received, Study
 
@@ -89,15 +90,18 @@ class Tally:
     outside: dict[int, np.ndarray]  # model -> (groups,)
     beyond: dict[tuple[int, str], np.ndarray]  # model, attribute -> (groups,)
     long_infusion: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
+    large_total: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
     targets: dict[tuple[int, int, int], TargetTally]  # model, protocol, target
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     population: PopulationTally
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
+    flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int) -> Tally:
+    def empty(cls, study: Study, times: int, origins: int = 0) -> Tally:
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -115,17 +119,20 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
+        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
             beyond={(m, name): zeros() for m in models for name in range_names(study.models[m])},
             long_infusion={(m, p): zeros() for m in models for p in protocols},
+            large_total={(m, p): zeros() for m in models for p in protocols},
             targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
             pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
                    for m in models for t in targets for a, b in combinations(protocols, 2)},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
             population=PopulationTally.empty(study),
+            clusters=clusters,
         )
 
     def merge(self, other: Tally) -> None:
@@ -134,6 +141,21 @@ class Tally:
             mine += theirs
         for key, count in other.statuses.items():
             self.statuses[key] = self.statuses.get(key, 0) + count
+        self.add_flags(other.flags)
+
+    def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
+        for flag, count in counts.items():
+            self.flags[flag] = self.flags.get(flag, 0) + count
+
+    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
+        """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
+        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+
+    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
+        """Likewise for the difference of protocols b and a in one group."""
+        pair = self.pairs[m, t, a, b]
+        unequal = int(pair.only_a[group] + pair.only_b[group])
+        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
 
     def add_statuses(self, model: int, status: np.ndarray) -> None:
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
@@ -152,6 +174,7 @@ class Findings:
     rows_skipped: int
     seconds: float
     threads: int
+    share_eligible: float = float("nan")  # of the people within the limits of age and sex
 
 
 def range_names(model: DrugModel) -> list[str]:
@@ -162,13 +185,15 @@ def range_names(model: DrugModel) -> list[str]:
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
     found = [tally.patients, tally.overlap, *tally.population.arrays()]
-    for table in (tally.outside, tally.beyond, tally.long_infusion):
+    for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
     for table in (tally.targets, tally.pairs):
         for entry in table.values():
             found += vars(entry).values()
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
+    if tally.clusters is not None:
+        found += tally.clusters.arrays()
     return found
 
 

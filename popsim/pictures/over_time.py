@@ -9,6 +9,7 @@ from matplotlib.axes import Axes
 
 from popsim.drawing import MARGIN, WIDTH, Page, label_spots, plain, share_axis, strokes, time_axis, wrapped
 from popsim.estimate import wilson
+from popsim.finished import FinishedRun
 from popsim.headlines import range_headline
 from popsim.pictures.shown import (
     INTERVALS_SAY, Picture, Shown, finish, group_label, head, mark_window, no_result, thinned, told_by_group,
@@ -52,8 +53,14 @@ def over_time(shown: Shown, path: Path) -> Picture:
     told = told_by_group(shown, lambda row: f"{percent(row.time_in_range)} %")
     return finish(page, path, title, f"Lines over time from 0 to {clock(run.until_min)}: share of patients in range, "
                   f"from 0 to 100 %. Mean over the window ({window(shown.target)}): {told}.",
-                  f"Bands: {INTERVALS_SAY} {window_said(shown.target)}",
+                  f"{_bands_say(run)} {window_said(shown.target)}",
                   "Lines: share of patients in range at each moment. ")
+
+
+def _bands_say(run: FinishedRun) -> str:
+    if run.resampled:
+        return "No interval bands: people of a list drawn again and again are no independent draws."
+    return f"Bands: {INTERVALS_SAY}"
 
 
 def _lines(shown: Shown, group: str) -> dict[int, tuple[np.ndarray, ...]]:
@@ -65,7 +72,7 @@ def _lines(shown: Shown, group: str) -> dict[int, tuple[np.ndarray, ...]]:
             continue
         course = thinned(course)
         time, share, solved = course["time_min"].to_numpy(), course["in_range"].to_numpy(), row.patients - row.failed
-        low, high = wilson(np.rint(share * solved), np.full(len(time), solved))
+        low, high = wilson(np.rint(share * solved), np.full(len(time), 0 if shown.run.resampled else solved))
         lines[index] = (time, share, low, high)
     return lines
 

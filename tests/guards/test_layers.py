@@ -12,14 +12,19 @@ POPSIM = Path(popsim.__file__).parent
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
-    "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
-    "population_tally", "tally", "run", "compare", "population_tables", "tables", "words", "ward_card", "provenance", "output", "finished", "headlines",
+    "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
+    "patients.draw", "study_salvage", "study_file", "study_described", "study_population",
+    "study_protocols", "study_targets", "study",
+    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate", "clusters",
+    "population_tally", "tally", "people", "run", "compare", "population_tables", "tables", "words", "ward_card", "provenance", "output",
+    "finished", "headlines",
     "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
     "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
-    "report", "terminal", "check_text", "progress",
-    "commands.new", "commands.check", "commands.judge", "commands.draw", "cli",
+    "patient_pictures", "report", "terminal", "check_text", "progress",
+    "derived", "model_text", "person_text",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw",
+    "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
