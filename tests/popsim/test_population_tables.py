@@ -10,6 +10,7 @@ import pytest
 
 from covariates.catalogue import compute
 from popsim.cli import run as popsim_run
+from popsim.pictures.album import draw_all
 from popsim.population_tally import TENTHS, tenths_quantile
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
@@ -98,3 +99,16 @@ def test_what_lies_beyond_the_counts_is_no_number():
     assert np.isnan(tenths_quantile(counts, 0.5))
     counts[[0, 1 + 705, TENTHS + 2]] = 1
     assert [tenths_quantile(counts, share) for share in (0.3, 0.5, 0.9)] == [-np.inf, 70.5, np.inf]
+
+
+def test_people_drawn_again_and_again_give_no_intervals_by_cell_or_moment(tmp_path):
+    population = cases.people(tmp_path, ["female,30,60,165", "male,70,85,175"]) + "\ncount = 600"
+    study = cases.study(tmp_path, population=population, protocols=ADJUSTED, groups={})
+    findings, tables = cases.judged(study)
+    cells = tables["attainment_map"]
+    assert cells["patients"].sum() == 2 * 600 and cells[["attained_low", "attained_high"]].isna().all(axis=None)
+    run = cases.finished(study, findings, tables)
+    assert run.resampled
+    pictures = draw_all(run, tmp_path)
+    over_time = next(one for one in pictures if one.file_name == "attainment_over_time.svg")
+    assert "No interval bands: people of a list drawn again and again" in over_time.caption
