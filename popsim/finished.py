@@ -18,6 +18,7 @@ NEEDED = ("attainment", "over_time", "comparison")
 OPTIONAL = ("people", "attainment_map", "body_size", "mic_distribution")
 TEXT_COLUMNS = ("model", "protocol", "group", "target", "protocol_a", "protocol_b", "reference", "verdict", "better",
                 "note", "measure", "sex")
+AGAIN = "judge the study again"
 COURSES_SHOWN = 5  # patients whose own courses a picture may show
 
 
@@ -66,8 +67,13 @@ def finished_run(record: dict[str, Any], tables: dict[str, pd.DataFrame]) -> Fin
             tables=tables,
         )
     except (KeyError, TypeError, ValueError) as error:
-        raise ProblemsError(Problem("record.json", f"no usable {error}", "the record of a run by this version of popsim",
-                                    "judge the study again")) from None
+        raise ProblemsError(Problem("record.json", f"no usable {error}", "the record of a run by this version",
+                                    AGAIN)) from None
+
+
+def own_site(target: Target) -> bool:
+    """Whether a target looks at an effect site, which is another one in each model: never compared between models."""
+    return target.quantity == "effect_site" or getattr(getattr(target, "response", None), "follows", "") == "effect_site"
 
 
 def _target(written: dict[str, Any]) -> Target:
@@ -85,15 +91,14 @@ def read_run(folder: Path) -> FinishedRun:
     kind = "parquet" if (folder / "attainment.parquet").is_file() else "csv"
     missing = [f"{name}.{kind}" for name in NEEDED if not (folder / f"{name}.{kind}").is_file()]
     if missing:
-        raise ProblemsError(Problem(str(folder), f"no {', '.join(missing)}", "a folder that popsim judge left, complete",
-                                    "judge the study again"))
+        raise ProblemsError(Problem(str(folder), f"no {', '.join(missing)}", "a folder as popsim judge left it", AGAIN))
     try:
         record = json.loads((folder / "record.json").read_text(encoding="utf-8"))
         tables = {name: _table(folder / f"{name}.{kind}") for name in (*NEEDED, *OPTIONAL)
                   if (folder / f"{name}.{kind}").is_file()}
     except (json.JSONDecodeError, UnicodeDecodeError, pd.errors.ParserError, pd.errors.EmptyDataError) as error:
         raise ProblemsError(Problem(str(folder), f"a file that cannot be read: {error}", "files as popsim left them",
-                                    "judge the study again")) from None
+                                    AGAIN)) from None
     run = finished_run(record, tables)
     return replace(run, courses=_first_courses(folder / "courses.csv", run))
 

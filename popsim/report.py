@@ -18,6 +18,7 @@ from markupsafe import Markup
 
 from covariates.sheet import DrugModel
 from covariates.units import to_unit
+from popsim.finished import own_site
 from popsim.headlines import has_headline, rows_where
 from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.population_tally import LEAN
@@ -204,8 +205,8 @@ def _model(model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
     limits = [f"{_called(name)} {limit.text}" for name, limit in built_on.ranges.items()]
     if built_on.longest_infusion_min is not None:
         limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
-    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"], "forms": found["spread_not_lognormal"],
-            "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
+    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
+            "forms": found["spread_not_lognormal"], "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
 
 
 def _left_out(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any]) -> dict[str, Any]:
@@ -243,8 +244,8 @@ def _sensitivity(study: Study, tables: dict[str, pd.DataFrame], pictures: list[d
     if several:
         lines.append("The same patients and protocols under each model. What the models differ by is no interval: more "
                      "models could lie further apart.")
-    if several and any(target.quantity == "effect_site" for target in study.targets):
-        lines.append("Effect sites of different models are different sites: no spread between models is given for them.")
+    if several and any(own_site(target) for target in study.targets):
+        lines.append("Effect sites of different models are different sites: no spread between models is given.")
     changed = [] if asked is None else [row for row in asked.itertuples() if row.same_answer == "no"]
     lines += [f'The answer changes in the group "{row.group}", {row.asked} ({row.target}).' for row in changed]
     return {"lines": lines, "pictures": pictures,
@@ -254,7 +255,7 @@ def _sensitivity(study: Study, tables: dict[str, pd.DataFrame], pictures: list[d
 
 def _under_models(study: Study, attainment: pd.DataFrame, target: Target) -> dict[str, Any]:
     """Attainment of one target under each model, with the points between the lowest and the highest."""
-    rows, spread = [], target.quantity != "effect_site"
+    rows, spread = [], not own_site(target)
     for group in study.group_names:
         for protocol in study.protocols:
             found = rows_where(attainment, target=target.name, group=group, protocol=protocol.name)

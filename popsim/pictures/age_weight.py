@@ -16,7 +16,7 @@ from popsim.pictures.shown import ROOM, Picture, Shown, finish, head
 
 FEW_IN_CELL = 50
 MOST_OUTSIDE = 0.5
-SHADES = LinearSegmentedColormap.from_list("attained", ["#f2f6fa", "#6aaed6", "#08415c"])  # lighter to darker in grey too
+SHADES = LinearSegmentedColormap.from_list("attained", ["#f2f6fa", "#6aaed6", "#08415c"])  # darker and darker in grey
 HATCH = "#a6a6a6"
 DARK = 0.725  # above it letters are white, below it black: each stands out at least 4.5 to 1
 COLUMNS, GAP, AXIS_ROOM, CELL_HEIGHT = 2, 0.3, 0.62, 0.2
@@ -27,7 +27,8 @@ def age_weight(shown: Shown, path: Path) -> Picture:
     cells = shown.rows("attainment_map")
     title = _title(cells, shown)
     page = Page()
-    head(page, title, f"Share of each cell's patients who attain the target (%), by age and total body weight. {shown.about}")
+    head(page, title, f"Share of each cell's patients who attain the target (%), by age and total body weight. "
+         f"{shown.about}")
     ages, weights = (sorted({*cells[f"{name}_from"]}) for name in ("age", "weight"))
     width = (ROOM - COLUMNS * AXIS_ROOM - GAP) / COLUMNS
     height = CELL_HEIGHT * len(weights)
@@ -42,8 +43,8 @@ def age_weight(shown: Shown, path: Path) -> Picture:
             axes = page.axes(MARGIN + AXIS_ROOM + column * (width + GAP + AXIS_ROOM), page.top, width, height)
             _map(axes, rows_where(cells, protocol=protocol), ages, weights)
         page.top += height + 0.58
-    foot = (f"Number and shade: patients of the cell who attain the target, %. Faded: fewer than {FEW_IN_CELL} patients. "
-            f"Hatched: at least half of the cell's patients lie outside the people the model was built on. Empty: no "
+    foot = (f"Number and shade: patients of the cell who attain the target, %. Faded: fewer than {FEW_IN_CELL} "
+            f"patients. Hatched: at least half of the cell's patients lie outside the people the model was built on. Empty: no "
             f"patients. Counts and intervals: attainment_map.csv.")
     return finish(page, path, title, f"A table of cells, age by weight, shaded by attainment. {title}.", foot)
 

@@ -7,7 +7,7 @@ from collections.abc import Iterator
 from pathlib import Path
 
 from popsim.drawing import house_style
-from popsim.finished import FinishedRun
+from popsim.finished import FinishedRun, own_site
 from popsim.pictures.age_weight import age_weight
 from popsim.pictures.bands import bands
 from popsim.pictures.body_size import body_size, shown_rows
@@ -57,8 +57,8 @@ def _over_mic(run: FinishedRun, folder: Path, kind: str) -> Iterator[Picture]:
 
 
 def _whole_run(run: FinishedRun, folder: Path, kind: str) -> Iterator[Picture]:
-    """Models against each other, except where each has an effect site of its own; body size, where doses depend on it."""
-    comparable = [target for target in run.targets if target.quantity != "effect_site" and not _family(target)]
+    """Models against each other, except in the effect site; body size, where doses depend on it."""
+    comparable = [target for target in run.targets if not own_site(target) and not _family(target)]
     for number, target in enumerate(comparable if len(run.models) > 1 else (), 1):
         ending = f"_{number}" * (len(comparable) > 1)
         yield models(run, target, folder / f"models_compared{ending}.{kind}")

@@ -8,7 +8,7 @@ import numpy as np
 import pandas as pd
 from matplotlib.patches import Rectangle
 
-from popsim.drawing import FAINT, INK, Page, strokes
+from popsim.drawing import INK, Page, strokes
 from popsim.headlines import rows_where
 from popsim.pictures.grid import Panel, panels
 from popsim.pictures.shown import (
@@ -22,20 +22,19 @@ BANDS = (("p05", "p95", 0.2), ("p25", "p75", 0.38))
 def bands(shown: Shown, path: Path) -> Picture:
     """Median, middle half and middle nine tenths of the patients at each moment, on one scale."""
     name, unit = quantity_shown(shown)
-    title, told = _title(shown), _told(shown)
     page, top, courses = Page(), _top(shown), _courses(shown)
-    head(page, title, f"{name.capitalize() if name.islower() else name} over time: percentiles over patients at each "
-         f"moment. {shown.about}")
-    for panel in panels(page, shown, f"{name.capitalize() if name.islower() else name} ({unit})" if unit else name):
+    head(page, _title(shown), f"{name} over time: percentiles over patients at each moment. {shown.about}")
+    for panel in panels(page, shown, f"{name} ({unit})" if unit else name):
         panel.axes.set(ylim=(0, top))
         panel.axes.locator_params(axis="y", nbins=4)
         panel.axes.tick_params(axis="y", length=0, pad=4)
         _draw(panel, shown, courses)
-    foot = "Line: median; darker band: 25 to 75 %; pale band: 5 to 95 % of patients at each moment, not one patient's course."
-    foot += _box_said(shown)
+    foot = ("Line: median; darker band: 25 to 75 %; pale band: 5 to 95 % of patients at each moment, not one patient's "
+            f"course.{_box_said(shown)}")
     if courses is not None:
         foot += f" Thin lines among all patients: the first {courses['patient'].nunique()} patients themselves."
-    return finish(page, path, title, f"Bands over time from 0 to {clock(shown.run.until_min)}. {told}", foot)
+    told = f"Bands over time from 0 to {clock(shown.run.until_min)}. {_told(shown)}"
+    return finish(page, path, _title(shown), told, foot)
 
 
 def _draw(panel: Panel, shown: Shown, courses: pd.DataFrame | None) -> None:
@@ -90,10 +89,10 @@ def _top(shown: Shown) -> float:
 
 def _courses(shown: Shown) -> pd.DataFrame | None:
     """The first few patients' courses of the quantity drawn, where the run kept them."""
-    name = {"unbound_plasma": None, "response": None}.get(shown.target.quantity, shown.target.quantity)
-    if shown.run.courses is None or name is None:
+    column = {"Plasma": "plasma", "Effect site": "effect_site"}.get(quantity_shown(shown)[0])
+    column = "effect" if shown.target.quantity == "effect" else column
+    if shown.run.courses is None or column is None:
         return None
-    column = name if name in ("effect_site", "effect") else "plasma"
     rows = rows_where(shown.run.courses, model=shown.model.name)
     return rows.assign(value=rows[column])
 
@@ -121,7 +120,7 @@ def _title(shown: Shown) -> str:
     kept = shown.protocols if len(shown.protocols) < 4 else (shown.protocols[0], shown.protocols[-1])
     said = "; ".join(_at_end(shown, "all", protocol) + (f' with "{protocol}"' if several else "") for protocol in kept)
     unit = f"{unit}, " if unit else ""
-    return f"{name[0].upper()}{name[1:]} at {clock(_end(shown))}, {unit}median (5 to 95 % of all patients): {said}"
+    return f"{name} at {clock(_end(shown))}, {unit}median (5 to 95 % of all patients): {said}"
 
 
 def _told(shown: Shown) -> str:

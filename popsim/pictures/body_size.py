@@ -30,8 +30,8 @@ def body_size(run: FinishedRun, path: Path) -> Picture:
     """A panel for each sex: medians with the middle nine tenths, each line named at its end."""
     rows = shown_rows(run)
     title, page = _title(rows), Page()
-    head(page, title, f"Measures of body size against total body weight, in the study's patients ({FEW_IN_BIN} or more in "
-         f"each 10 kg)")
+    head(page, title, f"Measures of body size against total body weight, in the study's patients ({FEW_IN_BIN} or more "
+         f"in each 10 kg)")
     sexes = [sex for sex in WORDS if (rows["sex"] == sex).any()]
     width = (ROOM - len(sexes) * (AXIS_ROOM + LABEL_ROOM) - GAP * (len(sexes) - 1)) / len(sexes)
     page.top += 0.24
@@ -41,9 +41,9 @@ def body_size(run: FinishedRun, path: Path) -> Picture:
         page.text(left, page.top - 0.24, WORDS[sex], 9, weight="bold")
         _panel(axes, rows_where(rows, sex=sex), rows, width)
     page.top += HEIGHT + 0.5
-    foot = ("Lines: median of the patients of each 10 kg of total weight; bands: 5 to 95 %. Grey line: total weight itself. "
-            "Lean, ideal and adjusted weight in adults only. Numbers: body_size.csv.")
-    return finish(page, path, title, f"Lines that rise with total weight, more slowly than it does. {_told(rows)}", foot)
+    foot = ("Lines: median of the patients of each 10 kg of total weight; bands: 5 to 95 %. Grey line: total weight "
+            "itself. Lean, ideal and adjusted weight in adults only. Numbers: body_size.csv.")
+    return finish(page, path, title, f"Lines over total weight. {_told(rows)}", foot)
 
 
 def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame, width: float) -> None:
@@ -72,8 +72,9 @@ def _panel(axes: Axes, rows: pd.DataFrame, every: pd.DataFrame, width: float) ->
         lines = wrapped(_words(name), LABEL_ROOM - 0.42, LABEL_SIZE, most_lines=2)
         middle = max(end, floor + step * len(lines) / 2)
         floor = middle + step * len(lines) / 2
-        axes.plot([1 + inches / width for inches in (0.06, 0.2, 0.34)], [middle] * 3, color=look.colour, linestyle=look.dash, marker=look.marker,
-                  markersize=3.5, markevery=[1], transform=axes.get_yaxis_transform(), clip_on=False)
+        axes.plot([1 + inches / width for inches in (0.06, 0.2, 0.34)], [middle] * 3, color=look.colour,
+                  linestyle=look.dash, marker=look.marker, markersize=3.5, markevery=[1],
+                  transform=axes.get_yaxis_transform(), clip_on=False)
         axes.annotate("\n".join(lines), (1 + 0.34 / width, middle), xycoords=axes.get_yaxis_transform(), xytext=(4, 0),
                       textcoords="offset points", fontsize=LABEL_SIZE, va="center", annotation_clip=False)
 

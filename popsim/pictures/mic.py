@@ -10,7 +10,7 @@ from matplotlib.axes import Axes
 
 from popsim.drawing import FAINT, MARGIN, RULE, Page, label_spots, plain, share_axis, strokes, wrapped
 from popsim.finished import FinishedModel, FinishedRun
-from popsim.headlines import has_headline, rows_where
+from popsim.headlines import NO_HEADLINE, has_headline, rows_where
 from popsim.pictures.shown import INTERVALS_SAY, ROOM, Picture, finish, group_label, head
 from popsim.words import percent
 
@@ -53,8 +53,8 @@ def mic(run: FinishedRun, model: FinishedModel, family: str, rows: pd.DataFrame,
 def _lines(run: FinishedRun, rows: pd.DataFrame) -> dict[int, pd.DataFrame]:
     """Protocol's place -> its rows, ascending by MIC, those without a result left out."""
     fine = rows[[has_headline(row) for row in rows.itertuples()]]
-    lines = {index: rows_where(fine, protocol=protocol).sort_values("mic") for index, protocol in enumerate(run.protocols)}
-    return {index: line for index, line in lines.items() if len(line)}
+    lines = [rows_where(fine, protocol=protocol).sort_values("mic") for protocol in run.protocols]
+    return {index: line for index, line in enumerate(lines) if len(line)}
 
 
 def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: pd.DataFrame | None) -> None:
@@ -75,8 +75,8 @@ def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: pd.DataFr
         look = strokes(index)
         axes.fill_between(line["mic"], line["attained_low"], line["attained_high"], color=look.colour, alpha=0.22,
                           linewidth=0)
-        axes.plot(line["mic"], line["attained"], color=look.colour, linestyle=look.dash, marker=look.marker, markersize=4,
-                  clip_on=False, zorder=3)
+        axes.plot(line["mic"], line["attained"], color=look.colour, linestyle=look.dash, marker=look.marker,
+                  markersize=4, clip_on=False, zorder=3)
 
 
 def _title(run: FinishedRun, rows: pd.DataFrame) -> str:
@@ -86,5 +86,7 @@ def _title(run: FinishedRun, rows: pd.DataFrame) -> str:
         reached = np.cumprod(line["attained"].to_numpy() >= WANTED).sum()
         with_it = f' with "{run.protocols[index]}"' if len(run.protocols) > 1 else ""
         said.append(f"up to {line['mic'].iloc[reached - 1]:g} mg/L{with_it}" if reached else f"at no MIC{with_it}")
+    if not said:
+        return NO_HEADLINE
     shown = said if len(said) < 4 else [*said[:3], "..."]
-    return f"{percent(WANTED, 0)} % or more of all patients attain the target {', '.join(shown) or 'nowhere: no headline'}"
+    return f"{percent(WANTED, 0)} % or more of all patients attain the target {', '.join(shown)}"

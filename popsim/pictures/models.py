@@ -22,7 +22,8 @@ def models(run: FinishedRun, target: Target, path: Path) -> Picture:
     rows = rows_where(run.tables["attainment"], target=target.name)
     title, page = _title(run, rows), Page()
     names = [model.name for model in run.models]
-    head(page, title, f"Share of patients who attain the target under each published model. Target: {target_line(target)}.")
+    head(page, title, f"Share of patients who attain the target under each published model. Target: "
+         f"{target_line(target)}.")
     page.key(names)
     lines = [(group, protocol) for group in run.group_names for protocol in run.protocols]
     left, width = MARGIN + NAME_WIDTH, ROOM - NAME_WIDTH - SPREAD_WIDTH
@@ -50,8 +51,8 @@ def models(run: FinishedRun, target: Target, path: Path) -> Picture:
         f"{row.model} {percent(row.attained) if has_headline(row) else '-'} %"
         for row in rows_where(rows, group=group, protocol=protocol).itertuples()) for group, protocol in lines)
     return finish(page, path, title, f"One dot for each model on a scale from 0 to 100 %. {told}.",
-                  f"Grey line: from the lowest to the highest model. Bars: {INTERVALS_SAY} The spread between models says "
-                  f"more, and still not all.")
+                  f"Grey line: from the lowest to the highest model. Bars: {INTERVALS_SAY} The spread between models "
+                  f"says more, and still not all.")
 
 
 def _line(axes: Axes, rows: pd.DataFrame, at: float) -> None:

@@ -118,8 +118,9 @@ def quantity_shown(shown: Shown) -> tuple[str, str]:
     if target.quantity == "effect" and shown.model.effect is not None:
         return shown.model.effect.name, shown.model.effect.unit
     if target.quantity == "response":
-        return "probability of response", ""
-    name = {"effect_site": "effect site", "unbound_plasma": "unbound plasma"}.get(target.quantity, "plasma")
+        return "Probability of response", ""
+    unbound = "Unbound plasma" if target.quantity.startswith("unbound") else "Plasma"
+    name = "Effect site" if target.quantity == "effect_site" else unbound
     return name, target.unit if target.unit in UNITS["concentration"] else "mg/L"
 
 

@@ -5,8 +5,8 @@ const number = text => {
   return found ? Number(found[2]) * (found[1] === "<" ? 0.999 : 1) + (found[1] === ">" ? 1e-9 : 0) : null;
 };
 const sorted = (rows, column, down) => {
-  const cells = rows.map(row => row.cells[column] && row.cells[column].colSpan === 1 ? row.cells[column].textContent.trim() : "-");
-  const numeric = cells.some(text => number(text) !== null) && cells.every(text => text === "-" || number(text) !== null);
+  const cells = rows.map(row => row.cells[column]).map(cell => cell && cell.colSpan === 1 ? cell.textContent.trim() : "-");
+  const numeric = cells.every(text => text === "-" || number(text) !== null);
   const keys = cells.map(text => text === "-" ? null : numeric ? number(text) : text.toLowerCase());
   const order = rows.map((_, place) => place).sort((a, b) => {
     if (keys[a] === null || keys[b] === null) return (keys[a] === null) - (keys[b] === null) || a - b;

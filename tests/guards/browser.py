@@ -1,4 +1,4 @@
-"""A headless Chromium spoken to over its debugging pipe, for the tests of the report: nothing but the standard library."""
+"""A headless Chromium spoken to over its debugging pipe, for the tests of the report; the standard library alone."""
 
 from __future__ import annotations
 

@@ -22,7 +22,8 @@ STUDIES = ("remifentanil_fixed_rate", "propofol_body_size")
 # Contrast of every text with what stands behind it. Source: WCAG 2.2, 1.4.3 and the definition of contrast ratio.
 PALE_TEXTS = """(() => {
   const parts = colour => colour.match(/[\\d.]+/g).map(Number);
-  const luminance = rgb => rgb.slice(0, 3).map(v => v / 255).map(v => v <= 0.04045 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4)
+  const linear = v => v <= 0.04045 ? v / 12.92 : ((v + 0.055) / 1.055) ** 2.4;
+  const luminance = rgb => rgb.slice(0, 3).map(v => linear(v / 255))
     .reduce((sum, v, i) => sum + v * [0.2126, 0.7152, 0.0722][i], 0);
   const behind = element => {
     for (let e = element; e; e = e.parentElement) {
@@ -35,20 +36,21 @@ PALE_TEXTS = """(() => {
   let seen = 0;
   for (const element of document.querySelectorAll("main *:not(svg *)")) {
     if (![...element.childNodes].some(node => node.nodeType === 3 && node.textContent.trim())) continue;
-    const style = getComputedStyle(element), pair = [luminance(parts(style.color)), luminance(behind(element))].sort((a, b) => b - a);
-    const ratio = (pair[0] + 0.05) / (pair[1] + 0.05);
+    const text = luminance(parts(getComputedStyle(element).color)), ground = luminance(behind(element));
+    const ratio = (Math.max(text, ground) + 0.05) / (Math.min(text, ground) + 0.05);
     seen += 1;
     if (ratio < 4.5) pale.push(element.tagName + " " + ratio.toFixed(2) + " " + element.textContent.slice(0, 40));
   }
   return {seen, pale};
 })()"""
-COLUMN = "[...document.querySelectorAll('table.sortable tbody')[{table}].rows].map(row => row.cells[{column}].textContent)"
+COLUMN = "[...document.querySelectorAll('table.sortable tbody')[0].rows].map(row => row.cells[2].textContent)"
 
 
 @pytest.fixture(scope="module", params=STUDIES)
 def report(request, tmp_path_factory):
     folder = tmp_path_factory.mktemp("browser") / request.param
-    assert popsim_run(["judge", str(CONFIGS / f"{request.param}.toml"), "--out", str(folder), "--quiet", "--no-patients"]) == 0
+    arguments = ["judge", str(CONFIGS / f"{request.param}.toml"), "--out", str(folder), "--quiet", "--no-patients"]
+    assert popsim_run(arguments) == 0
     return folder / "report.html"
 
 
@@ -107,10 +109,9 @@ def test_tables_sort_by_keyboard(browser, report):
     browser.value("document.querySelectorAll('table.sortable')[0].querySelectorAll('button')[1].focus()")
     browser.press("Tab")
     assert browser.value("document.activeElement.textContent") == "Patients"
-    column = COLUMN.format(table=0, column=2)
 
     def counts() -> list[int]:
-        return [int(text.replace(",", "")) for text in browser.value(column)]
+        return [int(text.replace(",", "")) for text in browser.value(COLUMN)]
 
     before = counts()
     browser.press("Enter")
@@ -122,9 +123,10 @@ def test_tables_sort_by_keyboard(browser, report):
 
 def test_all_that_scrolls_and_sorts_is_reached_by_keyboard(browser, report):
     browser.open(report, 390)
-    inside = browser.value("[...document.querySelectorAll('.wide')].every(e => e.tabIndex === 0 && e.getAttribute('aria-label'))")
-    buttons = browser.value("[...document.querySelectorAll('table.sortable thead th')].every(th => th.querySelector('button'))")
-    assert inside and buttons
+    assert browser.value("[...document.querySelectorAll('.wide')].every(e => e.tabIndex === 0 && "
+                         "e.getAttribute('aria-label'))")
+    assert browser.value("[...document.querySelectorAll('table.sortable thead th')].every(th => "
+                         "th.querySelector('button'))")
     assert browser.value("[...document.querySelectorAll('svg')].every(svg => svg.getAttribute('role') === 'img' && "
                          "svg.querySelector('desc').textContent.length > 60)")
 

@@ -55,8 +55,8 @@ matters = "5 %"
 until = "40 min"
 every = "5 min"
 '''
-TABLES = {"attainment.csv", "over_time.csv", "comparison.csv", "groups.csv", "doses.csv", "people.csv", "attainment_map.csv",
-          "body_size.csv", "patients.csv", "record.json"}
+TABLES = {"attainment.csv", "over_time.csv", "comparison.csv", "groups.csv", "doses.csv", "people.csv",
+          "attainment_map.csv", "body_size.csv", "patients.csv", "record.json"}
 
 
 @pytest.fixture

@@ -53,7 +53,8 @@ NAMES = {"attainment_by_group", "attainment_over_time", "below_in_above", "conce
 def judged(tmp_path_factory):
     folder = tmp_path_factory.mktemp("draw")
     (folder / "study.toml").write_text(STUDY)
-    assert popsim_run(["judge", str(folder / "study.toml"), "--out", str(folder / "run"), "--quiet", "--keep-courses"]) == DONE
+    arguments = ["judge", str(folder / "study.toml"), "--out", str(folder / "run"), "--quiet", "--keep-courses"]
+    assert popsim_run(arguments) == DONE
     return folder / "run"
 
 

@@ -20,7 +20,7 @@ Page = runpy.run_path(str(Path(__file__).with_name("test_report.py")))["Page"]
 
 @pytest.fixture(scope="module")
 def outputs(tmp_path_factory):
-    """Two runs of a shipped study, smaller: the words of one, the JSON of the other; both in the same form otherwise."""
+    """Two runs of a shipped study, smaller: the words of the first, the JSON and the report of the second."""
     folder = tmp_path_factory.mktemp("agree")
     (folder / "study.toml").write_text(CONFIG.read_text().replace("count = 10000", "count = 1500"))
     said = {}

@@ -24,8 +24,8 @@ from popsim.pictures.sides import SIDES
 from popsim.words import percent, points
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
-FIVE = [f"{name}.svg" for name in ("attainment_by_group", "attainment_over_time", "below_in_above", "concentration_bands",
-                                   "attainment_map")]
+FIVE = ["attainment_by_group.svg", "attainment_over_time.svg", "below_in_above.svg", "concentration_bands.svg",
+        "attainment_map.svg"]
 SVG = "{http://www.w3.org/2000/svg}"
 
 
@@ -169,10 +169,12 @@ def test_many_protocols_many_groups_an_empty_one_and_long_names(tmp_path):
 
 def test_names_of_files_are_safe_and_unique(tmp_path, monkeypatch):
     for name in ("by_group", "over_time", "sides", "bands", "age_weight"):  # what they draw is another matter
-        monkeypatch.setattr(f"popsim.pictures.album.{name}", lambda _, path: path.write_text("") or Picture(path.name, "", "", ""))
+        monkeypatch.setattr(f"popsim.pictures.album.{name}",
+                            lambda _, path: path.write_text("") or Picture(path.name, "", "", ""))
     targets = tuple(f'name = "{name}"\n{cases.EFFECT_SITE}' for name in ("3/6 ng/mL", "3-6 NG mL", "../up"))
     _, _, pictures = drawn(tmp_path, targets=targets)
-    assert list(pictures) == [name.replace(".svg", f"{end}.svg") for end in ("_3_6_ng_ml", "_3_6_ng_ml__2", "_up") for name in FIVE]
+    assert list(pictures) == [name.replace(".svg", f"{end}.svg") for end in ("_3_6_ng_ml", "_3_6_ng_ml__2", "_up")
+                              for name in FIVE]
 
 
 def test_hostile_names_stay_text(tmp_path):
@@ -238,7 +240,8 @@ def test_range_headline_names_the_extremes_of_many(tmp_path):
     protocols = {f"{rate} ug/h": f'rate = "{rate} ug/h"\nuntil = "60 min"' for rate in (100, 300, 600, 900)}
     study = cases.study(tmp_path, count=120, protocols=protocols)
     findings, tables = cases.judged(study)
-    title = range_headline(cases.finished(study, findings, tables), tables["comparison"], tables["attainment"], study.targets[0])
+    run = cases.finished(study, findings, tables)
+    title = range_headline(run, tables["comparison"], tables["attainment"], study.targets[0])
     shares = rows_where(tables["attainment"], group="all")["time_in_range"]
     assert f'{percent(shares.min())} % with' in title and f'{percent(shares.max())} % with' in title
 
@@ -299,8 +302,8 @@ def test_the_map_shows_each_cells_share_fades_few_and_hatches_strangers(two, tmp
     assert [text.count(number) for number in ("91", "42", "7")] == [2, 2, 2]
     assert {"20-30", "30-40", "60-70", "200+", "Age (years)", "Total body weight (kg)"} <= set(text)
     assert svg.count("fill: url(#") == 2  # the hatched cell of each map
-    assert picture.title == ('Attained by age and weight: from 7 % (30 to 40 years, 200 and more kg, "600 ug/h") to 91 % '
-                             '(20 to 30 years, 60 to 70 kg, "600 ug/h")')
+    assert picture.title == ('Attained by age and weight: from 7 % (30 to 40 years, 200 and more kg, "600 ug/h") to '
+                             '91 % (20 to 30 years, 60 to 70 kg, "600 ug/h")')
     shades = [grey(to_hex(SHADES(share))) for share in np.linspace(0, 1, 11)]
     assert shades == sorted(shades, reverse=True)
     for share in np.linspace(0, 1, 101):
@@ -327,7 +330,8 @@ def test_models_side_by_side_with_their_spread_but_never_in_the_effect_site(tmp_
     population = cases.SURVEY.format(count=200) + "\n[population.set]\nopioid = false\nvenous_sampling = false"
     _, tables, pictures = drawn(
         tmp_path, population=population, model="propofol_eleveld_2018", repeat_with=("propofol_schnider_1998",),
-        protocols={"card": 'amount = "2 mg/kg"\n---\nrate = "8 mg/kg/h"\nuntil = "60 min"'}, targets=(plasma, effect_site))
+        protocols={"card": 'amount = "2 mg/kg"\n---\nrate = "8 mg/kg/h"\nuntil = "60 min"'},
+        targets=(plasma, effect_site))
     assert [name for name in pictures if "models" in name] == ["models_compared.svg"]
     picture, svg = pictures["models_compared.svg"]
     everyone = tables["attainment"].query("group == 'all' and target.str.startswith('plasma')")
@@ -360,9 +364,9 @@ def over_mic(two, isolates: bool) -> FinishedRun:
 def test_attainment_over_mic(two, tmp_path):
     [picture] = draw_all(over_mic(two, isolates=True), tmp_path)
     assert picture.file_name == "attainment_by_mic.svg" and "Grey bars: share of the isolates" in picture.caption
-    assert picture.title == ('90 % or more of all patients attain the target up to 1 mg/L with "600 ug/h", at no MIC with '
-                             '"900 ug/h"')
+    assert picture.title == ('90 % or more of all patients attain the target up to 1 mg/L with "600 ug/h", at no MIC '
+                             'with "900 ug/h"')
     text = written_in((tmp_path / picture.file_name).read_text()).splitlines()
-    assert "MIC (mg/L)" in text and [text.count(mic) for mic in ("0.5", "1", "2", "4")] == [3] * 4  # as printed, not 2^k
+    assert "MIC (mg/L)" in text and [text.count(mic) for mic in ("0.5", "1", "2", "4")] == [3] * 4
     [plain_one] = draw_all(over_mic(two, isolates=False), tmp_path)
     assert "isolates" not in plain_one.caption

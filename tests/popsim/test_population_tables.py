@@ -21,14 +21,16 @@ ADJUSTED = {"adjusted": 'rate = "6 mg/kg/h"\nuntil = "60 min"', "fixed": 'rate =
 def run(tmp_path_factory):
     folder = tmp_path_factory.mktemp("people")
     cases.study(folder, count=9000, protocols=ADJUSTED, in_protocol='by = "adjusted_body_weight"')
-    assert popsim_run(["judge", str(folder / "study.toml"), "--out", str(folder / "run"), "--tables-only", "--quiet"]) == 0
+    arguments = ["judge", str(folder / "study.toml"), "--out", str(folder / "run"), "--tables-only", "--quiet"]
+    assert popsim_run(arguments) == 0
     tables = {name: pd.read_csv(folder / "run" / f"{name}.csv")
               for name in ("people", "attainment_map", "body_size", "patients", "attainment")}
     return SimpleNamespace(**tables)
 
 
 def test_people_by_group(run):
-    members = {"all": run.patients["age"] > 0, "under 65": run.patients["age"] < 65, "65 and over": run.patients["age"] >= 65}
+    age = run.patients["age"]
+    members = {"all": age > 0, "under 65": age < 65, "65 and over": age >= 65}
     lean = compute("lean_body_mass_janmahasatian", {name: run.patients[name].to_numpy()
                                                      for name in ("sex", "weight", "height")})
     everyone = run.patients.assign(lean_body_mass_janmahasatian=lean)
@@ -62,16 +64,19 @@ def test_body_size_by_total_weight(run):
     assert set(run.body_size["measure"]) == {"weight", "lean_body_mass_janmahasatian", "ideal_body_weight_devine",
                                              "adjusted_body_weight"}
     assert set(run.body_size.loc[run.body_size["doses"], "measure"]) == {"adjusted_body_weight"}
-    adjusted = compute("adjusted_body_weight", {name: run.patients[name].to_numpy() for name in ("sex", "weight", "height")})
+    attributes = {name: run.patients[name].to_numpy() for name in ("sex", "weight", "height")}
+    adjusted = compute("adjusted_body_weight", attributes)
     for row in run.body_size[run.body_size["measure"] == "adjusted_body_weight"].itertuples():
-        of = (run.patients["sex"] == row.sex) & run.patients["weight"].between(row.weight_from, row.weight_to, inclusive="left")
+        within = run.patients["weight"].between(row.weight_from, row.weight_to, inclusive="left")
+        of = (run.patients["sex"] == row.sex) & within
         assert of.sum() == row.patients
         assert row.p50 == pytest.approx(np.quantile(adjusted[of], 0.5, method="inverted_cdf"), abs=0.0501)
 
 
 def test_a_list_that_says_little_leaves_little(tmp_path):
     people = cases.people(tmp_path, ["female,30,60", "male,8,25"], header="sex,age,weight")
-    study = cases.study(tmp_path, population=people, model=cases.sheet(tmp_path), groups={}, variability="between_subject = false",
+    study = cases.study(tmp_path, population=people, model=cases.sheet(tmp_path), groups={},
+                        variability="between_subject = false",
                         targets=('quantity = "plasma"\nrange = "1 to 2 mg/L"\nduring = "10 min"',),
                         protocols={"card": 'amount = "10 mg"'})
     _, tables = cases.judged(study)
@@ -85,7 +90,8 @@ def test_a_list_that_says_little_leaves_little(tmp_path):
 
 def test_lean_mass_counts_adults_only(tmp_path):
     people = cases.people(tmp_path, ["female,30,60,165", "male,8,25,125"])
-    study = cases.study(tmp_path, population=people, model=cases.sheet(tmp_path), groups={"children": "age < 18"}, variability="between_subject = false",
+    study = cases.study(tmp_path, population=people, model=cases.sheet(tmp_path),
+                        groups={"children": "age < 18"}, variability="between_subject = false",
                         targets=('quantity = "plasma"\nrange = "1 to 2 mg/L"\nduring = "10 min"',),
                         protocols={"card": 'amount = "10 mg"'})
     _, tables = cases.judged(study)

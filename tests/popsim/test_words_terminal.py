@@ -295,7 +295,8 @@ class Screen(io.StringIO):
         return True
 
 
-@pytest.mark.parametrize(("terminal", "no_color", "bold"), [(True, None, True), (True, "1", False), (False, None, False)])
+@pytest.mark.parametrize(("terminal", "no_color", "bold"),
+                         [(True, None, True), (True, "1", False), (False, None, False)])
 def test_escape_codes_only_on_a_terminal_without_no_color(tmp_path, monkeypatch, terminal, no_color, bold):
     cases.study(tmp_path, count=60)
     monkeypatch.delenv("NO_COLOR", raising=False)
