@@ -46,12 +46,24 @@ PALE_TEXTS = """(() => {
 COLUMN = "[...document.querySelectorAll('table.sortable tbody')[0].rows].map(row => row.cells[2].textContent)"
 
 
-@pytest.fixture(scope="module", params=STUDIES)
-def report(request, tmp_path_factory):
-    folder = tmp_path_factory.mktemp("browser") / request.param
-    arguments = ["judge", str(CONFIGS / f"{request.param}.toml"), "--out", str(folder), "--quiet", "--no-patients"]
-    assert popsim_run(arguments) == 0
-    return folder / "report.html"
+@pytest.fixture(scope="module")
+def reports(tmp_path_factory):
+    """The report of each shipped study."""
+    folder = tmp_path_factory.mktemp("browser")
+    for study in STUDIES:
+        arguments = ["judge", str(CONFIGS / f"{study}.toml"), "--out", str(folder / study), "--quiet", "--no-patients"]
+        assert popsim_run(arguments) == 0
+    return {study: folder / study / "report.html" for study in STUDIES}
+
+
+@pytest.fixture(params=STUDIES)
+def report(request, reports):
+    return reports[request.param]
+
+
+@pytest.fixture
+def one_report(reports):
+    return reports[STUDIES[0]]
 
 
 @pytest.fixture(scope="module")
@@ -83,16 +95,16 @@ def test_nothing_overflows_nothing_complains_nothing_is_fetched(browser, report,
     assert browser.requests == [report.as_uri()]
 
 
-def test_a_script_of_someone_else_does_not_run(browser, report, tmp_path):
-    html = report.read_text(encoding="utf-8").replace("</main>", "</main><script>document.title = 'taken'</script>", 1)
+def test_a_script_of_someone_else_does_not_run(browser, one_report, tmp_path):
+    html = one_report.read_text(encoding="utf-8").replace("</main>", "</main><script>document.title = 'taken'</script>", 1)
     (tmp_path / "report.html").write_text(html, encoding="utf-8")
     browser.open(tmp_path / "report.html", 1280)
     assert browser.value("document.title") != "taken"
     assert any("Content Security Policy" in line for line in browser.complaints)
 
 
-def test_every_text_stands_out(browser, report):
-    browser.open(report, 1280)
+def test_every_text_stands_out(browser, one_report):
+    browser.open(one_report, 1280)
     found = browser.value(PALE_TEXTS)
     assert found["seen"] > 200 and found["pale"] == []
 
@@ -104,8 +116,8 @@ def test_the_answer_stands_in_the_first_screen(browser, report):
     assert browser.value("document.querySelector('.answer').textContent.length") > 50
 
 
-def test_tables_sort_by_keyboard(browser, report):
-    browser.open(report, 1280)
+def test_tables_sort_by_keyboard(browser, one_report):
+    browser.open(one_report, 1280)
     browser.value("document.querySelectorAll('table.sortable')[0].querySelectorAll('button')[1].focus()")
     browser.press("Tab")
     assert browser.value("document.activeElement.textContent") == "Patients"
@@ -121,8 +133,8 @@ def test_tables_sort_by_keyboard(browser, report):
     assert browser.value("document.querySelectorAll('[aria-sort=descending]').length") == 1
 
 
-def test_all_that_scrolls_and_sorts_is_reached_by_keyboard(browser, report):
-    browser.open(report, 390)
+def test_all_that_scrolls_and_sorts_is_reached_by_keyboard(browser, one_report):
+    browser.open(one_report, 390)
     assert browser.value("[...document.querySelectorAll('.wide')].every(e => e.tabIndex === 0 && "
                          "e.getAttribute('aria-label'))")
     assert browser.value("[...document.querySelectorAll('table.sortable thead th')].every(th => "
