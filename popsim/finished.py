@@ -15,7 +15,7 @@ from covariates.sheet_reading import EffectModel
 from popsim.records import Target
 
 NEEDED = ("attainment", "over_time", "comparison")
-OPTIONAL = ("people", "attainment_map", "body_size", "mic_distribution")
+OPTIONAL = ("people", "attainment_map", "body_size")
 TEXT_COLUMNS = ("model", "protocol", "group", "target", "protocol_a", "protocol_b", "reference", "verdict", "better",
                 "note", "measure", "sex")
 AGAIN = "judge the study again"

@@ -24,7 +24,7 @@ def mic(run: FinishedRun, model: FinishedModel, family: str, rows: pd.DataFrame,
 
     rows  the attainment rows of this model whose targets are `family` at one MIC each (column mic, mg/L)
     """
-    title, isolates = _title(run, rows), run.tables.get("mic_distribution")
+    title, isolates = _title(run, rows), _isolates(run, rows)
     page = Page()
     head(page, title, f"Share of patients who attain the target at each MIC. Target: {family}. Model: {model.name}.")
     columns = min(COLUMNS, len(run.group_names))
@@ -46,8 +46,15 @@ def mic(run: FinishedRun, model: FinishedModel, family: str, rows: pd.DataFrame,
                           bbox={"facecolor": "white", "edgecolor": "none", "pad": 1.2})
         page.top += HEIGHT + 0.52
     foot = f"Bands: {INTERVALS_SAY} Dotted line: {percent(WANTED, 0)} %, common practice."
-    foot += " Grey bars: share of the isolates with each MIC." if isolates is not None else ""
+    foot += " Grey bars: share of the isolates with each MIC." if isolates else ""
     return finish(page, path, title, f"Lines that fall as the MIC rises. {title}.", foot)
+
+
+def _isolates(run: FinishedRun, rows: pd.DataFrame) -> dict[float, float]:
+    """MIC -> share of the isolates that have it; empty where the study gives no distribution."""
+    weights = {target.name: target.mic.weight for target in run.targets if getattr(target, "mic", None)}
+    found = {mic: weights[name] for name, mic in zip(rows["target"], rows["mic"], strict=True)}
+    return found if all(weight is not None and np.isfinite(weight) for weight in found.values()) else {}
 
 
 def _lines(run: FinishedRun, rows: pd.DataFrame) -> dict[int, pd.DataFrame]:
@@ -57,7 +64,7 @@ def _lines(run: FinishedRun, rows: pd.DataFrame) -> dict[int, pd.DataFrame]:
     return {index: line for index, line in enumerate(lines) if len(line)}
 
 
-def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: pd.DataFrame | None) -> None:
+def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: dict[float, float]) -> None:
     values = sorted(rows["mic"].unique())
     axes.set_xscale("log", base=2)
     axes.set(xlim=(values[0] / 1.5, values[-1] * 1.5), ylim=(0, 1))
@@ -68,9 +75,8 @@ def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: pd.DataFr
     axes.set_xlabel("MIC (mg/L)", labelpad=2)
     axes.set_ylabel("Patients (%)", fontsize=8.5, labelpad=3)
     axes.axhline(WANTED, color=FAINT, linewidth=0.9, linestyle=(0, (1, 2)))
-    if isolates is not None:
-        axes.bar(isolates["mic"] / 2**0.3, isolates["share"], width=isolates["mic"] * (2**0.3 - 2**-0.3), align="edge",
-                 color=RULE, linewidth=0, zorder=0)
+    for value, share in isolates.items():
+        axes.bar(value / 2**0.3, share, width=value * (2**0.3 - 2**-0.3), align="edge", color=RULE, linewidth=0, zorder=0)
     for index, line in _lines(run, rows).items():
         look = strokes(index)
         axes.fill_between(line["mic"], line["attained_low"], line["attained_high"], color=look.colour, alpha=0.22,

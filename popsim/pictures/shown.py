@@ -140,7 +140,11 @@ def no_result(axes: Axes, shown: Shown, group: str, protocols: list[str], width:
 
 def fixed_window(target: Target) -> bool:
     """Whether the window is the same for every patient."""
-    return not isinstance(target.start, str) and not isinstance(target.end, str)
+    return not at_steady_state(target) and not isinstance(target.start, str) and not isinstance(target.end, str)
+
+
+def at_steady_state(target: Target) -> bool:
+    return getattr(target, "steady", False)
 
 
 def mark_window(axes: Axes, target: Target) -> None:
@@ -163,6 +167,8 @@ def name_window(axes: Axes, target: Target, lift: float) -> None:
 
 
 def window_said(target: Target, mark: str = "Grey") -> str:
+    if at_steady_state(target):
+        return "The target is judged at steady state, which these courses may not have reached."
     if not fixed_window(target):
         return f"The target's window ({window(target)}) differs between patients and is not marked."
     if target.instant:
