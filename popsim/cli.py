@@ -10,9 +10,11 @@ import click
 from covariates.problems import ProblemsError
 from popsim import __version__
 from popsim.commands.check import check
+from popsim.commands.draw import draw
 from popsim.commands.judge import judge
 from popsim.commands.models import models
 from popsim.commands.new import new
+from popsim.commands.patients import patients
 from popsim.commands.person import person
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
@@ -27,7 +29,9 @@ def popsim() -> None:
     \b
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
+    popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
+    popsim draw study          draw a finished run's pictures again
     popsim models              the published drug models, and one of them whole
     popsim person ...          every covariate of one person, side by side
 
@@ -36,7 +40,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, judge, models, person):
+for command in (new, check, patients, judge, draw, models, person):
     popsim.add_command(command)
 
 

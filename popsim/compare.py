@@ -20,16 +20,22 @@ def protocol_pairs(study: Study, tally: Tally) -> list[dict]:
             for t, target in enumerate(study.targets):
                 for a, b in combinations(range(len(study.protocols)), 2):
                     names = (study.protocols[a].name, study.protocols[b].name)
+                    worth = tally.worth_paired(m, t, a, b, g)
                     rows.append({"model": model.name, "group": group, "target": target.name,
                                  "protocol_a": names[0], "protocol_b": names[1],
-                                 **pair_row(tally.pairs[m, t, a, b], g, int(tally.patients[g]), names, study.matters)})
+                                 **pair_row(tally.pairs[m, t, a, b], g, int(tally.patients[g]), names, study.matters,
+                                            worth)})
     return rows
 
 
-def pair_row(tallied: PairTally, g: int, patients: int, names: tuple[str, str], matters: float | None) -> dict:
-    """One pair in one group; median_gain: the median over patients of b - a in the share of the window in range."""
+def pair_row(tallied: PairTally, g: int, patients: int, names: tuple[str, str], matters: float | None,
+             worth: float = 1.0) -> dict:
+    """One pair in one group; `worth` is what a patient counts in independent draws.
+
+    median_gain: the median over patients of b - a in the share of the window in range.
+    """
     counts = {name: int(getattr(tallied, name)[g]) for name in ("failed", "both", "only_a", "only_b", "neither")}
-    four = counts["both"], counts["only_a"], counts["only_b"], counts["neither"]
+    four = (counts[name] * worth for name in ("both", "only_a", "only_b", "neither"))
     difference, low, high = paired_difference(*four)
     said = "" if no_headline(counts["failed"], patients) else verdict(low, high, matters)
     shares = {name: _share(counts[name], patients) for name in ("only_a", "only_b", "both", "neither")}
@@ -119,13 +125,15 @@ def against_reference(study: Study, tally: Tally) -> list[dict]:
     r = names.index(study.reference)
     rows = []
     for (m, p, t), counts in tally.targets.items():
+        worth = tally.worth((m, p, t))
         for g, group in enumerate(names):
             if g in (0, r):
                 continue
             n_reference, n = int(tally.patients[r]), int(tally.patients[g])
             in_reference, in_group = int(counts.attained[r]), int(counts.attained[g])
             overlap = int(tally.overlap[r, g])
-            difference, low, high = (unpaired_difference(in_reference, n_reference, in_group, n) if not overlap
+            difference, low, high = (unpaired_difference(in_reference * worth[r], n_reference * worth[r],
+                                                         in_group * worth[g], n * worth[g]) if not overlap
                                      else (float("nan"),) * 3)
             rows.append({
                 "model": study.models[m].name, "protocol": study.protocols[p].name, "target": study.targets[t].name,

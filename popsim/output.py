@@ -17,8 +17,8 @@ from covariates.problems import Problem, ProblemsError
 from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles", "together", "models",
-               "robustness", "patients", "courses")
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles",
+               "together", "models", "robustness", "people", "attainment_map", "body_size", "patients", "courses")
 OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 
@@ -59,6 +59,16 @@ def written_aside(folder: Path) -> Iterator[Path]:
         shutil.rmtree(aside, ignore_errors=True)
 
 
+@contextmanager
+def replaced_whole(folder: Path) -> Iterator[Path]:
+    """A scratch folder whose files take their place in `folder` only when all are written; the others there stay."""
+    with tempfile.TemporaryDirectory(prefix=".unfinished-", dir=folder) as aside:
+        yield Path(aside)
+        for path in sorted(Path(aside).iterdir()):
+            path.chmod(0o666 & ~_umask())
+            os.replace(path, folder / path.name)
+
+
 def _umask() -> int:
     mask = os.umask(0)
     os.umask(mask)
@@ -66,11 +76,11 @@ def _umask() -> int:
 
 
 def _is_picture(path: Path) -> bool:
-    """Whether this is an SVG that came from popsim, which signs its pictures."""
-    if path.suffix != ".svg" or not path.is_file():
+    """Whether this is a picture that came from popsim, which signs its pictures: a PDF near its end."""
+    if path.suffix not in (".svg", ".png", ".pdf") or not path.is_file():
         return False
-    with path.open(encoding="utf-8", errors="replace") as file:
-        return "popsim" in file.read(2000)
+    written = path.read_bytes()
+    return b"popsim" in written[:2000] or (path.suffix == ".pdf" and b"popsim" in written)
 
 
 def write_tables(folder: Path, tables: dict[str, pd.DataFrame], kind: str) -> None:
@@ -121,6 +131,8 @@ class PatientRows:
         columns: dict[str, Any] = {"patient": range(patients.first, patients.first + len(patients))}
         if patients.labels is not None:
             columns["label"] = patients.labels
+        if patients.origins is not None:
+            columns["list_row"] = patients.origins + 1
         columns |= patients.attributes
         columns |= {name: rows.lookup(name) for name in self._covariates if name not in columns}
         return pd.DataFrame(columns)

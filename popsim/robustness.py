@@ -50,9 +50,9 @@ def robustness(study: Study, threads: int) -> pd.DataFrame:
 
 
 def _fewer(study: Study) -> Study:
-    """The same study with the main model and at most MOST_PATIENTS; lists are used as they are."""
+    """The same study with the main model and at most MOST_PATIENTS; a list that is not resampled is used whole."""
     population = study.population
-    if population.count is not None and population.source != "list":
+    if population.count is not None:
         population = replace(population, count=min(population.count, MOST_PATIENTS))
     return replace(study, population=population, models=study.models[:1])
 

@@ -57,7 +57,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid), cuts)
+                tally = tally or Tally.empty(study, len(grid), cuts, drawn.origins)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -76,7 +76,8 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
     total, *others = [tally for tally in tallies if tally is not None]
     for other in others:
         total.merge(other)
-    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads)
+    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads,
+                    drawn.share_eligible)
 
 
 class _Queue:
@@ -119,6 +120,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     quarters = quartile_members(tally.cuts, lookup, len(patients)).astype(np.int64)
     tally.quartile_patients += quarters.sum(axis=0)
     tally.overlap += members.T @ members
+    cell = tally.population.add_patients(patients.attributes, members)
+    if tally.clusters is not None:
+        tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     steady = [steady_timeline(protocol, lookup, len(patients)) for protocol in study.protocols]
@@ -131,6 +135,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
         disposition = solve.disposition(parameters.values)
         status = disposition.status
         tally.outside[m] += members.T @ parameters.outside
+        tally.population.add_outside(m, cell, parameters.outside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -144,6 +149,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                                                    received, lookup, steady[p])
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members, parameters.outside)
+                tally.population.add_judged((m, p, t), cell, judged[p, t])
+                if tally.clusters is not None:
+                    tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
             _add_responses(study, m, p, judged, members, tally)
             if not len(grid):
                 continue

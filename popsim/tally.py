@@ -3,13 +3,15 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.clusters import ClusterTally
+from popsim.population_tally import PopulationTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -132,12 +134,14 @@ class Tally:
     together: dict[tuple[int, int, int], PairTally]  # model, first protocol, protocol: all targets
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
+    population: PopulationTally
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
     failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
+    clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray]) -> Tally:
+    def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray], origins: int = 0) -> Tally:
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -165,6 +169,7 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
+        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -182,6 +187,8 @@ class Tally:
             together={(m, 0, p): pair_tally(groups) for m in models for p in protocols if study.joint_targets},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
+            population=PopulationTally.empty(study),
+            clusters=clusters,
         )
 
     def merge(self, other: Tally) -> None:
@@ -199,6 +206,16 @@ class Tally:
     def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
         for flag, count in counts.items():
             self.flags[flag] = self.flags.get(flag, 0) + count
+
+    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
+        """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
+        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+
+    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
+        """Likewise for the difference of protocols b and a in one group."""
+        pair = self.pairs[m, t, a, b]
+        unequal = int(pair.only_a[group] + pair.only_b[group])
+        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
 
     def add_statuses(self, model: int, status: np.ndarray, first: int) -> None:
         """Count who could not be computed, and why; `first` is the number of the block's first patient."""
@@ -220,6 +237,7 @@ class Findings:
     rows_skipped: int
     seconds: float
     threads: int
+    share_eligible: float = float("nan")  # of the people within the limits of age and sex
 
 
 def range_names(model: DrugModel) -> list[str]:
@@ -229,7 +247,7 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap, tally.quartile_patients]
+    found = [tally.patients, tally.overlap, tally.quartile_patients, *tally.population.arrays()]
     for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
     for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses, tally.together):
@@ -239,6 +257,8 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
         found += (entry.measures[name] for name in sorted(entry.measures))
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
+    if tally.clusters is not None:
+        found += tally.clusters.arrays()
     return found
 
 

@@ -12,14 +12,19 @@ POPSIM = Path(popsim.__file__).parent
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
-    "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_loading", "study_protocols",
-    "study_targets", "study_fit", "study", "groups", "slices", "parameters", "flagged", "amounts", "timeline", "solve", "effect", "target",
-    "judging", "estimate", "tally", "run", "compare", "measures", "tables", "robustness", "words", "holds", "headlines", "ward_card",
-    "provenance", "output",
-    "drawing", "pictures", "report", "terminal", "check_text", "progress",
+    "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
+    "patients.draw", "study_salvage", "study_file", "study_described", "study_population", "study_loading",
+    "study_protocols", "study_targets", "study_fit", "study", "groups", "slices", "parameters", "flagged", "amounts",
+    "timeline", "solve", "effect", "target", "judging", "estimate", "clusters",
+    "population_tally", "tally", "people", "run", "compare", "measures", "population_tables", "tables", "robustness",
+    "words", "holds", "ward_card", "provenance", "output", "finished", "headlines",
+    "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
+    "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
+    "patient_pictures", "report", "terminal", "check_text", "progress",
     "derived", "model_text", "person_text",
-    "commands.new", "commands.check", "commands.judge", "commands.models", "commands.person", "cli",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw",
+    "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -40,7 +45,7 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "commands") else {rest}
+            names |= inside if rest in ("", "patients", "commands", "pictures") else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names
