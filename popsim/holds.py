@@ -43,7 +43,7 @@ def _attained(study: Study, row) -> str:
 def _other(study: Study, row) -> str:
     of = f", {row.target}" if len(study.targets) > 1 else ""
     pair = f', "{row.protocol_b}" less "{row.protocol_a}"' if len(study.protocols) > 2 else ""
-    return f"{row.group}{of}{pair} {points(row.difference)}" + (f" ({row.verdict})" if row.verdict else "")
+    return f'"{row.group}"{of}{pair}: ' + f"{points(row.difference)}" + (f" ({row.verdict})" if row.verdict else "")
 
 
 def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: Target) -> list[str]:

@@ -62,7 +62,7 @@ def further_numbers(tables) -> set[str]:
     quarters, again, own = (tables[name] for name in ("quartiles", "robustness", "values"))
     told = {points(value) for value in (*quarters["difference"], *again["difference"])}
     told |= {f"{value:.3g}" for value in (*quarters["above"], *quarters["up_to"], *own["p50"], *own["p95"])}
-    return told | {percent(value) for value in own["never"]}
+    return told | {percent(value) for value in own["never"]} | {"0.7", "1.3"}  # what the variability is multiplied by
 
 
 def test_the_terminal_holds_them_all_and_no_other(outputs):
