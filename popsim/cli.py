@@ -12,6 +12,7 @@ from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.judge import judge
 from popsim.commands.new import new
+from popsim.commands.score import score
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
 INTERRUPTED = 130  # what a shell expects of a program that was stopped
@@ -26,13 +27,14 @@ def popsim() -> None:
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
     popsim judge study.toml    judge the protocols: tables, pictures, report
+    popsim score ...           which published model predicts measured patients
 
     A simulation for appraising protocols, not for dosing a person. Follow the
     product's label, local protocols and a licensed clinician's judgement.
     """
 
 
-for command in (new, check, judge):
+for command in (new, check, judge, score):
     popsim.add_command(command)
 
 

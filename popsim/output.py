@@ -16,7 +16,8 @@ import pandas as pd
 from covariates.problems import Problem, ProblemsError
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses")
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses", "scores",
+               "score_comparison", "score_patients", "score_predictions", "score_check")
 OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 

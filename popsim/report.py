@@ -39,7 +39,7 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
         intervals_say=INTERVALS_SAY,
         targets=[target_line(target) for target in study.targets],
         answers=[_answer(study, tables, model, target) for model in study.models for target in study.targets],
-        pictures=[{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
+        pictures=[{"picture": picture, "svg": inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
                   for number, picture in enumerate(pictures, 1)],
         who=_who(study, record),
         people=_groups_of_people(study, tables["attainment"], record),
@@ -200,7 +200,7 @@ def _left_out(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) ->
     }
 
 
-def _inlined(svg: str, number: int) -> Markup:
+def inlined(svg: str, number: int) -> Markup:
     """One of our SVG files as part of a page: no prolog, comments or metadata; ids that no other picture has."""
     svg = svg[svg.index("<svg"):]
     svg = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", svg, flags=re.DOTALL)

@@ -17,7 +17,9 @@ FLOW = [
     "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
     "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
-    "commands.new", "commands.check", "commands.judge", "cli",
+    "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
+    "scoring.report", "scoring.run",
+    "commands.new", "commands.check", "commands.judge", "commands.score", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -38,7 +40,7 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "commands") else {rest}
+            names |= inside if rest in ("", "patients", "scoring", "evidence", "commands") else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names

@@ -1,0 +1,72 @@
+"""The order of a score: files -> models that can be asked -> predictions."""
+
+from __future__ import annotations
+
+from collections.abc import Callable
+from pathlib import Path
+
+from covariates.catalogue import attributes_needed
+from covariates.formula import Formula, compile_formula
+from covariates.problems import Problem, ProblemsError, nearest
+from covariates.sheet import DrugModel, read_sheet, shipped_sheets
+from popsim.scoring.files import Measured, read_measured
+from popsim.scoring.predict import lacking, predict
+from popsim.scoring.tables import Scored
+
+USUAL_GROUPS = ("obese: bmi >= 30", "elderly: age >= 65")
+
+
+def score_models(files: tuple[Path, Path, Path], drug: str | None, names: tuple[str, ...], groups: tuple[str, ...],
+                 replicates: int, seed: int, prepare: Callable[[], None] = lambda: None) -> Scored:
+    """Score the named sheets, or every shipped sheet of a drug that these people can be asked about.
+
+    files    people, given, measured
+    prepare  called before anything is computed
+
+    Raises ProblemsError: files that cannot be used, an unknown drug, a named sheet that cannot be asked, no sheet left.
+    """
+    models = models_asked(drug, names)
+    measured = read_measured(*files)
+    reasons = {model.name: lacking(model, measured) for model in models}
+    left_out = {name: why for name, why in reasons.items() if why}
+    usable = tuple(model for model in models if model.name not in left_out)
+    if left_out and (names or not usable):
+        raise ProblemsError(Problem(f"model {name}", why, "what the sheet needs for every person",
+                                    "add the columns to the people's file") for name, why in left_out.items())
+    asked = groups_asked(groups, measured)
+    prepare()
+    return Scored(measured, asked, usable, tuple(predict(model, measured, replicates, seed) for model in usable),
+                  left_out, seed)
+
+
+def models_asked(drug: str | None, names: tuple[str, ...]) -> tuple[DrugModel, ...]:
+    """The sheets by name, or all of a drug."""
+    if bool(drug) == bool(names):
+        raise ProblemsError(Problem("--drug, --model", "both" if drug else "neither", "one of the two",
+                                    "--drug remifentanil scores all its sheets; --model NAME only those named"))
+    if names:
+        return tuple(read_sheet(name) for name in dict.fromkeys(names))
+    shipped = [read_sheet(name) for name in shipped_sheets()]
+    found = tuple(model for model in shipped if model.drug == drug)
+    if not found:
+        drugs = sorted({model.drug for model in shipped})
+        raise ProblemsError(Problem("--drug", f'"{drug}", of which there is no sheet', ", ".join(drugs),
+                                    nearest(str(drug), drugs)))
+    return found
+
+
+def groups_asked(texts: tuple[str, ...], measured: Measured) -> tuple[tuple[str, Formula], ...]:
+    """Groups as given; the usual ones, where these people have what they need."""
+    groups = []
+    for text in texts or USUAL_GROUPS:
+        name, colon, where = text.partition(":")
+        if not colon or not name.strip() or not where.strip():
+            raise ProblemsError(Problem("--group", f'"{text}"', "NAME:CONDITION", '--group "old: age >= 75"'))
+        condition = compile_formula(where.strip(), f'group "{name.strip()}"', "condition")
+        known = all(not attributes_needed(needed, measured.attributes) for needed in condition.names)
+        if texts and not known:
+            raise ProblemsError(Problem(f'--group "{text}"', "attributes that the people's file lacks",
+                                        ", ".join(sorted(measured.attributes))))
+        if known:
+            groups.append((name.strip(), condition))
+    return tuple(groups)
