@@ -10,6 +10,7 @@ import click
 from covariates.problems import ProblemsError
 from popsim import __version__
 from popsim.commands.check import check
+from popsim.commands.evidence import evidence
 from popsim.commands.judge import judge
 from popsim.commands.new import new
 from popsim.commands.score import score
@@ -28,13 +29,14 @@ def popsim() -> None:
     popsim check study.toml    see the ward card before anything is simulated
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim score ...           which published model predicts measured patients
+    popsim evidence            every outside check, recomputed
 
     A simulation for appraising protocols, not for dosing a person. Follow the
     product's label, local protocols and a licensed clinician's judgement.
     """
 
 
-for command in (new, check, judge, score):
+for command in (new, check, judge, score, evidence):
     popsim.add_command(command)
 
 
@@ -49,8 +51,7 @@ def main() -> None:
 def run(arguments: list[str]) -> int:
     """Exit code of one command: 0 done, 2 the user can mend it, 1 ours."""
     try:
-        popsim.main(arguments, prog_name="popsim", standalone_mode=False)
-        return DONE
+        return popsim.main(arguments, prog_name="popsim", standalone_mode=False) or DONE
     except ProblemsError as error:
         click.echo(problem_report(error), err=True)
         return USER_CAN_MEND

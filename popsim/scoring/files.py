@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 import csv
-from collections.abc import Callable
+from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
 
@@ -13,7 +13,7 @@ from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import parse_quantity
 from popsim.lookup import Lookup
 from popsim.patients.listed import read_list
-from popsim.records import Patients, Protocol, Timeline
+from popsim.records import DoseStep, Patients, Protocol, Timeline
 from popsim.study_file import LARGEST, ProtocolSection, read_dose, shown
 from popsim.study_protocols import resolve_protocols
 from popsim.timeline import build_timeline
@@ -69,9 +69,9 @@ def read_measured(people: Path, given: Path, measured: Path) -> Measured:
                                     "the other two files name people by it"))
     places = {str(label): i for i, label in enumerate(listed.labels)}
     problems: list[Problem] = []
-    protocols = _protocols(given, places, listed.attributes, problems)
+    steps = _given(given, places, listed.attributes, problems)
     values = _values(measured, places, problems)
-    untreated = sorted({label for label, *_ in values} - protocols.keys())
+    untreated = sorted({label for label, *_ in values} - steps.keys())
     problems += [Problem(given.name, f'no dose of patient "{label}", who was measured', "a row for each dose")
                  for label in untreated if label in places]
     if problems:
@@ -81,7 +81,8 @@ def read_measured(people: Path, given: Path, measured: Path) -> Measured:
     attributes = {name: array[kept] for name, array in listed.attributes.items()}
     names = [str(listed.labels[i]) for i in kept]
     return Measured(np.array(names), attributes,
-                    tuple(_timeline(protocols[name], attributes, i) for i, name in enumerate(names)),
+                    tuple(timeline_of(steps[name], {key: values[i:i + 1] for key, values in attributes.items()})
+                          for i, name in enumerate(names)),
                     np.array([names.index(label) for label in labels]), np.array(times), np.array(found),
                     np.array(quantities), units[0])
 
@@ -125,29 +126,30 @@ def _known_patient(row: _Row, where: str, places: dict[str, int], problems: list
     return None
 
 
-def _protocols(path: Path, places: dict[str, int], attributes: dict[str, np.ndarray],
-               problems: list[Problem]) -> dict[str, Protocol]:
-    """What each patient was given, as a protocol of their own."""
-    kinds = {name: KINDS.get(values.dtype.kind, "number") for name, values in attributes.items()}
-    steps: dict[str, list] = {}
+def _given(path: Path, places: dict[str, int], attributes: dict[str, np.ndarray],
+               problems: list[Problem]) -> dict[str, list[DoseStep]]:
+    """What each patient was given."""
+    kinds = kinds_of(attributes)
+    steps: dict[str, list[DoseStep]] = {}
     for row in _rows(path, GIVEN_COLUMNS, ("patient", "at")):
         where = f"{path.name}: line {row.line}"
         label = _known_patient(row, where, places, problems)
         try:
-            step = _step(row, where, kinds)
+            step = dose_step({name: cell for name, cell in row.cells.items() if name != "patient"}, where, kinds)
         except ProblemsError as error:
             problems += error.problems
         else:
             steps.setdefault(label or "", []).append(step)
-    return {label: Protocol(name=label, by="weight", strength_mg_per_ml=None, vial_ml=None, no_dose_allowed=True,
-                            steps=tuple(given)) for label, given in steps.items()}
+    return steps
 
 
-def _step(row: _Row, where: str, kinds: dict[str, str]):
-    """One row as a dose step: the words and the rules are those of a study's dose."""
-    words: dict[str, object] = {name: cell for name, cell in row.cells.items() if name != "patient"}
+def dose_step(words: dict[str, object], where: str, kinds: dict[str, str]) -> DoseStep:
+    """One dose from its words, which are those of a study's dose step; `kinds` are those of the patient's attributes.
+
+    Raises ProblemsError with all its faults, each at "where, column KEY".
+    """
     if str(words.get("times", "")).isdigit():
-        words["times"] = int(str(words["times"]))
+        words = words | {"times": int(str(words["times"]))}
     if "at" not in words:
         raise ProblemsError(Problem(f"{where}, column at", "nothing", 'when it was given, such as "0 min"'))
     if "every" in words and not {"times", "until"} & words.keys():
@@ -160,6 +162,18 @@ def _step(row: _Row, where: str, kinds: dict[str, str]):
         raise ProblemsError(Problem(one.where.replace(": protocol 1, dose 1: ", ", column "), one.found, one.allowed,
                                     one.advice) for one in problems)
     return protocol.steps[0]
+
+
+def timeline_of(steps: Iterable[DoseStep], attributes: dict[str, np.ndarray]) -> Timeline:
+    """The events of one patient, whose attributes are arrays of one."""
+    protocol = Protocol(name="given", by="weight", strength_mg_per_ml=None, vial_ml=None, no_dose_allowed=True,
+                        steps=tuple(steps))
+    return build_timeline(protocol, Lookup(attributes), 1, LARGEST)[0]
+
+
+def kinds_of(attributes: dict[str, np.ndarray]) -> dict[str, str]:
+    """Attribute -> "number", "condition" or "text"."""
+    return {name: KINDS.get(values.dtype.kind, "number") for name, values in attributes.items()}
 
 
 def _values(path: Path, places: dict[str, int],
@@ -196,7 +210,3 @@ def _quantity(row: _Row, column: str, kind: str, where: str, problems: list[Prob
         problems += [Problem(one.where, one.found, one.allowed, advice or one.advice) for one in error.problems]
         return None
 
-
-def _timeline(protocol: Protocol, attributes: dict[str, np.ndarray], i: int) -> Timeline:
-    one: Callable[[str], np.ndarray] = Lookup({name: values[i:i + 1] for name, values in attributes.items()})
-    return build_timeline(protocol, one, 1, LARGEST)[0]

@@ -19,7 +19,10 @@ FLOW = [
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
     "scoring.report", "scoring.run",
-    "commands.new", "commands.check", "commands.judge", "commands.score", "cli",
+    "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.open_data", "evidence.bodies",
+    "evidence.mathematics", "evidence.check", "evidence.words",
+    "commands.new", "commands.check", "commands.judge", "commands.score",
+    "commands.evidence", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
