@@ -8,7 +8,7 @@ from popsim import solve
 from popsim.records import Disposition, Timeline
 from popsim.streams import normals, uniforms
 
-MODELS = 40
+MODELS = 20
 DIGITS = 50
 
 

@@ -11,13 +11,13 @@ from dataclasses import asdict
 from popsim.evidence.check import AGREES, DISAGREES, KNOWN, NOT_RUN, NOT_SHIPPED, STALE, Answer
 from popsim.evidence.claims import PAGES, Claim
 
-WIDTH, CLAIM_WIDTH = 80, 40
+WIDTH, CLAIM_WIDTH = 80, 35
 SAID = {AGREES: "agree", KNOWN: "disagree for a known reason", DISAGREES: "DISAGREE", STALE: "agree now, against "
         "a reason on record", NOT_SHIPPED: "ask a sheet that is not shipped", NOT_RUN: "not run, a package is missing"}
 
 
 def number(value: float) -> str:
-    return "-" if math.isnan(value) else f"{value:.4g}"
+    return "-" if math.isnan(value) else f"{value:.3g}" if abs(value) < 1e-3 else f"{value:.4g}"
 
 
 def expected(claim: Claim) -> str:
@@ -54,8 +54,8 @@ def _row(answer: Answer, reasons: dict[str, int]) -> list[str]:
 def totals(answers: list[Answer]) -> str:
     """"120 claims: 100 agree, 12 disagree for a known reason, ..."."""
     counts = Counter(answer.status for answer in answers)
-    return f"{len(answers)} claims: " + ", ".join(f"{counts[status]} {said}" for status, said in SAID.items()
-                                                  if counts[status])
+    said = ", ".join(f"{counts[status]} {what}" for status, what in SAID.items() if counts[status])
+    return "\n".join(_wrapped(f"{len(answers)} claims: {said}", ""))
 
 
 def _wrapped(text: str, lead: str) -> list[str]:
