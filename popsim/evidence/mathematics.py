@@ -5,7 +5,7 @@ from __future__ import annotations
 import numpy as np
 
 from popsim import solve
-from popsim.records import Disposition, Timeline
+from popsim.records import Disposition, Timeline, rows_of
 from popsim.streams import normals, uniforms
 
 MODELS = 20
@@ -26,8 +26,7 @@ def _random_models(count: int) -> dict[str, np.ndarray]:
 
 
 def _same(timeline: Timeline, count: int) -> Timeline:
-    return Timeline(*(np.repeat(array, count, axis=0)
-                      for array in (timeline.time_min, timeline.bolus_mg, timeline.rate_mg_per_min)))
+    return rows_of(timeline, np.zeros(count, dtype=np.int64))
 
 
 REGIMEN = ((0.0, 100.0, 5.0), (30.0, 0.0, 0.0), (45.0, 50.0, 0.0))

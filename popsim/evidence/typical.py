@@ -11,7 +11,7 @@ from covariates.sheet import DrugModel, parameters_of, read_sheet
 from covariates.units import parse_quantity
 from popsim import solve
 from popsim.lookup import Lookup
-from popsim.records import Disposition, Timeline
+from popsim.records import Disposition, Timeline, rows_of
 from popsim.scoring.files import dose_step, kinds_of, timeline_of
 from popsim.streams import normals
 
@@ -163,9 +163,7 @@ def _spread_levels(model: str, given_as: str, at: list[float], given: dict[str, 
     n = 8192
     many = {name: np.repeat(array, n) for name, array in attributes.items()}
     drawn = parameters_of(sheet, Lookup(many), luck, n)
-    same = Timeline(*(np.repeat(array, n, axis=0) for array in (timeline.time_min, timeline.bolus_mg,
-                                                                timeline.rate_mg_per_min)))
-    everyone = solve.courses_on_grid(solve.disposition(drawn), same, grid)[0]
+    everyone = solve.courses_on_grid(solve.disposition(drawn), rows_of(timeline, np.zeros(n, dtype=np.int64)), grid)[0]
     return everyone / solve.courses_on_grid(solve.disposition(values), timeline, grid)[0]
 
 

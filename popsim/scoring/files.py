@@ -14,7 +14,7 @@ from covariates.units import parse_quantity
 from popsim.lookup import Lookup
 from popsim.patients.listed import read_list
 from popsim.records import DoseStep, Patients, Protocol, Timeline
-from popsim.study_file import LARGEST, ProtocolSection, read_dose, shown
+from popsim.study_file import LARGEST, SMALLEST, ProtocolSection, read_dose, shown
 from popsim.study_protocols import resolve_protocols
 from popsim.timeline import build_timeline
 
@@ -80,10 +80,11 @@ def read_measured(people: Path, given: Path, measured: Path) -> Measured:
     kept = sorted({places[label] for label in labels})
     attributes = {name: array[kept] for name, array in listed.attributes.items()}
     names = [str(listed.labels[i]) for i in kept]
+    numbers = {name: i for i, name in enumerate(names)}
     return Measured(np.array(names), attributes,
                     tuple(timeline_of(steps[name], {key: values[i:i + 1] for key, values in attributes.items()})
                           for i, name in enumerate(names)),
-                    np.array([names.index(label) for label in labels]), np.array(times), np.array(found),
+                    np.array([numbers[label] for label in labels]), np.array(times), np.array(found),
                     np.array(quantities), units[0])
 
 
@@ -204,7 +205,10 @@ def _quantity(row: _Row, column: str, kind: str, where: str, problems: list[Prob
     text = row.cells.get(column, "")
     below = column == "value" and text.startswith("<")
     try:
-        return parse_quantity(text, [kind], f"{where}, column {column}")
+        found = parse_quantity(text, [kind], f"{where}, column {column}")
+        if found.value != 0 and not SMALLEST <= found.value <= LARGEST:
+            raise ProblemsError(Problem(f"{where}, column {column}", shown(text), "a plausible size"))
+        return found
     except ProblemsError as error:
         advice = "leave values below the assay's limit out; the share of them is yours to judge" if below else ""
         problems += [Problem(one.where, one.found, one.allowed, advice or one.advice) for one in error.problems]

@@ -12,7 +12,9 @@ from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from popsim.scoring.files import Measured, read_measured
 from popsim.scoring.predict import lacking, predict
 from popsim.scoring.tables import Scored
+from popsim.streams import BLOCK
 
+MOST_NUMBERS = 40_000_000  # simulated concentrations of one model: 0.3 GB
 USUAL_GROUPS = ("obese: bmi >= 30", "elderly: age >= 65")
 
 
@@ -34,9 +36,20 @@ def score_models(files: tuple[Path, Path, Path], drug: str | None, names: tuple[
         raise ProblemsError(Problem(f"model {name}", why, "what the sheet needs for every person",
                                     "add the columns to the people's file") for name, why in left_out.items())
     asked = groups_asked(groups, measured)
+    _check_size(measured, replicates)
     prepare()
     return Scored(measured, asked, usable, tuple(predict(model, measured, replicates, seed) for model in usable),
                   left_out, seed)
+
+
+def _check_size(measured: Measured, replicates: int) -> None:
+    """Raise ProblemsError for more than memory or the streams of luck can hold."""
+    people, count = len(measured.labels), len(measured.value)
+    if people > BLOCK:
+        raise ProblemsError(Problem("people", f"{people:,} measured patients", f"at most {BLOCK:,}", "score them in parts"))
+    if replicates * count > MOST_NUMBERS:
+        raise ProblemsError(Problem("--replicates", f"{replicates:,} for {count:,} measurements",
+                                    f"at most {MOST_NUMBERS // count:,}", "or score the patients in parts"))
 
 
 def models_asked(drug: str | None, names: tuple[str, ...]) -> tuple[DrugModel, ...]:

@@ -246,3 +246,11 @@ def test_remifentanil_in_65_volunteers_as_scipy_has_it(tmp_path):
     assert np.abs(own[columns].to_numpy() - np.array(wanted)).max() < 0.05
     population = tables["scores"].query("group == 'all' and phase == 'all'").iloc[0]
     assert np.abs(population[columns].to_numpy(float) - np.median(wanted, axis=0)).max() < 0.05
+
+
+def test_more_than_memory_holds_is_refused(tmp_path, monkeypatch):
+    from popsim.scoring import run as scoring
+
+    monkeypatch.setattr(scoring, "MOST_NUMBERS", 1000)
+    with pytest.raises(ProblemsError, match="at most 6"):
+        cases.scored(tmp_path, simulated(tmp_path), right(tmp_path))
