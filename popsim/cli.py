@@ -12,7 +12,9 @@ from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.evidence import evidence
 from popsim.commands.judge import judge
+from popsim.commands.models import models
 from popsim.commands.new import new
+from popsim.commands.person import person
 from popsim.commands.score import score
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
@@ -28,6 +30,8 @@ def popsim() -> None:
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
     popsim judge study.toml    judge the protocols: tables, pictures, report
+    popsim models              the published drug models, and one of them whole
+    popsim person ...          every covariate of one person, side by side
     popsim score ...           which published model predicts measured patients
     popsim evidence            every outside check, recomputed
 
@@ -36,7 +40,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, judge, score, evidence):
+for command in (new, check, judge, models, person, score, evidence):
     popsim.add_command(command)
 
 

@@ -10,6 +10,7 @@ import numpy as np
 from covariates.sheet import DrugModel, parameters_of, read_sheet
 from covariates.units import parse_quantity
 from popsim import solve
+from popsim.evidence.claims import NotThere
 from popsim.lookup import Lookup
 from popsim.records import Disposition, Timeline, rows_of
 from popsim.scoring.files import dose_step, kinds_of, timeline_of
@@ -137,6 +138,16 @@ def level(model: str, given_as: str, at: str, course: str = "plasma", scale: str
     found, timeline = _given(model, given_as, given)
     plasma, site = solve.courses_on_grid(found, timeline, np.array([minutes(at)]))
     return float({"plasma": plasma, "effect_site": site}[course][0, 0]) * float(scale)
+
+
+def level_by_mouth(model: str, amount: str, at: str, **given: str) -> float:
+    """Concentration at a time after one dose by mouth, mg/L; NotThere while the solver has no absorption."""
+    if "oral_mg" not in Timeline.__dataclass_fields__:
+        raise NotThere("no dose by mouth yet")
+    _, _, values = typical(model, given)
+    none, dose = np.zeros((1, 1)), np.full((1, 1), parse_quantity(amount, ["mass"]).value)
+    timeline = Timeline(none, none, none, oral_mg=dose)
+    return float(solve.courses_on_grid(solve.disposition(values), timeline, np.array([minutes(at)]))[0][0, 0])
 
 
 def area(model: str, given_as: str, start: str, end: str, **given: str) -> float:

@@ -14,14 +14,15 @@ FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
     "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
+    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate",
     "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
     "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
     "scoring.report", "scoring.run",
     "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.open_data", "evidence.bodies",
     "evidence.mathematics", "evidence.check", "evidence.words",
-    "commands.new", "commands.check", "commands.judge", "commands.score",
+    "derived", "model_text", "person_text",
+    "commands.new", "commands.check", "commands.judge", "commands.models", "commands.person", "commands.score",
     "commands.evidence", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.

@@ -24,7 +24,7 @@ def test_claim(claim):
     if answer.status == NOT_RUN:
         pytest.skip(f"a package is missing: {answer.reason}")
     if answer.status == NOT_SHIPPED:
-        assert claim.of["model"] in answer.reason
+        assert answer.reason.endswith(" yet")
         return
     assert answer.status == (KNOWN if claim.disagrees else AGREES), (
         f"expected {words.expected(claim)} {claim.unit}, popsim gives {answer.found!r} ({claim.source})")
