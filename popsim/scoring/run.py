@@ -5,12 +5,14 @@ from __future__ import annotations
 from collections.abc import Callable
 from pathlib import Path
 
+import numpy as np
+
 from covariates.catalogue import attributes_needed
 from covariates.formula import Formula, compile_formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from popsim.scoring.files import Measured, read_measured
-from popsim.scoring.predict import lacking, predict
+from popsim.scoring.predict import Predictions, lacking, predict
 from popsim.scoring.tables import Scored
 from popsim.streams import BLOCK
 
@@ -38,8 +40,28 @@ def score_models(files: tuple[Path, Path, Path], drug: str | None, names: tuple[
     asked = groups_asked(groups, measured)
     _check_size(measured, replicates)
     prepare()
-    return Scored(measured, asked, usable, tuple(predict(model, measured, replicates, seed) for model in usable),
-                  left_out, seed)
+    found = [(model, predict(model, measured, replicates, seed)) for model in usable]
+    if drug:
+        found, twins = _without_twins(found)
+        left_out |= twins
+    kept, predictions = zip(*found, strict=True)
+    return Scored(measured, asked, kept, predictions, left_out, seed)
+
+
+def _without_twins(found: list[tuple[DrugModel, Predictions]]) -> tuple[list[tuple[DrugModel, Predictions]],
+                                                                        dict[str, str]]:
+    """Without the sheets that predict the same concentrations as an earlier one, and which those are."""
+    kept: list[tuple[DrugModel, Predictions]] = []
+    twins: dict[str, str] = {}
+    for model, one in found:
+        twin = next((other.name for other, theirs in kept
+                     if np.array_equal(theirs.typical, one.typical, equal_nan=True) and other.spread == model.spread
+                     and other.measurement_error == model.measurement_error), None)
+        if twin is None:
+            kept.append((model, one))
+        else:
+            twins[model.name] = f"predicts the same concentrations as {twin}"
+    return kept, twins
 
 
 def _check_size(measured: Measured, replicates: int) -> None:

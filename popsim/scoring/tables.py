@@ -13,6 +13,7 @@ from covariates.formula import Formula
 from covariates.sheet import DrugModel
 from popsim.groups import ALL, members
 from popsim.lookup import Lookup
+from popsim.parameters import outside_ranges
 from popsim.scoring.files import Measured
 from popsim.scoring.measures import MEASURES, Resampled, performance, prediction_errors, verdict
 from popsim.scoring.predict import Predictions, infusing
@@ -42,6 +43,12 @@ class Scored:
         """(n, groups) bool."""
         people = self.measured.people()
         return members(self.groups, Lookup(people.attributes), len(people))
+
+
+    def outside(self, model: DrugModel) -> np.ndarray:
+        """(n,) bool: who lies outside the people the model was built on, so far as the sheet gives their ranges."""
+        marked = outside_ranges(model, Lookup(self.measured.attributes)).values()
+        return np.any([np.zeros(len(self.measured.labels), dtype=bool), *marked], axis=0)
 
 
 def all_tables(scored: Scored) -> dict[str, pd.DataFrame]:
@@ -91,12 +98,14 @@ def scores(scored: Scored, of_patients: pd.DataFrame, resampled: Resampled) -> p
     """One row per model, group and phase: medians over patients with intervals, and the share inside 5 to 95 %."""
     rows, labels, inside = [], scored.measured.labels, scored.members()
     for model in scored.models:
+        beyond = scored.outside(model)
         for g, group in enumerate(scored.group_names):
             for phase in PHASES:
                 part = of_patients[(of_patients["model"] == model.name) & (of_patients["phase"] == phase)
                                    & of_patients["patient"].isin(labels[inside[:, g]])]
                 row = {"model": model.name, "group": group, "phase": phase, "patients": len(part),
-                       "measurements": int(part["measurements"].sum())}
+                       "measurements": int(part["measurements"].sum()),
+                       "outside_model": float(beyond[np.isin(labels, part["patient"])].mean()) if len(part) else np.nan}
                 for name in MEASURES:
                     row |= _three(name, resampled.median(part[name].to_numpy(dtype=np.float64)))
                 for name in ("inside", "inside_with_error"):
@@ -195,6 +204,10 @@ def notes_of(scored: Scored, tables: dict[str, pd.DataFrame], at_bolus: int) -> 
         elif found.with_error is None:
             notes.append(f"{model.name}: no measurement error published; its intervals show between-subject "
                          "variability alone, and should hold fewer than 90 % of measurements.")
+        beyond = int(scored.outside(model).sum())
+        if beyond:
+            notes.append(f"{model.name}: {beyond} of {len(scored.measured.labels)} patients lie outside the people it "
+                         "was built on.")
         nothing = int((~(found.typical > 0)).sum())
         if nothing:
             notes.append(f"{model.name}: {nothing} measurements not scored, since it predicts no drug then or cannot "

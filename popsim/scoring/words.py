@@ -21,7 +21,8 @@ MEASURES_SAY = ("MDPE: median prediction error (below 0: measured lower than pre
 
 
 def number(value: float, digits: int = 1) -> str:
-    return "-" if math.isnan(value) else f"{value:.{digits}f}"
+    """One decimal, none from 100 on."""
+    return "-" if math.isnan(value) else f"{value:.{digits if abs(value) < 100 else 0}f}"
 
 
 def interval(row, name: str) -> str:

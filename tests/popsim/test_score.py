@@ -146,6 +146,30 @@ def test_named_sheets_must_be_askable_and_others_are_left_out_aloud(tmp_path):
     assert "propofol_eleveld_2018" not in [model.name for model in found.models]
 
 
+def test_sheets_with_the_same_concentrations_are_scored_once(tmp_path):
+    """They differ in their effect sites alone."""
+    from popsim.scoring.predict import predict
+    from popsim.scoring.run import _without_twins
+
+    written = simulated(tmp_path, people=6)
+    found, _ = cases.scored(tmp_path, written, right(tmp_path), right(tmp_path, "twin"), right(tmp_path, "other", "0.6"))
+    pairs = [(model, predict(model, found.measured, 100, 1)) for model in found.models]
+    kept, twins = _without_twins(pairs)
+    assert [model.name for model, _ in kept] == ["right", "other"]
+    assert twins == {"twin": "predicts the same concentrations as right"}
+
+
+def test_who_lies_outside_the_models_people(tmp_path):
+    """Minto 1997 was built on 20 to 85 years, 45 to 106 kg: one of two patients is outside."""
+    people = ["a,male,40,80,180", "b,male,60,150,180"]
+    given = ["a,0 min,,1 mg/h,,10 min", "b,0 min,,1 mg/h,,10 min"]
+    measured = ["a,5 min,plasma,3 ng/mL", "b,5 min,plasma,3 ng/mL"]
+    found, tables = cases.scored(tmp_path, cases.files(tmp_path, people, given, measured), "remifentanil_minto_1997")
+    shares = tables["scores"].query("phase == 'all'").set_index("group")["outside_model"]
+    assert shares["all"] == 0.5 and shares["obese"] == 1.0
+    assert any("1 of 2 patients lie outside" in note for note in notes_of(found, tables, 0))
+
+
 @pytest.mark.parametrize(("drug", "models", "groups", "word"), [
     (None, (), (), "neither"), ("propofol", ("propofol_marsh_1991",), (), "both"), ("propofool", (), (), "propofol"),
     ("propofol", (), ("old",), "NAME:CONDITION"), ("propofol", (), ("old: agee > 3",), "agee")])
