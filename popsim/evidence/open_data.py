@@ -10,6 +10,7 @@ from functools import lru_cache
 import numpy as np
 
 from popsim import solve
+from popsim.evidence.mixed_fit import mixed_fit
 from popsim.evidence.remifentanil import open_data
 from popsim.records import Timeline
 
@@ -60,12 +61,17 @@ def _fit(residuals, start: list[float]) -> tuple[np.ndarray, float]:
     return found.x, float(np.sqrt((found.fun**2).sum() / (len(found.fun) - len(start))))
 
 
+def _theophylline_people() -> list[tuple[float, np.ndarray, np.ndarray]]:
+    """Dose (mg/kg), times (h) and concentrations (mg/L) of each subject."""
+    rows = open_data("datasets", "Theoph")
+    return [(float(part["Dose"].iloc[0]), part["Time"].to_numpy(float), part["conc"].to_numpy(float))
+            for _, part in rows.groupby("Subject")]
+
+
 @lru_cache(maxsize=1)
 def _theophylline() -> tuple[dict[str, float], dict[str, float]]:
     """Pooled estimates, and the mean over subjects of their own."""
-    rows = open_data("datasets", "Theoph")
-    parts = [(part["Dose"].iloc[0], part["Time"].to_numpy(float), part["conc"].to_numpy(float))
-             for _, part in rows.groupby("Subject")]
+    parts = _theophylline_people()
 
     def misfit(logs, some):
         return np.concatenate([oral(logs[1], logs[2], logs[0], dose, time) - conc for dose, time, conc in some])
@@ -102,3 +108,46 @@ def cefamandole_fit(what: str) -> float:
     """A1, A2 (ug/mL), lrc1, lrc2 (ln 1/min), sigma, pooled, 15 mg/kg."""
     return float(_two_exponentials("nlme", "Cefamandole", "Time", 15.0,
                                    tuple(np.log([0.038, 0.002, 0.042, 0.0016])))[what])
+
+
+@lru_cache(maxsize=1)
+def _theophylline_mixed() -> dict[str, float]:
+    parts = _theophylline_people()
+    fixed, spread, sigma = mixed_fit(lambda logs, i: oral(logs[1], logs[2], logs[0], *parts[i][:2]),
+                                     [conc for _, _, conc in parts], [-2.5, 0.5, -3.2], [1, 2])
+    return dict(zip(("ln ke", "ln ka", "ln CL", "SD of ln ka", "SD of ln CL", "sigma"), (*fixed, *spread, sigma),
+                    strict=True))
+
+
+def theophylline_mixed(what: str) -> float:
+    """Mixed-effects estimates with random ka and CL."""
+    return float(_theophylline_mixed()[what])
+
+
+@lru_cache(maxsize=2)
+def _two_exponentials_mixed(package: str, item: str, time: str, start: tuple[float, ...],
+                            varying: tuple[int, ...]) -> dict[str, float]:
+    """Of A1, lrc1, A2, lrc2, those `varying` with random effects; through volumes and clearances of a unit dose."""
+    parts = [(part[time].to_numpy(float), part["conc"].to_numpy(float))
+             for _, part in open_data(package, item).groupby("Subject")]
+
+    def predicted(given: np.ndarray, i: int) -> np.ndarray:
+        (a, fast), (b, slow) = (given[0], np.exp(given[1])), (given[2], np.exp(given[3]))
+        v1, back = 1 / (a + b), (a * slow + b * fast) / (a + b)
+        out = fast * slow / back
+        forth = fast + slow - back - out
+        return biexponential(*np.log([v1, out * v1, forth * v1 / back, forth * v1]), 1.0, parts[i][0])
+
+    fixed, spread, sigma = mixed_fit(predicted, [conc for _, conc in parts], start, varying)
+    names = ("A1", "lrc1", "A2", "lrc2")
+    return dict(zip((*names, *(f"SD of {names[k]}" for k in varying), "sigma"), (*fixed, *spread, sigma), strict=True))
+
+
+def indomethacin_mixed(what: str) -> float:
+    """Mixed-effects estimates with random A1, lrc1, A2."""
+    return float(_two_exponentials_mixed("datasets", "Indometh", "time", (2.8, 0.8, 0.5, -1.3), (0, 1, 2))[what])
+
+
+def cefamandole_mixed(what: str) -> float:
+    """Mixed-effects estimates with all four random."""
+    return float(_two_exponentials_mixed("nlme", "Cefamandole", "Time", (310.0, -2.1, 85.0, -4.0), (0, 1, 2, 3))[what])

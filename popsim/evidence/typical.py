@@ -1,5 +1,6 @@
 """What shipped sheets say of a typical person: half-lives, peaks, recovery times, levels, areas, needs.
 
+Everything goes through the solver that `popsim judge` uses, not through derived.py: evidence of what is judged by.
 A person is a man of 40 years, 70 kg, 170 cm, creatinine 1 mg/dL, every switch off, unless a claim says otherwise.
 """
 
