@@ -37,9 +37,10 @@ def check_all(claims: Iterable[Claim] | None = None) -> Iterator[Answer]:
 
 def check(claim: Claim) -> Answer:
     """One claim: asked as `ask` and `of` say, never from memory of an earlier run."""
-    model = claim.of.get("model")
-    if model is not None and model not in shipped_sheets():
-        return Answer(claim, math.nan, NOT_SHIPPED, f"there is no sheet {model} yet")
+    shipped = shipped_sheets()
+    for model in (claim.of[word] for word in ("model", "other", "spread_from") if word in claim.of):
+        if model not in shipped:
+            return Answer(claim, math.nan, NOT_SHIPPED, f"there is no sheet {model} yet")
     module, _, function = claim.ask.partition(".")
     try:
         found = float(getattr(MODULES[module], function)(**claim.of))

@@ -15,10 +15,11 @@ from popsim.evidence.claims import NotThere
 from popsim.lookup import Lookup
 from popsim.records import Disposition, Timeline, rows_of
 from popsim.scoring.files import dose_step, kinds_of, timeline_of
-from popsim.streams import normals
+from popsim.streams import BLOCK, normals
 
 USUAL = {"sex": "male", "age": "40", "weight": "70", "height": "170", "serum_creatinine": "1"}
 FINE_MIN = 0.001
+EVERYONE = np.zeros(BLOCK, dtype=np.int64)  # one person's timeline, given to all
 
 
 def person(model: DrugModel, given: dict[str, str]) -> dict[str, np.ndarray]:
@@ -86,6 +87,11 @@ def time_to_fall(model: str, after: str, hold: str, share: str = "0.5", **given:
     if below == 0:
         return float("nan")
     return float(np.interp(-float(share) * plasma[0], -plasma[below - 1:below + 1], grid[below - 1:below + 1]) - stop)
+
+
+def later_to_fall(model: str, other: str, after: str, hold: str) -> float:
+    """Minutes by which the first drug takes longer than the other to fall to half."""
+    return time_to_fall(model, after, hold) - time_to_fall(other, after, hold)
 
 
 def holding(values: dict[str, np.ndarray], until_min: float, step_min: float = 0.5) -> Timeline:
@@ -167,16 +173,30 @@ def share_above(model: str, given_as: str, low: str, start: str, end: str, unbou
     return 100.0 * float(course.inside[0])
 
 
+def _alike(model: str, given: dict[str, str], spread_from: str = "") -> Disposition:
+    """8192 people alike but for their luck, by the sheet's own spread or that of another sheet."""
+    sheet, attributes, _ = typical(model, given)
+    varies = read_sheet(spread_from or model).spread
+    names = {equation.name for equation in sheet.equations}
+    luck = {name: omega * normals(1, f"spread {name}", 0) for name, omega in varies.items() if name in names}
+    many = {name: np.repeat(array, BLOCK) for name, array in attributes.items()}
+    return solve.disposition(parameters_of(sheet, Lookup(many), luck, BLOCK))
+
+
 def _spread_levels(model: str, given_as: str, at: list[float], given: dict[str, str]) -> np.ndarray:
     """Levels (8192, times) of people alike but for their luck, relative to the typical person's."""
-    sheet, attributes, values = typical(model, given)
-    timeline, grid = doses(given_as, attributes), np.array(at)
-    luck = {name: omega * normals(1, f"spread {name}", 0) for name, omega in sheet.spread.items()}
-    n = 8192
-    many = {name: np.repeat(array, n) for name, array in attributes.items()}
-    drawn = parameters_of(sheet, Lookup(many), luck, n)
-    everyone = solve.courses_on_grid(solve.disposition(drawn), rows_of(timeline, np.zeros(n, dtype=np.int64)), grid)[0]
-    return everyone / solve.courses_on_grid(solve.disposition(values), timeline, grid)[0]
+    found, timeline = _given(model, given_as, given)
+    everyone = solve.courses_on_grid(_alike(model, given), rows_of(timeline, EVERYONE), np.array(at))[0]
+    return everyone / solve.courses_on_grid(found, timeline, np.array(at))[0]
+
+
+def area_attained(model: str, given_as: str, start: str, end: str, low: str, spread_from: str = "",
+                  **given: str) -> float:
+    """Share of people alike but for their luck whose area from start to end reaches `low`, in %."""
+    _, timeline = _given(model, given_as, given)
+    ends = (np.full(BLOCK, minutes(edge)) for edge in (start, end))
+    areas, _ = solve.area_under_curve(_alike(model, given, spread_from), rows_of(timeline, EVERYONE), *ends)
+    return float((areas >= parse_quantity(low, ["area"]).value).mean() * 100)
 
 
 def fold_range(model: str, given_as: str, at: str, **given: str) -> float:
