@@ -14,6 +14,7 @@ from popsim.commands.evidence import evidence
 from popsim.commands.judge import judge
 from popsim.commands.models import models
 from popsim.commands.new import new
+from popsim.commands.patients import patients
 from popsim.commands.person import person
 from popsim.commands.score import score
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
@@ -29,6 +30,7 @@ def popsim() -> None:
     \b
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
+    popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim models              the published drug models, and one of them whole
     popsim person ...          every covariate of one person, side by side
@@ -40,7 +42,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, judge, models, person, score, evidence):
+for command in (new, check, patients, judge, models, person, score, evidence):
     popsim.add_command(command)
 
 

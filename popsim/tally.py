@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.clusters import ClusterTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -19,6 +20,7 @@ MANTISSAS = 9 * 10 ** (DIGITS - 1)
 KEY_COUNT = 1 + DECADES * MANTISSAS
 HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
 MOST_BYTES = 8 * 2**30
+MOST_NAMED = 10  # patients who could not be simulated are named up to this many for each reason
 
 
 @dataclass
@@ -94,10 +96,12 @@ class Tally:
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
+    clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int) -> Tally:
+    def empty(cls, study: Study, times: int, origins: int = 0) -> Tally:
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -115,6 +119,7 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
+        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -126,6 +131,7 @@ class Tally:
                    for m in models for t in targets for a, b in combinations(protocols, 2)},
             doses={p: dose_tally() for p in protocols},
             overlap=np.zeros((groups, groups), dtype=np.int64),
+            clusters=clusters,
         )
 
     def merge(self, other: Tally) -> None:
@@ -134,16 +140,30 @@ class Tally:
             mine += theirs
         for key, count in other.statuses.items():
             self.statuses[key] = self.statuses.get(key, 0) + count
+            self.failing[key] = sorted({*self.failing.get(key, []), *other.failing[key]})[:MOST_NAMED]
         self.add_flags(other.flags)
 
     def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
         for flag, count in counts.items():
             self.flags[flag] = self.flags.get(flag, 0) + count
 
-    def add_statuses(self, model: int, status: np.ndarray) -> None:
+    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
+        """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
+        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+
+    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
+        """Likewise for the difference of protocols b and a in one group."""
+        pair = self.pairs[m, t, a, b]
+        unequal = int(pair.only_a[group] + pair.only_b[group])
+        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
+
+    def add_statuses(self, model: int, status: np.ndarray, first: int) -> None:
+        """Count who could not be computed, and why; `first` is the number of the block's first patient."""
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
             key = (model, int(code))
             self.statuses[key] = self.statuses.get(key, 0) + int(count)
+            numbers = (first + np.nonzero(status == code)[0][:MOST_NAMED]).tolist()
+            self.failing[key] = sorted([*self.failing.get(key, []), *numbers])[:MOST_NAMED]
 
 
 @dataclass(frozen=True)
@@ -157,6 +177,7 @@ class Findings:
     rows_skipped: int
     seconds: float
     threads: int
+    share_eligible: float = float("nan")  # of the people within the limits of age and sex
 
 
 def range_names(model: DrugModel) -> list[str]:
@@ -174,6 +195,8 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
             found += vars(entry).values()
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
+    if tally.clusters is not None:
+        found += tally.clusters.arrays()
     return found
 
 

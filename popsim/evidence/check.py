@@ -9,7 +9,7 @@ from dataclasses import dataclass
 from covariates.problems import ProblemsError
 from covariates.sheet import shipped_sheets
 from popsim.evidence import bodies, mathematics, open_data, remifentanil, typical
-from popsim.evidence.claims import Claim, NotThere, read_claims
+from popsim.evidence.claims import Claim, read_claims
 
 MODULES = {"bodies": bodies, "mathematics": mathematics, "open_data": open_data, "remifentanil": remifentanil,
            "typical": typical}
@@ -44,8 +44,6 @@ def check(claim: Claim) -> Answer:
     module, _, function = claim.ask.partition(".")
     try:
         found = float(getattr(MODULES[module], function)(**claim.of))
-    except NotThere as error:
-        return Answer(claim, math.nan, NOT_SHIPPED, str(error))
     except ModuleNotFoundError as error:
         return Answer(claim, math.nan, NOT_RUN, f"pip install {error.name}")
     except ProblemsError as error:

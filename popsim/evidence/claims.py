@@ -18,10 +18,6 @@ PAGES = {
 EXPECTED = re.compile(r"(<=|>=)?\s*([-+]?[0-9.]+(?:e[-+]?[0-9]+)?)")
 
 
-class NotThere(Exception):
-    """What a claim asks for is no part of popsim yet."""
-
-
 @dataclass(frozen=True)
 class Claim:
     """One claim.

@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 
 from popsim import solve
-from popsim.records import Disposition, Timeline, rows_of
+from popsim.records import Disposition, Timeline
+from popsim.scoring.predict import rows_of
 from popsim.streams import normals, uniforms
 
 MODELS = 20
@@ -110,7 +111,8 @@ def area_of_a_dose() -> float:
     """Area after a dose, over all time, against dose / CL: largest relative difference in random models."""
     models = _random_models(MODELS)
     timeline = _same(_events((0.0, 100.0, 0.0)), MODELS)
-    found, _ = solve.area_under_curve(solve.disposition(models), timeline, np.zeros(MODELS), np.full(MODELS, 1e7))
+    found, _ = solve.area_under_curve(solve.disposition(models), timeline, "plasma", np.zeros(MODELS),
+                                      np.full(MODELS, 1e7))
     return float(np.abs(found * models["CL"] / 100.0 - 1).max())
 
 

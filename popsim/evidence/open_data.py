@@ -16,15 +16,12 @@ from popsim.records import Timeline
 
 
 def oral(log_ka: float, log_cl: float, log_ke: float, dose: float, times: np.ndarray) -> np.ndarray:
-    """One compartment after a dose by mouth, in the units given: C = D ka / (CL) x (effect site of a depot).
-
-    A depot that empties at ka into plasma that empties at ke is the chain of plasma and effect site: a unit bolus into
-    one compartment of volume 1 and clearance ka, followed at ke, is ke / (ka - ke) (exp(-ke t) - exp(-ka t)).
-    """
-    ka, cl, ke = np.exp([log_ka, log_cl, log_ke])
-    depot = solve.disposition({"V1": np.ones(1), "CL": np.array([ka]), "ke0": np.array([ke])})
+    """One compartment after a dose by mouth, in the units given."""
+    ka, cl, ke = np.exp([[log_ka], [log_cl], [log_ke]])
+    none = np.zeros((1, 1))
+    given = Timeline(none, none, none, oral_mg=np.full((1, 1), dose))
     grid, place = np.unique(times, return_inverse=True)
-    return dose * ka / cl * solve.courses_on_grid(depot, _bolus(1.0), grid)[1][0, place]
+    return solve.courses_on_grid(solve.disposition({"V1": cl / ke, "CL": cl, "ka": ka}), given, grid)[0][0, place]
 
 
 def biexponential(log_v1: float, log_cl: float, log_v2: float, log_q2: float, dose: float,

@@ -11,14 +11,16 @@ import numpy as np
 from covariates.sheet import DrugModel, parameters_of, read_sheet
 from covariates.units import parse_quantity
 from popsim import solve
-from popsim.evidence.claims import NotThere
 from popsim.lookup import Lookup
-from popsim.records import Disposition, Timeline, rows_of
+from popsim.parameters import individual_parameters
+from popsim.records import Disposition, Patients, Timeline, Variability
 from popsim.scoring.files import dose_step, kinds_of, timeline_of
+from popsim.scoring.predict import rows_of
 from popsim.streams import BLOCK, normals
 
 USUAL = {"sex": "male", "age": "40", "weight": "70", "height": "170", "serum_creatinine": "1"}
 FINE_MIN = 0.001
+SEED = 1
 EVERYONE = np.zeros(BLOCK, dtype=np.int64)  # one person's timeline, given to all
 
 
@@ -148,9 +150,7 @@ def level(model: str, given_as: str, at: str, course: str = "plasma", scale: str
 
 
 def level_by_mouth(model: str, amount: str, at: str, **given: str) -> float:
-    """Concentration at a time after one dose by mouth, mg/L; NotThere while the solver has no absorption."""
-    if "oral_mg" not in Timeline.__dataclass_fields__:
-        raise NotThere("no dose by mouth yet")
+    """Concentration at a time after one dose by mouth, mg/L."""
     _, _, values = typical(model, given)
     none, dose = np.zeros((1, 1)), np.full((1, 1), parse_quantity(amount, ["mass"]).value)
     timeline = Timeline(none, none, none, oral_mg=dose)
@@ -161,7 +161,7 @@ def area(model: str, given_as: str, start: str, end: str, **given: str) -> float
     """Area under the plasma course, mg.h/L."""
     found, timeline = _given(model, given_as, given)
     ends = (np.array([minutes(edge)]) for edge in (start, end))
-    return float(solve.area_under_curve(found, timeline, *ends)[0][0] / 60)
+    return float(solve.area_under_curve(found, timeline, "plasma", *ends)[0][0] / 60)
 
 
 def share_above(model: str, given_as: str, low: str, start: str, end: str, unbound: str = "1", **given: str) -> float:
@@ -176,11 +176,10 @@ def share_above(model: str, given_as: str, low: str, start: str, end: str, unbou
 def _alike(model: str, given: dict[str, str], spread_from: str = "") -> Disposition:
     """8192 people alike but for their luck, by the sheet's own spread or that of another sheet."""
     sheet, attributes, _ = typical(model, given)
-    varies = read_sheet(spread_from or model).spread
-    names = {equation.name for equation in sheet.equations}
-    luck = {name: omega * normals(1, f"spread {name}", 0) for name, omega in varies.items() if name in names}
-    many = {name: np.repeat(array, BLOCK) for name, array in attributes.items()}
-    return solve.disposition(parameters_of(sheet, Lookup(many), luck, BLOCK))
+    variability = Variability(between_subject=True, scale=1.0,
+                              from_model=read_sheet(spread_from) if spread_from else None)
+    many = Patients(1, 0, np.arange(BLOCK), {name: np.repeat(array, BLOCK) for name, array in attributes.items()})
+    return solve.disposition(individual_parameters(sheet, variability, SEED, many, Lookup(many.attributes)).values)
 
 
 def _spread_levels(model: str, given_as: str, at: list[float], given: dict[str, str]) -> np.ndarray:
@@ -195,7 +194,7 @@ def area_attained(model: str, given_as: str, start: str, end: str, low: str, spr
     """Share of people alike but for their luck whose area from start to end reaches `low`, in %."""
     _, timeline = _given(model, given_as, given)
     ends = (np.full(BLOCK, minutes(edge)) for edge in (start, end))
-    areas, _ = solve.area_under_curve(_alike(model, given, spread_from), rows_of(timeline, EVERYONE), *ends)
+    areas, _ = solve.area_under_curve(_alike(model, given, spread_from), rows_of(timeline, EVERYONE), "plasma", *ends)
     return float((areas >= parse_quantity(low, ["area"]).value).mean() * 100)
 
 
@@ -210,5 +209,5 @@ def expected_inaccuracy(model: str, given_as: str, at: str, error: str, **given:
     error of `error` (SD of ln), at the times `at` (min, separated by blanks)."""
     times = [float(word) for word in at.split()]
     ratio = _spread_levels(model, given_as, times, given)
-    noise = np.stack([normals(1, f"error {k}", 0) for k in range(len(times))], axis=1)
+    noise = np.stack([normals(SEED, f"error {k}", 0) for k in range(len(times))], axis=1)
     return float(np.median(np.median(np.abs(ratio * np.exp(float(error) * noise) - 1), axis=1)) * 100)

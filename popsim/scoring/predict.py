@@ -2,7 +2,8 @@
 
 from __future__ import annotations
 
-from dataclasses import dataclass
+from dataclasses import dataclass, fields, replace
+from typing import TypeVar
 
 import numpy as np
 
@@ -12,12 +13,13 @@ from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
-from popsim.records import Disposition, Timeline, Variability, rows_of
+from popsim.records import Disposition, Timeline, Variability
 from popsim.scoring.files import Measured
 from popsim.streams import normals
 
 TYPICAL = Variability(between_subject=False, scale=1.0, from_model=None)
 AS_PUBLISHED = Variability(between_subject=True, scale=1.0, from_model=None)
+Record = TypeVar("Record", Disposition, Timeline)
 
 
 @dataclass(frozen=True)
@@ -32,6 +34,11 @@ class Predictions:
     typical: np.ndarray
     spread: np.ndarray | None
     with_error: np.ndarray | None
+
+
+def rows_of(record: Record, rows: slice | np.ndarray) -> Record:
+    """The same record (Disposition, Timeline) for some of its patients, or for one of them many times."""
+    return replace(record, **{field.name: getattr(record, field.name)[rows] for field in fields(record)})
 
 
 def lacking(model: DrugModel, measured: Measured) -> str:

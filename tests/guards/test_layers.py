@@ -12,18 +12,20 @@ POPSIM = Path(popsim.__file__).parent
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
-    "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate",
-    "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
-    "drawing", "pictures", "report", "terminal", "check_text", "progress",
+    "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
+    "patients.draw", "study_salvage", "study_file", "study_described", "study_population",
+    "study_protocols", "study_targets", "study",
+    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate", "clusters",
+    "tally", "people", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
+    "drawing", "pictures", "patient_pictures", "report", "terminal", "check_text", "progress",
     "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
     "scoring.report", "scoring.run",
     "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.mixed_fit", "evidence.open_data",
     "evidence.bodies", "evidence.mathematics", "evidence.check", "evidence.words",
     "derived", "model_text", "person_text",
-    "commands.new", "commands.check", "commands.judge", "commands.models", "commands.person", "commands.score",
-    "commands.evidence", "cli",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.models", "commands.person",
+    "commands.score", "commands.evidence", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
