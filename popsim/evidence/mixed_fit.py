@@ -50,7 +50,7 @@ def _linear(predict: Predict, observed: np.ndarray, fixed: np.ndarray, own: np.n
 
 def _solved(linear: Sequence[tuple[np.ndarray, np.ndarray]], varying: Sequence[int],
             logs: np.ndarray) -> tuple[float, np.ndarray, np.ndarray]:
-    """Twice the negative log likelihood (less a constant) at these SDs, the fixed effects, each subject's random ones."""
+    """Twice the negative log likelihood (less a constant) at these SDs, the fixed effects, each subject's own."""
     spread, error = np.diag(np.exp(2 * logs[:-1])), np.exp(2 * logs[-1])
     size, weighted, inverses, loss = 0.0, 0.0, [], 0.0
     for slopes, values in linear:

@@ -170,7 +170,7 @@ def _check(scored: Scored, tables: dict[str, pd.DataFrame], path: Path) -> Pictu
     _panels(page, names, draw)
     without = [name for name, found in zip([model.name for model in scored.models], scored.predictions, strict=True)
                if found.with_error is None and name in names]
-    _foot(page, f"Without measurement error, which the sheet lacks: {', '.join(without)}. The bands are then too narrow."
-          if without else "Simulated with between-subject variability and measurement error.")
+    _foot(page, f"Without measurement error, which the sheet lacks: {', '.join(without)}. The bands are then too "
+                "narrow." if without else "Simulated with between-subject variability and measurement error.")
     save(page, path, title, f"Lines with bands over time, one panel for each model. {said}.")
     return Picture(path.name, title, said, f"Visual predictive check. {said}.")

@@ -43,7 +43,7 @@ def rows_of(record: Record, rows: slice | np.ndarray) -> Record:
 
 def lacking(model: DrugModel, measured: Measured) -> str:
     """Why this model cannot be asked about these people; empty where it can."""
-    names = {*model.needs, *model.switches, *getattr(model, "numbers", ())}
+    names = {*model.needs, *model.switches, *model.numbers, *model.built_on.ranges}
     missing: set[str] = set()
     for name in names:
         if name not in measured.attributes:

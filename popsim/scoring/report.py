@@ -25,12 +25,14 @@ def score_record(scored: Scored, files: tuple[Path, Path, Path], replicates: int
     measured = scored.measured
     shipped = shipped_sheets()
     names = [f"--model {model.name}{'' if model.name in shipped else '.toml'}" for model in scored.models]
-    options = " ".join(f"--{kind} {path.name}" for kind, path in zip(("people", "given", "measured"), files, strict=True))
+    kinds = ("people", "given", "measured")
+    options = " ".join(f"--{kind} {path.name}" for kind, path in zip(kinds, files, strict=True))
     return {
         "command": f"popsim score {options} {' '.join(names)} --replicates {replicates} --seed {scored.seed}",
         "seed": scored.seed,
         "replicates": replicates,
-        "files": [{"name": path.name, "digest_sha256": hashlib.sha256(path.read_bytes()).hexdigest()} for path in files],
+        "files": [{"name": path.name, "digest_sha256": hashlib.sha256(path.read_bytes()).hexdigest()}
+                  for path in files],
         "counts": {"patients": len(measured.labels), "measurements": len(measured.value)},
         "groups": {name: where.text for name, where in scored.groups},
         "models": [{"name": model.name, "digest_sha256": model.digest, "evidence": model.evidence,

@@ -68,7 +68,8 @@ def _check_size(measured: Measured, replicates: int) -> None:
     """Raise ProblemsError for more than memory or the streams of luck can hold."""
     people, count = len(measured.labels), len(measured.value)
     if people > BLOCK:
-        raise ProblemsError(Problem("people", f"{people:,} measured patients", f"at most {BLOCK:,}", "score them in parts"))
+        raise ProblemsError(Problem("people", f"{people:,} measured patients", f"at most {BLOCK:,}",
+                                    "score them in parts"))
     if replicates * count > MOST_NUMBERS:
         raise ProblemsError(Problem("--replicates", f"{replicates:,} for {count:,} measurements",
                                     f"at most {MOST_NUMBERS // count:,}", "or score the patients in parts"))

@@ -56,7 +56,8 @@ def all_tables(scored: Scored) -> dict[str, pd.DataFrame]:
     resampled = Resampled(scored.seed, len(scored.measured.labels))
     predicted = predictions(scored)
     of_patients = patient_scores(predicted)
-    return {"scores": scores(scored, of_patients, resampled), "score_comparison": comparison(scored, of_patients, resampled),
+    return {"scores": scores(scored, of_patients, resampled),
+            "score_comparison": comparison(scored, of_patients, resampled),
             "score_patients": of_patients, "score_predictions": predicted, "score_check": visual_check(scored)}
 
 

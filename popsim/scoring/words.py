@@ -101,4 +101,5 @@ def as_json_text(scored: Scored, tables: dict[str, pd.DataFrame], notes: list[st
              for name in ("scores", "score_comparison")}
     best = {group: dict(zip(("model", "not_clearly_closer_than"), best_model(tables, group), strict=True))
             for group in scored.group_names}
-    return json.dumps({"best": best, **shown, "notes": notes, "cautions": list(SCORE_CAUTIONS)}, indent=2, ensure_ascii=False)
+    return json.dumps({"best": best, **shown, "notes": notes, "cautions": list(SCORE_CAUTIONS)}, indent=2,
+                      ensure_ascii=False)

@@ -52,7 +52,7 @@ def test_predictions_and_measures_in_closed_form(tmp_path):
 
 
 def test_intervals_in_closed_form(tmp_path):
-    """exp(-CL t / V) with ln CL normal: quantiles of the concentration follow from those of the normal (scipy.stats)."""
+    """exp(-CL t / V) with ln CL normal: quantiles follow from those of the normal (scipy.stats)."""
     _, tables = cases.scored(tmp_path, simulated(tmp_path), right(tmp_path), replicates=8000)
     rows = tables["score_predictions"].query("patient == 'p3'")
     for column, share in (("p05", 0.95), ("p95", 0.05)):  # a large clearance leaves a low concentration
@@ -129,7 +129,8 @@ def test_unbound_levels(tmp_path):
     with pytest.raises(ProblemsError, match="gives no fraction unbound"):
         cases.scored(tmp_path, written, name)
     path = tmp_path / name
-    path.write_text(path.read_text().replace('fluid = "total plasma"', 'fluid = "total plasma"\nfraction_unbound = 0.25'))
+    fluid = 'fluid = "total plasma"'
+    path.write_text(path.read_text().replace(fluid, f"{fluid}\nfraction_unbound = 0.25"))
     _, tables = cases.scored(tmp_path, written, name)
     assert tables["score_predictions"]["predicted"].iloc[0] == pytest.approx(2.5 * math.exp(-1), rel=1e-12)
 
@@ -152,7 +153,8 @@ def test_sheets_with_the_same_concentrations_are_scored_once(tmp_path):
     from popsim.scoring.run import _without_twins
 
     written = simulated(tmp_path, people=6)
-    found, _ = cases.scored(tmp_path, written, right(tmp_path), right(tmp_path, "twin"), right(tmp_path, "other", "0.6"))
+    names = right(tmp_path), right(tmp_path, "twin"), right(tmp_path, "other", "0.6")
+    found, _ = cases.scored(tmp_path, written, *names)
     pairs = [(model, predict(model, found.measured, 100, 1)) for model in found.models]
     kept, twins = _without_twins(pairs)
     assert [model.name for model, _ in kept] == ["right", "other"]
@@ -215,7 +217,7 @@ def test_the_demo_gives_the_same_bytes(demo):
 
 
 def test_the_demos_right_answer(demo):
-    """Its levels were simulated from propofol_eleveld_2018: closest, unbiased, and 90 % inside (36 people: 5 points)."""
+    """Its levels were simulated from propofol_eleveld_2018: closest, unbiased, 90 % inside (36 people: 5 points)."""
     rows = pd.read_csv(demo[0] / "one" / "scores.csv").query("group == 'all' and phase == 'all'").set_index("model")
     assert rows["mdape_percent"].idxmin() == "propofol_eleveld_2018"
     right_one = rows.loc["propofol_eleveld_2018"]

@@ -75,7 +75,8 @@ def test_each_bad_row_is_named(tmp_path, case):
 
 
 def test_all_problems_at_once(tmp_path):
-    written = cases.files(tmp_path, PEOPLE, [*GIVEN, "a,0 min,1,,,", "x,0 min,1 mg,,,"], [*MEASURED, "a,1 min,plasma,x"])
+    given, measured = [*GIVEN, "a,0 min,1,,,", "x,0 min,1 mg,,,"], [*MEASURED, "a,1 min,plasma,x"]
+    written = cases.files(tmp_path, PEOPLE, given, measured)
     with pytest.raises(ProblemsError) as found:
         read_measured(*written)
     assert len(found.value.problems) == 3
