@@ -60,6 +60,20 @@ def test_intervals_in_closed_form(tmp_path):
         np.testing.assert_allclose(rows[column], 10 * np.exp(-clearance * rows["time_min"] / 10), rtol=0.06)
 
 
+@pytest.mark.parametrize(("error", "quantile"), [
+    ("additive = \"0.5 mg/L\"", lambda level, z: level + 0.5 * z),
+    ("proportional = 0.2", lambda level, z: level * math.exp(0.2 * z))])
+def test_measurement_error_in_closed_form(tmp_path, error, quantile):
+    """Without spread between people: quantiles of a normal or lognormal error about the level (scipy.stats)."""
+    spread = f'published = false\nnote = "none"\n[measurement_error]\n{error}\nevidence = "from memory"'
+    name = cases.sheet(tmp_path, name="noisy", volume="10", clearance="0.5", spread=spread)
+    _, tables = cases.scored(tmp_path, simulated(tmp_path, people=3), name, replicates=8000)
+    for row in tables["score_predictions"].itertuples():
+        for found, share in ((row.p05_with_error, 0.05), (row.p95_with_error, 0.95)):
+            assert found == pytest.approx(quantile(row.predicted, stats.norm.ppf(share)), abs=0.03 * (1 + row.predicted))
+        assert math.isnan(row.p05)
+
+
 def test_the_interval_holds_nine_in_ten(tmp_path):
     """Measured in 200 people drawn from the model itself: 90 % inside, give or take 3.5 (3 SE of people)."""
     _, tables = cases.scored(tmp_path, simulated(tmp_path, people=200), right(tmp_path))
