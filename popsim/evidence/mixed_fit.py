@@ -10,7 +10,7 @@ from collections.abc import Callable, Sequence
 import numpy as np
 
 Predict = Callable[[np.ndarray, int], np.ndarray]
-STEP, MOST_ROUNDS, CLOSE = 1e-6, 60, 1e-5
+STEP, MOST_ROUNDS, CLOSE = 1e-6, 60, 1e-4
 SMALLEST_LOG = -12.0  # of an SD: none
 
 
@@ -28,7 +28,7 @@ def mixed_fit(predict: Predict, observed: Sequence[np.ndarray], start: Sequence[
     for _ in range(MOST_ROUNDS):
         linear = [_linear(predict, observed[i], fixed, own[i], varying, i) for i in range(n)]
         found = minimize(lambda logs: _solved(linear, varying, logs)[0], logs, method="L-BFGS-B",  # noqa: B023
-                         bounds=[(SMALLEST_LOG, None)] * len(logs), options={"ftol": 1e-13, "gtol": 1e-7})
+                         bounds=[(SMALLEST_LOG, None)] * len(logs), options={"ftol": 1e-11, "gtol": 1e-6})
         _, fixed_now, own = _solved(linear, varying, found.x)
         moved = max(np.abs(fixed_now - fixed).max(), np.abs(found.x - logs).max())
         fixed, logs = fixed_now, found.x

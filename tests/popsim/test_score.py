@@ -202,7 +202,8 @@ def demo(tmp_path_factory):
     """The shipped demo through the command line, twice."""
     folder = tmp_path_factory.mktemp("demo")
     asked = ["score", *(word for name in ("people", "given", "measured")
-                        for word in (f"--{name}", str(DEMO / f"{name}.csv"))), "--drug", "propofol"]
+                        for word in (f"--{name}", str(DEMO / f"{name}.csv"))), "--drug", "propofol",
+             "--replicates", "300"]
     assert run([*asked, "--out", str(folder / "one"), "--quiet"]) == 0
     assert run([*asked, "--out", str(folder / "two"), "--quiet", "--tables-only"]) == 0
     return folder, asked
