@@ -18,7 +18,7 @@ from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
 TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "people", "attainment_map", "body_size",
-               "patients", "courses")
+               "patients", "courses", "scores", "score_comparison", "score_patients", "score_predictions", "score_check")
 OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 

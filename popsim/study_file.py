@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -355,3 +356,15 @@ def shown(value: Any) -> str:
     else:
         text = str(value).lower()
     return text if len(text) <= 120 else text[:117] + "..."
+
+
+def read_dose(words: dict[str, Any], where: str) -> DoseSection:
+    """One dose step from its words, such as {"at": "0 min", "amount": "200 mg"}; `where` says where they stand.
+
+    Raises ProblemsError with all its faults, each at "where, column KEY".
+    """
+    try:
+        return DoseSection.model_validate(words)
+    except ValidationError as error:
+        raise ProblemsError(replace(_problem("", words, entry), where=f"{where}, column {entry['loc'][-1]}")
+                            for entry in error.errors()) from None

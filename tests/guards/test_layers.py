@@ -22,9 +22,13 @@ FLOW = [
     "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
     "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
     "patient_pictures", "report", "terminal", "check_text", "progress",
+    "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
+    "scoring.report", "scoring.run",
+    "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.mixed_fit", "evidence.open_data",
+    "evidence.bodies", "evidence.mathematics", "evidence.check", "evidence.words",
     "derived", "model_text", "person_text",
     "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw",
-    "commands.models", "commands.person", "cli",
+    "commands.models", "commands.person", "commands.score", "commands.evidence", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -45,7 +49,8 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "commands", "pictures") else {rest}
+            packages = ("", "patients", "pictures", "scoring", "evidence", "commands")
+            names |= inside if rest in packages else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names
