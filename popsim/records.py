@@ -267,11 +267,19 @@ class Judged:
 
 @dataclass(frozen=True)
 class BlockRows:
-    """What a block leaves for the tables that have a row per patient. Courses only when they are kept."""
+    """What a block leaves for those who ask patient by patient. Courses only when they are kept.
+
+    members   (n, groups) int64, 1 = belongs to that group
+    judged    (model, protocol, target) -> what the target made of each patient
+    received  what each patient is given, protocol by protocol
+    """
 
     patients: Patients
     lookup: Lookup
     courses: list[tuple[str, str, np.ndarray, np.ndarray, np.ndarray | None]]  # model, protocol, plasma, site, effect
+    members: np.ndarray
+    judged: dict[tuple[int, int, int], Judged]
+    received: list[Received]
 
 
 def rows_of(record: Any, rows: slice) -> Any:

@@ -92,11 +92,13 @@ class Tally:
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
+    over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int) -> Tally:
-        groups = len(study.group_names)
+    def empty(cls, study: Study, times: int, attainment_only: bool = False) -> Tally:
+        """Nothing counted yet; `attainment_only` leaves out the counts over time, of pairs and of doses."""
+        groups, times = len(study.group_names), 0 if attainment_only else times
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
         def zeros() -> np.ndarray:
@@ -120,9 +122,10 @@ class Tally:
             long_infusion={(m, p): zeros() for m in models for p in protocols},
             targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
             pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
-                   for m in models for t in targets for a, b in combinations(protocols, 2)},
-            doses={p: dose_tally() for p in protocols},
+                   for m in models for t in targets for a, b in combinations(protocols, 2) if not attainment_only},
+            doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
+            over_time=not attainment_only,
         )
 
     def merge(self, other: Tally) -> None:

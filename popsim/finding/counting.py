@@ -1,0 +1,230 @@
+"""Many protocols counted in the same patients with the same luck: what every search is made of."""
+
+from __future__ import annotations
+
+import hashlib
+import re
+from collections.abc import Callable, Sequence
+from dataclasses import dataclass, replace
+from pathlib import Path
+
+import numpy as np
+
+from covariates.problems import Problem, ProblemsError, nearest
+from covariates.units import parse_quantity
+from popsim.estimate import paired_difference, wilson
+from popsim.finding.wishes import EVERY, Wish
+from popsim.records import BlockRows, Study, Target
+from popsim.run import simulate
+from popsim.study import resolve_study
+from popsim.study_file import ProtocolSection, StudyFile
+
+Progress = Callable[[int], None] | None
+SUMS = ("failed", "attained", "below", "inside", "above")
+
+
+@dataclass(frozen=True)
+class Asked:
+    """A study file with what a search needs of it again and again.
+
+    section  the file as written, `path` where it stands
+    base     the study as it resolves, with its first model and the chosen target alone
+    wishes   each with the target that counts for it: 0 the study's own, others its wishes' limits
+    """
+
+    section: StudyFile
+    path: Path
+    base: Study
+    target: Target
+    wishes: tuple[tuple[Wish, int], ...]
+    limits: tuple[Target, ...]
+
+    def study(self, protocols: Sequence[ProtocolSection], every_model: bool = False) -> Study:
+        """The study with other protocols, every rule of a protocol checked again."""
+        section = self.section.model_copy(update={"protocol": list(protocols)})
+        try:
+            full = resolve_study(section, [], self.path)
+        except ProblemsError as error:
+            raise ProblemsError(replace(problem, where=_named(problem.where, protocols))
+                                for problem in error.problems) from None
+        models = full.models if every_model else full.models[:1]
+        return replace(full, models=models, targets=(self.target, *self.limits))
+
+
+def _named(where: str, protocols: Sequence[ProtocolSection]) -> str:
+    """"study.toml: protocol 17, dose 1: at_most" with the name of what was tried instead of its number."""
+    return re.sub(r"\bprotocol (\d+)", lambda found: f'find, with "{protocols[int(found[1]) - 1].name}"', where, count=1)
+
+
+def read_asked(section: StudyFile, path: Path) -> Asked:
+    """What a study asks to find; ProblemsError where the study itself, its target or its wishes do not fit."""
+    base = resolve_study(section, [], path)
+    names = [target.name for target in base.targets]
+    wanted = section.find.target
+    if wanted is None and len(names) > 1 or wanted is not None and wanted not in names:
+        raise ProblemsError(Problem(f"{path.name}: find: target", f'"{wanted}"' if wanted else "missing",
+                                    ", ".join(f'"{name}"' for name in names),
+                                    nearest(wanted, names) if wanted else "the study has several targets: say which"))
+    target = base.targets[names.index(wanted) if wanted else 0]
+    problems: list[Problem] = []
+    wishes, limits = [], []
+    for number, wish in enumerate((wish for text in section.find.wish for wish in text), 1):
+        where = f"{path.name}: find: wish {number}"
+        if wish.group not in (*base.group_names, EVERY):
+            problems.append(Problem(where, f'"{wish.group}", no group of this study',
+                                    ", ".join([*base.group_names, EVERY]), nearest(wish.group, base.group_names)))
+        try:
+            limits += [_limit_target(wish, target, where)] if wish.ever else []
+        except ProblemsError as error:
+            problems += error.problems
+        wishes.append((wish, len(limits) if wish.ever else 0))
+    if problems:
+        raise ProblemsError(problems)
+    return Asked(section, path, base, target, tuple(wishes), tuple(limits))
+
+
+def _limit_target(wish: Wish, target: Target, where: str) -> Target:
+    """The wish "ever above X" as a target: always at or below X in the same window."""
+    quantity = wish.course or target.quantity
+    kind = "area" if "area" in quantity else "number" if quantity in ("effect", "response") else "concentration"
+    limit = parse_quantity(wish.limit, [kind], where)
+    low, high = (-np.inf, limit.value) if wish.ever == "above" else (limit.value, np.inf)
+    course = quantity in ("plasma", "unbound_plasma", "effect_site", "effect", "response")
+    return replace(target, name=wish.text, quantity=quantity, low=low, high=high, unit=limit.unit,
+                   range_text=f"{'<=' if wish.ever == 'above' else '>='} {limit.text}",
+                   rule="always" if course else target.rule, rule_text="always" if course else target.rule_text)
+
+
+@dataclass
+class Counts:
+    """What became of the same patients under each of many protocols (axis p), by target t, group g and cell c.
+
+    cells     (c, k) int64, what tells the cells apart; one cell (c = 1, k = 0) where the search needs none
+    patients  (g, c) int64
+    sums      name -> (p, t, g, c): patients who failed, attained; sums of their shares of the window
+    dose_mg   (p, g) mean total dose
+    flags     (p, bytes) who attains the first target, packed; `members` (g, bytes) who belongs where
+    """
+
+    names: list[str]
+    groups: tuple[str, ...]
+    cells: np.ndarray
+    patients: np.ndarray
+    sums: dict[str, np.ndarray]
+    dose_mg: np.ndarray
+    flags: np.ndarray
+    members: np.ndarray
+
+    def beside(self, other: Counts) -> Counts:
+        """Both, for the same patients."""
+        sums = {name: np.concatenate([self.sums[name], other.sums[name]]) for name in self.sums}
+        return replace(self, names=self.names + other.names, sums=sums,
+                       dose_mg=np.concatenate([self.dose_mg, other.dose_mg]),
+                       flags=np.concatenate([self.flags, other.flags]))
+
+    def taken(self, order: Sequence[int]) -> Counts:
+        """The same protocols in another order."""
+        order = list(order)
+        return replace(self, names=[self.names[p] for p in order], dose_mg=self.dose_mg[order], flags=self.flags[order],
+                       sums={name: values[order] for name, values in self.sums.items()})
+
+    @property
+    def n(self) -> np.ndarray:
+        """Patients of each group."""
+        return self.patients.sum(axis=1)
+
+    def total(self, name: str, target: int = 0) -> np.ndarray:
+        """(p, g) a sum over all cells."""
+        return self.sums[name][:, target].sum(axis=-1)
+
+    def attained(self) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+        """(p, g) share attained, and its 95 % interval."""
+        hits, n = self.total("attained"), np.broadcast_to(self.n, self.total("attained").shape)
+        with np.errstate(invalid="ignore"):
+            return hits / n, *wilson(hits, n)
+
+    def mean_share(self, side: str) -> np.ndarray:
+        """(p, g) mean share of the window "below", "inside" or "above", over those who could be judged."""
+        with np.errstate(invalid="ignore"):
+            return self.total(side) / (self.n - self.total("failed"))
+
+    def difference(self, a: int, b: int, group: int) -> tuple[float, float, float]:
+        """Attainment of b minus that of a in the same patients of a group, with its interval."""
+        of_a, of_b, who = self.flags[a], self.flags[b], self.members[group]
+        both = _ones(of_a & of_b & who)
+        only_a, only_b = _ones(of_a & ~of_b & who), _ones(of_b & ~of_a & who)
+        return paired_difference(both, only_a, only_b, _ones(who) - both - only_a - only_b)
+
+
+def _ones(packed: np.ndarray) -> int:
+    return int(np.unpackbits(packed).sum(dtype=np.int64))
+
+
+def count(study: Study, threads: int = 1, progress: Progress = None,
+          cells_of: Callable[[BlockRows], np.ndarray] | None = None) -> Counts:
+    """Count every protocol of a study under its first model.
+
+    cells_of  a block -> (n, k) integers: patients with the same integers are counted together
+    """
+    sink = _Sink(study, cells_of)
+    simulate(study, threads, sink=sink, progress=progress, attainment_only=True)
+    return sink.counts()
+
+
+class _Sink:
+    """Adds blocks up in their order."""
+
+    def __init__(self, study: Study, cells_of: Callable | None):
+        self._study, self._cells_of = study, cells_of
+        self._found: dict[tuple[int, ...], dict[str, np.ndarray]] = {}
+        self._dose = np.zeros((len(study.protocols), len(study.group_names)))
+        self._flags: list[np.ndarray] = []
+        self._members: list[np.ndarray] = []
+
+    def __call__(self, rows: BlockRows) -> None:
+        study, n = self._study, len(rows.patients)
+        cells = self._cells_of(rows) if self._cells_of else np.zeros((n, 0), dtype=np.int64)
+        keys, cell = _distinct(cells)
+        shape = (len(study.protocols), len(study.targets))
+        local = {name: np.zeros((*shape, len(study.group_names), len(keys))) for name in SUMS}
+        patients = np.stack([np.bincount(cell[of > 0], minlength=len(keys)) for of in rows.members.T])
+        for (m, p, t), judged in rows.judged.items():
+            fine = ~judged.failed
+            for name, sums in local.items():
+                values = getattr(judged, name)
+                weights = np.where(fine, np.nan_to_num(values), 0.0) if values.dtype == np.float64 else values
+                for g, of in enumerate(rows.members.T):
+                    sums[p, t, g] = np.bincount(cell, weights=weights * of, minlength=len(keys))
+        for k, key in enumerate(keys):
+            mine = self._found.setdefault(key, {"patients": np.zeros(len(study.group_names), dtype=np.int64), **{
+                name: np.zeros(sums.shape[:-1]) for name, sums in local.items()}})
+            mine["patients"] += patients[:, k]
+            for name, sums in local.items():
+                mine[name] += sums[..., k]
+        self._dose += np.stack([received.total_mg for received in rows.received]) @ rows.members
+        attained = np.stack([rows.judged[0, p, 0].attained for p in range(shape[0])])
+        self._flags.append(np.packbits(attained, axis=1))
+        self._members.append(np.packbits(rows.members.T > 0, axis=1))
+
+    def counts(self) -> Counts:
+        keys = sorted(self._found)
+        patients = np.stack([self._found[key]["patients"] for key in keys], axis=-1)
+        sums = {name: np.stack([self._found[key][name] for key in keys], axis=-1) for name in SUMS}
+        n = np.maximum(patients.sum(axis=1), 1)
+        return Counts([protocol.name for protocol in self._study.protocols], self._study.group_names,
+                      np.array(keys, dtype=np.int64).reshape(len(keys), -1), patients, sums, self._dose / n,
+                      np.concatenate(self._flags, axis=1), np.concatenate(self._members, axis=1))
+
+
+def _distinct(cells: np.ndarray) -> tuple[list[tuple[int, ...]], np.ndarray]:
+    """The distinct rows, and which of them each row is."""
+    if cells.shape[1] == 0:
+        return [()], np.zeros(len(cells), dtype=np.int64)
+    keys, cell = np.unique(cells, axis=0, return_inverse=True)
+    return [tuple(int(part) for part in key) for key in keys], cell.ravel()
+
+
+def fresh(study: Study) -> Study:
+    """The same question put to patients that nothing was tuned on: another seed, derived from the study's own."""
+    digest = hashlib.sha256(f"fresh patients {study.seed}".encode()).digest()
+    return replace(study, seed=int.from_bytes(digest[:7], "big"))
