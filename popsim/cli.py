@@ -10,6 +10,7 @@ import click
 from covariates.problems import ProblemsError
 from popsim import __version__
 from popsim.commands.check import check
+from popsim.commands.find import find
 from popsim.commands.judge import judge
 from popsim.commands.new import new
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
@@ -26,13 +27,14 @@ def popsim() -> None:
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
     popsim judge study.toml    judge the protocols: tables, pictures, report
+    popsim find dose study.toml    or size, table, map: what to write instead
 
     A simulation for appraising protocols, not for dosing a person. Follow the
     product's label, local protocols and a licensed clinician's judgement.
     """
 
 
-for command in (new, check, judge):
+for command in (new, check, judge, find):
     popsim.add_command(command)
 
 

@@ -16,8 +16,9 @@ import pandas as pd
 from covariates.problems import Problem, ProblemsError
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses")
-OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses",
+               "along", "confirm", "sizes", "simplicity", "ward_card", "map", "regions")
+OURS = {"record.json", "report.html", "ward_card.txt", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 
 def check_folder(folder: Path, overwrite: bool) -> None:

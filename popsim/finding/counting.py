@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import hashlib
 import re
+import time
 from collections.abc import Callable, Sequence
 from dataclasses import dataclass, replace
 from pathlib import Path
@@ -20,6 +21,7 @@ from popsim.study import resolve_study
 from popsim.study_file import ProtocolSection, StudyFile
 
 Progress = Callable[[int], None] | None
+PILOT = 300  # patients timed to tell the cost of a long run
 SUMS = ("failed", "attained", "below", "inside", "above")
 
 
@@ -171,6 +173,15 @@ def count(study: Study, threads: int = 1, progress: Progress = None,
     return sink.counts()
 
 
+def seconds_expected(study: Study, threads: int) -> float:
+    """About how long counting takes, from a small part of it; for populations that say how many they are."""
+    part = min(PILOT, study.population.count)
+    few = replace(study, population=replace(study.population, count=part))
+    started = time.perf_counter()
+    count(few, 1)
+    return (time.perf_counter() - started) * study.population.count / part / max(threads, 1)
+
+
 class _Sink:
     """Adds blocks up in their order."""
 
@@ -228,3 +239,11 @@ def fresh(study: Study) -> Study:
     """The same question put to patients that nothing was tuned on: another seed, derived from the study's own."""
     digest = hashlib.sha256(f"fresh patients {study.seed}".encode()).digest()
     return replace(study, seed=int.from_bytes(digest[:7], "big"))
+
+
+def fresh_line(study: Study, patients: int) -> str:
+    """Who the fresh patients are."""
+    seed = fresh(study).seed
+    if study.population.source == "list":
+        return f"the same {patients:,} people of the list with fresh luck (seed {seed})"
+    return f"{patients:,} fresh patients (seed {seed})"

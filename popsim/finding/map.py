@@ -8,7 +8,7 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from popsim.estimate import wilson
-from popsim.finding.counting import Asked, count, fresh
+from popsim.finding.counting import Asked, Counts, count, fresh
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
 from popsim.records import BlockRows, Study
@@ -16,10 +16,11 @@ from popsim.study_file import ProtocolSection
 
 FINE = 5  # regions are looked for in cells so much narrower than those of the table
 CELLS = 12  # about so many across and up where the study does not say how wide they are
-MOST_REGIONS = 3  # of each sex
+MOST_REGIONS = 4  # of each sex
+AGAINST = 3.0  # patients where more attain than the level count so much against a region, so that it is no mixture
 LEAST_SHARE = 0.01  # a region holds at least this share of its sex
 DEFAULT_LEVEL = 0.8
-SEXES = ("female", "male")
+SEXES = ("female", "male", "")  # the last where the patients bring no sex
 
 
 @dataclass(frozen=True)
@@ -61,8 +62,7 @@ class MapFound:
     up: Axis
     cells: np.ndarray
     regions: list[Region]
-    patients: int
-    attained: float
+    counts: Counts
 
 
 def search_map(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> MapFound:
@@ -72,12 +72,11 @@ def search_map(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> Map
     if section.across == section.up:
         raise ProblemsError(Problem(f"{asked.path.name}: find, map: up", f'"{section.up}" twice', "two covariates"))
     across, up = _axes(asked, study)
-    found = _fine(study, across, up, threads)
+    counts, found = _fine(study, across, up, threads)
     level = section.level.value / 100 if section.level else DEFAULT_LEVEL
-    again = _fine(fresh(study), across, up, threads)
+    _, again = _fine(fresh(study), across, up, threads)
     regions = [_in_fresh(region, again, across, up) for region in _regions(found, level, across, up)]
-    return MapFound(asked, protocol, level, across, up, _coarse(found), regions, int(found[:, 3].sum()),
-                    found[:, 4].sum() / found[:, 3].sum())
+    return MapFound(asked, protocol, level, across, up, _coarse(found), regions, counts)
 
 
 def _axes(asked: Asked, study: Study) -> tuple[Axis, Axis]:
@@ -101,16 +100,16 @@ def _round_width(width: float) -> float:
     return float(next(step * decade for step in (1, 2, 5, 10) if step * decade >= width * (1 - 1e-9)))
 
 
-def _fine(study: Study, across: Axis, up: Axis, threads: int) -> np.ndarray:
-    """(cells, 6): sex (0 female, 1 male), cell across, cell up, patients, attained, failed."""
+def _fine(study: Study, across: Axis, up: Axis, threads: int) -> tuple[Counts, np.ndarray]:
+    """The counts, and as (cells, 6): place of the sex, cell across, cell up, patients, attained, failed."""
     def cells_of(rows: BlockRows) -> np.ndarray:
         sex = rows.patients.attributes.get("sex")
-        place = np.zeros(len(rows.patients), dtype=np.int64) if sex is None else (sex == "male").astype(np.int64)
+        place = np.full(len(rows.patients), 2) if sex is None else (sex == "male").astype(np.int64)
         return np.stack([place, across.cell(rows.lookup, FINE), up.cell(rows.lookup, FINE)], axis=1)
 
     counts = count(study, threads, cells_of=cells_of)
     hits, failed = (np.rint(counts.sums[name][0, 0, 0]).astype(np.int64) for name in ("attained", "failed"))
-    return np.column_stack([counts.cells, counts.patients[0], hits, failed])
+    return counts, np.column_stack([counts.cells, counts.patients[0], hits, failed])
 
 
 def _coarse(fine: np.ndarray) -> np.ndarray:
@@ -131,25 +130,26 @@ def _regions(fine: np.ndarray, level: float, across: Axis, up: Axis) -> list[Reg
             region = _worst_corner(left, level, LEAST_SHARE * everyone)
             if region is None:
                 break
-            inside = _inside(left, *region)
-            n, hits = int(left[inside, 3].sum()), int(left[inside, 4].sum())
+            inside = _inside(mine, *region)  # all of the corner, also what an earlier one holds
+            n, hits = int(mine[inside, 3].sum()), int(mine[inside, 4].sum())
             sides = [tuple(edge * axis.width / FINE for edge in limits)
                      for limits, axis in zip(region, (across, up), strict=True)]
             found.append(Region(SEXES[sex], *sides, n, hits / n))
-            left = left[~inside]
+            left = left[~_inside(left, *region)]
     return found
 
 
 def _worst_corner(cells: np.ndarray, level: float, least: float) -> tuple | None:
-    """The corner with the largest sum of (level x patients - attained): limits across and up, in cells."""
+    """The corner with the largest sum of patients x (level - share), shares smoothed over neighbouring cells and those
+    above the level counting threefold: limits across and up, in cells. None where no corner is clearly below."""
     if not len(cells):
         return None
     low, size = cells[:, 1:3].min(axis=0), np.ptp(cells[:, 1:3], axis=0) + 1
-    lack, n, hits = (np.zeros(size) for _ in range(3))
+    n, hits = (np.zeros(size) for _ in range(2))
     place = tuple((cells[:, 1:3] - low).T)
-    np.add.at(lack, place, level * cells[:, 3] - cells[:, 4])
-    np.add.at(n, place, cells[:, 3])
-    np.add.at(hits, place, cells[:, 4])
+    n[place], hits[place] = cells[:, 3], cells[:, 4]
+    lack = n * (level - neighbours(hits, FINE) / np.maximum(neighbours(n, FINE), 1))
+    lack = np.where(lack < 0, AGAINST * lack, lack)
     best, region = 0.0, None
     for turned in ((1, 1), (1, -1), (-1, 1), (-1, -1)):
         lacks, people, attained = (_from_corner(of, turned) for of in (lack, n, hits))
@@ -168,6 +168,16 @@ def _from_corner(values: np.ndarray, turned: tuple[int, int]) -> np.ndarray:
     """[i, j]: sum of all that lies at or beyond cell (i, j), away from the turned corner."""
     flipped = values[::turned[0], ::turned[1]]
     return np.cumsum(np.cumsum(flipped[::-1, ::-1], axis=0), axis=1)[::-1, ::-1][::turned[0], ::turned[1]]
+
+
+def neighbours(values: np.ndarray, reach: int) -> np.ndarray:
+    """Sums over each cell and all within `reach` cells of it, in both directions."""
+    for axis in (0, 1):
+        wide = [(reach + 1, reach) if k == axis else (0, 0) for k in (0, 1)]
+        until = np.cumsum(np.pad(values, wide), axis=axis)
+        length = values.shape[axis]
+        values = np.take(until, range(2 * reach + 1, 2 * reach + 1 + length), axis) - np.take(until, range(length), axis)
+    return values
 
 
 def _limits(at: int, turn: int, lowest: int, length: int) -> tuple[float, float]:

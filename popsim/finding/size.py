@@ -42,6 +42,7 @@ class SizeFound:
     worst        attainment of the class or group that attains least, `worst_group` its place
     turned_over  share of each group in whom the measure falls while weight rises
     doses        the doses by each measure, as text
+    left_out     measures by which some patients cannot be dosed (zero, negative or unknown), and how many
     """
 
     asked: Asked
@@ -53,6 +54,7 @@ class SizeFound:
     worst: np.ndarray
     worst_group: np.ndarray
     turned_over: np.ndarray
+    left_out: dict[str, int]
 
     @property
     def practical(self) -> list[int]:
@@ -125,13 +127,19 @@ def first_doses(protocol: ProtocolSection) -> str:
 def search_sizes(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> SizeFound:
     """Count the protocol by every measure and rank them; `asked` holds the classes already."""
     measures = read_measures(asked)
-    study = asked.study([by_measure(asked, protocol, name) for name in measures])
-    counts = count(study, threads)
-    return _ranked(asked, protocol, measures, counts, turned_over(study, measures))
+    over, unfit = look_at(asked.study([protocol]), measures)
+    fit = [place for place, many in enumerate(unfit) if not many]
+    if not fit:
+        raise ProblemsError(Problem(f"{asked.path.name}: find: sizes", ", ".join(measures),
+                                    "a measure above zero in every patient", "narrow the population, or add others"))
+    measures, left_out = [measures[place] for place in fit], {
+        measures[place]: many for place, many in enumerate(unfit) if many}
+    counts = count(asked.study([by_measure(asked, protocol, name) for name in measures]), threads)
+    return _ranked(asked, protocol, measures, counts, over[fit], left_out)
 
 
 def _ranked(asked: Asked, protocol: ProtocolSection, measures: list[str], counts: Counts,
-            over: np.ndarray) -> SizeFound:
+            over: np.ndarray, left_out: dict[str, int]) -> SizeFound:
     attained = counts.attained()[0]
     classes = [place for place in _places(counts, (*BMI_CLASSES, *AGE_CLASSES)) if counts.n[place] >= FEWEST]
     everyone = [place for place in range(len(counts.groups)) if counts.n[place] >= FEWEST] or [0]
@@ -142,7 +150,7 @@ def _ranked(asked: Asked, protocol: ProtocolSection, measures: list[str], counts
     order = sorted(range(len(measures)), key=lambda place: (ranks[place], -worst[place], place))
     doses = [first_doses(by_measure(asked, protocol, name)) for name in measures]
     return SizeFound(asked, protocol, [measures[p] for p in order], [doses[p] for p in order], counts.taken(order),
-                     flatness[order], worst[order], worst_group[order], over[order])
+                     flatness[order], worst[order], worst_group[order], over[order], left_out)
 
 
 def _places(counts: Counts, names: Iterable[str]) -> list[int]:
@@ -154,11 +162,14 @@ def _rank(values: np.ndarray) -> np.ndarray:
     return 1 + np.array([(values < value - 1e-12).sum() for value in values])
 
 
-def turned_over(study: Study, measures: list[str]) -> np.ndarray:
-    """(measures, groups) share of patients in whom a measure falls while weight rises, as lean body mass by James does
-    above a body mass index of 43 (men) or 36 kg/m2 (women)."""
-    falls = np.zeros((len(measures), len(study.group_names)))
-    n = np.zeros(len(study.group_names))
+def look_at(study: Study, measures: list[str]) -> tuple[np.ndarray, list[int]]:
+    """How measures behave in a study's patients.
+
+    Returns (measures, groups) share of patients in whom a measure falls while weight rises, as lean body mass by James
+    does above a body mass index of 43 (men) or 36 kg/m2 (women), and how many patients each measure cannot dose.
+    """
+    falls, n = np.zeros((len(measures), len(study.group_names))), np.zeros(len(study.group_names))
+    unfit = [0] * len(measures)
     for patients in blocks(study.population, study.seed):
         lookup = Lookup(patients.attributes)
         who = members(study.groups, lookup, len(patients)).astype(np.float64)
@@ -168,7 +179,8 @@ def turned_over(study: Study, measures: list[str]) -> np.ndarray:
         for place, measure in enumerate(measures):
             if measure != FIXED:
                 falls[place] += who.T @ (heavier(measure) < lookup(measure))
-    return falls / np.maximum(n, 1.0)
+                unfit[place] += int((~(lookup(measure) > 0)).sum())
+    return falls / np.maximum(n, 1.0), unfit
 
 
 def confirm_sizes(found: SizeFound, threads: int = 1) -> Counts:

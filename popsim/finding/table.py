@@ -8,7 +8,6 @@ smallest shortfall, then the highest attainment.
 
 from __future__ import annotations
 
-from collections.abc import Callable
 from dataclasses import dataclass
 from itertools import pairwise
 
@@ -111,14 +110,17 @@ def _condition(by: str, low: float, high: float) -> str:
     return " and ".join(parts)
 
 
-def search_table(asked: Asked, protocol: ProtocolSection, threads: int = 1,
-                 told: Callable[[str], None] = lambda text: None) -> TableFound:
+def candidates(protocol: ProtocolSection, section: FindTableSection, place: Place,
+               doses: list[Quantity]) -> list[ProtocolSection]:
+    """Each dose as one dose for everybody."""
+    return [with_table(protocol, place, section.by, WardTable((), (dose,))).model_copy(update={"name": dose.text})
+            for dose in doses]
+
+
+def search_table(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> TableFound:
     """Find the tables from the wanted number of bands down to one dose, and put them to fresh patients."""
     section, place, doses = read_table(asked, protocol)
-    candidates = [with_table(protocol, place, section.by, WardTable((), (dose,))).model_copy(update={"name": dose.text})
-                  for dose in doses]
-    told(f"{len(candidates)} doses as one dose for everybody")
-    counts = count(asked.study(candidates), threads, cells_of=lambda rows: slices(rows, section.by, section.edges_to))
+    counts = count(asked.study(candidates(protocol, section, place, doses)), threads, cells_of=lambda rows: slices(rows, section.by, section.edges_to))
     slicing = Slices(asked, counts)
     tables, seen = [], set()
     for bands in range(min(section.bands, len(counts.cells)), 0, -1):
@@ -127,7 +129,6 @@ def search_table(asked: Asked, protocol: ProtocolSection, threads: int = 1,
         if table not in seen:
             tables.append((table, pieces))
             seen.add(table)
-    told("fresh patients")
     written = protocol.model_copy(update={"name": f'as written: "{protocol.name}"'})
     protocols = [written, *(with_table(protocol, place, section.by, table) for table, _ in tables)]
     return TableFound(asked, protocol, place, section.by, [table for table, _ in tables],

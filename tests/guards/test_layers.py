@@ -13,11 +13,14 @@ POPSIM = Path(popsim.__file__).parent
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
+    "patients.listed", "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
     "groups", "parameters", "timeline", "solve", "effect", "target", "estimate",
     "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
     "drawing", "pictures", "report", "terminal", "check_text", "progress",
-    "commands.new", "commands.check", "commands.judge", "cli",
+    "finding.places", "finding.counting", "finding.holding", "finding.dose", "finding.size", "finding.table",
+    "finding.map", "finding.answer", "finding.answer_dose", "finding.answer_size", "finding.answer_table",
+    "finding.answer_map", "finding.pictures", "finding.leave",
+    "commands.new", "commands.check", "commands.judge", "commands.find", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -38,7 +41,7 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "commands") else {rest}
+            names |= inside if rest in ("", "patients", "finding", "commands") else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names
