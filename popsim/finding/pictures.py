@@ -65,7 +65,7 @@ def _along(found: DoseFound, path: Path) -> Picture:
         look = strokes(place)
         axes.fill_between(at, low[:, g], high[:, g], color=look.colour, alpha=0.18, linewidth=0)
         axes.plot(at, share[:, g], color=look.colour, linestyle=look.dash, marker=look.marker, markersize=4,
-                  markevery=max(len(at) // 8, 1))
+                  markevery=0.12)
     _share_panel(axes, at, "Patients who attain (%)")
     below = page.axes(MARGIN + 0.6, page.top + 0.1, ROOM - 0.7, 1.3)
     page.top += 1.4 + 0.5
@@ -75,14 +75,15 @@ def _along(found: DoseFound, path: Path) -> Picture:
         peak = int(np.argmax(values))
         below.annotate(name, (at[peak], values[peak]), xytext=(4 if peak < len(at) / 2 else -4, -9),
                        textcoords="offset points", fontsize=8.5, ha="left" if peak < len(at) / 2 else "right")
-    _share_panel(below, at, "Mean share of\nwindow, all (%)")
+    _share_panel(below, at, "Time outside (%)")
     below.set_xlabel(f"{one.place.text[:1].upper()}{one.place.text[1:]} ({one.unit})", labelpad=2)
     for stretch in found.meeting:
         for panel in (axes, below):
             panel.axvspan(at[stretch.first], at[stretch.last], facecolor=SHADE, edgecolor="none", zorder=0)
     told = "; ".join(f"{counts.groups[g]}: {percent(share[:, g].min())} to {percent(share[:, g].max())} %, most at "
                      f"{label(found.points[int(np.argmax(share[:, g]))])}" for g in shown)
-    shaded = " Grey: doses that meet every wish." if found.meeting else ""
+    shaded = " Below: mean share of the window under and over the range, all patients."
+    shaded += " Grey: doses that meet every wish." if found.meeting else ""
     return _finish(page, path, title, f"Lines along the dose. {told}.", f"Bands: {INTERVALS_SAY}{shaded}")
 
 
@@ -111,18 +112,18 @@ def _grid(found: DoseFound, path: Path) -> Picture:
     shades = axes.pcolormesh(across, up, values, cmap=HEAT, vmin=0, vmax=1, shading="nearest", rasterized=False)
     axes.figure.colorbar(shades, cax=bar)
     share_axis(bar.yaxis)
-    for place, marker, name in ((found.best_overall, "o", "best of all"), (found.best_worst, "s", "best for the worst"),
-                                (found.chosen, "*", "meets the wishes")):
+    for place, marker in ((found.best_overall, "o"), (found.best_worst, "s"), (found.chosen, "*")):
         if place is not None:
             x, y = (to_unit(value.value, one.unit, one.kind)
                     for one, value in zip(found.varied, found.points[place], strict=True))
-            axes.plot([x], [y], marker=marker, color="white", markeredgecolor=INK, markersize=8, linestyle="none",
-                      label=name)
-    axes.legend(fontsize=8, loc="upper left", bbox_to_anchor=(1.22, 1.0), borderaxespad=0)
+            axes.plot([x], [y], marker=marker, color="white", markeredgecolor=INK, markersize=8, linestyle="none")
     axes.set_xlabel(f"{first.place.text} ({first.unit})")
     axes.set_ylabel(f"{second.place.text} ({second.unit})")
-    told = f"A grid of {len(first.values)} by {len(second.values)} combinations, from {percent(values.min())} to {percent(values.max())} %."
-    return _finish(page, path, title, told, f"Shares carry a simulation error; see along.csv. {INTERVALS_SAY}")
+    told = (f"A grid of {len(first.values)} by {len(second.values)} combinations, from {percent(values.min())} to "
+            f"{percent(values.max())} %.")
+    star = " Star: meets every wish." if found.chosen is not None else ""
+    return _finish(page, path, title, told, f"Circle: most of all attain. Square: best for the worst group.{star} Intervals "
+                   f"are in along.csv. {INTERVALS_SAY}")
 
 
 def draw_size(found: SizeFound, folder: Path) -> list[Picture]:
@@ -240,6 +241,9 @@ def _panel(axes: Axes, found: MapFound, sex: int, low: np.ndarray, high: np.ndar
     names = [f"{axis.name.replace('_', ' ').capitalize()} ({unit_of(axis.name)})" for axis in (found.across, found.up)]
     axes.set_xlabel(names[0])
     axes.set_ylabel(names[1])
+    many = found.cells[found.cells[:, 3] >= FEWEST_IN_CELL]
+    if len(many):
+        axes.set(xlim=(many[:, 1].min() * found.across.width, (many[:, 1].max() + 1) * found.across.width))
     return shades
 
 
