@@ -12,8 +12,9 @@ import numpy as np
 from covariates.checks import is_female, possible
 from covariates.maturation import sigmoid_maturation
 
-ADJUSTED_WEIGHT_FRACTION = 0.4  # of the excess over ideal weight; 0.3 to 0.4 in use, 0.4 for propofol (seen in print)
 CM_PER_INCH = 2.54
+BMI_CLASSES_WHO = ("underweight", "normal", "pre-obesity", "obesity I", "obesity II", "obesity III")
+_CLASS_LIMITS = (18.5, 25.0, 30.0, 35.0, 40.0)
 
 
 def bmi(weight_kg, height_cm):
@@ -35,6 +36,27 @@ def bmi(weight_kg, height_cm):
     """
     weight, height = possible(weight_kg=weight_kg, height_cm=height_cm)
     return weight / (height / 100.0) ** 2
+
+
+def bmi_class_who(weight_kg, height_cm):
+    """The World Health Organization's class of body mass index, as a number.
+
+    Arguments:
+        weight_kg: total body weight [kg], scalar or (n,).
+        height_cm: height [cm], scalar or (n,).
+    Returns:
+        class [number without unit], same shape: 0 underweight, 1 normal, 2 pre-obesity, 3, 4 and 5 obesity of class
+        I, II and III; BMI_CLASSES_WHO has the words.
+    Raises:
+        ProblemsError: an impossible weight or height.
+    Formula: how many of 18.5, 25, 30, 35 and 40 kg/m2 the body mass index reaches
+    People: adults.
+    Source: World Health Organization 2000, Technical Report Series 894 (from memory).
+
+    >>> BMI_CLASSES_WHO[int(bmi_class_who(120, 175))]
+    'obesity II'
+    """
+    return np.searchsorted(_CLASS_LIMITS, bmi(weight_kg, height_cm), side="right").astype(np.float64)[()]
 
 
 def body_surface_area_mosteller(weight_kg, height_cm):
@@ -79,13 +101,8 @@ def body_surface_area_du_bois(weight_kg, height_cm):
     return 0.007184 * weight**0.425 * height**0.725
 
 
-# James 1976, lean body mass = slope W - curvature (W/H)^2 with H in cm
-_JAMES_SLOPE = {"female": 1.07, "male": 1.10}
-_JAMES_CURVATURE = {"female": 148.0, "male": 128.0}
-
-
 def lean_body_mass_james(weight_kg, height_cm, sex):
-    """Lean body mass by James, which falls again in obesity: see `james_turned_over`.
+    """Lean body mass by James, which falls again in obesity: flags.py marks whom that reaches.
 
     Arguments:
         weight_kg: total body weight [kg], scalar or (n,).
@@ -103,32 +120,8 @@ def lean_body_mass_james(weight_kg, height_cm, sex):
     55.3
     """
     weight, height = possible(weight_kg=weight_kg, height_cm=height_cm)
-    slope, curvature = _by_sex(sex, **_JAMES_SLOPE), _by_sex(sex, **_JAMES_CURVATURE)
+    slope, curvature = _by_sex(sex, female=1.07, male=1.10), _by_sex(sex, female=148.0, male=128.0)
     return slope * weight - curvature * (weight / height) ** 2
-
-
-def james_turned_over(weight_kg, height_cm, sex):
-    """Who is so heavy that James' lean body mass falls as weight rises.
-
-    Arguments:
-        weight_kg: total body weight [kg], scalar or (n,).
-        height_cm: height [cm], scalar or (n,).
-        sex: "female" or "male" [text], scalar or (n,).
-    Returns:
-        bool [true, false], same shape.
-    Raises:
-        ProblemsError: an impossible weight, height or sex.
-    Formula: d(lean body mass)/dW = slope - 2 curvature W/H^2 < 0, so a mass index above 10^4 slope / (2 curvature):
-        42.97 kg/m2 in men, 36.15 in women.
-    People: follows from the equation alone.
-    Source: derived from James 1976, Research on Obesity, HMSO, London.
-
-    >>> bool(james_turned_over(140, 175, "male")), bool(james_turned_over(120, 175, "male"))
-    (True, False)
-    """
-    weight, height = possible(weight_kg=weight_kg, height_cm=height_cm)
-    slope, curvature = _by_sex(sex, **_JAMES_SLOPE), _by_sex(sex, **_JAMES_CURVATURE)
-    return weight / height**2 > slope / (2.0 * curvature)
 
 
 def lean_body_mass_janmahasatian(weight_kg, height_cm, sex):
@@ -269,25 +262,28 @@ def ideal_body_weight_robinson(height_cm, sex):
     return _by_sex(sex, female=49.0, male=52.0) + _by_sex(sex, female=1.7, male=1.9) * _inches_over_60(height_cm)
 
 
-def adjusted_body_weight(weight_kg, ideal_body_weight_kg):
-    """Ideal weight and two fifths of what is above it.
+def adjusted_body_weight(weight_kg, ideal_body_weight_kg, excess_fraction=0.4):
+    """Ideal weight and a fraction of what is above it, two fifths unless given.
 
     Arguments:
         weight_kg: total body weight [kg], scalar or (n,).
         ideal_body_weight_kg: ideal body weight by Devine [kg], scalar or (n,).
+        excess_fraction: part of the excess over ideal weight that counts [fraction], scalar or (n,).
     Returns:
         adjusted body weight [kg], same shape; above total weight in those who weigh less than their ideal.
     Raises:
-        ProblemsError: an impossible weight, or an ideal weight that is not above 0.
-    Formula: I + 0.4 (W - I)
+        ProblemsError: an impossible weight, an ideal weight or a fraction that is not above 0.
+    Formula: I + fraction (W - I), fraction 0.4 in the catalogue
     People: adults with obesity; a rule of thumb.
     Source: common practice; the fraction 0.4 seen in print for propofol (0.3 to 0.4 in use).
 
     >>> round(float(adjusted_body_weight(120, ideal_body_weight_devine(175, "male"))), 2)
     90.28
     """
-    weight, ideal = possible(weight_kg=weight_kg, ideal_body_weight_kg=ideal_body_weight_kg)
-    return ideal + ADJUSTED_WEIGHT_FRACTION * (weight - ideal)
+    weight, ideal, fraction = possible(
+        weight_kg=weight_kg, ideal_body_weight_kg=ideal_body_weight_kg, excess_fraction=excess_fraction
+    )
+    return ideal + fraction * (weight - ideal)
 
 
 def predicted_normal_weight(weight_kg, height_cm, sex):

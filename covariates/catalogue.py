@@ -64,6 +64,14 @@ def _cockcroft_gault(suffix: str, weight: str) -> Equation:
 _ALL = [
     Equation("bmi", body_size.bmi, "kg/m2", _SIZE, "anyone", "Quetelet's index; common practice"),
     Equation(
+        "bmi_class_who",
+        body_size.bmi_class_who,
+        "",
+        _SIZE,
+        "adults",
+        "World Health Organization 2000, Technical Report Series 894",
+    ),
+    Equation(
         "body_surface_area_mosteller",
         body_size.body_surface_area_mosteller,
         "m2",
@@ -159,6 +167,14 @@ _ALL = [
         (_WEIGHT,),
         "70 lean adults and 39 with obesity (mean 125 kg, 44 kg/m2); fentanyl only",
         "Shibutani and others 2004, Anesthesiology 101:603-613",
+    ),
+    Equation(
+        "allometric_size",
+        maturation.allometric_size,
+        "",
+        (_WEIGHT,),
+        "anyone beyond infancy; in severe obesity total weight overstates it",
+        "common practice",
     ),
     _cockcroft_gault("total", "weight"),
     _cockcroft_gault("ideal", "ideal_body_weight_devine"),

@@ -1,4 +1,4 @@
-"""Maturation with postmenstrual age (time since the mother's last period began)."""
+"""Maturation with postmenstrual age (time since the mother's last period began), ageing, allometry."""
 
 from __future__ import annotations
 
@@ -76,3 +76,68 @@ def glomerular_filtration_rhodin_2009(weight_kg, postmenstrual_weeks):
     """
     weight, weeks = possible(weight_kg=weight_kg, postmenstrual_weeks=postmenstrual_weeks)
     return 121.2 * (weight / 70.0) ** 0.75 * sigmoid_maturation(weeks, 47.7, 3.4)
+
+
+def exponential_ageing(age_years, change_per_year, reference_years):
+    """The factor by which a parameter changes with age, a constant share each year.
+
+    Arguments:
+        age_years: age [years], scalar or (n,).
+        change_per_year: change of the logarithm each year [1/year], negative for a decline, scalar or (n,).
+        reference_years: age at which the factor is 1 [years], scalar or (n,).
+    Returns:
+        factor [number without unit], same shape, always above 0.
+    Raises:
+        ProblemsError: an impossible age.
+    Formula: exp(change (AGE - reference))
+    People: those of the paper that printed the change.
+    Source: common practice.
+
+    >>> round(float(exponential_ageing(75, -0.0156, 35)), 3)
+    0.536
+    """
+    age, reference = possible(age_years=age_years, reference_years=reference_years)
+    return np.exp(np.asarray(change_per_year, dtype=np.float64) * (age - reference))
+
+
+def linear_ageing(age_years, change_per_year, reference_years):
+    """The factor by which a parameter changes with age, the same amount each year.
+
+    Arguments:
+        age_years: age [years], scalar or (n,).
+        change_per_year: change of the factor each year [1/year], negative for a decline, scalar or (n,).
+        reference_years: age at which the factor is 1 [years], scalar or (n,).
+    Returns:
+        factor [number without unit], same shape; 0 and less from a certain age on, never clipped.
+    Raises:
+        ProblemsError: an impossible age.
+    Formula: 1 + change (AGE - reference)
+    People: those of the paper that printed the change.
+    Source: common practice.
+
+    >>> round(float(linear_ageing(75, -0.00678, 43)), 3)
+    0.783
+    """
+    age, reference = possible(age_years=age_years, reference_years=reference_years)
+    return 1.0 + np.asarray(change_per_year, dtype=np.float64) * (age - reference)
+
+
+def allometric_size(weight_kg, exponent=0.75):
+    """How large a clearance is for that weight, relative to an adult of 70 kg.
+
+    Arguments:
+        weight_kg: total body weight [kg], scalar or (n,).
+        exponent: of the power [number without unit], 0.75 for clearances, scalar or (n,).
+    Returns:
+        relative size [number without unit], same shape.
+    Raises:
+        ProblemsError: an impossible weight, or an exponent that is not above 0.
+    Formula: (W / 70)^exponent, exponent 0.75 in the catalogue
+    People: anyone beyond infancy; in severe obesity total weight overstates it.
+    Source: common practice (from memory).
+
+    >>> round(float(allometric_size(120)), 3)
+    1.498
+    """
+    weight, power = possible(weight_kg=weight_kg, exponent=exponent)
+    return (weight / 70.0) ** power

@@ -20,8 +20,8 @@ from covariates.sheet_equations import (
     PARAMETERS, REFERENCE, TYPICAL, SheetEquation, check_names, check_structure, in_order, read_equations,
 )  # fmt: skip
 from covariates.sheet_reading import (
-    BuiltOn, EffectModel, read_built_on, read_effect, read_error, read_measured_in, read_needs, read_reference_person,
-    read_source, read_spread,
+    BuiltOn, EffectModel, NeededNumber, PrintedSpread, read_built_on, read_effect, read_error, read_measured_in,
+    read_needs, read_numbers, read_person, read_source, read_spread,
 )  # fmt: skip
 from covariates.sheet_section import Section
 
@@ -40,11 +40,14 @@ class DrugModel:
     effect               the effect model, or None
     equations            in the order of evaluation
     reference            "NAME_reference" -> number, of the reference person
-    spread               equation name -> omega, the SD of ln of its random effect; empty where none was published
+    reference_person     attribute -> array of one; empty where the sheet names none
+    example_person       likewise: whom to show and try the model on, where a usual adult will not do
+    printed_spread       equation name -> between-subject variability as printed; empty where none was published
     spread_note          doubts about the spread, and why there is none
     correlations         (name, name) -> correlation of the random effects
     needs                attributes and covariates that the equations use
     switches             name -> what it means when true; the study must set each of them
+    numbers              name -> what it means; the patients must bring each of them
     measurement_error    proportional (number), additive (mg/L), evidence, note; what the sheet gives of these
     digest, text         SHA-256 of the file's bytes, and the file
     """
@@ -60,11 +63,14 @@ class DrugModel:
     effect: EffectModel | None
     equations: tuple[SheetEquation, ...]
     reference: dict[str, float]
-    spread: dict[str, float]
+    reference_person: dict[str, np.ndarray]
+    example_person: dict[str, np.ndarray]
+    printed_spread: dict[str, PrintedSpread]
     spread_note: str
     correlations: dict[tuple[str, str], float]
     needs: frozenset[str]
     switches: dict[str, str]
+    numbers: dict[str, NeededNumber]
     measurement_error: dict[str, object]
     cautions: tuple[str, ...]
     digest: str
@@ -74,6 +80,16 @@ class DrugModel:
     def has_effect_site(self) -> bool:
         """Whether the sheet gives ke0."""
         return any(equation.name == "ke0" for equation in self.equations)
+
+    @property
+    def has_absorption(self) -> bool:
+        """Whether the sheet gives ka."""
+        return any(equation.name == "ka" for equation in self.equations)
+
+    @property
+    def spread(self) -> dict[str, float]:
+        """Equation name -> omega, the SD of ln of its random effect."""
+        return {name: printed.omega for name, printed in self.printed_spread.items()}
 
     @property
     def outputs(self) -> tuple[str, ...]:
@@ -127,12 +143,14 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     drug, title = top.text("drug", needed=True), top.text("title", needed=True)
     evidence = top.text("evidence", needed=True, among=("seen", "recalled"))
     source, built_on, measured_in = read_source(top), read_built_on(top), read_measured_in(top)
-    person, switches = read_reference_person(top), read_needs(top)
+    person, example, switches = read_person(top, "reference_person"), read_person(top, "example_person"), read_needs(top)
+    numbers = read_numbers(top, switches)
+    needed = {*switches, *numbers}
     effect = read_effect(top)
     section = top.section("equations", needed=True)
     units = PARAMETERS | (effect.units if effect else {})
-    equations = read_equations(section, evidence or "recalled", units, switches)
-    needs, references = check_names(section, equations, switches, person)
+    equations = read_equations(section, evidence or "recalled", units, needed)
+    needs, references = check_names(section, equations, needed, person)
     check_structure(section, equations, effect.names if effect else ())
     _check_effect(top, effect, section)
     _check_evidence(top, evidence, equations)
@@ -148,8 +166,8 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     reference = _reference_values(references, person, f"{where}: reference_person")
     compartments = 1 + ("V2" in equations) + ("V3" in equations)
     model = DrugModel(
-        name, drug, title, evidence, source, built_on, measured_in, compartments, effect, ordered, reference, spread,
-        spread_note, correlations, needs, switches, measurement_error, cautions, digest, text,
+        name, drug, title, evidence, source, built_on, measured_in, compartments, effect, ordered, reference, person,
+        example, spread, spread_note, correlations, needs, switches, numbers, measurement_error, cautions, digest, text,
     )  # fmt: skip
     _try_out(model, f"{where}: equations")
     return model
@@ -205,7 +223,7 @@ def parameters_of(
     unknown = set(effects) - {equation.name for equation in model.equations}
     if unknown:
         raise ValueError(f"random effects on what is no equation of {model.name}: {sorted(unknown)}")
-    outside = {name: np.asarray(lookup(name)) for name in sorted(model.needs | set(model.switches))}
+    outside = {name: np.asarray(lookup(name)) for name in sorted({*model.needs, *model.switches, *model.numbers})}
     outside |= {name: np.asarray(number) for name, number in model.reference.items()}
     typical = _evaluated(model, outside, {}, {})
     individual = _evaluated(model, outside, effects, typical) if effects else typical
@@ -233,29 +251,35 @@ def _evaluated(
     return found
 
 
+def example_people(model: DrugModel) -> dict[str, np.ndarray]:
+    """A woman and a man to show the model on: 40 years, 70 kg, 170 cm, the middle of the ranges that the sheet gives,
+    or as its example person. Switches are off, and numbers of the sheet's own are its examples.
+    """
+    usual = {"age": 40.0, "weight": 70.0, "height": 170.0, "serum_creatinine": 1.0}
+    for name in usual:
+        limits = model.built_on.ranges.get(name)
+        if limits is not None and np.isfinite(limits.low) and np.isfinite(limits.high):
+            usual[name] = (limits.low + limits.high) / 2
+    usual |= {name: float(value[0]) for name, value in model.example_person.items() if name != "sex"}
+    people = {"sex": np.array(["female", "male"])} | {name: np.full(2, value) for name, value in usual.items()}
+    people |= {name: np.full(2, number.example) for name, number in model.numbers.items()}
+    return people | {name: np.array([False, False]) for name in model.switches}
+
+
 def _try_out(model: DrugModel, where: str) -> None:
-    """In a woman and a man in the middle of the sheet's own ranges, every parameter must come out above zero."""
-    people = _middle_people(model.built_on)
-    people |= {name: np.array([False, False]) for name in model.switches}
+    """In the example people every parameter must come out above zero, and F as no more than 1."""
+    people = example_people(model)
     values = parameters_of(model, lambda name: people[name] if name in people else compute(name, people), {})
     problems = []
     for name in PARAMETERS:
+        most = 1.0 if name == "F" else np.finfo(float).max
         for i, value in enumerate(values.get(name, ())):
-            if not 0 < value < np.inf:
+            if not 0 < value <= most:
                 found = f"{value:g} (in L and min) in a {people['sex'][i]} of {_described(people, i)}"
-                problems.append(Problem(f"{where}.{name}.is", found, "a finite number above zero"))
+                allowed = "above 0, at most 1" if name == "F" else "a finite number above zero"
+                problems.append(Problem(f"{where}.{name}.is", found, allowed))
     if problems:
         raise ProblemsError(problems)
-
-
-def _middle_people(built_on: BuiltOn) -> dict[str, np.ndarray]:
-    """A woman and a man of 40 years, 70 kg and 170 cm, or the middle of the ranges where the sheet gives them."""
-    usual = {"age": 40.0, "weight": 70.0, "height": 170.0, "serum_creatinine": 1.0}
-    for name in usual:
-        limits = built_on.ranges.get(name)
-        if limits is not None and np.isfinite(limits.low) and np.isfinite(limits.high):
-            usual[name] = (limits.low + limits.high) / 2
-    return {"sex": np.array(["female", "male"])} | {name: np.full(2, value) for name, value in usual.items()}
 
 
 def _described(people: Mapping[str, np.ndarray], i: int) -> str:

@@ -18,8 +18,8 @@ PARAMETERS = {
     "V1": "volume", "V2": "volume", "V3": "volume",
     "CL": "flow", "Q2": "flow", "Q3": "flow",
     "ke0": "per_time",
+    "ka": "per_time", "F": "number", "lag": "time",
 }  # fmt: skip
-_ABSORPTION = ("ka", "F")
 _PAIRS = (("V2", "Q2"), ("V3", "Q3"))
 TYPICAL, REFERENCE = "_typical", "_reference"
 GRADES = ("seen", "recalled", "computed")
@@ -47,17 +47,17 @@ class SheetEquation:
 
 
 def read_equations(
-    section: Section, grade: str, units: Mapping[str, str], switches: Collection[str]
+    section: Section, grade: str, units: Mapping[str, str], needed: Collection[str]
 ) -> dict[str, SheetEquation]:
     """All equations in the order of the file; problems are noted in the section.
 
-    grade     evidence of an equation that says none itself
-    units     name -> kind of unit, for the names whose unit matters (PARAMETERS and the effect's)
-    switches  names declared in [needs]
+    grade   evidence of an equation that says none itself
+    units   name -> kind of unit, for the names whose unit matters (PARAMETERS and the effect's)
+    needed  names declared in [needs] and [needs_numbers]
     """
     equations = {}
     for name, entry in section.entries(_EXAMPLE):
-        _check_name(name, section, switches)
+        _check_name(name, section, needed)
         text = entry.text("is", needed=True)
         unit, factor = _read_unit(entry, units.get(name))
         evidence = entry.text("evidence") or grade
@@ -77,13 +77,11 @@ def read_equations(
     return equations
 
 
-def _check_name(name: str, section: Section, switches: Collection[str]) -> None:
+def _check_name(name: str, section: Section, needed: Collection[str]) -> None:
     """An equation may not hide another meaning of its name."""
-    if name in _ABSORPTION:
-        section.problem(name, "an absorption parameter", "intravenous models only: " + " ".join(PARAMETERS))
-    elif not re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", name):
+    if not re.fullmatch(r"[A-Za-z][A-Za-z0-9_]*", name):
         section.problem(name, "no name for an equation", "letters, digits and _")
-    elif name in ATTRIBUTES or name in EQUATIONS or name in FUNCTIONS or name in switches or name in ("true", "false"):
+    elif name in ATTRIBUTES or name in EQUATIONS or name in FUNCTIONS or name in needed or name in ("true", "false"):
         section.problem(name, "a name that means something else already", "another name")
     elif name.endswith((TYPICAL, REFERENCE)):
         allowed = f"a name that does not end in {TYPICAL} or {REFERENCE}"
@@ -109,11 +107,11 @@ def _read_unit(entry: Section, kind: str | None) -> tuple[str, float]:
 def check_names(
     section: Section,
     equations: Mapping[str, SheetEquation],
-    switches: Collection[str],
+    needed: Collection[str],
     reference_person: Collection[str],
 ) -> tuple[frozenset[str], frozenset[str]]:
     """Names from outside that the equations need: (attributes and covariates, references without their ending)."""
-    known = {*ATTRIBUTES, *EQUATIONS, *equations, *switches, *(name + TYPICAL for name in equations)}
+    known = {*ATTRIBUTES, *EQUATIONS, *equations, *needed, *(name + TYPICAL for name in equations)}
     needs, references = set(), set()
     for name, equation in equations.items():
         for used in sorted(equation.formula.names):
@@ -127,7 +125,8 @@ def check_names(
                     found = f'"{used}" without a person to refer to'
                     section.problem(f"{name}.is", found, "a section [reference_person]")
             else:
-                allowed = "attributes, covariates, other equations, switches of [needs], NAME_typical, NAME_reference"
+                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], NAME_typical, "
+                           "NAME_reference")
                 section.problem(f"{name}.is", f'unknown name "{used}"', allowed, nearest(used, known))
     return frozenset(needs), frozenset(references)
 
@@ -145,6 +144,9 @@ def check_structure(
                 section.problem(here, f"{here} without {partner}", f"both {volume} and {flow}, or neither")
     if "V3" in equations and "V2" not in section.table:
         section.problem("V3", "V3 without V2", "compartments in order: V2 and Q2 before V3 and Q3")
+    for name in ("F", "lag"):
+        if name in equations and "ka" not in section.table:
+            section.problem(name, f"{name} without ka", "absorption has a rate constant", 'ka = { is = "1.5", unit = "1/h" }')
     used = {name.removesuffix(TYPICAL) for equation in equations.values() for name in equation.formula.names}
     for name in equations:
         if name not in used and name not in PARAMETERS and name not in effect_names:

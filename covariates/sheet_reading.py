@@ -10,7 +10,7 @@ import numpy as np
 from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.problems import nearest
 from covariates.sheet_section import Section
-from covariates.units import Range
+from covariates.units import Quantity, Range
 from covariates.variability import covariance_from, omega_from_cv, omega_from_variance
 
 FLUIDS = ("total plasma", "unbound plasma", "whole blood")
@@ -32,7 +32,9 @@ class BuiltOn:
     count                 how many, or None where not known
     ranges                attribute or bmi -> Range (years, kg, cm, kg/m2, mg/dL, wk); only what is known
     sex                   "female" or "male" where only they were studied, else None
+    doses                 the doses that were studied, in words, or empty
     longest_infusion_min  or None where not known
+    largest_total         most that anyone was given in all, mg or mg/kg, or None where not known
     sampling              "arterial", "venous", "arterial and venous", or empty
     evidence, note        how far this is known
     """
@@ -41,10 +43,30 @@ class BuiltOn:
     count: int | None
     ranges: dict[str, Range]
     sex: str | None
+    doses: str
     longest_infusion_min: float | None
+    largest_total: Quantity | None
     sampling: str
     evidence: str
     note: str
+
+
+@dataclass(frozen=True)
+class NeededNumber:
+    """A number that the patients must bring: what it means, and an example to show the model with."""
+
+    means: str
+    example: float
+
+
+@dataclass(frozen=True)
+class PrintedSpread:
+    """Between-subject variability of one equation as it was printed; `printed_as` says which number that is."""
+
+    value: float
+    printed_as: str
+    evidence: str
+    omega: float
 
 
 @dataclass(frozen=True)
@@ -95,11 +117,12 @@ def read_built_on(top: Section) -> BuiltOn:
     count = section.whole_number("count")
     ranges = {name: found for name, kind in _RANGES.items() if (found := section.range(name, kind)) is not None}
     sex = section.text("sex", among=_SEXES)
-    longest = section.quantity("longest_infusion", "time")
+    doses, longest = section.text("doses") or "", section.quantity("longest_infusion", "time")
+    largest = section.measure("largest_total", ("mass", "mass_per_kg"))
     sampling = section.text("sampling", among=SAMPLING) or ""
     evidence, note = section.text("evidence") or "", section.text("note") or ""
     section.close()
-    return BuiltOn(people, count, ranges, sex, longest, sampling, evidence, note)
+    return BuiltOn(people, count, ranges, sex, doses, longest, largest, sampling, evidence, note)
 
 
 def read_measured_in(top: Section) -> dict[str, object]:
@@ -111,13 +134,16 @@ def read_measured_in(top: Section) -> dict[str, object]:
         "evidence": section.text("evidence"),
         "note": section.text("note"),
     }
+    if found["fluid"] == "unbound plasma" and found["fraction_unbound"] is not None:
+        allowed = "none: the concentrations are unbound already, and the fraction is never applied twice"
+        section.problem("fraction_unbound", f"{found['fraction_unbound']:g}", allowed)
     section.close()
     return {key: value for key, value in found.items() if value is not None}
 
 
-def read_reference_person(top: Section) -> dict[str, np.ndarray]:
-    """[reference_person]: attribute -> array of one, empty where the sheet has none."""
-    section = top.section("reference_person")
+def read_person(top: Section, key: str) -> dict[str, np.ndarray]:
+    """[reference_person] or [example_person]: attribute -> array of one, empty where the sheet has none."""
+    section = top.section(key)
     sex = section.text("sex", among=_SEXES)
     person = {} if sex is None else {"sex": np.array([sex])}
     for name, kind in _RANGES.items():
@@ -142,6 +168,20 @@ def read_needs(top: Section) -> dict[str, str]:
     return switches
 
 
+def read_numbers(top: Section, switches: Collection[str]) -> dict[str, NeededNumber]:
+    """[needs_numbers]: attribute of the sheet's own -> what it means, and an example."""
+    section = top.section("needs_numbers")
+    numbers = {}
+    for name, entry in section.entries('{ means = "days since the burn", example = 10 }'):
+        means, example = entry.text("means", needed=True), entry.number("example", -np.inf, np.inf, needed=True)
+        entry.close()
+        if name in ATTRIBUTES or name in EQUATIONS or name in switches or not name.isidentifier():
+            section.problem(name, "no name for an attribute of its own", "a name of its own, such as days_after_burn")
+        elif means is not None and example is not None:
+            numbers[name] = NeededNumber(means, example)
+    return numbers
+
+
 def read_effect(top: Section) -> EffectModel | None:
     """[effect]: what the effect is called and which equations it uses."""
     section = top.section("effect")
@@ -162,38 +202,40 @@ def read_effect(top: Section) -> EffectModel | None:
     return EffectModel(unit=str(unit), steepness_above=above, **texts, **parts)
 
 
-def read_spread(top: Section, equations: Collection[str]) -> tuple[dict[str, float], str, dict[tuple[str, str], float]]:
-    """[spread] and [spread_together]: omegas, the note, correlations."""
+def read_spread(
+    top: Section, equations: Collection[str]
+) -> tuple[dict[str, PrintedSpread], str, dict[tuple[str, str], float]]:
+    """[spread] and [spread_together]: what was printed, the note, correlations."""
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
     usual = section.text("printed_as", among=_TO_OMEGA)
-    omegas = {}
+    printed = {}
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
-        omega = _read_omega(entry, usual)
+        spread = _read_printed(entry, usual)
         if name not in equations:
             section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
-        elif omega is not None:
-            omegas[name] = omega
+        elif spread is not None:
+            printed[name] = spread
         entry.close()
-    if "spread" in top.table and published and not omegas:
+    if "spread" in top.table and published and not printed:
         section.problem("published", "no spread given", "values, or published = false")
-    if not published and omegas:
+    if not published and printed:
         section.problem("published", "false, yet values are given", "published = true")
-    return omegas, note, _read_together(top, omegas)
+    return printed, note, _read_together(top, {name: spread.omega for name, spread in printed.items()})
 
 
-def _read_omega(entry: Section, usual: str | None) -> float | None:
-    """One spread as omega, whatever way it was printed."""
+def _read_printed(entry: Section, usual: str | None) -> PrintedSpread | None:
+    """One spread, whatever way it was printed."""
     advice = "write 0.26 for 26 %"
     value = entry.number("value", 0, _LARGEST_SPREAD, needed=True, advice=advice)
     printed_as = entry.text("printed_as", among=_TO_OMEGA) or usual
-    entry.text("evidence")
+    evidence = entry.text("evidence") or ""
     entry.text("note")
     if printed_as is None:
         entry.problem("printed_as", "missing", ", ".join(_TO_OMEGA))
         return None
-    return None if value is None else float(_TO_OMEGA[printed_as](value))
+    return None if value is None else PrintedSpread(value, printed_as, evidence, float(_TO_OMEGA[printed_as](value)))
 
 
 def _read_together(top: Section, omegas: dict[str, float]) -> dict[tuple[str, str], float]:

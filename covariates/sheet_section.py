@@ -6,7 +6,7 @@ import math
 from collections.abc import Collection, Iterator
 
 from covariates.problems import Problem, ProblemsError, nearest
-from covariates.units import Range, parse_quantity, parse_range
+from covariates.units import Quantity, Range, parse_quantity, parse_range
 
 
 class Section:
@@ -88,9 +88,14 @@ class Section:
 
     def quantity(self, key: str, kind: str) -> float | None:
         """A quantity of one kind, in its internal unit."""
+        measure = self.measure(key, (kind,))
+        return None if measure is None else measure.value
+
+    def measure(self, key: str, kinds: Collection[str]) -> Quantity | None:
+        """A quantity of one of these kinds."""
         value = self.take(key, False, "")
         try:
-            return None if value is None else parse_quantity(value, [kind], self._place(key)).value
+            return None if value is None else parse_quantity(value, kinds, self._place(key))
         except ProblemsError as error:
             self.problems.extend(error.problems)
             return None

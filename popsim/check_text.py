@@ -7,6 +7,7 @@ import textwrap
 import numpy as np
 
 from popsim.cautions import CAUTIONS
+from popsim.flagged import flag_counts, flag_notes
 from popsim.groups import members
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
@@ -96,11 +97,14 @@ def _who(study: Study, looked_at: int) -> list[str]:
     counts = np.zeros(len(names), dtype=np.int64)
     outside = {model.name: np.zeros(len(names), dtype=np.int64) for model in study.models}
     events: dict[str, int] = {}
+    flags: dict[tuple[str, str], int] = {}
     typical = Variability(False, 1.0, None)
     for patients in blocks(study.population, study.seed):
         lookup = Lookup(patients.attributes)
         belongs = members(study.groups, lookup, len(patients)).astype(np.int64)
         counts += belongs.sum(axis=0)
+        for flag, count in flag_counts(study, lookup, patients.attributes).items():
+            flags[flag] = flags.get(flag, 0) + count
         for protocol in study.protocols:
             timeline, _ = build_timeline(protocol, lookup, len(patients), study.until_min)
             most = int(np.isfinite(timeline.time_min).sum(axis=1).max())
@@ -118,4 +122,6 @@ def _who(study: Study, looked_at: int) -> list[str]:
         lines += _indented("  ", f"outside the people that {model.name} was built on:")
         lines += [f"    {_cut(name, width):<{width}}  {percent(marked / n if n else float('nan')):>5} % of {n:,}"
                   for name, marked, n in zip(names, outside[model.name], counts, strict=True)]
+    for note in flag_notes(study, flags, int(counts[0])):
+        lines += _indented("  ", note)
     return lines

@@ -12,7 +12,9 @@ from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.find import find
 from popsim.commands.judge import judge
+from popsim.commands.models import models
 from popsim.commands.new import new
+from popsim.commands.person import person
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
 INTERRUPTED = 130  # what a shell expects of a program that was stopped
@@ -28,13 +30,15 @@ def popsim() -> None:
     popsim check study.toml    see the ward card before anything is simulated
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim find dose study.toml    or size, table, map: what to write instead
+    popsim models              the published drug models, and one of them whole
+    popsim person ...          every covariate of one person, side by side
 
     A simulation for appraising protocols, not for dosing a person. Follow the
     product's label, local protocols and a licensed clinician's judgement.
     """
 
 
-for command in (new, check, judge, find):
+for command in (new, check, judge, models, person, find):
     popsim.add_command(command)
 
 

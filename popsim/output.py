@@ -14,6 +14,7 @@ from typing import Any
 import pandas as pd
 
 from covariates.problems import Problem, ProblemsError
+from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
 TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses",
@@ -160,22 +161,3 @@ class _TableFile:
     def close(self) -> None:
         if self._writer is not None:
             self._writer.close()
-
-
-def covariates_used(study: Study) -> list[str]:
-    """Every covariate that a study's models, protocols, groups and limits use, sorted."""
-    names: set[str] = set()
-    for model in study.models:
-        names |= model.needs
-    for protocol in study.protocols:
-        for step in protocol.steps:
-            conditions = [step.where, *(variant.where for variant in step.variants)]
-            names |= {name for condition in conditions if condition is not None for name in condition.names}
-            if any(dose is not None and "_per_" in dose.kind for variant in step.variants
-                   for dose in (variant.amount, variant.rate)):
-                names.add(step.by)
-    for _, where in study.groups:
-        names |= where.names
-    if study.population.where is not None:
-        names |= study.population.where.names
-    return sorted(names)

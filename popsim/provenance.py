@@ -43,6 +43,8 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
                             "patients": {group: int(count)
                                          for group, count in zip(study.group_names, counts, strict=True)}}
                            for (m, name), counts in tally.beyond.items()],
+            "flags": [{"covariate": equation, "patients_who_are": words, "patients": count}
+                      for (equation, words), count in sorted(tally.flags.items())],
         },
         "notes": notes,
         "cautions": list(CAUTIONS),

@@ -16,6 +16,7 @@ import numpy as np
 from covariates.catalogue import attributes_needed
 from popsim import solve
 from popsim.effect import effect_at
+from popsim.flagged import beyond_total, flag_counts
 from popsim.groups import members as group_members
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
@@ -118,6 +119,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
+    tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, doses in tally.doses.items():
@@ -136,6 +138,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if model.built_on.longest_infusion_min is not None:
                 tally.long_infusion[m, p] += members.T @ (
                     received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
+            tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
             for t in range(len(study.targets)):
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)

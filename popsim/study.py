@@ -210,6 +210,10 @@ def _check_model_needs(models: tuple[DrugModel, ...], attributes: dict[str, str]
             elif attributes[name] not in ("", "condition"):
                 problems.append(Problem(f"{path.name}: population: set", f"{name} is {WORDS[attributes[name]]}",
                                         f"true or false ({meaning})", f"under [population.set]: {name} = true"))
+        for name, number in model.numbers.items():
+            if attributes.get(name) not in ("", "number"):
+                problems.append(Problem(f"{path.name}: population", f"no number {name}, and {model.name} needs it",
+                                        number.means, f"under [population.set], or a column of the list: {name}"))
         lacking = set().union(*(attributes_needed(name, attributes) for name in model.needs))
         for name in sorted(lacking):
             problems.append(Problem(f"{path.name}: population", f"no {name}, and {model.name} needs it",

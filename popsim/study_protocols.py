@@ -12,7 +12,7 @@ from popsim.study_file import MOST_ADMINISTRATIONS, DoseSection, ProtocolSection
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
 SIZES = {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}
-ROUTE_ADVICE = "none of the shipped models has absorption; give the dose iv"
+ROUTE_ADVICE = "only intravenous doses can be judged; give the dose iv"
 
 Report = Callable[..., None]
 

@@ -10,6 +10,7 @@ import pandas as pd
 from popsim import solve
 from popsim.compare import against_reference, protocol_pairs
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
+from popsim.flagged import flag_notes
 from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
@@ -40,6 +41,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "ever_far_above": int(counts.far_above[g]) / everyone,
                 "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
+                "total_beyond_model": int(tally.large_total[m, p][g]) / everyone,
                 "note": _note(n, failed)})
     return pd.DataFrame(rows)
 
@@ -144,6 +146,7 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
         notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
+    notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "
                      f"({solve.STATUS[code]}): not attained.")

@@ -88,12 +88,14 @@ class Tally:
     outside: dict[int, np.ndarray]  # model -> (groups,)
     beyond: dict[tuple[int, str], np.ndarray]  # model, attribute -> (groups,)
     long_infusion: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
+    large_total: dict[tuple[int, int], np.ndarray]  # model, protocol -> (groups,)
     targets: dict[tuple[int, int, int], TargetTally]  # model, protocol, target
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
     over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
     def empty(cls, study: Study, times: int, attainment_only: bool = False) -> Tally:
@@ -120,6 +122,7 @@ class Tally:
             outside={m: zeros() for m in models},
             beyond={(m, name): zeros() for m in models for name in range_names(study.models[m])},
             long_infusion={(m, p): zeros() for m in models for p in protocols},
+            large_total={(m, p): zeros() for m in models for p in protocols},
             targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
             pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
                    for m in models for t in targets for a, b in combinations(protocols, 2) if not attainment_only},
@@ -134,6 +137,11 @@ class Tally:
             mine += theirs
         for key, count in other.statuses.items():
             self.statuses[key] = self.statuses.get(key, 0) + count
+        self.add_flags(other.flags)
+
+    def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
+        for flag, count in counts.items():
+            self.flags[flag] = self.flags.get(flag, 0) + count
 
     def add_statuses(self, model: int, status: np.ndarray) -> None:
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
@@ -162,7 +170,7 @@ def range_names(model: DrugModel) -> list[str]:
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
     found = [tally.patients, tally.overlap]
-    for table in (tally.outside, tally.beyond, tally.long_infusion):
+    for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
     for table in (tally.targets, tally.pairs):
         for entry in table.values():

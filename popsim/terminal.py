@@ -123,6 +123,9 @@ def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[s
         if row.infusion_beyond_model > 0:
             lines += _wrapped(f'"{row.protocol}" infuses longer than the {model.built_on.longest_infusion_min:g} min '
                               f"studied in {percent(row.infusion_beyond_model)} % of patients", "  ")
+        if row.total_beyond_model > 0:
+            lines += _wrapped(f'"{row.protocol}" gives more in all than the {model.built_on.largest_total.text} studied '
+                              f"to {percent(row.total_beyond_model)} % of patients", "  ")
     return lines
 
 

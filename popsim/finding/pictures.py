@@ -73,7 +73,7 @@ def _along(found: DoseFound, path: Path) -> Picture:
         values = counts.mean_share(side)[:, 0]
         below.plot(at, values, color=INK, linestyle=dash)
         peak = int(np.argmax(values))
-        below.annotate(name, (at[peak], values[peak]), xytext=(4 if peak < len(at) / 2 else -4, -9),
+        below.annotate(name, (at[peak], values[peak]), xytext=(4 if peak < len(at) / 2 else -4, -10 if values[peak] > 0.9 else 7),
                        textcoords="offset points", fontsize=8.5, ha="left" if peak < len(at) / 2 else "right")
     _share_panel(below, at, "Time outside (%)")
     below.set_xlabel(f"{one.place.text[:1].upper()}{one.place.text[1:]} ({one.unit})", labelpad=2)

@@ -74,26 +74,6 @@ def test_james_second_printed_form():
     assert body_size.lean_body_mass_james(95, 172, "male") == pytest.approx(1.10 * 95 - 0.0128 * mass_index * 95)
 
 
-# Thresholds computed independently from the printed equation: 42.97 (men), 36.15 kg/m2 (women).
-@pytest.mark.parametrize(("sex", "threshold"), [("male", 42.97), ("female", 36.15)])
-def test_james_turns_over_at_the_stated_mass_index(sex, threshold):
-    def turned(mass_index):
-        return body_size.james_turned_over(mass_index * 1.7**2, 170, sex)
-
-    assert not turned(threshold - 0.006) and turned(threshold + 0.006)
-
-
-@given(weights, heights, sexes)
-def test_james_falls_past_its_turn_over_and_rises_before(weight, height, sex):
-    before = body_size.james_turned_over(weight, height, sex)
-    after = body_size.james_turned_over(weight + 1e-3, height, sex)
-    change = body_size.lean_body_mass_james(weight + 1e-3, height, sex) - body_size.lean_body_mass_james(
-        weight, height, sex
-    )
-    if before == after:  # both on one side of the peak
-        assert change < 0 if before else change > 0
-
-
 def test_predicted_normal_weight_falls_past_the_mass_index_its_people_line_states():
     for sex, peak in (("male", 42.9), ("female", 36.2)):
         heavier = [body_size.predicted_normal_weight(w, 170, sex) for w in np.array([-1, 0, 1]) + peak * 1.7**2]
@@ -150,7 +130,7 @@ def test_no_dose_weight_from_a_negative_ideal_weight():
 @given(weights, heights, ages, sexes)
 def test_sizes_of_plausible_adults_are_positive(weight, height, age, sex):
     people = {"weight": weight, "height": height, "age": age, "sex": sex}
-    always_rising = [name for name in SIZES if name not in ("lean_body_mass_james", "predicted_normal_weight")]
+    always_rising = [name for name in SIZES if name not in ("lean_body_mass_james", "predicted_normal_weight", "bmi_class_who")]
     for name in always_rising:
         assert compute(name, people) > 0, name
     if 16 <= body_size.bmi(weight, height) <= 60:
@@ -184,3 +164,19 @@ def test_metres_are_not_taken_for_centimetres():
         if any(source == "height" for _, source in EQUATIONS[name].needs):
             with pytest.raises(ProblemsError, match="height looks like metres; give cm"):
                 compute(name, {"weight": 70.0, "height": 1.7, "age": 40.0, "sex": "male"})
+
+
+# World Health Organization 2000, Technical Report Series 894: classes begin at 18.5, 25, 30, 35 and 40 kg/m2.
+@pytest.mark.parametrize(
+    ("mass_index", "expected"), [(18.49, 0), (18.51, 1), (25.01, 2), (29.99, 2), (30.01, 3), (35.01, 4), (39.99, 4), (86, 5)]
+)
+def test_classes_of_body_mass_index(mass_index, expected):
+    found = body_size.bmi_class_who(mass_index * 1.8**2, 180)
+    assert found == expected and found.dtype == np.float64
+    assert len(body_size.BMI_CLASSES_WHO) == 6
+
+
+def test_adjusted_weight_with_another_fraction_by_hand():
+    assert body_size.adjusted_body_weight(120, 70, 0.25) == pytest.approx(70 + 12.5, rel=1e-15)
+    with pytest.raises(ProblemsError, match="excess_fraction"):
+        body_size.adjusted_body_weight(120, 70, 0)

@@ -193,7 +193,7 @@ PIECES = """age weight sex 'female' 1 2.5 ( ) + - * ** / < > == and or not if el
 1e9 _ f'' None await yield @ \\ \x00 \u00e9""".split() + ["\n"]
 
 
-@settings(max_examples=1500, deadline=None)
+@settings(max_examples=3000, deadline=None)
 @given(st.text(max_size=80) | st.lists(st.sampled_from(PIECES), max_size=25).map(" ".join))
 def test_hostile_text_is_computed_or_refused(text):
     """Every text either gives plain numbers or conditions, or is refused as a user's mistake: nothing else."""

@@ -10,6 +10,7 @@ from hypothesis import strategies as st
 
 from covariates import maturation
 from covariates.catalogue import compute
+from covariates.problems import ProblemsError
 
 PUBLISHED = Path(__file__).parents[1] / "published"
 
@@ -70,3 +71,18 @@ WRONG = [(-1, 1, 1), (np.nan, 1, 1), (np.inf, 1, 1), (1, 0, 1), (1, 1, 0), (1, n
 def test_sigmoid_refuses_what_makes_no_sense(arguments):
     with pytest.raises(ValueError):
         maturation.sigmoid_maturation(*arguments)
+
+
+# By hand: exp(-0.0156 x 40) (Eleveld 2018, V2 at 75 years) and 1 - 0.00678 x 32 (Kleijn 2011, CL at 75 years).
+def test_ageing_by_hand():
+    assert maturation.exponential_ageing(75, -0.0156, 35) == pytest.approx(np.exp(-0.624), rel=1e-15)
+    assert maturation.linear_ageing(75, -0.00678, 43) == pytest.approx(0.78304, rel=1e-14)
+    assert maturation.linear_ageing(np.array([43.0, 200.0 - 80]), -0.02, 43).tolist() == pytest.approx([1, -0.54])
+    with pytest.raises(ProblemsError, match="age_years"):
+        maturation.exponential_ageing(-1, -0.01, 35)
+
+
+def test_allometric_size_by_hand():
+    assert maturation.allometric_size(70) == 1
+    assert maturation.allometric_size(140, 1) == pytest.approx(2, rel=1e-15)
+    assert maturation.allometric_size(140) == pytest.approx(2**0.75, rel=1e-15)

@@ -8,7 +8,7 @@ from hypothesis import given, settings
 from hypothesis import strategies as st
 
 from covariates.problems import ProblemsError
-from covariates.sheet import parameters_of, read_sheet, shipped_sheets
+from covariates.sheet import example_people, parameters_of, read_sheet, shipped_sheets
 
 GOOD = """
 name = "drug_author_2000"
@@ -127,6 +127,38 @@ def test_effects_act_before_use_and_typical_is_free_of_them(tmp_path):
         parameters_of(model, people.__getitem__, {"V9": np.zeros(2)})
 
 
+MORE = """
+[needs_numbers]
+albumin = { means = "g/L", example = 40 }
+[example_person]
+age = "7 years"
+weight = "20 kg"
+[equations]
+ka = { is = "albumin / 40", unit = "1/h" }
+F = { is = "0.8" }
+lag = { is = "0.5", unit = "h" }
+"""
+
+
+def test_absorption_numbers_and_example_people(tmp_path):
+    text = GOOD.replace("count = 12", 'count = 12\ndoses = "1 mg/kg"\nlargest_total = "2 g"')
+    model = write(tmp_path, text.replace("\n[equations]\n", MORE))
+    assert model.has_absorption and model.outputs[:8] == ("V1", "V2", "CL", "Q2", "ke0", "ka", "F", "lag")
+    assert (model.numbers["albumin"].means, model.numbers["albumin"].example) == ("g/L", 40)
+    assert model.built_on.doses == "1 mg/kg" and model.built_on.largest_total.value == 2000
+    people = example_people(model)
+    assert people["weight"].tolist() == [20, 20] and people["age"].tolist() == [7, 7] and len(people["sex"]) == 2
+    found = parameters_of(model, lambda name: people[name], {})
+    assert found["ka"][0] == pytest.approx(1 / 60) and found["F"][0] == 0.8 and found["lag"][0] == 30
+    assert not write(tmp_path, GOOD).has_absorption
+
+
+def test_spread_is_kept_as_it_was_printed(tmp_path):
+    printed = write(tmp_path, GOOD).printed_spread
+    assert (printed["V1"].value, printed["V1"].printed_as, printed["V1"].evidence) == (0.5, "cv", "seen")
+    assert (printed["CL"].value, printed["CL"].printed_as, printed["CL"].omega) == (0.09, "variance of ln", pytest.approx(0.3))
+
+
 def test_constants_spread_over_all_patients(tmp_path):
     text = 'name = "flat"\ndrug = "x"\ntitle = "x"\nevidence = "seen"\n'
     text += '[source]\ncitation = "x"\n[built_on]\npeople = "x"\n'
@@ -181,7 +213,16 @@ MISTAKES = [
     ('V2 = { is = "2 * V1 / 1000", unit = "L" }', 'V3 = { is = "9", unit = "L" }', "equations.V3", "V3 without V2"),
     ("CL = { is", "Cl = { is", "equations.CL", "missing"),
     ("CL = { is", "Cl = { is", "equations.Cl", "an equation that nothing uses"),
-    ('ke0 = { is = "6"', 'ka = { is = "6"', "equations.ka", "intravenous models only"),
+    ("[equations]", '[equations]\nlag = { is = "5", unit = "min" }', "equations.lag", "lag without ka"),
+    ("[equations]", '[equations]\nF = { is = "0.5" }', "equations.F", "F without ka"),
+    ("[equations]", '[equations]\nF = { is = "0.5", unit = "%" }', "equations.F.unit", "plain number"),
+    ("[equations]", '[equations]\nka = { is = "1", unit = "1/h" }\nF = { is = "1.2" }', "equations.F.is", "at most 1"),
+    ("[equations]", '[needs_numbers]\nalbumin = "g/L"\n[equations]', "needs_numbers.albumin", "example ="),
+    ("[equations]", '[needs_numbers]\nbmi = { means = "x", example = 1 }\n[equations]', "needs_numbers.bmi", "no name"),
+    ("[equations]", '[needs_numbers]\nx = { means = "x" }\n[equations]', "needs_numbers.x.example", "missing"),
+    ('fluid = "whole blood"', 'fluid = "unbound plasma"', "measured_in.fraction_unbound", "never applied twice"),
+    ("count = 12", 'count = 12\nlargest_total = "3 mg/h"', "built_on.largest_total", "a rate"),
+    ("[equations]", '[example_person]\nage = 7\n[equations]', "example_person.age", "has no unit"),
     ('ke0 = { is = "6", unit = "1/h" }', "", "effect", "without an effect site"),
     ("[equations]", '[equations]\nage = { is = "3" }', "equations.age", "means something else already"),
     ("[equations]", '[equations]\nexp = { is = "3" }', "equations.exp", "means something else already"),
