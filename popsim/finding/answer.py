@@ -10,6 +10,7 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
+from covariates.sheet import DrugModel
 from popsim.cautions import CAUTIONS
 from popsim.estimate import no_headline
 from popsim.finding.counting import Asked, Counts, fresh_line
@@ -129,7 +130,7 @@ def notes(asked: Asked, counts: Counts) -> list[str]:
     model = study.models[0]
     lines = [f"Model: {model.name}. Target: {target_line(asked.target)}.",
              "Intervals (95 %) show the luck of drawing patients; they say nothing about the model's error."]
-    lines += list(study.warnings)
+    lines += list(study.warnings) + _outside(model, counts)
     lines += [f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}."
               for name, factor in study.population.scale.items()]
     few = [counts.groups[g] for g in range(len(counts.groups)) if 0 < counts.n[g] < FEW_PATIENTS]
@@ -140,6 +141,21 @@ def notes(asked: Asked, counts: Counts) -> list[str]:
     lines += [f"Up to {most} patients failed or went without a dose: counted as not attained."] if most else []
     if model.spread_note and study.variability.between_subject:
         lines.append(f"{model.name}: {model.spread_note}")
+    return lines
+
+
+def _outside(model: DrugModel, counts: Counts) -> list[str]:
+    """Who lies beyond the people that the model was built on."""
+    shown = [g for g in range(len(counts.groups)) if counts.n[g] > 0]
+    if np.isnan(counts.outside).any():
+        lines = [f"Who lies outside the people of {model.name} is not known: the sheet gives no ranges."]
+    else:
+        shares = ", ".join(f"{counts.groups[g]} {percent(counts.outside[g] / counts.n[g])} %" for g in shown)
+        lines = [f"Outside the people that {model.name} was built on: {shares}."]
+    longest = counts.too_long[:, 0].max() / counts.n[0]
+    if longest > 0:
+        lines.append(f"Infused longer than the {model.built_on.longest_infusion_min:g} min studied: up to "
+                     f"{percent(longest)} % of patients.")
     return lines
 
 

@@ -64,8 +64,8 @@ def _sentences(found: DoseFound) -> list[str]:
     line = f"Best overall: {label(found.points[best])}: {share_text(share[best, 0], low[best, 0], high[best, 0])} attain"
     first, last = found.as_good
     if first < last:
-        line += (f"; from {label(found.points[first])} to {label(found.points[last])} none is clearly worse "
-                 "in the same patients")
+        line += (f"; the dose that is truly best lies between {label(found.points[first])} and "
+                 f"{label(found.points[last])} (95 %)")
     lines.append(f"{line}.{_at_the_edge(found, best)}")
     worst, place = found.worst(), found.best_worst
     group = _worst_group(counts, place)
@@ -151,6 +151,6 @@ def _numbers(found: DoseFound) -> dict[str, Any]:
     return {"searched": "dose", "protocol": found.protocol.name, "varied": [one.place.text for one in found.varied],
             "wishes": [one.wish.text for one in found.held], "tried": len(found.points),
             "best_overall": said(found.best_overall), "best_for_the_worst_group": said(found.best_worst),
-            "as_good_as_best_overall": [said(place) for place in found.as_good],
+            "best_overall_interval": [said(place) for place in found.as_good],
             "meeting": [[said(one.first), said(one.last)] for one in found.meeting],
             "chosen": said(found.chosen), "nearest": said(found.nearest), "fresh_seed": fresh(found.asked.base).seed}

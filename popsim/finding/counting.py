@@ -19,6 +19,7 @@ from popsim.records import BlockRows, Study, Target
 from popsim.run import simulate
 from popsim.study import resolve_study
 from popsim.study_file import ProtocolSection, StudyFile
+from popsim.tally import Tally, range_names
 
 Progress = Callable[[int], None] | None
 PILOT = 300  # patients timed to tell the cost of a long run
@@ -105,6 +106,8 @@ class Counts:
     patients  (g, c) int64
     sums      name -> (p, t, g, c): patients who failed, attained; sums of their shares of the window
     dose_mg   (p, g) mean total dose
+    outside   (g,) patients outside the people the model was built on, NaN where the sheet does not tell
+    too_long  (p, g) patients infused longer than anyone studied
     flags     (p, bytes) who attains the first target, packed; `members` (g, bytes) who belongs where
     """
 
@@ -114,6 +117,8 @@ class Counts:
     patients: np.ndarray
     sums: dict[str, np.ndarray]
     dose_mg: np.ndarray
+    outside: np.ndarray
+    too_long: np.ndarray
     flags: np.ndarray
     members: np.ndarray
 
@@ -122,13 +127,14 @@ class Counts:
         sums = {name: np.concatenate([self.sums[name], other.sums[name]]) for name in self.sums}
         return replace(self, names=self.names + other.names, sums=sums,
                        dose_mg=np.concatenate([self.dose_mg, other.dose_mg]),
+                       too_long=np.concatenate([self.too_long, other.too_long]),
                        flags=np.concatenate([self.flags, other.flags]))
 
     def taken(self, order: Sequence[int]) -> Counts:
         """The same protocols in another order."""
         order = list(order)
         return replace(self, names=[self.names[p] for p in order], dose_mg=self.dose_mg[order], flags=self.flags[order],
-                       sums={name: values[order] for name, values in self.sums.items()})
+                       too_long=self.too_long[order], sums={name: values[order] for name, values in self.sums.items()})
 
     @property
     def n(self) -> np.ndarray:
@@ -152,10 +158,20 @@ class Counts:
 
     def difference(self, a: int, b: int, group: int) -> tuple[float, float, float]:
         """Attainment of b minus that of a in the same patients of a group, with its interval."""
+        return paired_difference(*self._pair(a, b, group))
+
+    def clearly_worse(self, a: int, b: int, z: float) -> bool:
+        """Whether fewer of all attain with a than with b, by more than z standard errors of the paired difference."""
+        both, only_a, only_b, neither = self._pair(a, b, 0)
+        n, gain = both + only_a + only_b + neither, only_b - only_a
+        return gain > z * (max(only_a + only_b - gain**2 / n, 0.0)) ** 0.5
+
+    def _pair(self, a: int, b: int, group: int) -> tuple[int, int, int, int]:
+        """Patients of a group who attain with both, with a only, with b only, with neither."""
         of_a, of_b, who = self.flags[a], self.flags[b], self.members[group]
         both = _ones(of_a & of_b & who)
         only_a, only_b = _ones(of_a & ~of_b & who), _ones(of_b & ~of_a & who)
-        return paired_difference(both, only_a, only_b, _ones(who) - both - only_a - only_b)
+        return both, only_a, only_b, _ones(who) - both - only_a - only_b
 
 
 def _ones(packed: np.ndarray) -> int:
@@ -169,8 +185,7 @@ def count(study: Study, threads: int = 1, progress: Progress = None,
     cells_of  a block -> (n, k) integers: patients with the same integers are counted together
     """
     sink = _Sink(study, cells_of)
-    simulate(study, threads, sink=sink, progress=progress, attainment_only=True)
-    return sink.counts()
+    return sink.counts(simulate(study, threads, sink=sink, progress=progress, attainment_only=True).tally)
 
 
 def seconds_expected(study: Study, threads: int) -> float:
@@ -217,13 +232,17 @@ class _Sink:
         self._flags.append(np.packbits(attained, axis=1))
         self._members.append(np.packbits(rows.members.T > 0, axis=1))
 
-    def counts(self) -> Counts:
+    def counts(self, tally: Tally) -> Counts:
         keys = sorted(self._found)
         patients = np.stack([self._found[key]["patients"] for key in keys], axis=-1)
         sums = {name: np.stack([self._found[key][name] for key in keys], axis=-1) for name in SUMS}
         n = np.maximum(patients.sum(axis=1), 1)
+        known = range_names(self._study.models[0])
+        outside = tally.outside[0] if known else np.full(len(n), np.nan)
+        too_long = np.stack([tally.long_infusion[0, p] for p in range(len(self._study.protocols))])
         return Counts([protocol.name for protocol in self._study.protocols], self._study.group_names,
                       np.array(keys, dtype=np.int64).reshape(len(keys), -1), patients, sums, self._dose / n,
+                      outside, too_long,
                       np.concatenate(self._flags, axis=1), np.concatenate(self._members, axis=1))
 
 

@@ -10,6 +10,7 @@ from __future__ import annotations
 from collections.abc import Callable, Iterator
 from dataclasses import dataclass, replace
 from itertools import product
+from statistics import NormalDist
 
 import numpy as np
 
@@ -37,7 +38,7 @@ class DoseFound:
     """What a search of doses found. Points ascend; every index is a place among them.
 
     best_overall   most patients attain        best_worst  the worst group attains most
-    as_good        (first, last) stretch of doses around the best overall that are not clearly worse (one number varied)
+    as_good        (first, last) between which lies the dose that is truly best overall, with 95 % (one number varied)
     meeting        stretches of doses that meet every wish (one number varied); `meets` (p,) for every point
     chosen         the dose that meets every wish and is best for the worst group, or None
     nearest        the dose that comes nearest to the wishes, where none meets them, or None
@@ -125,13 +126,15 @@ def _judge(asked: Asked, protocol: ProtocolSection, varied: tuple[Varied, ...], 
 
 
 def _as_good(counts: Counts, best: int) -> tuple[int, int]:
-    """The stretch around the best whose doses are not clearly worse: the paired interval holds zero."""
-    first = last = best
-    while first > 0 and counts.difference(first - 1, best, 0)[1] <= 0:
-        first -= 1
-    while last < len(counts.names) - 1 and counts.difference(last + 1, best, 0)[1] <= 0:
-        last += 1
-    return first, last
+    """From the first to the last dose that is not clearly worse than the best in the same patients.
+
+    Since the best was picked among all that were tried, the level is shared out between them (Bonferroni): with 95 %
+    the dose that is truly best is not left out.
+    """
+    tried = len(counts.names)
+    z = NormalDist().inv_cdf(1 - 0.025 / tried)
+    good = [place for place in range(tried) if place == best or not counts.clearly_worse(place, best, z)]
+    return min(good), max(good)
 
 
 def _stretches(meets: np.ndarray) -> Iterator[Stretch]:

@@ -20,8 +20,8 @@ FLOW = [
     "derived", "model_text", "person_text",
     "finding.places", "finding.counting", "finding.holding", "finding.dose", "finding.size", "finding.table",
     "finding.map", "finding.answer", "finding.answer_dose", "finding.answer_size", "finding.answer_table",
-    "finding.answer_map", "finding.pictures", "finding.leave", "commands.find",
-    "commands.new", "commands.check", "commands.judge", "commands.models", "commands.person", "cli",
+    "finding.answer_map", "finding.pictures", "finding.leave",
+    "commands.new", "commands.check", "commands.judge", "commands.find", "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
