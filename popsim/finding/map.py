@@ -130,6 +130,7 @@ def _regions(fine: np.ndarray, level: float, across: Axis, up: Axis) -> list[Reg
             region = _worst_corner(left, level, LEAST_SHARE * everyone)
             if region is None:
                 break
+            region = _sharpened(left, region, level)
             inside = _inside(mine, *region)  # all of the corner, also what an earlier one holds
             n, hits = int(mine[inside, 3].sum()), int(mine[inside, 4].sum())
             sides = [tuple(edge * axis.width / FINE for edge in limits)
@@ -162,6 +163,28 @@ def _worst_corner(cells: np.ndarray, level: float, least: float) -> tuple | None
             region = tuple(_limits(int(at), turn, int(lowest), int(length))
                            for at, turn, lowest, length in zip((i, j), turned, low, size, strict=True))
     return region
+
+
+def _sharpened(cells: np.ndarray, region: tuple, level: float) -> tuple:
+    """Smoothing blurs a border: each edge moves, by a cell of the map at most, to where the cells themselves say that
+    the patients next to it fall short of the level on one side and not on the other."""
+    for axis in (0, 1):
+        at = next((edge for edge in region[axis] if np.isfinite(edge)), None)
+        if at is not None:
+            moved = [_moved(region, axis, edge) for edge in np.arange(at - FINE, at + FINE + 1)]
+            region = max(moved, key=lambda one: _lack(cells, one, level))
+    return region
+
+
+def _moved(region: tuple, axis: int, edge: float) -> tuple:
+    limits = tuple(edge if np.isfinite(old) else old for old in region[axis])
+    return (limits, region[1]) if axis == 0 else (region[0], limits)
+
+
+def _lack(cells: np.ndarray, region: tuple, level: float) -> float:
+    """How many patients the region is short of the level."""
+    inside = _inside(cells, *region)
+    return float((level * cells[inside, 3] - cells[inside, 4]).sum())
 
 
 def _from_corner(values: np.ndarray, turned: tuple[int, int]) -> np.ndarray:

@@ -8,14 +8,16 @@ smallest shortfall, then the highest attainment.
 
 from __future__ import annotations
 
+import math
 from dataclasses import dataclass
+from fractions import Fraction
 from itertools import pairwise
 
 import numpy as np
 
 from covariates.formula import compile_formula
 from covariates.problems import Problem, ProblemsError
-from covariates.units import Quantity, show
+from covariates.units import Quantity, parse_quantity, to_unit
 from popsim.finding.counting import Asked, Counts, count
 from popsim.finding.dose import in_fresh
 from popsim.finding.places import Place, range_of, read_place
@@ -82,13 +84,14 @@ def read_table(asked: Asked, protocol: ProtocolSection) -> tuple[FindTableSectio
 
 def _doses(section: FindTableSection, kind: str, where: str) -> list[Quantity]:
     """Multiples of the rounding within the limits."""
-    over, step = range_of(section.doses, [kind], where), section.round_to.value
-    numbers = np.arange(np.ceil(over.low / step - 1e-9), np.floor(over.high / step + 1e-9) + 1)
+    over, unit = range_of(section.doses, [kind], where), section.round_to.unit
+    step = Fraction(f"{to_unit(section.round_to.value, unit, kind):.10g}")
+    least, most = (to_unit(limit, unit, kind) for limit in (over.low, over.high))
+    numbers = range(math.ceil(float(least / step) - 1e-9), math.floor(float(most / step) + 1e-9) + 1)
     if not 2 <= len(numbers) <= MOST_DOSES:
         raise ProblemsError(Problem(where, f"{len(numbers)} multiples of {section.round_to.text} in {section.doses}",
                                     f"2 to {MOST_DOSES} doses to choose from", "other limits, or another round_to"))
-    return [Quantity(float(number * step), kind, section.round_to.unit,
-                     show(float(number * step), section.round_to.unit, kind)) for number in numbers]
+    return [parse_quantity(f"{float(number * step):.10g} {unit}", [kind]) for number in numbers]
 
 
 def with_table(protocol: ProtocolSection, place: Place, by: str, table: WardTable) -> ProtocolSection:
