@@ -163,7 +163,7 @@ def _dose(asked, protocol, threads: int, told: Callable[[str], None]) -> tuple:
 
     varied = read_vary(asked.section.find, protocol, asked.path.name)
     _ready(asked, [with_point(protocol, varied, point) for point in grid(varied)], threads, told,
-           "doses to begin with")
+           "doses to begin with (up to four times as many in all)")
     found = search(asked, protocol, varied, threads, told)
     whys, confirmed = confirm(found, threads)
 

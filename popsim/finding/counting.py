@@ -21,8 +21,8 @@ from popsim.study import resolve_study
 from popsim.study_file import ProtocolSection, StudyFile
 from popsim.tally import Tally, range_names
 
-Progress = Callable[[int], None] | None
-PILOT = 300  # patients timed to tell the cost of a long run
+AT_ONCE = 100  # protocols counted in one run, so that memory does not grow with them
+PILOT = 500  # patients timed to tell the cost of a long run
 SUMS = ("failed", "attained", "below", "inside", "above")
 
 
@@ -178,14 +178,22 @@ def _ones(packed: np.ndarray) -> int:
     return int(np.unpackbits(packed).sum(dtype=np.int64))
 
 
-def count(study: Study, threads: int = 1, progress: Progress = None,
+def count(study: Study, threads: int = 1,
           cells_of: Callable[[BlockRows], np.ndarray] | None = None) -> Counts:
     """Count every protocol of a study under its first model.
 
     cells_of  a block -> (n, k) integers: patients with the same integers are counted together
     """
+    parts = [study.protocols[first:first + AT_ONCE] for first in range(0, len(study.protocols), AT_ONCE)]
+    whole, *others = (_count_part(replace(study, protocols=part), threads, cells_of) for part in parts)
+    for other in others:
+        whole = whole.beside(other)
+    return whole
+
+
+def _count_part(study: Study, threads: int, cells_of: Callable | None) -> Counts:
     sink = _Sink(study, cells_of)
-    return sink.counts(simulate(study, threads, sink=sink, progress=progress, attainment_only=True).tally)
+    return sink.counts(simulate(study, threads, sink=sink, attainment_only=True).tally)
 
 
 def seconds_expected(study: Study, threads: int) -> float:
@@ -218,7 +226,10 @@ class _Sink:
             fine = ~judged.failed
             for name, sums in local.items():
                 values = getattr(judged, name)
-                weights = np.where(fine, np.nan_to_num(values), 0.0) if values.dtype == np.float64 else values
+                weights = np.where(fine, np.nan_to_num(values), 0.0)
+                if len(keys) == 1:
+                    sums[p, t, :, 0] = weights @ rows.members
+                    continue
                 for g, of in enumerate(rows.members.T):
                     sums[p, t, g] = np.bincount(cell, weights=weights * of, minlength=len(keys))
         for k, key in enumerate(keys):

@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import math
 import re
 from collections.abc import Callable, Iterable
 from dataclasses import dataclass, replace
@@ -19,6 +20,7 @@ BAND_KEYS = ("amount", "rate", "every", "at")
 _PLACE = re.compile(r"dose (\d+)(?:, band (\d+))?: (\w+)")
 FORM = '"dose 2: rate", "dose 1, band 3: amount" or "all doses"'
 DEFAULT_STEPS = {1: 21, 2: 9}
+MOST_TRIED = 2500  # combinations to begin with
 DIGITS = 4
 
 
@@ -106,6 +108,10 @@ def read_vary(find: FindSection, protocol: ProtocolSection, file: str) -> tuple[
               for number, vary in enumerate(find.vary)]
     if problems:
         raise ProblemsError(problems)
+    tried = math.prod(len(one.values) for one in varied)
+    if tried > MOST_TRIED:
+        raise ProblemsError(Problem(f"{file}: find, vary 2: steps", f"{tried:,} combinations", f"at most {MOST_TRIED:,}",
+                                    "fewer steps: the search looks closer by itself where it matters"))
     if len({one.place for one in varied}) < len(varied):
         raise ProblemsError(Problem(f"{file}: find, vary 2: what", f'"{varied[1].place.text}" twice', "two places"))
     return tuple(varied)
