@@ -65,14 +65,21 @@ def _sentences(found: SizeFound) -> list[str]:
         lines.append(f"Total body weight ranks {place + 1} of {len(found.measures)}: {told(place)}. In the same patients "
                      f"{said(found.measures[0])} differs by {points(difference[0])} points ({points(difference[1])} to "
                      f"{points(difference[2])}).")
-    lines += [f"{said(name).capitalize()} cannot dose {many:,} patients (zero, negative or unknown): left out."
-              for name, many in found.left_out.items()]
-    for place in np.flatnonzero(found.turned_over[:, 0] > 0):
-        most = int(np.argmax(found.turned_over[place]))
-        lines.append(f"{said(found.measures[place]).capitalize()} has turned over (it falls while weight rises) in "
-                     f"{percent(found.turned_over[place, 0])} % of all patients, {percent(found.turned_over[place, most])} % "
-                     f"in {quoted_group(counts.groups[most])}: there it under-doses the heaviest.")
+    for name, (many, falls) in found.left_out.items():
+        lines.append(f"{said(name).capitalize()} is left out: it cannot dose {many:,} patients (zero, negative or unknown). "
+                     f"{_turned(counts, falls)}".rstrip())
+    lines += [f"{said(name).capitalize()}: {_turned(counts, falls)}"
+              for name, falls in zip(found.measures, found.turned_over, strict=True) if falls[0] > 0]
     return lines
+
+
+def _turned(counts: Counts, falls: np.ndarray) -> str:
+    """Where a measure falls while weight rises."""
+    if falls[0] == 0:
+        return ""
+    most = int(np.argmax(falls))
+    return (f"It has turned over (it falls while weight rises) in {percent(falls[0])} % of all patients, "
+            f"{percent(falls[most])} % in {quoted_group(counts.groups[most])}: there it under-doses the heaviest.")
 
 
 def _sides(found: SizeFound) -> str:

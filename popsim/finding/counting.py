@@ -226,7 +226,7 @@ class _Sink:
             fine = ~judged.failed
             for name, sums in local.items():
                 values = getattr(judged, name)
-                weights = np.where(fine, np.nan_to_num(values), 0.0)
+                weights = values * 1.0 if values.dtype == bool else np.where(fine, np.nan_to_num(values), 0.0)
                 if len(keys) == 1:
                     sums[p, t, :, 0] = weights @ rows.members
                     continue

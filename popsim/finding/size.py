@@ -42,7 +42,8 @@ class SizeFound:
     worst        attainment of the class or group that attains least, `worst_group` its place
     turned_over  share of each group in whom the measure falls while weight rises
     doses        the doses by each measure, as text
-    left_out     measures by which some patients cannot be dosed (zero, negative or unknown), and how many
+    left_out     measures by which some patients cannot be dosed (zero, negative or unknown): how many, and the shares
+                 of each group in whom it falls while weight rises
     """
 
     asked: Asked
@@ -54,7 +55,7 @@ class SizeFound:
     worst: np.ndarray
     worst_group: np.ndarray
     turned_over: np.ndarray
-    left_out: dict[str, int]
+    left_out: dict[str, tuple[int, np.ndarray]]
 
     @property
     def practical(self) -> list[int]:
@@ -133,13 +134,13 @@ def search_sizes(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> S
         raise ProblemsError(Problem(f"{asked.path.name}: find: sizes", ", ".join(measures),
                                     "a measure above zero in every patient", "narrow the population, or add others"))
     measures, left_out = [measures[place] for place in fit], {
-        measures[place]: many for place, many in enumerate(unfit) if many}
+        measures[place]: (many, over[place]) for place, many in enumerate(unfit) if many}
     counts = count(asked.study([by_measure(asked, protocol, name) for name in measures]), threads)
     return _ranked(asked, protocol, measures, counts, over[fit], left_out)
 
 
 def _ranked(asked: Asked, protocol: ProtocolSection, measures: list[str], counts: Counts,
-            over: np.ndarray, left_out: dict[str, int]) -> SizeFound:
+            over: np.ndarray, left_out: dict[str, tuple[int, np.ndarray]]) -> SizeFound:
     attained = counts.attained()[0]
     classes = [place for place in _places(counts, (*BMI_CLASSES, *AGE_CLASSES)) if counts.n[place] >= FEWEST]
     everyone = [place for place in range(len(counts.groups)) if counts.n[place] >= FEWEST] or [0]
