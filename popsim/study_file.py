@@ -360,7 +360,8 @@ _EXAMPLES = {
     "until": 'until = "90 min"', "every": 'every = "30 s"', "during": 'during = "5 min to 60 min"',
     "model": 'model = "propofol_eleveld_2018"', "source": 'source = "survey" or "list"',
     "population": "a [population] section", "drug": "a [drug] section", "run": "a [run] section",
-    "what": 'what = "dose 1: rate"', "over": 'over = "2 to 12 mg/kg/h"', "bands": "bands = 4", "edges_to": "edges_to = 5",
+    "what": 'what = "dose 1: rate"', "over": 'over = "2 to 12 mg/kg/h"', "bands": "bands = 4",
+    "edges_to": "edges_to = 5",
     "doses": 'doses = "100 to 900 mg/h"', "round_to": 'round_to = "50 mg/h"', "by": 'by = "weight"',
     "protocol": "at least one [[protocol]]", "target": "a [target] section", "dose": "at least one [[protocol.dose]]",
 }

@@ -55,8 +55,16 @@ def share_text(share: float, low: float, high: float) -> str:
     return f"{percent(share)} %{between}"
 
 
+def attained_text(counts: Counts, p: int, group: int) -> str:
+    """The share attained under one protocol in one group, with its interval."""
+    return share_text(*(values[p, group] for values in counts.attained()))
+
+
 def short_share(share: float, low: float, high: float) -> str:
     return f"{percent(share)} ({percent(low)}-{percent(high)})"
+
+
+AGAINST_WRITTEN = "share attained (%), difference to the protocol as written in points"
 
 
 def quoted_group(name: str) -> str:
@@ -79,7 +87,8 @@ def by_group(asked: Asked, counts: Counts, leads: Sequence[dict[str, Any]], agai
         for g, group in enumerate(counts.groups):
             row = lead | {"group": group, "patients": int(counts.n[g]), "failed": int(failed[p, g]),
                           "attained": share[p, g], "attained_low": low[p, g], "attained_high": high[p, g],
-                          **{name: values[p, g] for name, values in sides.items()}, "mean_total_mg": counts.dose_mg[p, g]}
+                          **{name: values[p, g] for name, values in sides.items()},
+                          "mean_total_mg": counts.dose_mg[p, g]}
             if against is not None:
                 row |= dict(zip(("difference", "difference_low", "difference_high"),
                                 counts.difference(against, p, g), strict=True))
@@ -92,7 +101,7 @@ def by_group(asked: Asked, counts: Counts, leads: Sequence[dict[str, Any]], agai
 
 
 def group_table(counts: Counts, names: Sequence[str], first: str, against: int | None = None) -> tuple[list, list]:
-    """Columns and rows of text: a protocol a row, its attainment in each group; differences where `against` is given."""
+    """Columns and rows of text: a protocol a row, its attainment in each group, with differences to `against`."""
     shown = [g for g in range(len(counts.groups)) if counts.n[g] > 0]
     columns = [first, *(counts.groups[g] for g in shown)]
     share, failed = counts.attained()[0], counts.total("failed")

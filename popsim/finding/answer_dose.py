@@ -5,10 +5,12 @@ from __future__ import annotations
 from typing import Any
 
 import numpy as np
+import pandas as pd
 
 from covariates.units import to_unit
 from popsim.finding.answer import (
-    Answer, Part, by_group, fresh_heading, group_table, notes, quoted_group, share_text, wish_sentence,
+    AGAINST_WRITTEN, Answer, Part, attained_text, by_group, fresh_heading, group_table, notes, quoted_group, share_text,
+    wish_sentence,
 )  # fmt: skip
 from popsim.finding.counting import Counts, fresh, fresh_line
 from popsim.finding.dose import DoseFound, label
@@ -25,7 +27,7 @@ def dose_answer(found: DoseFound, whys: list[str], confirmed: list[tuple[str, Co
     parts = [
         Part("Answer", [*_sentences(found), *_confirmed(found, fresh_counts)]),
         Part("Along the doses: share attained, mean time below and above of all (%)", [], *_along(found)),
-        Part(f"{fresh_heading(asked, fresh_counts)}: share attained (%), difference to the protocol as written in points",
+        Part(f"{fresh_heading(asked, fresh_counts)}: {AGAINST_WRITTEN}",
              [line for p, name in enumerate(fresh_counts.names)
               if (line := wish_sentence(asked, fresh_counts, p, f"With {name}"))], columns, rows),
         *(Part(f"The same under {other}", [], *group_table(of, names, "attained (%)", 0))
@@ -35,14 +37,8 @@ def dose_answer(found: DoseFound, whys: list[str], confirmed: list[tuple[str, Co
     leads = [_lead(found, place) for place in range(len(found.points))]
     confirm_table = [by_group(asked, of, [{"model": name, "what": why, "protocol": protocol} for why, protocol in
                                           zip(whys, of.names, strict=True)], 0) for name, of in confirmed]
-    return Answer(asked, parts, {"along": by_group(asked, counts, leads), "confirm": _joined(confirm_table)},
+    return Answer(asked, parts, {"along": by_group(asked, counts, leads), "confirm": pd.concat(confirm_table, ignore_index=True)},
                   _numbers(found))
-
-
-def _joined(tables: list) -> Any:
-    import pandas as pd
-
-    return pd.concat(tables, ignore_index=True)
 
 
 def _lead(found: DoseFound, place: int) -> dict[str, Any]:
@@ -56,12 +52,12 @@ def _lead(found: DoseFound, place: int) -> dict[str, Any]:
 
 def _sentences(found: DoseFound) -> list[str]:
     counts = found.counts
-    share, low, high = counts.attained()
+    share = counts.attained()[0]
     what = " and ".join(one.place.text for one in found.varied)
     lines = [f'Varied in "{found.protocol.name}": {what}, '
              f"{' and '.join(f'{one.values[0].text} to {one.values[-1].text}' for one in found.varied)}."]
     best = found.best_overall
-    line = f"Best overall: {label(found.points[best])}: {share_text(share[best, 0], low[best, 0], high[best, 0])} attain"
+    line = f"Best overall: {label(found.points[best])}: {attained_text(counts, best, 0)} attain"
     first, last = found.as_good
     if first < last:
         line += (f"; the dose that is truly best lies between {label(found.points[first])} and "
@@ -70,8 +66,8 @@ def _sentences(found: DoseFound) -> list[str]:
     worst, place = found.worst(), found.best_worst
     group = _worst_group(counts, place)
     lines.append(f"Best for the worst group: {label(found.points[place])}: "
-                 f"{share_text(share[place, group], low[place, group], high[place, group])} attain in "
-                 f"{quoted_group(counts.groups[group])}, {percent(share[place, 0])} % of all.{_at_the_edge(found, place)}")
+                 f"{attained_text(counts, place, group)} attain in {quoted_group(counts.groups[group])}, "
+                 f"{percent(share[place, 0])} % of all.{_at_the_edge(found, place)}")
     return lines + _wishes(found, worst)
 
 
@@ -80,11 +76,9 @@ def _confirmed(found: DoseFound, fresh_counts: Counts) -> list[str]:
     the one that is best for the worst group."""
     place = next(one for one in (found.chosen, found.nearest, found.best_worst) if one is not None)
     p = fresh_counts.names.index(label(found.points[place]))
-    share, low, high = fresh_counts.attained()
     group = _worst_group(fresh_counts, p)
     lines = [f"Confirmed in {fresh_line(found.asked.base, int(fresh_counts.n[0]))}: with {fresh_counts.names[p]} "
-             f"{share_text(share[p, 0], low[p, 0], high[p, 0])} of all attain, "
-             f"{share_text(share[p, group], low[p, group], high[p, group])} in "
+             f"{attained_text(fresh_counts, p, 0)} of all attain, {attained_text(fresh_counts, p, group)} in "
              f"{quoted_group(fresh_counts.groups[group])}."]
     return lines + ([wish_sentence(found.asked, fresh_counts, p, "There")] if found.held else [])
 
@@ -105,10 +99,10 @@ def _wishes(found: DoseFound, worst: np.ndarray) -> list[str]:
         return []
     wished = "; ".join(one.wish.text for one in found.held)
     if found.chosen is None:
-        short = [f"{one.wish.text}: {share_text(one.share[found.nearest], one.low[found.nearest], one.high[found.nearest])}"
-                 f" in {quoted_group(found.counts.groups[one.group[found.nearest]])}"
-                 for one in found.held if not one.met[found.nearest]]
-        return [f"Wished: {wished}. No dose does; the nearest is {label(found.points[found.nearest])} "
+        near = found.nearest
+        short = [f"{one.wish.text}: {share_text(one.share[near], one.low[near], one.high[near])} in "
+                 f"{quoted_group(found.counts.groups[one.group[near]])}" for one in found.held if not one.met[near]]
+        return [f"Wished: {wished}. No dose does; the nearest is {label(found.points[near])} "
                 f"({'; '.join(short)})."]
     clear = np.flatnonzero(found.meets & np.all([one.clearly for one in found.held], axis=0))
     sure = "" if len(clear) else " None meets them beyond doubt: the intervals reach to the other side."

@@ -31,7 +31,8 @@ def map_answer(found: MapFound) -> Answer:
     ]
     return Answer(asked, parts, {"map": map_frame(found), "regions": _region_frame(found)},
                   {"searched": "map", "protocol": found.protocol.name, "across": found.across.name,
-                   "up": found.up.name, "level": found.level, "regions": [region_text(found, one) for one in found.regions],
+                   "up": found.up.name, "level": found.level,
+                   "regions": [region_text(found, one) for one in found.regions],
                    "fresh_seed": fresh(asked.base).seed})
 
 
@@ -41,8 +42,9 @@ def _sentences(found: MapFound) -> list[str]:
     lines = []
     for region in found.regions:
         clear = region.fresh_high < found.level
-        lines.append(f"B{region_text(found, region)[1:]}: {share_text(region.fresh_attained, region.fresh_low, region.fresh_high)} "
-                     f"of {region.fresh_patients:,} fresh patients{'' if clear else ', so not clear there'}.")
+        share = share_text(region.fresh_attained, region.fresh_low, region.fresh_high)
+        lines.append(f"B{region_text(found, region)[1:]}: {share} of "
+                     f"{region.fresh_patients:,} fresh patients{'' if clear else ', so not clear there'}.")
     return lines
 
 

@@ -5,7 +5,8 @@ from __future__ import annotations
 import numpy as np
 
 from popsim.finding.answer import (
-    Answer, Part, by_group, fresh_heading, group_table, notes, quoted_group, share_text, short_share,
+    AGAINST_WRITTEN, Answer, Part, attained_text, by_group, fresh_heading, group_table, notes, quoted_group,
+    short_share,
 )  # fmt: skip
 from popsim.finding.counting import Counts, fresh
 from popsim.finding.size import AGE_CLASSES, BMI_CLASSES, FEWEST, PRACTICAL, SizeFound
@@ -20,12 +21,12 @@ def size_answer(found: SizeFound, confirmed: Counts) -> Answer:
         Part("Answer", _sentences(found)),
         Part("Measures by rank (flatness over BMI classes and ages, then the worst class or group)", [
             "Every measure gives the reference adult the same dose; another level may suit another measure better "
-            f"(popsim find dose). Spans: largest minus smallest attainment over the classes. Classes of fewer than {FEWEST} "
-            "patients do not count. Ward: what a ward can work out."], *_ranking(found, names)),
+            "(popsim find dose). Spans: largest minus smallest attainment over the classes. Classes of fewer than "
+            f"{FEWEST} patients do not count. Ward: what a ward can work out."], *_ranking(found, names)),
         Part("Where each measure leaves people under and over", [_sides(found)], *_misses(found, names, classes)),
         Part("Share attained (%) by class", [], *group_table(counts, names, "dosed by"), report_only=True),
-        Part(f"{fresh_heading(asked, confirmed)}: share attained (%), difference to the protocol as written in points",
-             [], *group_table(confirmed, [said(name) for name in confirmed.names], "dosed by", 0)),
+        Part(f"{fresh_heading(asked, confirmed)}: {AGAINST_WRITTEN}", [],
+             *group_table(confirmed, [said(name) for name in confirmed.names], "dosed by", 0)),
         Part("Note", notes(asked, counts)),
     ]
     leads = [{"rank": rank, "measure": name, "doses": found.doses[rank - 1], "practical": name in PRACTICAL,
@@ -47,14 +48,14 @@ def said(name: str) -> str:
 
 
 def _sentences(found: SizeFound) -> list[str]:
-    counts, (share, low, high) = found.counts, found.counts.attained()
+    counts = found.counts
 
     def told(place: int) -> str:
         group = found.worst_group[place]
         return (f"{said(found.measures[place])} ({found.doses[place]}): "
-                f"{share_text(share[place, 0], low[place, 0], high[place, 0])} of all attain; over the classes of body mass "
-                f"index and age attainment moves by {points(found.flatness[place])[1:]} points, and is lowest in "
-                f"{quoted_group(counts.groups[group])} with {share_text(share[place, group], low[place, group], high[place, group])}")
+                f"{attained_text(counts, place, 0)} of all attain; over the classes of body mass index and age "
+                f"attainment moves by {points(found.flatness[place])[1:]} points, and is lowest in "
+                f"{quoted_group(counts.groups[group])} with {attained_text(counts, place, group)}")
 
     lines = [f"Flattest: by {told(0)}."]
     practical = found.practical
@@ -62,12 +63,12 @@ def _sentences(found: SizeFound) -> list[str]:
         lines.append(f"Of what a ward can use (total, ideal, adjusted, lean, fixed): by {told(practical[0])}.")
     if "weight" in found.measures and 0 != (place := found.measures.index("weight")):
         difference = counts.difference(place, 0, 0)
-        lines.append(f"Total body weight ranks {place + 1} of {len(found.measures)}: {told(place)}. In the same patients "
-                     f"{said(found.measures[0])} differs by {points(difference[0])} points ({points(difference[1])} to "
-                     f"{points(difference[2])}).")
+        lines.append(f"Total body weight ranks {place + 1} of {len(found.measures)}: {told(place)}. In the same "
+                     f"patients {said(found.measures[0])} differs by {points(difference[0])} points "
+                     f"({points(difference[1])} to {points(difference[2])}).")
     for name, (many, falls) in found.left_out.items():
-        lines.append(f"{said(name).capitalize()} is left out: it cannot dose {many:,} patients (zero, negative or unknown). "
-                     f"{_turned(counts, falls)}".rstrip())
+        lines.append(f"{said(name).capitalize()} is left out: it cannot dose {many:,} patients (zero, negative or "
+                     f"unknown). {_turned(counts, falls)}".rstrip())
     lines += [f"{said(name).capitalize()}: {_turned(counts, falls)}"
               for name, falls in zip(found.measures, found.turned_over, strict=True) if falls[0] > 0]
     return lines

@@ -11,7 +11,7 @@ from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.units import to_unit
 from popsim.cautions import CAUTIONS
 from popsim.finding.answer import (
-    Answer, Part, by_group, fresh_heading, group_table, notes, quoted_group, wish_sentence,
+    AGAINST_WRITTEN, Answer, Part, by_group, fresh_heading, group_table, notes, quoted_group, wish_sentence,
 )  # fmt: skip
 from popsim.finding.counting import Counts, fresh
 from popsim.finding.dose import worst_of
@@ -27,7 +27,7 @@ def table_answer(found: TableFound) -> Answer:
     parts = [
         Part("Answer", _sentences(found, counts)),
         *(Part(f"Ward card: {table.name}", _beside(found), *_card(found, table)) for table in found.tables),
-        Part(f"{fresh_heading(asked, counts)}: share attained (%), difference to the protocol as written in points",
+        Part(f"{fresh_heading(asked, counts)}: {AGAINST_WRITTEN}",
              [line for p, rule in enumerate(rules) if (line := wish_sentence(asked, counts, p, rule.capitalize()))],
              columns, rows),
         Part("What each step of simplicity costs: attainment against the rule before it (points), fresh patients", [],
@@ -102,7 +102,8 @@ def card_text(found: TableFound, table: WardTable) -> str:
     step = found.asked.study([with_table(found.protocol, found.place, found.by, table)]).protocols[0].steps[
         found.place.dose]
     when = f"at {clock(step.variants[0].at_min)}"
-    when += f", until {clock(step.until_min)}" if step.until_min else f", over {clock(step.over_min)}" if step.over_min else ""
+    if step.until_min or step.over_min:
+        when += f", until {clock(step.until_min)}" if step.until_min else f", over {clock(step.over_min)}"
     lines = [found.asked.base.title, f'{found.place.text} of "{found.protocol.name}", {when}'
              + (f"; {strength:g} mg/mL" if strength else ""), ""]
     lines += ["  ".join(f"{cell:<{size}}" for cell, size in zip(row, width, strict=True)).rstrip()
@@ -115,10 +116,11 @@ def _sentences(found: TableFound, counts: Counts) -> list[str]:
     lines = []
     for p, table in enumerate(found.tables, 1):
         difference = counts.difference(0, p, 0)
-        lost = min((g for g in range(len(counts.groups)) if counts.n[g]), key=lambda g, p=p: counts.difference(0, p, g)[0])
+        shown = [g for g in range(len(counts.groups)) if counts.n[g] > 0]
+        lost = min(shown, key=lambda g, p=p: counts.difference(0, p, g)[0])
         lines.append(
-            f"{table.name.capitalize()}: {percent(share[p, 0])} % of all attain, {percent(worst[p])} % in the worst group; "
-            f"against the protocol as written {points(difference[0])} points ({points(difference[1])} to "
+            f"{table.name.capitalize()}: {percent(share[p, 0])} % of all attain, {percent(worst[p])} % in the worst "
+            f"group; against the protocol as written {points(difference[0])} points ({points(difference[1])} to "
             f"{points(difference[2])}) of all, {points(counts.difference(0, p, lost)[0])} in "
             f"{quoted_group(counts.groups[lost])}, where it gains least or loses most.")
     return lines

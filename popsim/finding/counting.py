@@ -56,7 +56,8 @@ class Asked:
 
 def _named(where: str, protocols: Sequence[ProtocolSection]) -> str:
     """"study.toml: protocol 17, dose 1: at_most" with the name of what was tried instead of its number."""
-    return re.sub(r"\bprotocol (\d+)", lambda found: f'find, with "{protocols[int(found[1]) - 1].name}"', where, count=1)
+    names = [protocol.name for protocol in protocols]
+    return re.sub(r"\bprotocol (\d+)", lambda found: f'find, with "{names[int(found[1]) - 1]}"', where, count=1)
 
 
 def read_asked(section: StudyFile, path: Path) -> Asked:

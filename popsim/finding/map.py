@@ -199,7 +199,8 @@ def neighbours(values: np.ndarray, reach: int) -> np.ndarray:
         wide = [(reach + 1, reach) if k == axis else (0, 0) for k in (0, 1)]
         until = np.cumsum(np.pad(values, wide), axis=axis)
         length = values.shape[axis]
-        values = np.take(until, range(2 * reach + 1, 2 * reach + 1 + length), axis) - np.take(until, range(length), axis)
+        over = 2 * reach + 1
+        values = np.take(until, range(over, over + length), axis) - np.take(until, range(length), axis)
     return values
 
 

@@ -73,8 +73,9 @@ def _along(found: DoseFound, path: Path) -> Picture:
         values = counts.mean_share(side)[:, 0]
         below.plot(at, values, color=INK, linestyle=dash)
         peak = int(np.argmax(values))
-        below.annotate(name, (at[peak], values[peak]), xytext=(4 if peak < len(at) / 2 else -4, -10 if values[peak] > 0.9 else 7),
-                       textcoords="offset points", fontsize=8.5, ha="left" if peak < len(at) / 2 else "right")
+        left = peak < len(at) / 2
+        below.annotate(name, (at[peak], values[peak]), xytext=(4 if left else -4, -10 if values[peak] > 0.9 else 7),
+                       textcoords="offset points", fontsize=8.5, ha="left" if left else "right")
     _share_panel(below, at, "Time outside (%)")
     below.set_xlabel(f"{one.place.text[:1].upper()}{one.place.text[1:]} ({one.unit})", labelpad=2)
     for stretch in found.meeting:
@@ -122,8 +123,8 @@ def _grid(found: DoseFound, path: Path) -> Picture:
     told = (f"A grid of {len(first.values)} by {len(second.values)} combinations, from {percent(values.min())} to "
             f"{percent(values.max())} %.")
     star = " Star: meets every wish." if found.chosen is not None else ""
-    return _finish(page, path, title, told, f"Circle: most of all attain. Square: best for the worst group.{star} Intervals "
-                   f"are in along.csv. {INTERVALS_SAY}")
+    caption = f"Circle: most of all attain. Square: best for the worst group.{star} Intervals are in along.csv."
+    return _finish(page, path, title, told, f"{caption} {INTERVALS_SAY}")
 
 
 def draw_size(found: SizeFound, folder: Path) -> list[Picture]:
@@ -154,10 +155,11 @@ def draw_size(found: SizeFound, folder: Path) -> list[Picture]:
             page.text(MARGIN, page.top + at, wrapped(said(name), left - 0.1, 8.5, strong, 1)[0], 8.5,
                       va="center_baseline", weight=strong)
         page.top += height + 0.5
-        told = "; ".join(f"{said(name)}: all {percent(share[place, 0])} %, classes {percent(share[place, classes].min())} to "
-                         f"{percent(share[place, classes].max())} %" for place, name in enumerate(found.measures))
-        caption = ("Circles: classes of body mass index. Squares: ages. Upright stroke: all patients. Bold: what a ward can "
-                   f"use. Intervals are in sizes.csv. {INTERVALS_SAY}")
+        told = "; ".join(f"{said(name)}: all {percent(share[place, 0])} %, classes "
+                         f"{percent(share[place, classes].min())} to {percent(share[place, classes].max())} %"
+                         for place, name in enumerate(found.measures))
+        caption = ("Circles: classes of body mass index. Squares: ages. Upright stroke: all patients. Bold: what a "
+                   f"ward can use. Intervals are in sizes.csv. {INTERVALS_SAY}")
         return [_finish(page, folder / "sizes.svg", title, f"Dots. {told}.", caption)]
 
 
@@ -167,7 +169,8 @@ def draw_table(found: TableFound, folder: Path) -> list[Picture]:
     rules = ["as written", *(table.name for table in found.tables)]
     share, low, high = counts.attained()
     shown = [g for g in range(len(counts.groups)) if counts.n[g] > 0]
-    title = f"{found.tables[0].name.capitalize()}: {percent(share[1, 0])} % of all attain, as written {percent(share[0, 0])} %"
+    title = (f"{found.tables[0].name.capitalize()}: {percent(share[1, 0])} % of all attain, "
+             f"as written {percent(share[0, 0])} %")
     with house_style():
         page = Page()
         _head(page, found.asked, title, "Share who attain under every rule, in fresh patients, by group")
@@ -181,8 +184,8 @@ def draw_table(found: TableFound, folder: Path) -> list[Picture]:
         axes.spines["left"].set_visible(False)
         axes.set_xlabel("Patients who attain the target (%)")
         for place, g in enumerate(shown):
-            page.text(MARGIN, page.top + block * (place + 0.5), wrapped(counts.groups[g], left - 0.2, 9, most_lines=1)[0],
-                      9, va="center_baseline")
+            name = wrapped(counts.groups[g], left - 0.2, 9, most_lines=1)[0]
+            page.text(MARGIN, page.top + block * (place + 0.5), name, 9, va="center_baseline")
             for p in range(len(rules)):
                 at, look = block * place + 0.07 + step * (p + 0.5), strokes(p)
                 axes.plot([low[p, g], high[p, g]], [at, at], color=look.colour, linewidth=2, solid_capstyle="butt")
@@ -192,7 +195,8 @@ def draw_table(found: TableFound, folder: Path) -> list[Picture]:
         page.top += block * len(shown) + 0.5
         told = "; ".join(f"{counts.groups[g]}: " + ", ".join(f"{rule} {percent(share[p, g])} %" for p, rule in
                                                              enumerate(rules)) for g in shown)
-        return [_finish(page, folder / "simplicity.svg", title, f"Dots with intervals. {told}.", f"Bars: {INTERVALS_SAY}")]
+        return [_finish(page, folder / "simplicity.svg", title, f"Dots with intervals. {told}.",
+                        f"Bars: {INTERVALS_SAY}")]
 
 
 def draw_map(found: MapFound, folder: Path) -> list[Picture]:
@@ -216,9 +220,9 @@ def draw_map(found: MapFound, folder: Path) -> list[Picture]:
         axes.figure.colorbar(shades, cax=bar)
         share_axis(bar.yaxis)
         page.top += height + 0.5
-        told = "; ".join(region_text(found, region) for region in found.regions) or "no region is clearly below the level"
-        caption = (f"White line: {percent(found.level, 0)} % (shares smoothed over neighbouring cells). Dotted: the regions in the "
-                   f"text. Cells of fewer than {FEWEST_IN_CELL} patients are blank. {INTERVALS_SAY}")
+        told = "; ".join(region_text(found, region) for region in found.regions) or "no region is below the level"
+        caption = (f"White line: {percent(found.level, 0)} % (shares smoothed over neighbouring cells). Dotted: the "
+                   f"regions in the text. Cells of fewer than {FEWEST_IN_CELL} patients are blank. {INTERVALS_SAY}")
         return [_finish(page, folder / "map.svg", title, f"Cells by colour for each sex. {told}.", caption)]
 
 

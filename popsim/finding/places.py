@@ -11,7 +11,9 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity, parse_quantity, parse_range, show
-from popsim.study_file import DOSE_AMOUNTS, DOSE_RATES, DoseSection, FindSection, ProtocolSection, StudyFile, VarySection
+from popsim.study_file import (
+    DOSE_AMOUNTS, DOSE_RATES, DoseSection, FindSection, ProtocolSection, StudyFile, VarySection,
+)  # fmt: skip
 
 ALL_DOSES = "all doses"  # every amount and rate, and their caps and floors left as they are
 KINDS = {"amount": DOSE_AMOUNTS, "rate": DOSE_RATES, "at_most": ("mass", "rate"), "at_least": ("mass", "rate"),
@@ -110,7 +112,8 @@ def read_vary(find: FindSection, protocol: ProtocolSection, file: str) -> tuple[
         raise ProblemsError(problems)
     tried = math.prod(len(one.values) for one in varied)
     if tried > MOST_TRIED:
-        raise ProblemsError(Problem(f"{file}: find, vary 2: steps", f"{tried:,} combinations", f"at most {MOST_TRIED:,}",
+        raise ProblemsError(Problem(f"{file}: find, vary 2: steps", f"{tried:,} combinations",
+                                    f"at most {MOST_TRIED:,}",
                                     "fewer steps: the search looks closer by itself where it matters"))
     if len({one.place for one in varied}) < len(varied):
         raise ProblemsError(Problem(f"{file}: find, vary 2: what", f'"{varied[1].place.text}" twice', "two places"))
@@ -132,7 +135,10 @@ def _read_one(vary: VarySection, number: int, of: int, protocol: ProtocolSection
         return None
     values = np.linspace(over.low, over.high, vary.steps or DEFAULT_STEPS[of])
     blank = Varied(place, (), over.unit, over.kind)
-    return replace(blank, values=tuple(blank.quantity(value) for value in values))
+    said = {quantity.text: quantity for quantity in map(blank.quantity, values)}
+    if len(said) < 2:
+        problems.append(Problem(f"{where}: over", f'"{vary.over}"', f"two ends that differ within {DIGITS} digits"))
+    return replace(blank, values=tuple(said.values()))
 
 
 def range_of(text: str, kinds: Iterable[str], where: str):

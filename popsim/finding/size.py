@@ -64,8 +64,9 @@ class SizeFound:
 
 def with_classes(asked: Asked) -> Asked:
     """The study with the classes of body mass index and age as further groups."""
-    known = {group.name for group in asked.section.group}
-    classes = {name: where for name, where in (BMI_CLASSES | AGE_CLASSES).items() if name not in known}
+    known = {(group.name, group.where.text) for group in asked.section.group}
+    classes = {name: where for name, where in (BMI_CLASSES | AGE_CLASSES).items()
+               if (name, where) not in known}
     groups = [GroupSection.model_construct(name=name, where=compile_formula(where, name, "condition"))
               for name, where in classes.items()]
     return read_asked(asked.section.model_copy(update={"group": [*asked.section.group, *groups]}), asked.path)

@@ -74,7 +74,8 @@ def read_table(asked: Asked, protocol: ProtocolSection) -> tuple[FindTableSectio
     if place.key not in ("amount", "rate") or place.band is not None:
         raise ProblemsError(Problem(f"{where}: what", f'"{section.what}"', '"dose 1: amount" or "dose 1: rate"'))
     if protocol.dose[place.dose].band:
-        raise ProblemsError(Problem(f"{where}: what", f'"{section.what}", which has bands already', "a dose without bands"))
+        raise ProblemsError(Problem(f"{where}: what", f'"{section.what}", which has bands already',
+                                    "a dose without bands"))
     kind = "mass" if place.key == "amount" else "rate"
     if section.round_to.kind != kind or section.round_to.value == 0:
         raise ProblemsError(Problem(f"{where}: round_to", f'"{section.round_to.text}"',
@@ -123,7 +124,8 @@ def candidates(protocol: ProtocolSection, section: FindTableSection, place: Plac
 def search_table(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> TableFound:
     """Find the tables from the wanted number of bands down to one dose, and put them to fresh patients."""
     section, place, doses = read_table(asked, protocol)
-    counts = count(asked.study(candidates(protocol, section, place, doses)), threads, cells_of=lambda rows: slices(rows, section.by, section.edges_to))
+    counts = count(asked.study(candidates(protocol, section, place, doses)), threads,
+                   cells_of=lambda rows: slices(rows, section.by, section.edges_to))
     slicing = Slices(asked, counts)
     tables, seen = [], set()
     for bands in range(min(section.bands, len(counts.cells)), 0, -1):

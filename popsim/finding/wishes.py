@@ -12,7 +12,8 @@ FORM = ('such as "at least 90 % attained in every group", "at most 5 % ever abov
         '"at most 10 % of the time above in \'over 75\'"')
 _WISH = re.compile(
     r"(?P<side>at least|at most)\s+(?P<percent>[0-9]+(?:\.[0-9]+)?)\s*%\s+"
-    r"(?:(?P<attained>attained)|ever\s+(?P<ever>above|below)\s+(?P<limit>.+?)(?:\s+(?P<course>in plasma|at the effect site))?"
+    r"(?:(?P<attained>attained)"
+    r"|ever\s+(?P<ever>above|below)\s+(?P<limit>.+?)(?:\s+(?P<course>in plasma|at the effect site))?"
     r"|of the time\s+(?P<time>below|in range|above))"
     r"(?:\s+(?:in\s+(?P<every>every group)|among\s+all|in\s+[\"'](?P<group>[^\"']+)[\"']))?"
 )

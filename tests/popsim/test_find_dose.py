@@ -77,7 +77,8 @@ def test_the_doses_that_meet_a_wish_end_where_the_closed_form_says(tmp_path):
 
 
 def test_where_no_dose_does_the_nearest_is_named(tmp_path):
-    result = found(tmp_path, '[find]\nwish = ["at least 99 % attained"]\n' + VARY.format(over="0.3 to 1.5 mg/min", steps=9))
+    wish = '[find]\nwish = ["at least 99 % attained"]\n'
+    result = found(tmp_path, wish + VARY.format(over="0.3 to 1.5 mg/min", steps=9))
     assert result.chosen is None and not result.meets.any()
     assert result.nearest == result.best_overall
     assert result.held[0].shortfall[result.nearest] == pytest.approx(
@@ -107,7 +108,8 @@ def test_two_numbers_at_once(tmp_path):
 
 def test_all_doses_are_multiplied_together(tmp_path):
     both = {"a": 'amount = "10 mg"\n---\nrate = "1 mg/min"\nuntil = "600 min"'}
-    question, protocol = asked(tmp_path, '[[find.vary]]\nwhat = "all doses"\nover = "50 % to 150 %"\nsteps = 3', protocols=both)
+    find = '[[find.vary]]\nwhat = "all doses"\nover = "50 % to 150 %"\nsteps = 3'
+    question, protocol = asked(tmp_path, find, protocols=both)
     varied, = read_vary(question.section.find, protocol, "study.toml")
     changed = [varied.place.put(protocol, one) for one in varied.values]
     assert [(one.dose[0].amount.value, one.dose[1].rate.value) for one in changed] == [(5, 0.5), (10, 1.0), (15, 1.5)]
@@ -148,8 +150,8 @@ def test_the_proposal_goes_to_other_patients(tmp_path):
 def test_failed_patients_count_against_every_wish(tmp_path):
     """Two in three patients get no dose: no headline, no wish met, and each of them counts as ever above."""
     doses = {"a": 'rate = "1 mg/min"\nuntil = "600 min"\nwhere = "age < 40"'}
-    question, protocol = asked(tmp_path, '[find]\nwish = ["at least 1 % attained", "at most 99 % ever above 1e6 mg/L"]\n',
-                               protocols=doses, in_protocol='no_dose = "allowed"')
+    find = '[find]\nwish = ["at least 1 % attained", "at most 99 % ever above 1e6 mg/L"]\n'
+    question, protocol = asked(tmp_path, find, protocols=doses, in_protocol='no_dose = "allowed"')
     counts = count(question.study([protocol]))
     attained, above = hold(question, counts)
     assert counts.total("failed")[0, 0] > 0.5 * counts.n[0]

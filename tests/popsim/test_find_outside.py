@@ -43,8 +43,9 @@ def spans(found):
     return {measure: np.ptp(over_bmi(found, measure)[0]) for measure in found.measures}
 
 
-@pytest.mark.parametrize(("model", "rate"), [("remifentanil_minto_1997", "9 ug/kg/h"), ("remifentanil_kim_2017", "11 ug/kg/h"),
-                                             ("remifentanil_eleveld_2017", "11 ug/kg/h")])
+@pytest.mark.parametrize(("model", "rate"), [
+    ("remifentanil_minto_1997", "9 ug/kg/h"), ("remifentanil_kim_2017", "11 ug/kg/h"),
+    ("remifentanil_eleveld_2017", "11 ug/kg/h")])  # fmt: skip
 def test_remifentanil_by_lean_rather_than_total_weight(tmp_path, model, rate):
     """Egan and others 1998 (12 obese, 12 lean): dosed by total weight the obese get too much, lean mass is the size to
     dose by. Three published models, two of which print no spread known here and borrow that of the first."""
@@ -65,10 +66,11 @@ def gentamicin(tmp_path):
     return find_cases["one_compartment"](tmp_path, clearance, volume, SPREAD)
 
 
-def infused(rate):
+def infused(rate, limits="2.4 to 4.2 mg/L"):
     """At steady state exposure is rate / clearance: the area under the curve of the same daily dose, by the day."""
+    target = f'quantity = "plasma"\nrange = "{limits}"\nduring = "4800 min"\nattained_when = "at the end"\n'
     return {"protocols": {"a": f'rate = "{rate}"\nuntil = "4800 min"'}, "until": "4800 min", "every": "480 min",
-            "targets": ('quantity = "plasma"\nrange = "2.4 to 4.2 mg/L"\nduring = "4800 min"\nattained_when = "at the end"\n',)}
+            "targets": (target,)}
 
 
 def test_gentamicin_grows_with_weight_to_the_printed_power(tmp_path):
@@ -77,7 +79,8 @@ def test_gentamicin_grows_with_weight_to_the_printed_power(tmp_path):
     weights = (60, 80, 100, 130, 160)
     people = [f"male,40,{weight},180" for weight in weights for _ in range(1500)]
     path = find_cases["find_file"](
-        tmp_path, '[[find.vary]]\nwhat = "dose 1: rate"\nover = "8 to 50 mg/h"\nsteps = 100\n', model=gentamicin(tmp_path),
+        tmp_path, '[[find.vary]]\nwhat = "dose 1: rate"\nover = "8 to 50 mg/h"\nsteps = 100\n',
+        model=gentamicin(tmp_path),
         population=find_cases["cases"]["people"](tmp_path, people),
         groups={f"{weight} kg": f"weight == {weight}" for weight in weights}, **infused("20 mg/h"))
     question, protocol = find_cases["asked_of"](path)
@@ -111,8 +114,7 @@ def test_an_aminoglycoside_by_adjusted_weight_agrees_in_part(tmp_path):
 
 
 def fentanyl(rate):
-    return {"protocols": {"a": f'rate = "{rate}"\nuntil = "4800 min"'}, "until": "4800 min", "every": "480 min",
-            "targets": ('quantity = "plasma"\nrange = "1.1 to 2 ng/mL"\nduring = "4800 min"\nattained_when = "at the end"\n',)}
+    return infused(rate, "1.1 to 2 ng/mL")
 
 
 def test_fentanyl_by_pharmacokinetic_mass(tmp_path):
@@ -120,7 +122,8 @@ def test_fentanyl_by_pharmacokinetic_mass(tmp_path):
     1.5 L/h. Among all sizes their mass is then the flattest, and total weight gives the obese too much."""
     rule = f"({PRINTED['fentanyl_rate_per_mass']} * pharmacokinetic_mass_shibutani + {PRINTED['fentanyl_rate_offset']})"
     clearance = f"{rule} / {PRINTED['fentanyl_level']} / 60"
-    found = sizes(tmp_path, model=find_cases["one_compartment"](tmp_path, clearance, "100", SPREAD), **fentanyl("1 ug/kg/h"))
+    model = find_cases["one_compartment"](tmp_path, clearance, "100", SPREAD)
+    found = sizes(tmp_path, model=model, **fentanyl("1 ug/kg/h"))
     span = spans(found)
     assert min(span, key=span.get) == "pharmacokinetic_mass_shibutani"
     assert over_bmi(found, "weight")[1][-1] > 2 * over_bmi(found, "pharmacokinetic_mass_shibutani")[1][-1]
@@ -131,7 +134,8 @@ def test_the_shipped_fentanyl_sheet_disagrees_and_why(tmp_path):
     """fentanyl_shafer_1990 gives everyone the same clearance, whatever their size: on it a fixed dose is the flattest
     by construction, so that the finding of Shibutani cannot be seen there. Their mass still does better than total
     weight, of which they say that it over-predicts more and more."""
-    found = sizes(tmp_path, model="fentanyl_shafer_1990", variability="between_subject = false", **fentanyl("0.65 ug/kg/h"))
+    found = sizes(tmp_path, model="fentanyl_shafer_1990", variability="between_subject = false",
+                  **fentanyl("0.65 ug/kg/h"))
     span = spans(found)
     assert span["fixed"] == 0.0
     assert span["pharmacokinetic_mass_shibutani"] < span["weight"]
@@ -139,18 +143,19 @@ def test_the_shipped_fentanyl_sheet_disagrees_and_why(tmp_path):
 
 def test_two_grams_of_cefazolin_suffice_in_obesity(tmp_path):
     """Print: 2 g keeps over 95 % of people with a body mass index of 36 to 69 above an MIC of 2 mg/L for 4 h. On the
-    shipped sheet of people of 39.5 to 69.3 kg/m2 (one compartment, no spread: 25 % of clearance is ours) the lowest dose
-    that meets the same wish is at most 2 g, even at the lowest unbound fraction in print: 3 g is not needed."""
+    shipped sheet of people of 39.5 to 69.3 kg/m2 (one compartment, no spread: 25 % of clearance is ours) the lowest
+    dose that meets the same wish is at most 2 g, even at the lowest unbound fraction in print: 3 g is not needed."""
     total = 2 / PRINTED["cefazolin_unbound_fraction"]
     wish = ('[find]\nwish = ["at least 95 % attained in every group"]\n[[find.vary]]\nwhat = "dose 1: amount"\n'
             'over = "0.25 to 4 g"\nsteps = 16\n')
-    sheet = find_cases["one_compartment"](tmp_path, "5.14 / 60", "19.4", SPREAD)  # the sheet's two numbers, with a spread
+    target = f'quantity = "plasma"\nlow = "{total} mg/L"\nduring = "5 min to 240 min"\nattained_when = "always"\n'
+    sheet = find_cases["one_compartment"](tmp_path, "5.14 / 60", "19.4", SPREAD)  # its numbers, with a spread
     for model, variability in (("cefazolin_obese_2021", "between_subject = false"), (sheet, "")):
         path = find_cases["find_file"](
             tmp_path, wish, model=model, variability=variability, groups={"45 and over": "bmi >= 45"},
             population='source = "survey"\ncount = 1500\nage = "20 to 70 years"\nbmi = "39.5 to 69 kg/m2"',
             protocols={"a": 'amount = "2 g"\nover = "5 min"'}, until="240 min", every="60 min",
-            targets=(f'quantity = "plasma"\nlow = "{total} mg/L"\nduring = "5 min to 240 min"\nattained_when = "always"\n',))
+            targets=(target,))
         question, protocol = find_cases["asked_of"](path)
         found = search(question, protocol, read_vary(question.section.find, protocol, "study.toml"))
         stretch, = found.meeting

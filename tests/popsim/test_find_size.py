@@ -17,8 +17,8 @@ from popsim.finding.size import by_measure, look_at, read_measures, reference_si
 
 find_cases = runpy.run_path(str(Path(__file__).with_name("find_cases.py")))
 ADULT = find_cases["ADULT"]
-DOSES = {"a": 'amount = "1.5 mg/kg"\nat_most = "200 mg"\n---\nrate = "6 mg/kg/h"\nby = "adjusted_body_weight"\nuntil = "60 min"'
-              '\n---\namount = "20 mg"\nat = "10 min"'}
+DOSES = {"a": 'amount = "1.5 mg/kg"\nat_most = "200 mg"\n---\nrate = "6 mg/kg/h"\nby = "adjusted_body_weight"\n'
+              'until = "60 min"\n---\namount = "20 mg"\nat = "10 min"'}
 CARD = """[find]
 wish = ["at least 50 % attained in every group"]
 [[find.vary]]
@@ -69,7 +69,8 @@ def test_the_james_equation_turns_over_where_print_says(tmp_path):
     question, protocol = asked(
         tmp_path, protocols=DOSES, population=find_cases["cases"]["people"](tmp_path, rows),
         groups={"beyond": 'bmi > 42.97 and sex == "male" or bmi > 36.15 and sex == "female"'})
-    falls, unfit = look_at(question.study([protocol]), ["lean_body_mass_james", "weight", "lean_body_mass_janmahasatian"])
+    measures = ["lean_body_mass_james", "weight", "lean_body_mass_janmahasatian"]
+    falls, unfit = look_at(question.study([protocol]), measures)
     assert falls[0].tolist() == [0.5, 1.0] and not falls[1:].any() and unfit == [0, 0, 0]
 
 
@@ -92,7 +93,8 @@ def test_ranks_follow_flatness_and_the_worst_class(tmp_path):
     result = search_sizes(with_classes(question), protocol)
     assert result.measures[0] == "ideal_body_weight_devine" and result.measures[-1] == "weight"
     assert result.flatness[0] < 0.1 < 0.5 < result.flatness[-1]
-    assert result.worst == pytest.approx(result.counts.attained()[0][np.arange(len(result.measures)), result.worst_group])
+    shares = result.counts.attained()[0]
+    assert result.worst == pytest.approx(shares[np.arange(len(result.measures)), result.worst_group])
 
 
 def test_an_unknown_size_and_a_missing_adult_are_told_together(tmp_path):
@@ -109,7 +111,8 @@ FILES = {"dose": {"along.csv", "confirm.csv", "along.svg"}, "size": {"sizes.csv"
 
 @pytest.mark.parametrize("name", FILES)
 def test_every_search_leaves_its_files_and_says_its_seed(tmp_path, capsys, name):
-    path = find_cases["find_file"](tmp_path, CARD, count=1200, protocols={"600 ug/h": 'rate = "600 ug/h"\nuntil = "60 min"'})
+    doses = {"600 ug/h": 'rate = "600 ug/h"\nuntil = "60 min"'}
+    path = find_cases["find_file"](tmp_path, CARD, count=1200, protocols=doses)
     out = tmp_path / "out"
     assert run(["find", name, str(path), "--out", str(out)]) == 0
     said = capsys.readouterr().out

@@ -88,7 +88,8 @@ def test_the_card_says_bands_doses_and_volumes(tmp_path):
 
 
 def test_bands_in_words():
-    assert [band_text("age", *limits) for limits in ((-np.inf, 40.0), (40.0, 65.0), (65.0, np.inf), (-np.inf, np.inf))] == [
+    bands = ((-np.inf, 40.0), (40.0, 65.0), (65.0, np.inf), (-np.inf, np.inf))
+    assert [band_text("age", *limits) for limits in bands] == [
         "under 40 years", "40 to under 65 years", "65 years and over", "everyone"]
 
 
@@ -119,7 +120,8 @@ def test_the_map_finds_a_border_that_is_known(tmp_path):
 
 def test_a_map_without_a_region_says_none_and_counts_everyone(tmp_path):
     result = search_map(*asked(tmp_path, MAP, limits="0.1 to 30 mg/L"))
-    assert result.regions == [] and result.cells[:, 3].sum() == 3000 and (result.cells[:, 3] == result.cells[:, 4]).all()
+    assert result.regions == [] and result.cells[:, 3].sum() == 3000
+    assert (result.cells[:, 3] == result.cells[:, 4]).all()
     assert (result.cells[:, 2] >= 2).all() and (result.cells[:, 2] <= 9).all()  # 20 to 90 years in tens
 
 
