@@ -24,6 +24,7 @@ from covariates.sheet_reading import (
     read_needs, read_numbers, read_person, read_source, read_spread,
 )  # fmt: skip
 from covariates.sheet_section import Section
+from covariates.variability import with_effect
 
 
 @dataclass(frozen=True)
@@ -88,8 +89,13 @@ class DrugModel:
 
     @property
     def spread(self) -> dict[str, float]:
-        """Equation name -> omega, the SD of ln of its random effect."""
+        """Equation name -> omega, the SD of its random effect: of ln where that is lognormal."""
         return {name: printed.omega for name, printed in self.printed_spread.items()}
+
+    @property
+    def spread_forms(self) -> dict[str, str]:
+        """Equation name -> form of its random effect (`variability.FORMS`), where it is not lognormal."""
+        return {name: printed.form for name, printed in self.printed_spread.items() if printed.form != "lognormal"}
 
     @property
     def outputs(self) -> tuple[str, ...]:
@@ -206,12 +212,14 @@ def parameters_of(
     lookup: Callable[[str], np.ndarray],
     effects: Mapping[str, np.ndarray],
     count: int | None = None,
+    forms: Mapping[str, str] | None = None,
 ) -> dict[str, np.ndarray]:
     """Individual parameters, each random effect applied before its parameter is used by another equation.
 
     lookup   name of an attribute, covariate or switch -> array (n,)
     effects  equation name -> (n,) random effect on its logarithm; empty for typical patients
     count    n, needed only where the equations use nothing of the patients
+    forms    equation name -> form of its effect, where it is not lognormal; the sheet's own if not given
 
     Returns `model.outputs` -> (n,) float64 in L, L/min, 1/min; a concentration of the effect model in mg/L, its other
     parameters as they are. In equations, NAME is the individual value and NAME_typical the value that the same person
@@ -225,8 +233,9 @@ def parameters_of(
         raise ValueError(f"random effects on what is no equation of {model.name}: {sorted(unknown)}")
     outside = {name: np.asarray(lookup(name)) for name in sorted({*model.needs, *model.switches, *model.numbers})}
     outside |= {name: np.asarray(number) for name, number in model.reference.items()}
-    typical = _evaluated(model, outside, {}, {})
-    individual = _evaluated(model, outside, effects, typical) if effects else typical
+    typical = _evaluated(model, outside, {}, {}, {})
+    forms = model.spread_forms if forms is None else forms
+    individual = _evaluated(model, outside, effects, forms, typical) if effects else typical
     factors = {equation.name: equation.factor for equation in model.equations}
     shapes = {np.shape(value) for value in (*outside.values(), *individual.values())}
     everyone = (count,) if count is not None else np.broadcast_shapes((1,), *shapes)
@@ -237,6 +246,7 @@ def _evaluated(
     model: DrugModel,
     outside: Mapping[str, np.ndarray],
     effects: Mapping[str, np.ndarray],
+    forms: Mapping[str, str],
     typical: Mapping[str, np.ndarray],
 ) -> dict[str, np.ndarray]:
     """Every equation once, in order; without `typical` the values found are the typical ones themselves."""
@@ -245,7 +255,7 @@ def _evaluated(
     for equation in model.equations:
         value = equation.formula.evaluate(values)
         if equation.name in effects:
-            value = value * np.exp(effects[equation.name])
+            value = with_effect(value, effects[equation.name], forms.get(equation.name, "lognormal"))
         found[equation.name] = values[equation.name] = value
         values.setdefault(equation.name + TYPICAL, value)
     return found

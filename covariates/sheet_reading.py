@@ -20,8 +20,15 @@ _RANGES = {
     "age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",
     "serum_creatinine": "creatinine", "postmenstrual_age_weeks": "postmenstrual_age",
 }  # fmt: skip
-_TO_OMEGA = {"sd of ln": float, "variance of ln": omega_from_variance, "cv": omega_from_cv}
-_LARGEST_SPREAD = 3.0
+# distribution and how its spread is printed -> the SD of the random effect, and the form in which the effect acts
+_TO_SD = {
+    "lognormal": {"sd of ln": (float, "lognormal"), "variance of ln": (omega_from_variance, "lognormal"),
+                  "cv": (omega_from_cv, "lognormal")},
+    "normal": {"sd": (float, "normal"), "variance": (omega_from_variance, "normal"), "cv": (float, "normal, relative")},
+    "logit-normal": {"sd of logit": (float, "logit-normal"),
+                     "variance of logit": (omega_from_variance, "logit-normal")},
+}  # fmt: skip
+_LARGEST_SPREAD, _LARGEST_IN_OWN_UNIT = 3.0, 1e6
 
 
 @dataclass(frozen=True)
@@ -61,12 +68,16 @@ class NeededNumber:
 
 @dataclass(frozen=True)
 class PrintedSpread:
-    """Between-subject variability of one equation as it was printed; `printed_as` says which number that is."""
+    """Between-subject variability of one equation as it was printed; `printed_as` says which number that is.
+
+    omega  SD of the random effect; `form` (`variability.FORMS`) says how the effect acts
+    """
 
     value: float
     printed_as: str
     evidence: str
     omega: float
+    form: str = "lognormal"
 
 
 @dataclass(frozen=True)
@@ -209,10 +220,10 @@ def read_spread(
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
-    usual = section.text("printed_as", among=_TO_OMEGA)
+    usual = section.text("printed_as", among=_TO_SD["lognormal"])
     printed = {}
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
-        spread = _read_printed(entry, usual)
+        spread = read_one_spread(entry, usual)
         if name not in equations:
             section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
         elif spread is not None:
@@ -225,17 +236,24 @@ def read_spread(
     return printed, note, _read_together(top, {name: spread.omega for name, spread in printed.items()})
 
 
-def _read_printed(entry: Section, usual: str | None) -> PrintedSpread | None:
-    """One spread, whatever way it was printed."""
-    advice = "write 0.26 for 26 %"
-    value = entry.number("value", 0, _LARGEST_SPREAD, needed=True, advice=advice)
-    printed_as = entry.text("printed_as", among=_TO_OMEGA) or usual
+def read_one_spread(entry: Section, usual: str | None = None) -> PrintedSpread | None:
+    """One spread, whatever way it was printed.
+
+    usual  how a lognormal spread was printed where the entry does not say
+    """
+    distribution = entry.text("distribution", among=_TO_SD) or "lognormal"
+    ways = _TO_SD[distribution]
+    printed_as = entry.text("printed_as", among=ways) or (usual if distribution == "lognormal" else None)
+    own_unit = printed_as in ("sd", "variance")
+    advice = "" if own_unit else "write 0.26 for 26 %"
+    value = entry.number("value", 0, _LARGEST_IN_OWN_UNIT if own_unit else _LARGEST_SPREAD, needed=True, advice=advice)
     evidence = entry.text("evidence") or ""
     entry.text("note")
     if printed_as is None:
-        entry.problem("printed_as", "missing", ", ".join(_TO_OMEGA))
+        entry.problem("printed_as", "missing", ", ".join(ways))
         return None
-    return None if value is None else PrintedSpread(value, printed_as, evidence, float(_TO_OMEGA[printed_as](value)))
+    to_sd, form = ways[printed_as]
+    return None if value is None else PrintedSpread(value, printed_as, evidence, float(to_sd(value)), form)
 
 
 def _read_together(top: Section, omegas: dict[str, float]) -> dict[tuple[str, str], float]:

@@ -1,7 +1,8 @@
-"""Lognormal mathematics of between-subject variability: no drawing, only what printed numbers mean.
+"""Mathematics of between-subject variability: no drawing, only what printed numbers mean.
 
 A parameter of a person is typical value x exp(eta), eta normal with standard deviation omega. Papers print omega, its
-square, or a coefficient of variation; above an omega of about 0.4 these differ enough to matter.
+square, or a coefficient of variation; above an omega of about 0.4 these differ enough to matter. Some papers add eta to
+the typical value itself, or to the logit of a share.
 """
 
 from __future__ import annotations
@@ -9,6 +10,42 @@ from __future__ import annotations
 from collections.abc import Mapping
 
 import numpy as np
+
+
+# How a random effect acts on the typical value.
+FORMS = ("lognormal", "normal", "normal, relative", "logit-normal")
+
+
+def with_effect(typical, effect, form):
+    """The value of a person: typical value and random effect together.
+
+    Arguments:
+        typical: typical value [any unit; a share between 0 and 1 for "logit-normal"], scalar or (n,).
+        effect: random effect eta [no unit; the unit of `typical` for "normal"], scalar or (n,).
+        form: one of FORMS [text].
+    Returns:
+        the individual value [unit of typical], (n,); not above 0 where a normal effect is large enough, and NaN for a
+        "logit-normal" typical value that is no share: nothing is clipped.
+    Raises:
+        ValueError: an unknown form.
+    Formula: lognormal typical exp(eta); normal typical + eta; normal, relative typical (1 + eta); logit-normal
+        p exp(eta) / (1 - p + p exp(eta)), p = typical
+    Source: definition of these distributions.
+
+    >>> round(float(with_effect(0.8, 0.5, "logit-normal")), 4)
+    0.8683
+    """
+    if form == "lognormal":
+        return typical * np.exp(effect)
+    if form == "normal":
+        return typical + effect
+    if form == "normal, relative":
+        return typical * (1.0 + effect)
+    if form != "logit-normal":
+        raise ValueError(f"form must be one of {', '.join(FORMS)}, found {form!r}")
+    odds = np.exp(effect)
+    is_share = (np.asarray(typical) > 0) & (np.asarray(typical) < 1)
+    return np.where(is_share, typical * odds / (1.0 - typical + typical * odds), np.nan)
 
 
 def omega_from_cv(cv):

@@ -24,7 +24,8 @@ def check_text(study: Study, looked_at: int) -> str:
     """The study in words, the ward cards, and who lies outside the model among the first patients."""
     lines = [*textwrap.wrap(study.title, WIDTH), *textwrap.wrap(study.question, WIDTH), ""]
     count = study.population.count
-    lines += [f"Patients  {f'{count:,}' if count else 'all'} ({study.population.source}), seed {study.seed}"]
+    again = ", drawn again and again" if study.population.resampled else ""
+    lines += [f"Patients  {f'{count:,}' if count else 'all'} ({study.population.source}{again}), seed {study.seed}"]
     lines += [f"Run       {clock(study.until_min)}, a table row every {clock(study.every_min)}"]
     for target in study.targets:
         lines += _indented("Target    ", target_line(target))

@@ -14,6 +14,7 @@ from popsim.commands.find import find
 from popsim.commands.judge import judge
 from popsim.commands.models import models
 from popsim.commands.new import new
+from popsim.commands.patients import patients
 from popsim.commands.person import person
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
@@ -28,6 +29,7 @@ def popsim() -> None:
     \b
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
+    popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim find dose study.toml    or size, table, map: what to write instead
     popsim models              the published drug models, and one of them whole
@@ -38,7 +40,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, judge, models, person, find):
+for command in (new, check, patients, judge, models, person, find):
     popsim.add_command(command)
 
 

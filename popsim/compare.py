@@ -17,15 +17,16 @@ def protocol_pairs(study: Study, tally: Tally) -> list[dict]:
             for t, target in enumerate(study.targets):
                 for a, b in combinations(range(len(study.protocols)), 2):
                     counts = {name: int(values[g]) for name, values in vars(tally.pairs[m, t, a, b]).items()}
+                    worth = tally.worth_paired(m, t, a, b, g)
                     names = (study.protocols[a].name, study.protocols[b].name)
                     rows.append({"model": model.name, "group": group, "target": target.name,
                                  "protocol_a": names[0], "protocol_b": names[1],
-                                 **_pair(counts, int(tally.patients[g]), names, study.matters)})
+                                 **_pair(counts, worth, int(tally.patients[g]), names, study.matters)})
     return rows
 
 
-def _pair(counts: dict[str, int], patients: int, names: tuple[str, str], matters: float | None) -> dict:
-    four = counts["both"], counts["only_a"], counts["only_b"], counts["neither"]
+def _pair(counts: dict[str, int], worth: float, patients: int, names: tuple[str, str], matters: float | None) -> dict:
+    four = (counts[name] * worth for name in ("both", "only_a", "only_b", "neither"))
     difference, low, high = paired_difference(*four)
     said = "" if no_headline(counts["failed"], patients) else verdict(low, high, matters)
     shares = {name: _share(counts[name], patients) for name in ("only_a", "only_b", "both", "neither")}
@@ -48,13 +49,15 @@ def against_reference(study: Study, tally: Tally) -> list[dict]:
     r = names.index(study.reference)
     rows = []
     for (m, p, t), counts in tally.targets.items():
+        worth = tally.worth((m, p, t))
         for g, group in enumerate(names):
             if g in (0, r):
                 continue
             n_reference, n = int(tally.patients[r]), int(tally.patients[g])
             in_reference, in_group = int(counts.attained[r]), int(counts.attained[g])
             overlap = int(tally.overlap[r, g])
-            difference, low, high = (unpaired_difference(in_reference, n_reference, in_group, n) if not overlap
+            difference, low, high = (unpaired_difference(in_reference * worth[r], n_reference * worth[r],
+                                                         in_group * worth[g], n * worth[g]) if not overlap
                                      else (float("nan"),) * 3)
             rows.append({
                 "model": study.models[m].name, "protocol": study.protocols[p].name, "target": study.targets[t].name,

@@ -142,8 +142,9 @@ def _effect(model: DrugModel) -> list[str]:
 def _spread(model: DrugModel) -> list[str]:
     lines = [] if model.spread else ["  typical only: a study borrows variability by name, or runs typical patients"]
     for name, printed in model.printed_spread.items():
-        text = (f"{name:<4} {printed.value:g} read as {printed.printed_as}: SD of ln {printed.omega:.3g}, "
-                f"CV {100 * float(cv_from_omega(printed.omega)):.3g} %  [{printed.evidence}]")
+        means = (f"SD of ln {printed.omega:.3g}, CV {100 * float(cv_from_omega(printed.omega)):.3g} %"
+                 if printed.form == "lognormal" else f"{printed.form}, SD of the random effect {printed.omega:.3g}")
+        text = f"{name:<4} {printed.value:g} read as {printed.printed_as}: {means}  [{printed.evidence}]"
         lines += wrapped(text, "  ")
     for (first, second), value in model.correlations.items():
         lines.append(f"  correlation of {first} and {second}: {value:g}")

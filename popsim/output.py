@@ -121,6 +121,8 @@ class PatientRows:
         columns: dict[str, Any] = {"patient": range(patients.first, patients.first + len(patients))}
         if patients.labels is not None:
             columns["label"] = patients.labels
+        if patients.origins is not None:
+            columns["list_row"] = patients.origins + 1
         columns |= patients.attributes
         columns |= {name: rows.lookup(name) for name in self._covariates if name not in columns}
         return pd.DataFrame(columns)

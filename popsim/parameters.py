@@ -20,7 +20,7 @@ def individual_parameters(model: DrugModel, variability: Variability, seed: int,
     """Parameters of each patient of a block in mg, L, min. The same patient has the same luck under every model."""
     effects = random_effects(model, variability, seed, patients)
     n = len(patients)
-    values = parameters_of(model, lookup, effects, n)
+    values = parameters_of(model, lookup, effects, n, forms_used(model, variability))
     beyond = outside_ranges(model, lookup)
     outside = np.zeros(n, dtype=bool)
     for marked in beyond.values():
@@ -29,21 +29,31 @@ def individual_parameters(model: DrugModel, variability: Variability, seed: int,
 
 
 def spread_used(model: DrugModel, variability: Variability) -> dict[str, float]:
-    """SD of ln of each parameter that varies in this study: the sheet's own, or those borrowed, scaled."""
+    """SD of the random effect (of ln where it is lognormal) of each parameter that varies in this study: the sheet's
+    own or those borrowed, those that the study gives itself, scaled."""
     if not variability.between_subject:
         return {}
     lender = variability.from_model
+    names = {equation.name for equation in model.equations}
     if lender is None or lender.name == model.name:
         spread: Mapping[str, float] = model.spread
     else:
-        names = {equation.name for equation in model.equations}
         spread = {name: omega for name, omega in lender.spread.items()
                   if name in VOLUMES_AND_CLEARANCES and name in names}
-    return {name: omega * variability.scale for name, omega in spread.items()}
+    own = {name: omega for name, (omega, _) in variability.own.items() if name in names}
+    return {name: omega * variability.scale for name, omega in {**spread, **own}.items() if own.get(name) != 0}
+
+
+def forms_used(model: DrugModel, variability: Variability) -> dict[str, str]:
+    """Parameter -> form of its random effect, where it is not lognormal."""
+    own = {name: form for name, (_, form) in variability.own.items()}
+    forms = {**(variability.from_model or model).spread_forms, **own}
+    used = spread_used(model, variability)
+    return {name: form for name, form in forms.items() if form != "lognormal" and name in used}
 
 
 def random_effects(model: DrugModel, variability: Variability, seed: int, patients: Patients) -> dict[str, np.ndarray]:
-    """Deviations of ln from the typical value, (n,) for each parameter that varies."""
+    """Random effects, (n,) for each parameter that varies: deviations of ln from the typical value, where lognormal."""
     spread = spread_used(model, variability)
     luck = {name: normals(seed, f"spread {name}", patients.block)[patients.slots] for name in spread}
     source = variability.from_model or model

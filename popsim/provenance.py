@@ -13,7 +13,7 @@ from covariates.sheet import DrugModel
 from covariates.units import Quantity
 from popsim import solve
 from popsim.cautions import CAUTIONS
-from popsim.parameters import spread_used
+from popsim.parameters import forms_used, spread_used
 from popsim.tally import Findings
 
 PACKAGES = ("popsim", "numpy", "scipy", "pandas", "numba", "matplotlib", "jinja2", "pydantic")
@@ -35,6 +35,7 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
             "patients": int(tally.patients[0]),
             "candidates_seen": findings.candidates_seen,
             "candidates_eligible": findings.candidates_eligible,
+            "share_eligible": findings.share_eligible,
             "list_rows_skipped": findings.rows_skipped,
             "groups": {name: int(count) for name, count in zip(study.group_names, tally.patients, strict=True)},
             "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count}
@@ -57,6 +58,7 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
 def _model_record(study, model: DrugModel) -> dict[str, Any]:
     return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
             "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
+            "spread_not_lognormal": forms_used(model, study.variability),
             "spread_note": model.spread_note, "cautions": list(model.cautions)}
 
 

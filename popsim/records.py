@@ -25,6 +25,7 @@ class Patients:
     attributes  name -> (n,) array: `sex` as text ("female", "male"), switches as bool, numbers as float64
                 in the attribute's own unit (age years, weight kg, height cm, serum_creatinine mg/dL)
     labels      (n,) text, what a list calls its people; None elsewhere
+    origins     (n,) int64, row of the list that each was drawn from, where people are drawn again and again; else None
     """
 
     first: int
@@ -32,6 +33,7 @@ class Patients:
     slots: np.ndarray
     attributes: dict[str, np.ndarray]
     labels: np.ndarray | None = None
+    origins: np.ndarray | None = None
 
     def __len__(self) -> int:
         return len(self.slots)
@@ -192,11 +194,13 @@ class Target:
 
 @dataclass(frozen=True)
 class Variability:
-    """between_subject False: typical patients. `from_model`: the sheet whose variability is borrowed, or None."""
+    """between_subject False: typical patients. `from_model`: the sheet whose variability is borrowed, or None.
+    `own`: parameter -> SD of its random effect (0: none) and the effect's form, in place of what the sheets say."""
 
     between_subject: bool
     scale: float
     from_model: DrugModel | None
+    own: dict[str, tuple[float, str]] = field(default_factory=dict)
 
 
 @dataclass(frozen=True)

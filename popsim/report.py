@@ -24,7 +24,9 @@ from popsim.words import clock, finding, per_kg_line, percent, points, sides_lin
 ATTRIBUTE_UNITS = {"age": "years", "weight": "kg", "height": "cm", "bmi": "kg/m2"}
 CHANGED = ("capped", "floored", "rounded", "impossible", "undosed")  # what can befall a dose, as doses.csv counts it
 SOURCES = {"survey": "adults drawn as a national household survey of the United States finds them",
-           "list": "the people of a list"}
+           "list": "the people of a list",
+           "described": "people drawn as summary figures describe them",
+           "lattice": "the points of a lattice, not a population"}
 
 
 def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any], pictures: list[Picture],
@@ -108,7 +110,8 @@ def _spread_line(study: Study) -> str:
         return "Typical patients: no between-subject variability."
     lender = f", borrowed from {variability.from_model.name}" if variability.from_model else ""
     factor = f", times {variability.scale:g}" if variability.scale != 1 else ""
-    return f"Between-subject variability as published{lender}{factor}."
+    own = f", but {' and '.join(variability.own)} as the study says" if variability.own else ""
+    return f"Between-subject variability as published{lender}{own}{factor}."
 
 
 def _called(name: str) -> str:
@@ -178,7 +181,7 @@ def _model(model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
     limits = [f"{_called(name)} {limit.text}" for name, limit in built_on.ranges.items()]
     if built_on.longest_infusion_min is not None:
         limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
-    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
+    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"], "forms": found["spread_not_lognormal"],
             "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
 
 

@@ -59,7 +59,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid), attainment_only)
+                tally = tally or Tally.empty(study, len(grid), drawn.origins, attainment_only)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -78,7 +78,8 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
     total, *others = [tally for tally in tallies if tally is not None]
     for other in others:
         total.merge(other)
-    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads)
+    return Findings(study, total, drawn.seen, drawn.eligible, drawn.skipped, time.perf_counter() - started, threads,
+                    drawn.share_eligible)
 
 
 class _Queue:
@@ -119,6 +120,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
+    if tally.clusters is not None:
+        tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
@@ -143,6 +146,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
+                if tally.clusters is not None:
+                    tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
             if not tally.over_time:
                 continue
             counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]

@@ -3,24 +3,22 @@
 from __future__ import annotations
 
 import hashlib
-import re
 from collections.abc import Iterable
-from dataclasses import replace
 from pathlib import Path
 
-from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
-from covariates.formula import FUNCTIONS, Formula
+from covariates.catalogue import ATTRIBUTES, attributes_needed
+from covariates.formula import Formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
-from popsim.patients.listed import list_columns
-from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
+from covariates.sheet_reading import read_one_spread
+from covariates.sheet_section import Section
 from popsim.records import Study, Target, Variability
-from popsim.study_file import PopulationSection, StudyFile, VariabilitySection, key_path, read_study_file, shown
+from popsim.study_file import StudyFile, VariabilitySection, key_path, read_study_file, shown
+from popsim.study_population import resolve_population
 from popsim.study_protocols import covariate_fault, resolve_protocols
 from popsim.study_salvage import beside
 from popsim.study_targets import resolve_targets
 
-ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
 MOST_GRID_TIMES = 20_001
 WORDS = {"number": "a number", "condition": "true or false", "text": "text"}
 
@@ -34,10 +32,9 @@ def resolve_study(section: StudyFile, faults: list[Problem], path: Path) -> Stud
     """The study that these sections mean; `faults` of shape are told together with those of meaning."""
     problems: list[Problem] = []
     models = _models(section, path, problems)
-    brought = _brought(section.population, path, problems)
+    population, brought = resolve_population(section.population, path, problems)
     attributes = brought | {name: "condition" if isinstance(value, bool) else "number"
                             for name, value in section.population.set.items()}
-    population = _population(section.population, brought, path, problems)
     until_min, every_min = section.run.until.value, section.run.every.value
     _check_grid(until_min, every_min, path, problems)
 
@@ -68,7 +65,7 @@ def resolve_study(section: StudyFile, faults: list[Problem], path: Path) -> Stud
         reference=section.compare.reference or (groups[0][0] if groups else None),
         until_min=until_min,
         every_min=every_min,
-        warnings=tuple(_warnings(models, targets, variability)),
+        warnings=(*population.notes(), *_warnings(models, targets, variability)),
     )
 
 
@@ -98,52 +95,6 @@ def _sheet(name: str, where: str, path: Path, problems: list[Problem]) -> DrugMo
     problems.append(Problem(f"{path.name}: {where}", f'"{name}", no such sheet', ", ".join(shipped_sheets()),
                             nearest(name, shipped_sheets()) or "name your own sheet by its path, which ends in .toml"))
     return None
-
-
-def _brought(section: PopulationSection, path: Path, problems: list[Problem]) -> dict[str, str]:
-    """What each patient brings: attribute -> "number", "condition" or "text"; "" for a list's own column."""
-    usual = {name: "text" if name == "sex" else "number" for name in SURVEY_ATTRIBUTES}
-    if section.source == "survey" or section.file is None:
-        return usual
-    try:
-        return {name: usual.get(name, "") for name in list_columns(path.parent / section.file)}
-    except ProblemsError as error:
-        problems.extend(error.problems)
-        return usual
-
-
-def _population(section: PopulationSection, brought: dict[str, str], path: Path,
-                problems: list[Problem]) -> Population:
-    def say(key: str, found: str, allowed: str, advice: str = "") -> None:
-        problems.append(Problem(f"{path.name}: population: {key}", found, allowed, advice))
-
-    for key in ("file", "on_bad_row"):
-        if section.source == "survey" and getattr(section, key) is not None:
-            say(key, f'given with source = "{section.source}"', 'only with source = "list"')
-    for name in section.set:
-        if name in brought or name in EQUATIONS:
-            say("set", f'"{name}"', "an attribute that the patients do not bring themselves",
-                "to narrow the population, give limits (age, weight, height, bmi, sex, where)")
-        elif not ATTRIBUTE_NAME.fullmatch(name) or name in (*FUNCTIONS, "true", "false", "patient", "label"):
-            say("set", shown(name), "a name of letters, digits and _ that no function has, such as opioid")
-    for name in section.scale:
-        if name in SCALED and name not in brought:
-            say("scale", f'"{name}", which is no column of the list', ", ".join(brought))
-    population = Population(
-        source=section.source,
-        count=section.count,
-        limits={name: (limit.low, limit.high) for name in LIMITED if (limit := getattr(section, name)) is not None},
-        sex=section.sex,
-        where=section.where,
-        set=dict(section.set),
-        scale=dict(section.scale),
-        file=None if section.file is None else path.parent / section.file,
-        on_bad_row=section.on_bad_row or "stop",
-    )
-    said = {problem.where for problem in problems}
-    problems.extend(replace(problem, where=where) for problem in population.problems()
-                    if (where := f"{path.name}: {problem.where}") not in said)
-    return population
 
 
 def _groups(section: StudyFile, path: Path, problems: list[Problem]) -> tuple[tuple[str, Formula], ...]:
@@ -236,15 +187,40 @@ def _variability(section: VariabilitySection, models: tuple[DrugModel, ...], pat
                 "a sheet with between-subject variability")
         if borrowed is not None and models and borrowed.drug != models[0].drug:
             say("variability: from", f"{borrowed.name}, a model of {borrowed.drug}", f"a model of {models[0].drug}")
-    elif section.between_subject:
+    own = _own_variability(section, models, f"{path.name}: variability: parameters", problems)
+    if borrowed is None and section.from_ is None and section.between_subject:
         for model in models:
-            if not model.spread:
+            if not model.spread and not own.keys() & {equation.name for equation in model.equations}:
                 lenders = [name for name in shipped_sheets()
                            if (other := read_sheet(name)).drug == model.drug and other.spread]
                 say("variability", f"{model.name} publishes no between-subject variability",
                     "between_subject = false (typical patients), or from = another sheet",
                     f"sheets of {model.drug} with variability: {', '.join(lenders)}" if lenders else "")
-    return Variability(section.between_subject, section.scale, borrowed)
+    return Variability(section.between_subject, section.scale, borrowed, own)
+
+
+def _own_variability(section: VariabilitySection, models: tuple[DrugModel, ...], where: str,
+                     problems: list[Problem]) -> dict[str, tuple[float, str]]:
+    """The variability that a study gives itself, parameter by parameter; "none" takes it away."""
+    example = '{ value = 0.3, printed_as = "cv" }, or "none"'
+    known = {equation.name for model in models for equation in model.equations}
+    own = {}
+    for name, value in section.parameters.items():
+        if not section.between_subject:
+            problems.append(Problem(where, f"{name}, given with between_subject = false", "one of the two"))
+        elif models and name not in known:
+            problems.append(Problem(where, f'"{name}"', ", ".join(sorted(known)), nearest(name, known)))
+        elif value == "none":
+            own[name] = 0.0, "lognormal"
+        elif not isinstance(value, dict):
+            problems.append(Problem(f"{where}: {name}", shown(value), example))
+        else:
+            entry = Section(value, f"{where}: {name}", problems)
+            found = read_one_spread(entry)
+            entry.close()
+            if found is not None:
+                own[name] = found.omega, found.form
+    return own
 
 
 def _check_set_windows(section: StudyFile, targets: tuple[Target, ...], until_min: float, path: Path,
@@ -275,6 +251,10 @@ def _warnings(models: tuple[DrugModel, ...], targets: tuple[Target, ...], variab
     if variability.from_model is not None and variability.between_subject:
         yield (f"Between-subject variability is borrowed from {variability.from_model.name} (volumes and clearances; "
                "correlations that it does not give are taken to be 0).")
+    if variability.own:
+        said = ", ".join(f"{name} {f'{omega:.4g} ({form})' if omega else 'none'}"
+                         for name, (omega, form) in variability.own.items())
+        yield f"The study sets between-subject variability itself (SD of the random effect): {said}."
     if not variability.between_subject:
         yield "Typical patients: no between-subject variability, so these shares say nothing about single patients."
     elif variability.scale != 1:

@@ -89,6 +89,13 @@ def _switch_or_number(value: Any) -> bool | float:
     return float(value)
 
 
+def _age_mix(value: Any) -> str | dict[str, Any]:
+    if not isinstance(value, dict) and value not in ("adults", "uniform"):
+        raise _refuse(shown(value), '"adults", "uniform", or a section [population.age_mix]',
+                      '"20 to 65 years" = "40 %" and so on, adding up to 100 %')
+    return value
+
+
 def _limit(value: Any) -> str | float:
     if isinstance(value, bool) or not isinstance(value, str | int | float):
         raise _refuse(shown(value), 'a limit, such as "2 ug/mL", or 40 for an effect')
@@ -101,6 +108,7 @@ def _condition(value: Any) -> Formula:
     return compile_formula(value, "", "condition")
 
 
+_correlation = _number(-0.9999, 0.9999, 0.4)
 Time = _quantity("time")
 Amount = _quantity(*DOSE_AMOUNTS)
 Rate = _quantity(*DOSE_RATES)
@@ -115,7 +123,7 @@ class Section(BaseModel):
 
 
 class PopulationSection(Section):
-    source: Literal["survey", "list"]
+    source: Literal["survey", "list", "described", "lattice"]
     count: _whole(1, 100_000_000, 10000) | None = None
     age: _range("age") | None = None
     weight: _range("body_weight") | None = None
@@ -125,6 +133,13 @@ class PopulationSection(Section):
     where: Condition | None = None
     file: Name | None = None
     on_bad_row: Literal["stop", "skip"] | None = None
+    units: dict[str, Name] = {}
+    age_mix: _parsed(_age_mix, Any) | None = None
+    female_share: _quantity("percent") | None = None
+    described: dict[str, Any] = {}
+    together: dict[str, _correlation] = {}
+    lattice: dict[str, Any] = {}
+    each: _whole(1, 1_000_000, 100) | None = None
     set: dict[str, _parsed(_switch_or_number, Any)] = {}
     scale: dict[str, _number(0.1, 10, 1.2)] = {}
 
@@ -133,6 +148,7 @@ class VariabilitySection(Section):
     between_subject: StrictBool = True
     scale: _number(0, 10, 1.3) = 1.0
     from_: Name | None = Field(default=None, alias="from")
+    parameters: dict[str, Any] = {}
 
 
 class GroupSection(Section):
@@ -358,7 +374,7 @@ def _section_form(location: list[str | int]) -> str:
 _EXAMPLES = {
     "title": 'title = "..."', "question": 'question = "Which protocol ...?"', "seed": "seed = 20261201",
     "until": 'until = "90 min"', "every": 'every = "30 s"', "during": 'during = "5 min to 60 min"',
-    "model": 'model = "propofol_eleveld_2018"', "source": 'source = "survey" or "list"',
+    "model": 'model = "propofol_eleveld_2018"', "source": 'source = "survey", "list", "described" or "lattice"',
     "population": "a [population] section", "drug": "a [drug] section", "run": "a [run] section",
     "what": 'what = "dose 1: rate"', "over": 'over = "2 to 12 mg/kg/h"', "bands": "bands = 4",
     "edges_to": "edges_to = 5",
@@ -366,7 +382,7 @@ _EXAMPLES = {
     "protocol": "at least one [[protocol]]", "target": "a [target] section", "dose": "at least one [[protocol.dose]]",
 }
 _NOT_YET = "this version of popsim does not have it yet"
-_LATER = dict.fromkeys(("described", "lattice", "unbound_plasma", "area_under_curve", "unbound_area_under_curve",
+_LATER = dict.fromkeys(("unbound_plasma", "area_under_curve", "unbound_area_under_curve",
                         "peak", "trough", "average"), _NOT_YET)
 
 

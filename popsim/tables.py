@@ -15,6 +15,7 @@ from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
 FEW_PATIENTS = 400
+RARE_SHARE = 0.1
 PERCENTILES = (0.05, 0.25, 0.5, 0.75, 0.95)
 PERCENTILE_NAMES = ("p05", "p25", "p50", "p75", "p95")
 
@@ -27,7 +28,8 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     """
     rows = []
     for (m, p, t), counts in tally.targets.items():
-        low, high = wilson(counts.attained, tally.patients)
+        worth = tally.worth((m, p, t))
+        low, high = wilson(counts.attained * worth, tally.patients * worth)
         for g, group in enumerate(study.group_names):
             n, failed = int(tally.patients[g]), int(counts.failed[g])
             everyone, judged = n or math.nan, (n - failed) * ONE or math.nan
@@ -144,6 +146,9 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
     notes = list(study.warnings)
     for name, factor in study.population.scale.items():
         notes.append(f"Every patient's {name.replace('_', ' ')} is multiplied by {factor:g}.")
+    if findings.share_eligible < RARE_SHARE and study.population.source in ("survey", "described"):
+        notes.append(f"These patients are rare: {100 * findings.share_eligible:.2g} % of those within the limits "
+                     "of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))

@@ -3,13 +3,14 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations
+from itertools import combinations, product
 
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
+from popsim.clusters import ClusterTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -95,10 +96,11 @@ class Tally:
     overlap: np.ndarray  # (groups, groups) patients in both
     over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int, attainment_only: bool = False) -> Tally:
+    def empty(cls, study: Study, times: int, origins: int = 0, attainment_only: bool = False) -> Tally:
         """Nothing counted yet; `attainment_only` leaves out the counts over time, of pairs and of doses."""
         groups, times = len(study.group_names), 0 if attainment_only else times
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
@@ -117,6 +119,7 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
+        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -129,6 +132,7 @@ class Tally:
             doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
             over_time=not attainment_only,
+            clusters=clusters,
         )
 
     def merge(self, other: Tally) -> None:
@@ -142,6 +146,16 @@ class Tally:
     def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
         for flag, count in counts.items():
             self.flags[flag] = self.flags.get(flag, 0) + count
+
+    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
+        """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
+        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+
+    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
+        """Likewise for the difference of protocols b and a in one group."""
+        pair = self.pairs[m, t, a, b]
+        unequal = int(pair.only_a[group] + pair.only_b[group])
+        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
 
     def add_statuses(self, model: int, status: np.ndarray) -> None:
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
@@ -160,6 +174,7 @@ class Findings:
     rows_skipped: int
     seconds: float
     threads: int
+    share_eligible: float = float("nan")  # of the people within the limits of age and sex
 
 
 def range_names(model: DrugModel) -> list[str]:
@@ -177,6 +192,8 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
             found += vars(entry).values()
     for entry in tally.doses.values():
         found += [*entry.counts.values(), *entry.doses.values()]
+    if tally.clusters is not None:
+        found += tally.clusters.arrays()
     return found
 
 

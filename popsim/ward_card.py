@@ -20,7 +20,7 @@ EXAMPLE_PEOPLE = {
     "lean adult of 85": {"sex": "female", "age": 85.0, "weight": 50.0, "height": 157.0, "serum_creatinine": 0.91},
     "BMI of 45": {"sex": "female", "age": 45.0, "weight": 118.0, "height": 162.0, "serum_creatinine": 0.71},
 }
-FROM_A_LIST = 4  # a list shows its own first people, since they alone have all its columns
+FROM_A_LIST = 4  # people of our choosing lack what a list, a description or a lattice gives: its own first are shown
 
 
 @dataclass(frozen=True)
@@ -36,7 +36,7 @@ class CardLine:
 
 def example_people(study: Study) -> tuple[tuple[str, ...], dict[str, np.ndarray]]:
     """The labels and attributes of the people that a study's card is shown on, with what it sets for everyone."""
-    if study.population.source == "list":
+    if study.population.source != "survey":
         patients = next(iter(blocks(study.population, study.seed)))
         few = {name: values[:FROM_A_LIST] for name, values in patients.attributes.items()}
         return tuple(f"patient {number + 1}" for number in range(_count(few))), few

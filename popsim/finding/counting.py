@@ -13,6 +13,7 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import parse_quantity
+from popsim.clusters import worth_of
 from popsim.estimate import paired_difference, wilson
 from popsim.finding.wishes import EVERY, Wish
 from popsim.records import BlockRows, Study, Target
@@ -109,7 +110,9 @@ class Counts:
     dose_mg   (p, g) mean total dose
     outside   (g,) patients outside the people the model was built on, NaN where the sheet does not tell
     too_long  (p, g) patients infused longer than anyone studied
+    worth     (p, t, g) what a patient is worth in independent draws: under 1 where a list is drawn again and again
     flags     (p, bytes) who attains the first target, packed; `members` (g, bytes) who belongs where
+    origins   (8 x bytes,) row of the list that each was drawn from, where people are drawn again and again; else None
     """
 
     names: list[str]
@@ -120,8 +123,10 @@ class Counts:
     dose_mg: np.ndarray
     outside: np.ndarray
     too_long: np.ndarray
+    worth: np.ndarray
     flags: np.ndarray
     members: np.ndarray
+    origins: np.ndarray | None
 
     def beside(self, other: Counts) -> Counts:
         """Both, for the same patients."""
@@ -129,13 +134,14 @@ class Counts:
         return replace(self, names=self.names + other.names, sums=sums,
                        dose_mg=np.concatenate([self.dose_mg, other.dose_mg]),
                        too_long=np.concatenate([self.too_long, other.too_long]),
+                       worth=np.concatenate([self.worth, other.worth]),
                        flags=np.concatenate([self.flags, other.flags]))
 
     def taken(self, order: Sequence[int]) -> Counts:
         """The same protocols in another order."""
         order = list(order)
         return replace(self, names=[self.names[p] for p in order], dose_mg=self.dose_mg[order], flags=self.flags[order],
-                       too_long=self.too_long[order], sums={name: values[order] for name, values in self.sums.items()})
+                       too_long=self.too_long[order], worth=self.worth[order], sums={name: values[order] for name, values in self.sums.items()})
 
     @property
     def n(self) -> np.ndarray:
@@ -150,7 +156,12 @@ class Counts:
         """(p, g) share attained, and its 95 % interval."""
         hits, n = self.total("attained"), np.broadcast_to(self.n, self.total("attained").shape)
         with np.errstate(invalid="ignore"):
-            return hits / n, *wilson(hits, n)
+            return hits / n, *self.interval(hits, 0)
+
+    def interval(self, hits: np.ndarray, target: int) -> tuple[np.ndarray, np.ndarray]:
+        """95 % interval of (p, g) counts of a target's patients as shares of each group."""
+        worth = self.worth[:, target]
+        return wilson(hits * worth, self.n * worth)
 
     def mean_share(self, side: str) -> np.ndarray:
         """(p, g) mean share of the window "below", "inside" or "above", over those who could be judged."""
@@ -164,15 +175,22 @@ class Counts:
     def clearly_worse(self, a: int, b: int, z: float) -> bool:
         """Whether fewer of all attain with a than with b, by more than z standard errors of the paired difference."""
         both, only_a, only_b, neither = self._pair(a, b, 0)
-        n, gain = both + only_a + only_b + neither, only_b - only_a
+        n, gain = max(both + only_a + only_b + neither, 1e-9), only_b - only_a
         return gain > z * (max(only_a + only_b - gain**2 / n, 0.0)) ** 0.5
 
-    def _pair(self, a: int, b: int, group: int) -> tuple[int, int, int, int]:
-        """Patients of a group who attain with both, with a only, with b only, with neither."""
+    def _pair(self, a: int, b: int, group: int) -> tuple[float, float, float, float]:
+        """Patients of a group who attain with both, with a only, with b only, with neither; where a list is drawn
+        again and again, as many independent draws as they are worth."""
         of_a, of_b, who = self.flags[a], self.flags[b], self.members[group]
         both = _ones(of_a & of_b & who)
         only_a, only_b = _ones(of_a & ~of_b & who), _ones(of_b & ~of_a & who)
-        return both, only_a, only_b, _ones(who) - both - only_a - only_b
+        worth = 1
+        if self.origins is not None:
+            gain = np.unpackbits(of_b & who).astype(np.int64) - np.unpackbits(of_a & who)
+            sums, drawn = (np.bincount(self.origins, weights=each) for each in (gain, np.unpackbits(who)))
+            worth = worth_of(sums, drawn.astype(np.int64), only_a + only_b)
+        neither = _ones(who) - both - only_a - only_b
+        return both * worth, only_a * worth, only_b * worth, neither * worth
 
 
 def _ones(packed: np.ndarray) -> int:
@@ -215,6 +233,7 @@ class _Sink:
         self._dose = np.zeros((len(study.protocols), len(study.group_names)))
         self._flags: list[np.ndarray] = []
         self._members: list[np.ndarray] = []
+        self._origins: list[np.ndarray] = []
 
     def __call__(self, rows: BlockRows) -> None:
         study, n = self._study, len(rows.patients)
@@ -243,6 +262,8 @@ class _Sink:
         attained = np.stack([rows.judged[0, p, 0].attained for p in range(shape[0])])
         self._flags.append(np.packbits(attained, axis=1))
         self._members.append(np.packbits(rows.members.T > 0, axis=1))
+        if rows.patients.origins is not None:
+            self._origins.append(np.pad(rows.patients.origins, (0, -n % 8)))  # as packing fills up the last byte
 
     def counts(self, tally: Tally) -> Counts:
         keys = sorted(self._found)
@@ -252,10 +273,13 @@ class _Sink:
         known = range_names(self._study.models[0])
         outside = tally.outside[0] if known else np.full(len(n), np.nan)
         too_long = np.stack([tally.long_infusion[0, p] for p in range(len(self._study.protocols))])
+        worth = np.array([[tally.worth((0, p, t)) for t in range(len(self._study.targets))]
+                          for p in range(len(self._study.protocols))])
         return Counts([protocol.name for protocol in self._study.protocols], self._study.group_names,
                       np.array(keys, dtype=np.int64).reshape(len(keys), -1), patients, sums, self._dose / n,
-                      outside, too_long,
-                      np.concatenate(self._flags, axis=1), np.concatenate(self._members, axis=1))
+                      outside, too_long, worth,
+                      np.concatenate(self._flags, axis=1), np.concatenate(self._members, axis=1),
+                      np.concatenate(self._origins) if self._origins else None)
 
 
 def _distinct(cells: np.ndarray) -> tuple[list[tuple[int, ...]], np.ndarray]:

@@ -6,7 +6,7 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from popsim.estimate import no_headline, wilson
+from popsim.estimate import no_headline
 from popsim.finding.counting import Asked, Counts
 from popsim.finding.wishes import EVERY, Wish
 
@@ -55,7 +55,7 @@ def share_of(wish: Wish, target: int, counts: Counts) -> tuple[np.ndarray, np.nd
     n = np.broadcast_to(counts.n, hits.shape)
     hits = n - hits if wish.ever else hits  # whoever failed counts as ever beyond the limit
     with np.errstate(invalid="ignore"):
-        return hits / n, *wilson(hits, n)
+        return hits / n, *counts.interval(hits, target)
 
 
 def _hold_one(wish: Wish, target: int, counts: Counts) -> Held:

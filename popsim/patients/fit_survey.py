@@ -13,6 +13,7 @@ from dataclasses import dataclass
 import numpy as np
 
 from popsim.patients import survey
+from popsim.patients.ages import OLDEST_YEARS, SEXES, person_of_luck, read_table
 
 BANDS = ("20-29", "30-39", "40-49", "50-59", "60-69", "70-79", "80+")
 PERCENTS = (5, 10, 15, 25, 50, 75, 85, 90, 95)
@@ -29,7 +30,7 @@ HEADER = """\
 
 def fit() -> dict[str, np.ndarray]:
     """All constants: name -> (14,) float64, seven knots of the men, then of the women."""
-    fitted = [fit_sex(sex) for sex in survey.SEXES]
+    fitted = [fit_sex(sex) for sex in SEXES]
     return {name: np.concatenate([one[name] for one in fitted]) for name in FITTED}
 
 
@@ -94,7 +95,7 @@ def as_csv(table: dict[str, np.ndarray]) -> str:
     lines = [",".join(("sex", "age", *FITTED))]
     for row in range(14):
         figures = [f"{table[name][row]:.5g}" for name in FITTED]
-        lines.append(",".join([survey.SEXES[row // 7], f"{survey.KNOT_AGES[row % 7]:.0f}", *figures]))
+        lines.append(",".join([SEXES[row // 7], f"{survey.KNOT_AGES[row % 7]:.0f}", *figures]))
     return HEADER + "\n".join(lines) + "\n"
 
 
@@ -104,8 +105,8 @@ def _even_people(sex: str, band: str) -> tuple[np.ndarray, ...]:
     from scipy.stats import qmc
 
     even = qmc.Sobol(4, scramble=False).random_base2(POINTS_LOG2).T + 0.5**(POINTS_LOG2 + 1)
-    limits = (80.0, survey.OLDEST_YEARS) if band == "80+" else (float(band[:2]), float(band[:2]) + 10.0)
-    female, age = survey.person_of_luck(np.full(2**POINTS_LOG2, 0.5), even[0], limits, sex)
+    limits = (80.0, OLDEST_YEARS) if band == "80+" else (float(band[:2]), float(band[:2]) + 10.0)
+    female, age = person_of_luck(np.full(2**POINTS_LOG2, 0.5), even[0], limits, sex)
     return female, age, *ndtri(even[1:])
 
 
@@ -127,7 +128,7 @@ def _percentiles(measure: str, sex: str) -> np.ndarray:
     """(7, 9) published percentiles by decade; NaN where the report prints none."""
     rows = {
         row["age_band"]: row
-        for row in survey.read_table("us_adults_2021_2023.csv")
+        for row in read_table("us_adults_2021_2023.csv")
         if row["measure"] == measure and row["sex"] == sex
     }
     return np.array([[float(rows[band][f"p{percent}"] or "nan") for percent in PERCENTS] for band in BANDS])
@@ -135,7 +136,7 @@ def _percentiles(measure: str, sex: str) -> np.ndarray:
 
 def _creatinine_percentiles(sex: str) -> np.ndarray:
     """(7, 2) median and 95th percentile by decade; ratios that the table leaves blank lie between their neighbours."""
-    rows = [row for row in survey.read_table("us_creatinine.csv") if row["sex"] == sex]
+    rows = [row for row in read_table("us_creatinine.csv") if row["sex"] == sex]
     medians = np.array([float(row["median"]) for row in rows])
     ln_ratios = np.log([float(row["p95_over_median"] or "nan") for row in rows])
     known = np.isfinite(ln_ratios)

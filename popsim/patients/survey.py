@@ -11,20 +11,16 @@ National Center for Health Statistics, Series 3 no. 50 (2025), and the other tab
 
 from __future__ import annotations
 
-import csv
 from functools import lru_cache
-from importlib import resources
 
 import numpy as np
 
+from popsim.patients.ages import SEXES, AgeCurve, person_of_luck, read_table
 from popsim.streams import normals, uniforms
 
-SEXES = ("male", "female")
-YOUNGEST_YEARS, OLDEST_YEARS = 20.0, 100.0
 BMI_LOWEST, BMI_HIGHEST = 12.0, 90.0  # nobody outside is drawn: the tables say nothing about the far tails
 
 KNOT_AGES = (25.0, 35.0, 45.0, 55.0, 65.0, 75.0, 85.0)  # mid-decade; before and after them constants are held
-THINNING_YEARS = 7.0  # from 80 years on, one in e of a cohort is left after this time: extrapolated openly
 
 # Within sex and age. Source: NHANES 2017-2018, survey-weighted, age-adjusted correlation of ln BMI with height.
 HEIGHT_BMI_CORRELATION = {"male": 0.07, "female": -0.05}
@@ -37,13 +33,18 @@ CREATININE_TAIL = 0.05
 
 
 def candidates(
-    seed: int, block: int, age_limits: tuple[float, float] | None = None, sex: str | None = None
+    seed: int,
+    block: int,
+    age_limits: tuple[float, float] | None = None,
+    sex: str | None = None,
+    curve: AgeCurve | None = None,
 ) -> dict[str, np.ndarray]:
     """One block of 8192 candidates.
 
     seed, block  key to their luck (see `popsim.streams`)
     age_limits   closed interval of ages (years): drawn from the population within it, nobody wasted
     sex          "female" or "male", likewise
+    curve        how ages and sexes are mixed; the nation's if not given
 
     Returns name -> (8192,) array: `sex` text, `age` years, `weight` kg, `height` cm, `bmi` kg/m2, `serum_creatinine`
     mg/dL, and `possible`, bool: False where the body mass index falls outside 12 to 90 kg/m2 or is not a number.
@@ -54,38 +55,16 @@ def candidates(
     ('female', 67.15, 54.8)
     """
     female, age = person_of_luck(
-        uniforms(seed, "survey.sex", block), uniforms(seed, "survey.age", block), age_limits, sex
+        uniforms(seed, "survey.sex", block), uniforms(seed, "survey.age", block), age_limits, sex, curve
     )
     luck = (normals(seed, f"survey.{name}", block) for name in ("height", "bmi", "serum_creatinine"))
-    people = body_of_luck(constants(), female, age, *luck)
-    bmi = people["bmi"]
-    return {
-        "sex": np.array(SEXES)[female.astype(np.int64)],
-        "age": age,
-        **people,
-        "possible": (bmi >= BMI_LOWEST) & (bmi <= BMI_HIGHEST),
-    }
+    return adults(female, age, body_of_luck(constants(), female, age, *luck))
 
 
-def person_of_luck(
-    sex_luck: np.ndarray, age_luck: np.ndarray, age_limits: tuple[float, float] | None = None, sex: str | None = None
-) -> tuple[np.ndarray, np.ndarray]:
-    """Sex (True = female) and age (years) of evenly spread numbers, (n,) each: exact within limits of age and sex."""
-    ages, millions_below = population_below()
-    low, high = age_limits or (YOUNGEST_YEARS, OLDEST_YEARS)
-    start = [np.interp(low, ages, below) for below in millions_below]
-    share = [np.interp(high, ages, below) - first for below, first in zip(millions_below, start)]
-    if sex is not None:
-        share[1 - SEXES.index(sex)] = 0.0
-    if not sum(share) > 0:
-        raise ValueError(f"the survey holds nobody of {low} to {high} years")
-    female = sex_luck * sum(share) >= share[0]
-    age = np.empty(len(female))
-    for index, mask in enumerate((~female, female)):
-        rank = start[index] + age_luck[mask] * share[index]
-        # rounding in the interpolation must not carry anybody across a limit
-        age[mask] = np.clip(np.interp(rank, millions_below[index], ages), low, high)
-    return female, age
+def adults(female: np.ndarray, age: np.ndarray, body: dict[str, np.ndarray]) -> dict[str, np.ndarray]:
+    """The candidates of `candidates`, of their parts."""
+    possible = (body["bmi"] >= BMI_LOWEST) & (body["bmi"] <= BMI_HIGHEST)
+    return {"sex": np.array(SEXES)[female.astype(np.int64)], "age": age, **body, "possible": possible}
 
 
 def body_of_luck(
@@ -103,11 +82,7 @@ def body_of_luck(
     Returns name -> (n,) float64. Where the Box-Cox distribution has no value the results are NaN or inf.
     """
     index = female.astype(np.int64)
-    # one line for both sexes: men's knots, then women's a hundred years on; held outside the knots
-    place = np.clip(age, KNOT_AGES[0], KNOT_AGES[-1]) + 100.0 * index
-    knots = np.concatenate([np.array(KNOT_AGES), np.array(KNOT_AGES) + 100.0])
-    at_age = {name: np.interp(place, knots, values) for name, values in table.items()}
-
+    at_age = constants_at(table, female, age)
     correlation = np.array([HEIGHT_BMI_CORRELATION[sex] for sex in SEXES])
     own_luck = np.sqrt(1.0 - correlation**2)
     bmi_luck = correlation[index] * height_luck + own_luck[index] * bmi_luck
@@ -129,6 +104,14 @@ def body_of_luck(
     }
 
 
+def constants_at(table: dict[str, np.ndarray], female: np.ndarray, age: np.ndarray) -> dict[str, np.ndarray]:
+    """The constants of each person, (n,) each."""
+    # one line for both sexes: men's knots, then women's a hundred years on; held outside the knots
+    place = np.clip(age, KNOT_AGES[0], KNOT_AGES[-1]) + 100.0 * female
+    knots = np.concatenate([np.array(KNOT_AGES), np.array(KNOT_AGES) + 100.0])
+    return {name: np.interp(place, knots, values) for name, values in table.items()}
+
+
 def box_cox_ln_ratio(shape: np.ndarray, spread: np.ndarray, luck: np.ndarray) -> np.ndarray:
     """ln of value over median of a Box-Cox variable: ln(1 + L S z) / L, L = `shape` not 0, S = `spread`, z = `luck`.
 
@@ -144,24 +127,3 @@ def constants() -> dict[str, np.ndarray]:
     """The fitted constants: name -> (14,) float64, the seven knots of the men, then of the women."""
     rows = read_table("survey_constants.csv")
     return {name: np.array([float(row[name]) for row in rows]) for name in rows[0] if name not in ("sex", "age")}
-
-
-@lru_cache(maxsize=1)
-def population_below() -> tuple[np.ndarray, tuple[np.ndarray, np.ndarray]]:
-    """Ages (years) and, for men and for women, the millions of adults below each age."""
-    rows = read_table("us_age_mix_2022.csv")
-    old_years = np.arange(1.0, OLDEST_YEARS - 80.0 + 1.0)
-    old_share = np.expm1(-old_years / THINNING_YEARS) / np.expm1(-old_years[-1] / THINNING_YEARS)
-    ages = np.concatenate([np.arange(YOUNGEST_YEARS, 81.0, 10.0), 80.0 + old_years])
-    below = []
-    for sex in SEXES:
-        *decades, oldest = [float(row["millions"]) for row in rows if row["sex"] == sex]
-        to_80 = np.concatenate([[0.0], np.cumsum(decades)])
-        below.append(np.concatenate([to_80, to_80[-1] + oldest * old_share]))
-    return ages, (below[0], below[1])
-
-
-def read_table(name: str) -> list[dict[str, str]]:
-    """Rows of a table in `tables/`, as text; lines that begin with # name its source."""
-    text = (resources.files("popsim.patients") / "tables" / name).read_text(encoding="utf-8")
-    return list(csv.DictReader(line for line in text.splitlines() if not line.startswith("#")))

@@ -322,3 +322,34 @@ def test_a_mangled_sheet_is_read_or_refused(tmp_path_factory, changes):
         assert error.problems and all(problem.found for problem in error.problems)
     else:
         assert model.outputs[:1] == ("V1",)
+
+
+@pytest.mark.parametrize(
+    ("entry", "sd", "form"),
+    [
+        ('{ value = 0.5, distribution = "normal", printed_as = "sd" }', 0.5, "normal"),
+        ('{ value = 4, distribution = "normal", printed_as = "variance" }', 2.0, "normal"),
+        ('{ value = 0.3, distribution = "normal", printed_as = "cv" }', 0.3, "normal, relative"),
+        ('{ value = 0.09, distribution = "logit-normal", printed_as = "variance of logit" }', 0.3, "logit-normal"),
+        ('{ value = 40, distribution = "normal", printed_as = "sd" }', 40.0, "normal"),
+        ('{ value = 0.3, distribution = "lognormal", printed_as = "sd of ln" }', 0.3, None),
+    ],
+)
+def test_spread_that_is_not_lognormal(tmp_path, entry, sd, form):
+    model = write(tmp_path, GOOD.replace('{ value = 0.2, printed_as = "sd of ln" }', entry))
+    assert model.spread["V2"] == pytest.approx(sd) and model.spread_forms.get("V2") == form
+    assert model.spread["V1"] == pytest.approx(np.sqrt(np.log(1.25))) and "V1" not in model.spread_forms
+
+
+@pytest.mark.parametrize(
+    ("entry", "key"),
+    [
+        ('{ value = 0.2, distribution = "normal" }', "printed_as"),  # what the section says is meant for lognormal spread
+        ('{ value = 0.2, distribution = "logit-normal" }', "printed_as"),
+        ('{ value = 0.2, distribution = "gaussian", printed_as = "sd" }', "distribution"),
+        ('{ value = 0.2, distribution = "normal", printed_as = "sd of ln" }', "printed_as"),
+    ],
+)
+def test_spread_must_be_printed_in_a_way_that_its_distribution_has(tmp_path, entry, key):
+    text = GOOD.replace('{ value = 0.2, printed_as = "sd of ln" }', entry)
+    assert f"spread.V2.{key}" in {problem.where.split(": ", 1)[1] for problem in problems_of(tmp_path, text)}

@@ -4,7 +4,7 @@ import numpy as np
 import pytest
 from hypothesis import given
 from hypothesis import strategies as st
-from scipy import stats
+from scipy import special, stats
 
 from covariates.variability import (
     cholesky_factor,
@@ -12,6 +12,7 @@ from covariates.variability import (
     cv_from_omega,
     omega_from_cv,
     omega_from_variance,
+    with_effect,
 )
 
 
@@ -89,3 +90,24 @@ def test_factor_times_itself_is_the_covariance(first, second, r):
 def test_what_is_no_covariance_is_refused(wrong):
     with pytest.raises(ValueError):
         cholesky_factor(wrong)
+
+
+# scipy.stats and scipy.special: median and spread of each form, of many random effects.
+def test_forms_of_a_random_effect():
+    effects = 0.4 * stats.norm.ppf((np.arange(100_000) + 0.5) / 100_000)
+    shares = [0.05, 0.5, 0.9]
+    assert np.quantile(with_effect(3.0, effects, "lognormal"), shares) == pytest.approx(
+        stats.lognorm(0.4, scale=3.0).ppf(shares), rel=1e-4)
+    assert np.quantile(with_effect(3.0, effects, "normal"), shares) == pytest.approx(stats.norm(3.0, 0.4).ppf(shares), rel=1e-4)
+    relative = with_effect(3.0, effects, "normal, relative")
+    assert relative.std() / relative.mean() == pytest.approx(0.4, rel=1e-3)
+    logit = special.logit(with_effect(0.8, effects, "logit-normal"))
+    assert (logit.mean(), logit.std()) == pytest.approx((special.logit(0.8), 0.4), rel=1e-3)
+
+
+def test_an_effect_is_never_clipped_or_guessed():
+    assert with_effect(1.0, -2.0, "normal") == -1.0
+    assert np.isnan(with_effect(np.array([1.2, 0.0]), 0.1, "logit-normal")).all()
+    assert with_effect(0.5, 0.0, "logit-normal") == 0.5
+    with pytest.raises(ValueError, match="form must be one of"):
+        with_effect(1.0, 0.0, "weibull")

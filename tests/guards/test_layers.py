@@ -12,16 +12,19 @@ POPSIM = Path(popsim.__file__).parent
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
-    "patients.survey", "patients.population", "patients.fit_survey", "records",
-    "patients.listed", "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_protocols", "study_targets", "study",
-    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate",
-    "tally", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
-    "drawing", "pictures", "report", "terminal", "check_text", "progress",
+    "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
+    "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_described", "study_population",
+    "study_protocols", "study_targets", "study",
+    "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate", "clusters",
+    "tally", "people", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
+    "drawing", "pictures", "patient_pictures", "report", "terminal", "check_text", "progress",
     "derived", "model_text", "person_text",
     "finding.places", "finding.counting", "finding.holding", "finding.dose", "finding.size", "finding.table",
     "finding.map", "finding.answer", "finding.answer_dose", "finding.answer_size", "finding.answer_table",
     "finding.answer_map", "finding.pictures", "finding.leave",
-    "commands.new", "commands.check", "commands.judge", "commands.find", "commands.models", "commands.person", "cli",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.find", "commands.models",
+    "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}

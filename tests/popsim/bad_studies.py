@@ -78,7 +78,7 @@ BAD = [
     ([('strength = "10 mg/mL"', 'strength = "0 mg/mL"')], "protocol 1: strength", '"0 mg/mL"', "above zero"),
     ([('strength = "10 mg/mL"', 'vial = "20 mL"')], "protocol 1: vial", "20 mL", "strength"),
     ([('age = "20 to 90 years"', "age = 20")], "population: age", '"20"', ">= 65 years"),
-    ([('age = "20 to 90 years"', 'age = "5 to 90 years"')], "population: age", "from 5 to 90 years", "bring a list"),
+    ([('age = "20 to 90 years"', 'age = "5 to 90 years"')], "population: age", "from 5 to 90 years", 'source = "described"'),
     ([('age = "20 to 90 years"', 'age = "90 to 20 years"')], "population: age", "90 to 20", "a lower end below"),
     ([("matters = \"5 %\"", 'matters = "500 %"')], "compare: matters", "500 %", "up to 100 %"),
     # keys and sections
@@ -147,7 +147,7 @@ BAD = [
     ([(COUNT, COUNT + '\nfile = "people.csv"')], "population: file", 'source = "survey"', 'source = "list"'),
     ([('source = "survey"', 'source = "list"')], "population: file", "missing", 'file = "people.csv"'),
     ([('source = "survey"', 'source = "list"\nfile = "none.csv"')], "none.csv", "No such file", "a CSV file"),
-    ([('source = "survey"', 'source = "lattice"')], "population: source", "lattice", "does not have it yet"),
+    ([('source = "survey"', 'source = "lattice"')], "population: lattice", "missing", "[population.lattice]"),
     ([('source = "survey"', 'source = "survy"')], "population: source", "survy", 'did you mean "survey"?'),
     # scaling
     ([("adjusted_body_weight", "adjusted_weight")],

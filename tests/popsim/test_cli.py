@@ -94,6 +94,7 @@ HEAVY = {"pandas", "numba", "scipy", "matplotlib", "seaborn", "jinja2"}
 
 @pytest.mark.parametrize("arguments", [
     ["--help"], ["--version"], ["new", "--help"], ["check", "--help"], ["judge", "--help"],
+    ["patients", "--help"],
 ])
 def test_help_loads_nothing_heavy(arguments, tmp_path):
     modules = loaded(*arguments, cwd=tmp_path)
@@ -110,7 +111,7 @@ def test_check_loads_no_solver_tables_or_pictures(folder):
 def test_version_and_help(capsys):
     assert run(["--version"]) == DONE
     assert capsys.readouterr().out == f"popsim {__version__}\n"
-    for command in ([], ["new"], ["check"], ["judge"]):
+    for command in ([], ["new"], ["check"], ["patients"], ["judge"]):
         assert run([*command, "--help"]) == DONE
         assert max(len(line) for line in capsys.readouterr().out.splitlines()) <= 80
 

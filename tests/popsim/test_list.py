@@ -63,18 +63,12 @@ def test_limits_and_condition_choose_among_the_list_and_luck_stays_with_the_row(
 def test_long_lists_come_in_blocks(write):
     rows = "\n".join(f"female,{20 + row % 60},70,165" for row in range(20_000))
     path = write("sex,age,weight,height\n" + rows)
-    parts = list(blocks(Population("list", 9_990, limits={"age": (50.0, 79.0)}, file=path), 1))
+    parts = list(blocks(Population("list", None, limits={"age": (50.0, 79.0)}, file=path), 1))
     assert [part.block for part in parts] == [0, 1, 2]
     assert [part.first for part in parts] == [1, 1 + len(parts[0]), 1 + len(parts[0]) + len(parts[1])]
     rows = np.concatenate([part.block * 8192 + part.slots for part in parts])
     ages = np.concatenate([part.attributes["age"] for part in parts])
     assert np.array_equal(ages, 20 + rows % 60) and len(rows) == 9_990
-
-
-def test_count_may_only_be_the_number_of_people(write):
-    assert len(next(blocks(Population("list", 3, file=write(GOOD)), 1))) == 3
-    with pytest.raises(ProblemsError, match="leave count out to use the list as it is"):
-        blocks(Population("list", 100, file=write(GOOD)), 1)
 
 
 def test_nobody_eligible(write):
@@ -112,7 +106,7 @@ def test_what_is_set_must_not_be_a_column(write):
         ('B,female,40,"70,5",165,0.8', "weight", '"70,5"', "write 72.5"),
         ("A,female,40,70,165,0.8", "patient", '"A"', ""),
         (",female,40,70,165,0.8", "patient", "nothing", ""),
-        ("B,male,40,180,70,0.8", "weight and height", "367.3", "cm"),  # pounds and inches
+        ("B,male,40,180,70,0.8", "weight and height", "weight 180, height 70", "units"),  # pounds and inches
     ],
 )
 def test_each_fault_is_named_with_line_and_column(write, row, column, found, advice):
@@ -174,3 +168,87 @@ def test_a_missing_file_and_one_that_is_no_text(tmp_path):
 def test_a_column_bmi_must_agree_with_weight_and_height(write):
     (problem,) = faults(write("sex,weight,height,bmi\nmale,80,180,24.7\nmale,80,180,27\n"))
     assert problem.where.endswith("line 3, column bmi") and "24.7" in problem.found + problem.allowed
+
+
+HEADER = "sex,age,weight,height,serum_creatinine,postmenstrual_age_weeks\n"
+
+
+@pytest.mark.parametrize(
+    "row, columns",
+    [
+        ("female,0.5,40,65,0.3,66", "weight and age"),  # 40 kg at six months: months taken for years, or pounds
+        ("female,45,15,120,0.8,2387", "weight and age"),
+        ("female,0.02,1.5,40,0.5,90", "postmenstrual_age_weeks and age"),
+        ("female,0.02,1.5,40,0.5,15", "postmenstrual_age_weeks"),
+    ],
+)
+def test_what_cannot_be_true_together(write, row, columns):
+    (problem,) = faults(write(HEADER + row + "\n"))
+    assert problem.where == f"people.csv: line 2, column {columns}"
+
+
+def test_children_from_birth(write):
+    rows = ["female,0.02,1.5,40,0.5,32", "male,0,3.4,50,0.7,40", "male,5,18,110,0.4,300.7"]
+    people = read_list(write(HEADER + "\n".join(rows)))
+    assert people.attributes["postmenstrual_age_weeks"].tolist() == [32.0, 40.0, 300.7]
+    born = read_list(write("sex,age,weight,gestational_age_weeks\nmale,0.1,3,30\n"))
+    assert born.attributes["postmenstrual_age_weeks"] == pytest.approx([30 + 5.2143])
+
+
+def test_units_that_are_said(write):
+    """88.42 umol/L are 1 mg/dL of creatinine (molar mass 113.12 g/mol)."""
+    path = write("sex,age,weight,height,serum_creatinine\nmale,600,70000,1.75,88.42\n")
+    units = {"age": "months", "weight": "g", "height": "m", "serum_creatinine": "umol/L"}
+    people = read_list(path, units=units).attributes
+    found = [people[name][0] for name in ("age", "weight", "height", "serum_creatinine")]
+    assert found == pytest.approx([50, 70, 175, 1])
+    with pytest.raises(ProblemsError) as caught:
+        read_list(path, units={**units, "serum_creatinine": "mg/dL"})
+    assert "88.42 mg/dL" in str(caught.value)
+    with pytest.raises(ProblemsError, match="which is no column"):
+        read_list(write(GOOD), units={"bmi": "kg/m2"})
+
+
+def test_a_list_in_pounds_is_noticed_unless_kilograms_are_said(write):
+    text = "sex,age,weight,height\n" + "".join(f"male,50,{weight},170\n" for weight in (180, 190, 200, 150, 160))
+    found = faults(write(text))
+    assert len(found) == 3 and all("pounds" in problem.advice for problem in found)
+    assert len(read_list(write(text), units={"weight": "kg"}).rows) == 5
+
+
+def test_parquet_is_read_and_checked_alike(write, tmp_path):
+    pandas = pytest.importorskip("pandas")
+    pytest.importorskip("pyarrow")
+    table = pandas.read_csv(write(GOOD))
+    table.to_parquet(tmp_path / "people.parquet")
+    ours, theirs = read_list(tmp_path / "people.parquet"), read_list(write(GOOD))
+    for name, values in theirs.attributes.items():
+        assert np.array_equal(ours.attributes[name], values), name
+    assert ours.labels.tolist() == theirs.labels.tolist()
+    table.loc[1, "height"] = None
+    table.loc[2, "weight"] = 1.8
+    table.to_parquet(tmp_path / "people.parquet")
+    told = [problem.where for problem in faults(tmp_path / "people.parquet")]
+    assert told[:2] == ["people.parquet: row 2, column height", "people.parquet: row 3, column weight and height"]
+    with pytest.raises(ProblemsError, match="No such file"):
+        read_list(tmp_path / "none.parquet")
+    (tmp_path / "people.parquet").write_text("no parquet")
+    with pytest.raises(ProblemsError, match="not readable"):
+        read_list(tmp_path / "people.parquet")
+
+
+def test_resampled_people_have_a_luck_of_their_own(write):
+    population = Population("list", 20_000, limits={"age": (40.0, 100.0)}, file=write(GOOD))
+    drawn = blocks(population, 1)
+    parts = list(drawn)
+    assert [part.block for part in parts] == [0, 1, 2] and sum(map(len, parts)) == 20_000
+    assert (drawn.seen, drawn.eligible, drawn.origins) == (3, 2, 3)
+    origins = np.concatenate([part.origins for part in parts])
+    assert set(origins.tolist()) == {0, 1}  # the third is too young
+    assert (origins == 0).mean() == pytest.approx(0.5, abs=4.5 * 0.5 / np.sqrt(20_000))
+    for part in parts:
+        assert np.array_equal(part.attributes["age"], np.array([71.0, 54.0])[part.origins])
+        assert np.array_equal(part.labels, np.array(["A-1", "A-2"])[part.origins])
+        assert np.array_equal(part.slots, np.arange(len(part)))
+    few = next(blocks(Population("list", 100, limits={"age": (40.0, 100.0)}, file=write(GOOD)), 1))
+    assert np.array_equal(few.origins, parts[0].origins[:100])

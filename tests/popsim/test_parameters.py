@@ -9,8 +9,9 @@ import pytest
 
 from covariates.sheet import read_sheet
 from popsim.lookup import Lookup
-from popsim.parameters import individual_parameters, outside_ranges, random_effects, spread_used
+from popsim.parameters import forms_used, individual_parameters, outside_ranges, random_effects, spread_used
 from popsim.records import Patients, Variability
+from popsim.streams import normals
 
 BIS, MINTO, MARSH = (
     read_sheet(name) for name in ("propofol_eleveld_2018", "remifentanil_minto_1997", "propofol_marsh_1991")
@@ -142,3 +143,34 @@ def test_typical_values_in_print():
     ).values
     found = [values[name][0] for name in ("V1", "V2", "V3", "CL", "Q2", "Q3")]
     np.testing.assert_allclose(found, [4.27, 18.9, 238.0, 1.89 - 0.0681 * 1.48, 1.29, 0.836], rtol=2e-3)
+
+
+def test_a_study_may_set_variability_parameter_by_parameter():
+    set_by_study = {"CL": (0.5, "lognormal"), "V3": (0.0, "lognormal"), "V1": (0.2, "normal, relative")}
+    own = Variability(True, 1.3, None, set_by_study)
+    assert spread_used(MINTO, own)["CL"] == pytest.approx(0.65)
+    assert "V3" not in spread_used(MINTO, own) and forms_used(MINTO, own) == {"V1": "normal, relative"}
+    found, typical, plain = (drawn(MINTO, variability).values for variability in (own, TYPICAL, OWN))
+    assert np.log(found["CL"] / typical["CL"]).std() == pytest.approx(0.65, rel=4.5 / np.sqrt(2 * N))
+    assert (found["V3"] == typical["V3"]).all()
+    assert (found["V1"] / typical["V1"]).std() == pytest.approx(0.26, rel=4.5 / np.sqrt(2 * N))
+    # the same luck as before, only its size has changed
+    assert np.log(found["CL"] / typical["CL"]) == pytest.approx(
+        np.log(plain["CL"] / typical["CL"]) * 0.65 / MINTO.spread["CL"], abs=1e-12)
+    assert np.log(found["V2"] / typical["V2"]) == pytest.approx(1.3 * np.log(plain["V2"] / typical["V2"]), abs=1e-12)
+
+
+def test_a_normal_parameter_that_falls_below_zero_is_not_clipped():
+    wild = drawn(MINTO, Variability(True, 1.0, None, {"CL": (0.6, "normal, relative")})).values["CL"]
+    assert (wild < 0).mean() == pytest.approx(0.048, abs=0.01)  # share of a standard normal below -1/0.6
+
+
+def test_every_luck_of_a_patient_is_independent_of_every_other():
+    """All streams that a survey patient under two models uses: every correlation within 4.5 standard errors."""
+    names = [f"survey.{name}" for name in ("height", "bmi", "serum_creatinine")]
+    names += [f"spread {name}" for name in {*BIS.spread, *MINTO.spread}]
+    luck = np.stack([np.concatenate([normals(5, name, block) for block in range(10)]) for name in names])
+    ties = np.corrcoef(luck)[np.triu_indices(len(names), 1)]
+    assert len(ties) == 55 and np.abs(ties).max() < 4.5 / np.sqrt(10 * N)
+    squares = np.corrcoef(luck**2)[np.triu_indices(len(names), 1)]
+    assert np.abs(squares).max() < 4.5 / np.sqrt(10 * N)

