@@ -10,8 +10,8 @@ import pandas as pd
 from popsim.estimate import wilson
 from popsim.finding.answer import Answer, Part, notes, share_text
 from popsim.finding.answer_table import unit_of
-from popsim.finding.counting import fresh, fresh_line
-from popsim.finding.map import SEXES, Axis, MapFound, Region
+from popsim.finding.counting import Counts, fresh, fresh_line
+from popsim.finding.map import FEWEST, SEXES, Axis, MapFound, Region
 from popsim.words import percent
 
 PEOPLE = {"female": "women", "male": "men", "": "people"}
@@ -27,7 +27,7 @@ def map_answer(found: MapFound) -> Answer:
         *(Part(f"{PEOPLE[sex].capitalize()}: share attained (%), and how many patients", [], *table)
           for sex in SEXES if (table := _table(found, sex))[1]),
         Part("Note", ["Regions are found in one set of patients and their shares told from another: "
-                      f"{fresh_line(asked.base, patients)}.", *notes(asked, counts)]),
+                      f"{fresh_line(asked.base, patients)}.", *_clustered(counts), *notes(asked, counts)]),
     ]
     return Answer(asked, parts, {"map": map_frame(found), "regions": _region_frame(found)},
                   {"searched": "map", "protocol": found.protocol.name, "across": found.across.name,
@@ -36,9 +36,16 @@ def map_answer(found: MapFound) -> Answer:
                    "fresh_seed": fresh(asked.base).seed})
 
 
+def _clustered(counts: Counts) -> list[str]:
+    if counts.origins is None:
+        return []
+    return ["The list's people are drawn again and again: intervals of cells and regions count draws, not people, and are "
+            "too narrow."]
+
+
 def _sentences(found: MapFound) -> list[str]:
     if not found.regions:
-        return [f"No region with 1 % of a sex or more lies clearly below {percent(found.level, 0)} %."]
+        return [f"No region with 1 % of a sex and {FEWEST} patients or more lies clearly below {percent(found.level, 0)} %."]
     lines = []
     for region in found.regions:
         clear = region.fresh_high < found.level

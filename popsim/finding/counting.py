@@ -298,7 +298,9 @@ def fresh(study: Study) -> Study:
 
 def fresh_line(study: Study, patients: int) -> str:
     """Who the fresh patients are."""
-    seed = fresh(study).seed
-    if study.population.source == "list":
-        return f"the same {patients:,} people of the list with fresh luck (seed {seed})"
-    return f"{patients:,} fresh patients (seed {seed})"
+    population, seed = study.population, f"seed {fresh(study).seed}"
+    if population.source == "list" and population.count is not None:
+        return f"{patients:,} fresh draws of the same people ({seed})"
+    if population.source in ("list", "lattice"):
+        return f"the same {patients:,} people of the {population.source} with fresh luck ({seed})"
+    return f"{patients:,} fresh patients ({seed})"

@@ -18,7 +18,7 @@ FINE = 5  # regions are looked for in cells so much narrower than those of the t
 CELLS = 12  # about so many across and up where the study does not say how wide they are
 MOST_REGIONS = 4  # of each sex
 AGAINST = 3.0  # patients where more attain than the level count so much against a region, so that it is no mixture
-LEAST_SHARE = 0.01  # a region holds at least this share of its sex
+LEAST_SHARE, FEWEST = 0.01, 30  # a region holds at least this share of its sex, and so many patients
 DEFAULT_LEVEL = 0.8
 SEXES = ("female", "male", "")  # the last where the patients bring no sex
 
@@ -127,7 +127,7 @@ def _regions(fine: np.ndarray, level: float, across: Axis, up: Axis) -> list[Reg
         mine = fine[fine[:, 0] == sex]
         everyone, left = mine[:, 3].sum(), mine
         for _ in range(MOST_REGIONS):
-            region = _worst_corner(left, level, LEAST_SHARE * everyone)
+            region = _worst_corner(left, level, max(LEAST_SHARE * everyone, FEWEST))
             if region is None:
                 break
             region = _sharpened(left, region, level)

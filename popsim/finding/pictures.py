@@ -236,7 +236,8 @@ def _panel(axes: Axes, found: MapFound, sex: int, low: np.ndarray, high: np.ndar
     shades = axes.pcolormesh(*edges, share.T, cmap=HEAT, vmin=0, vmax=1, shading="flat")
     near_n, near_hits = neighbours(n, 1), neighbours(hits, 1)
     smooth = np.where(n >= FEWEST_IN_CELL, near_hits / np.maximum(near_n, 1), np.nan)
-    if min(smooth.shape) > 1 and np.nanmin(smooth) < found.level < np.nanmax(smooth):
+    shown = smooth[np.isfinite(smooth)]
+    if min(smooth.shape) > 1 and len(shown) and shown.min() < found.level < shown.max():
         middles = [(edge[:-1] + edge[1:]) / 2 for edge in edges]
         axes.contour(*middles, smooth.T, levels=[found.level], colors="white", linewidths=1.8)
     for region in found.regions:

@@ -157,3 +157,23 @@ def test_failed_patients_count_against_every_wish(tmp_path):
     assert counts.total("failed")[0, 0] > 0.5 * counts.n[0]
     assert not attained.met[0] and not above.met[0] and attained.shortfall[0] == 1.0
     assert above.share[0] == pytest.approx(counts.total("failed")[0, 0] / counts.n[0])
+
+
+def test_a_resampled_lists_intervals_count_people_as_judge_does(tmp_path):
+    """50 people drawn 4,000 times: shares and differences with the intervals of attainment.csv and comparison.csv."""
+    people = [f"male,{30 + number},{60 + number},175" for number in range(50)]
+    population = find_cases["cases"]["people"](tmp_path, people) + "\ncount = 4000"
+    doses = {"a": RATE["a"], "b": RATE["a"].replace("1 mg/min", "0.7 mg/min")}
+    path = find_cases["find_file"](
+        tmp_path, "", population=population, protocols=doses, groups={"old": "age >= 50"},
+        model=find_cases["one_compartment"](tmp_path, clearance="0.5 * weight / 80", omega=0.1),
+        targets=(find_cases["STEADY"].format(range="1 to 2 mg/L"),), until="600 min", every="60 min")
+    question, _ = find_cases["asked_of"](path)
+    counts = count(question.base)
+    _, tables = find_cases["cases"]["judged"](question.base)
+    low, high = counts.attained()[1:]
+    assert low.ravel() == pytest.approx(tables["attainment"]["attained_low"])
+    assert high.ravel() == pytest.approx(tables["attainment"]["attained_high"])
+    rows = tables["comparison"][["difference", "difference_low", "difference_high"]].to_numpy()
+    assert np.array([counts.difference(0, 1, group) for group in range(2)]) == pytest.approx(rows)
+    assert counts.worth[0, 0, 0] < 0.25
