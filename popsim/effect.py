@@ -17,7 +17,7 @@ def effect_at(model: DrugModel, values: Mapping[str, np.ndarray], concentration:
     At `half` the effect lies midway: baseline 93 and 0 at infinity give 46.5.
     """
     column = (slice(None), None) if concentration.ndim == 2 else slice(None)
-    baseline, at_infinity, half, below, above = (array[column] for array in _curve(model, values))
+    baseline, at_infinity, half, below, above = (array[column] for array in effect_curve(model, values))
     with np.errstate(all="ignore"):
         ratio = concentration / half
         r = ratio ** np.where(ratio > 1, above, below)
@@ -30,7 +30,7 @@ def concentration_at(model: DrugModel, values: Mapping[str, np.ndarray], effect:
 
     -1 where even no drug lies past it, inf where no concentration reaches it.
     """
-    baseline, at_infinity, half, below, above = _curve(model, values)
+    baseline, at_infinity, half, below, above = effect_curve(model, values)
     with np.errstate(all="ignore"):
         share = (effect - baseline) / (at_infinity - baseline)
         ratio = share / (1 - share)
@@ -41,11 +41,12 @@ def concentration_at(model: DrugModel, values: Mapping[str, np.ndarray], effect:
 
 def falls(model: DrugModel, values: Mapping[str, np.ndarray]) -> np.ndarray:
     """(n,) bool: whether more drug lowers the effect, as with BIS."""
-    baseline, at_infinity, *_ = _curve(model, values)
+    baseline, at_infinity, *_ = effect_curve(model, values)
     return at_infinity < baseline
 
 
-def _curve(model: DrugModel, values: Mapping[str, np.ndarray]) -> tuple[np.ndarray, ...]:
+def effect_curve(model: DrugModel, values: Mapping[str, np.ndarray]) -> tuple[np.ndarray, ...]:
+    """Baseline, effect at infinity, concentration of half the effect, steepness below and above it; (n,) each."""
     effect = model.effect
     assert effect is not None
     above = effect.steepness_above or effect.steepness

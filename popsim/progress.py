@@ -39,10 +39,10 @@ def _solve_once(solve) -> None:
     one = np.ones(1)
     disposition = solve.disposition({"V1": 10 * one, "CL": one, "ke0": one})
     timeline = Timeline(np.zeros((1, 1)), np.ones((1, 1)), np.ones((1, 1)))
-    plasma, _ = solve.courses_on_grid(disposition, timeline, np.array([0.0, 1.0]))
     solve.window_course(disposition, timeline, "plasma", 0 * one, one, 0 * one, one)
-    solve.tally_on_grid(plasma, 0 * one, one, np.ones((1, 1), dtype=bool), np.zeros((1, 2, 3), dtype=np.int64),
-                        np.zeros((1, 2, solve.BIN_COUNT), dtype=np.int32))
+    solve.count_over_time(disposition, timeline, np.array([0.0, 1.0]), "plasma", 0 * one, one,
+                          np.ones((1, 1), dtype=bool), np.zeros((1, 2, 3), dtype=np.int64),
+                          np.zeros((1, 2, solve.BIN_COUNT), dtype=np.int32))
 
 
 @contextmanager

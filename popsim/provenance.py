@@ -38,7 +38,8 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
             "share_eligible": findings.share_eligible,
             "list_rows_skipped": findings.rows_skipped,
             "groups": {name: int(count) for name, count in zip(study.group_names, tally.patients, strict=True)},
-            "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count}
+            "not_simulated": [{"model": study.models[m].name, "reason": solve.STATUS[code], "patients": count,
+                               "first_of_them": tally.failing[m, code]}
                               for (m, code), count in sorted(tally.statuses.items())],
             "outside_by": [{"model": study.models[m].name, "attribute": name,
                             "patients": {group: int(count)

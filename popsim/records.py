@@ -4,7 +4,6 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from pathlib import Path
-from typing import Any
 
 import numpy as np
 
@@ -60,12 +59,18 @@ class Disposition:
     rates    (n, 3) float64, 1/min, ascending; unused compartments have rate 1 and weight 0
     weights  (n, 3) float64, 1/L, none negative, adding up to 1/V1
     ke0      (n,) float64, 1/min; 0 where the model has no effect site
+    ka       (n,) float64, 1/min, from the depot into plasma; 0 where the model has no absorption
+    bioavailability  (n,) float64, the share of a dose by mouth that reaches plasma
+    lag_min  (n,) float64, from a dose by mouth until the depot begins to empty
     status   (n,) int64, 0 = fine, else a code of `solve.STATUS`
     """
 
     rates: np.ndarray
     weights: np.ndarray
     ke0: np.ndarray
+    ka: np.ndarray
+    bioavailability: np.ndarray
+    lag_min: np.ndarray
     status: np.ndarray
 
     def __len__(self) -> int:
@@ -79,11 +84,23 @@ class Timeline:
     time_min         (n, m) float64, ascending, padded with inf
     bolus_mg         (n, m) float64, given at that time
     rate_mg_per_min  (n, m) float64, infused from that time until the next event
+    oral_mg          (n, m) float64, taken by mouth at that time; none unless given
+    interval_min     (n,) float64: these events are one interval, from time 0 on, of a regimen repeated for so long that
+                     every interval is like the last; what outlasts the interval runs on into the next. inf unless
+                     given: nothing repeats
     """
 
     time_min: np.ndarray
     bolus_mg: np.ndarray
     rate_mg_per_min: np.ndarray
+    oral_mg: np.ndarray = field(default=None)  # type: ignore[assignment]
+    interval_min: np.ndarray = field(default=None)  # type: ignore[assignment]
+
+    def __post_init__(self) -> None:
+        if self.oral_mg is None:
+            object.__setattr__(self, "oral_mg", np.zeros_like(self.time_min))
+        if self.interval_min is None:
+            object.__setattr__(self, "interval_min", np.full(len(self.time_min), np.inf))
 
 
 @dataclass(frozen=True)
@@ -96,6 +113,9 @@ class WindowCourse:
     lowest, highest       (n,) float64: smallest and largest value in the closed window, mg/L
     at_end                (n,) float64: value at the window's end, before doses at that time, mg/L
     status                (n,) int64, 0 = fine
+    lowest_at_min, highest_at_min  (n,) float64: when those values first are, min
+    first_inside_min      (n,) float64: when the course first is within the range, min; inf where it never is
+    last_above_min        (n,) float64: when it last is above the range, min; -inf where it never is
     """
 
     below: np.ndarray
@@ -106,6 +126,10 @@ class WindowCourse:
     highest: np.ndarray
     at_end: np.ndarray
     status: np.ndarray
+    lowest_at_min: np.ndarray
+    highest_at_min: np.ndarray
+    first_inside_min: np.ndarray
+    last_above_min: np.ndarray
 
 
 @dataclass(frozen=True)
@@ -284,8 +308,3 @@ class BlockRows:
     members: np.ndarray | None = None
     judged: dict[tuple[int, int, int], Judged] = field(default_factory=dict)
     received: list[Received] = field(default_factory=list)
-
-
-def rows_of(record: Any, rows: slice) -> Any:
-    """The same record (Disposition, Timeline) for some of its patients only."""
-    return type(record)(**{name: array[rows] for name, array in vars(record).items()})

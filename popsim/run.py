@@ -14,6 +14,7 @@ from concurrent.futures import ThreadPoolExecutor
 import numpy as np
 
 from covariates.catalogue import attributes_needed
+from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.effect import effect_at
 from popsim.flagged import beyond_total, flag_counts
@@ -30,14 +31,12 @@ from popsim.records import (
     Received,
     Study,
     Timeline,
-    rows_of,
 )
 from popsim.tally import Findings, Tally, check_room
-from popsim.target import COURSE_OF, concentration_limits, course_values, judge, window_of
+from popsim.target import COURSE_OF, concentration_limits, grid_course, judge, window_of
 from popsim.timeline import build_timeline
 
 LEAN = "lean_body_mass_janmahasatian"
-ROWS_AT_ONCE = 1024  # patients whose courses are held at a time: they stay in the processor's cache
 
 
 def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
@@ -150,11 +149,12 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                     tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
             if not tally.over_time:
                 continue
-            counted = [(members > 0) & ~judged[p, t].failed[:, None] for t in range(len(study.targets))]
-            kept = _over_time(study, grid, m, p, parameters, disposition, timeline, counted, tally, keep_courses)
+            of_targets = [judged[p, t] for t in range(len(study.targets))]
+            _over_time(study, grid, m, p, parameters, disposition, timeline, of_targets, members, tally)
             if keep_courses:
+                kept = _courses(grid, model, parameters, disposition, timeline)
                 courses.append((model.name, study.protocols[p].name, *kept))
-        tally.add_statuses(m, status)
+        tally.add_statuses(m, status, patients.first)
         for pair, t, a, b in tally.pairs:
             if pair == m:
                 tally.pairs[m, t, a, b].add(judged[a, t], judged[b, t], members)
@@ -181,24 +181,21 @@ def _judge_target(study: Study, m: int, t: int, parameters: IndividualParameters
 
 
 def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: IndividualParameters,
-               disposition: Disposition, timeline: Timeline, counted: list[np.ndarray], tally: Tally,
-               keep_courses: bool) -> tuple[np.ndarray, ...] | None:
-    """Add to the over-time counts, a few rows at a time; return the courses only when they are kept.
+               disposition: Disposition, timeline: Timeline, judged: list[Judged], members: np.ndarray,
+               tally: Tally) -> None:
+    """Add to the over-time counts: whoever did not fail, in the groups they belong to."""
+    n = len(disposition)
+    for t, target in enumerate(study.targets):
+        course = grid_course(target, study.models[m], parameters.values)
+        counted = (members > 0) & ~judged[t].failed[:, None]
+        counts = tally.targets[m, p, t]
+        solve.count_over_time(disposition, timeline, grid, course, np.full(n, target.low), np.full(n, target.high),
+                              counted, counts.over_time, counts.bins)
 
-    counted  for each target (n, groups) bool: whose course counts in which group
-    """
-    model, kept = study.models[m], []
-    for first in range(0, len(disposition), ROWS_AT_ONCE):
-        rows = slice(first, first + ROWS_AT_ONCE)
-        part = rows_of(disposition, rows)
-        plasma, site = solve.courses_on_grid(part, rows_of(timeline, rows), grid)
-        values = {name: array[rows] for name, array in parameters.values.items()}
-        for t, target in enumerate(study.targets):
-            quantity = course_values(target, model, values, plasma, site)
-            counts = tally.targets[m, p, t]
-            limits = (np.full(len(part), limit) for limit in (target.low, target.high))
-            solve.tally_on_grid(quantity, *limits, counted[t][rows], counts.over_time, counts.bins)
-        if keep_courses:
-            effect = effect_at(model, values, site) if model.effect else np.full_like(site, np.nan)
-            kept.append((plasma, site if model.has_effect_site else np.full_like(site, np.nan), effect))
-    return tuple(np.concatenate(course) for course in zip(*kept, strict=True)) if keep_courses else None
+
+def _courses(grid: np.ndarray, model: DrugModel, parameters: IndividualParameters, disposition: Disposition,
+             timeline: Timeline) -> tuple[np.ndarray, np.ndarray, np.ndarray]:
+    """Plasma, effect site and effect at every time of the grid, (n, times); NaN where the model has none."""
+    plasma, site = solve.courses_on_grid(disposition, timeline, grid)
+    effect = effect_at(model, parameters.values, site) if model.effect else np.full_like(site, np.nan)
+    return plasma, site if model.has_effect_site else np.full_like(site, np.nan), effect

@@ -6,31 +6,41 @@ touches another; a wrong shape is a programming error (ValueError).
 
 from __future__ import annotations
 
-import dataclasses
 from collections.abc import Mapping, Sequence
-from typing import TypeVar
+from typing import NamedTuple
 
 import numpy as np
 
 from popsim import kernels
 from popsim.records import Disposition, Timeline, WindowCourse
 
-Record = TypeVar("Record", Disposition, Timeline)
-
 STATUS: dict[int, str] = {
     kernels.FINE: "computed",
-    kernels.NOT_POSITIVE: "a volume or elimination clearance that is not positive, or a negative flow or ke0",
+    kernels.NOT_POSITIVE: "a volume or elimination clearance that is not positive, or a negative flow, ke0, ka or lag",
     kernels.NOT_FINITE: "a parameter that is missing or not a finite number",
     kernels.OUT_OF_REACH: "volumes and clearances too far apart to compute with",
-    kernels.BAD_EVENT: "a dose or rate that is negative or not a number, or doses out of order of time",
-    kernels.BAD_WINDOW: "a window without finite start and end, or one that ends before it starts",
+    kernels.BAD_EVENT: "a dose, rate or repeat that is negative or not a number, or doses out of order of time",
+    kernels.BAD_WINDOW: "a window without finite start and end, that ends before it starts or outlasts its interval",
     kernels.BAD_LIMITS: "a range without limits, or whose lower limit lies above the upper",
     kernels.NO_EFFECT_SITE: "no effect site in this model (ke0 is zero)",
+    kernels.NO_ABSORPTION: "a dose by mouth in a model without absorption (ka is zero)",
 }
 
 COURSES = {"plasma": kernels.PLASMA, "effect_site": kernels.EFFECT_SITE}
 BIN_COUNT = kernels.BIN_COUNT
-OPTIONAL = {"V2": 1.0, "Q2": 0.0, "V3": 1.0, "Q3": 0.0, "ke0": 0.0}  # what stands in for a part the model lacks
+PARAMETERS = ("V1", "CL", "V2", "Q2", "V3", "Q3", "ke0", "ka", "F", "lag")
+# what stands in for a part the model lacks
+OPTIONAL = {"V2": 1.0, "Q2": 0.0, "V3": 1.0, "Q3": 0.0, "ke0": 0.0, "ka": 0.0, "F": 1.0, "lag": 0.0}
+
+
+class Given(NamedTuple):
+    """A disposition and a timeline as the kernels take them: see the head of kernels.py."""
+
+    drug: np.ndarray
+    status: np.ndarray
+    events: np.ndarray
+    start: np.ndarray
+    interval: np.ndarray
 
 
 def code_is_kept() -> bool:
@@ -38,14 +48,9 @@ def code_is_kept() -> bool:
     return kernels.CACHED
 
 
-def rows_of(record: Record, rows: slice | np.ndarray) -> Record:
-    """The same record (Disposition, Timeline) for some of its patients."""
-    return dataclasses.replace(record, **{f.name: getattr(record, f.name)[rows] for f in dataclasses.fields(record)})
-
-
 def disposition(parameters: Mapping[str, np.ndarray]) -> Disposition:
     """Hybrid rates and weights of each patient from V1 (L), CL (L/min) and, where the model has them, V2 and Q2,
-    V3 and Q3, ke0 (1/min); each an (n,) array.
+    V3 and Q3, ke0 and ka (1/min), F (a share), lag (min); each an (n,) array.
 
     A parameter that is not finite or not positive sets that patient's status; other parameters are passed over.
     Raises ValueError for a missing V1 or CL, a compartment with only one of V and Q, or unequal shapes.
@@ -62,13 +67,14 @@ def disposition(parameters: Mapping[str, np.ndarray]) -> Disposition:
         raise ValueError(f"V1 has shape {n}, not (n,)")
     columns = [
         _array(name, parameters[name] if name in parameters else np.full(n, OPTIONAL[name]), n)
-        for name in ("V1", "CL", "V2", "Q2", "V3", "Q3", "ke0")
+        for name in PARAMETERS
     ]
     rates, weights = np.empty((*n, 3)), np.empty((*n, 3))
     status = np.empty(n, dtype=np.int64)
     kernels.disposition(*columns, rates, weights, status)
-    ke0 = np.where(status == kernels.FINE, columns[-1], 0.0)
-    return Disposition(rates=rates, weights=weights, ke0=ke0, status=status)
+    ke0, ka, bioavailability, lag = (np.where(status == kernels.FINE, columns[PARAMETERS.index(name)], otherwise)
+                                     for name, otherwise in list(OPTIONAL.items())[4:])  # fmt: skip
+    return Disposition(rates, weights, ke0, ka, bioavailability, lag, status)
 
 
 def courses_on_grid(
@@ -78,14 +84,15 @@ def courses_on_grid(
     doses at that time. Rows of patients with a status, or with a bad timeline, are NaN; the effect site is 0 where
     ke0 is 0. Raises ValueError for a grid that is empty, not finite or not ascending, or unequal shapes.
     """
-    grid = np.ascontiguousarray(grid_min, dtype=np.float64)
-    if grid.ndim != 1 or grid.size == 0 or not np.isfinite(grid).all() or (np.diff(grid) <= 0).any():
-        raise ValueError("the grid is not a line of finite, ascending times")
-    events, status = _events(disposition, timeline)
+    grid = _grid(grid_min)
+    given = _given(disposition, timeline)
+    _within_interval(grid, given.interval)
     plasma = np.empty((len(disposition), grid.size))
     effect_site = np.empty_like(plasma)
-    kernels.courses(disposition.rates, disposition.weights, disposition.ke0, status, *events, grid, *_steps(grid),
-                    plasma, effect_site)  # fmt: skip
+    n, nothing = len(disposition), np.empty(len(disposition))
+    nobody, uncounted = np.empty((n, 0), dtype=np.bool_), np.empty((0, grid.size, 0), dtype=np.int64)
+    kernels.on_grid(kernels.PLASMA, *given[:4], grid, *_steps(grid), np.empty((0, 5)), nothing, nothing, nobody,
+                    uncounted, uncounted.astype(np.int32), plasma, effect_site)  # fmt: skip
     return plasma, effect_site
 
 
@@ -106,64 +113,83 @@ def window_course(
     """
     if which not in COURSES:
         raise ValueError(f"{which!r} is not one of {', '.join(COURSES)}")
-    events, status = _events(disposition, timeline)
+    drug, status, events, start, interval = _given(disposition, timeline)
     n = (len(disposition),)
     low, high = _array("low", low, n), _array("high", high, n)
-    start, end = _array("start_min", start_min, n), _array("end_min", end_min, n)
-    shares, extremes, touched = np.empty((*n, 3)), np.empty((*n, 3)), np.empty(n, dtype=np.bool_)
-    kernels.windows(
-        COURSES[which], disposition.rates, disposition.weights, disposition.ke0, *events, low, high, start, end,
-        status, shares, extremes, touched,
-    )  # fmt: skip
+    begin, end = _array("start_min", start_min, n), _array("end_min", end_min, n)
+    shares, found = np.empty((*n, 3)), np.empty((*n, 7))
+    kernels.windows(COURSES[which], drug, events, start, interval, low, high, begin, end, status, shares, found)
     below, inside, above = shares.T.copy()
-    lowest, highest, at_end = extremes.T.copy()
-    return WindowCourse(below, inside, above, touched, lowest, highest, at_end, status)
+    lowest, highest, lowest_at, highest_at, at_end, first_inside, last_above = found.T.copy()
+    return WindowCourse(below, inside, above, np.isfinite(first_inside), lowest, highest, at_end, status, lowest_at,
+                        highest_at, first_inside, last_above)  # fmt: skip
 
 
 def area_under_curve(
-    disposition: Disposition, timeline: Timeline, start_min: np.ndarray, end_min: np.ndarray
+    disposition: Disposition, timeline: Timeline, which: str, start_min: np.ndarray, end_min: np.ndarray
 ) -> tuple[np.ndarray, np.ndarray]:
-    """Area under the plasma course from start to end, mg/L min, in closed form, and status; each (n,).
+    """Area under "plasma" or "effect_site" from start to end, mg/L min, in closed form, and status; each (n,).
 
-    Example: over all time a dose leaves dose / CL. Raises ValueError for unequal shapes.
+    Example: over all time a dose leaves dose / CL. Raises ValueError for another `which` or unequal shapes.
     """
-    events, status = _events(disposition, timeline)
+    if which not in COURSES:
+        raise ValueError(f"{which!r} is not one of {', '.join(COURSES)}")
+    drug, status, events, start, interval = _given(disposition, timeline)
     n = (len(disposition),)
     area = np.empty(n)
-    start, end = _array("start_min", start_min, n), _array("end_min", end_min, n)
-    kernels.areas(disposition.rates, disposition.weights, disposition.ke0, *events, start, end, status, area)
+    begin, end = _array("start_min", start_min, n), _array("end_min", end_min, n)
+    kernels.areas(COURSES[which], drug, events, start, interval, begin, end, status, area)
     return area, status
 
 
-def tally_on_grid(
-    values: np.ndarray,
+def count_over_time(
+    disposition: Disposition,
+    timeline: Timeline,
+    grid_min: np.ndarray,
+    course: str | Sequence[np.ndarray],
     low: np.ndarray,
     high: np.ndarray,
     members: np.ndarray,
     counts: np.ndarray,
-    bins: np.ndarray,
+    bins: np.ndarray | None = None,
 ) -> None:
-    """Add values (n, T) to integer counts and bins, whatever the order of patients and blocks.
+    """Add every patient's course at T ascending times to integer counts and bins; no course is kept, and the order of
+    patients and blocks does not matter.
 
-    low, high  (n,) closed range      members  (n, G) bool, who belongs to which group
+    course     "plasma", "effect_site", or the curve of an effect: baseline, effect at infinity, concentration of half
+               the effect (mg/L), steepness below and above it, each (n,)
+    low, high  (n,) closed range, in the course's unit      members  (n, G) bool, who belongs to which group
     counts     (G, T, 3) int64, below, in, above; added to
-    bins       (G, T, BIN_COUNT) int32 or int64; added to
-    NaN values are passed over. Raises ValueError for limits that are NaN, or unequal shapes.
+    bins       (G, T, BIN_COUNT) int32 or int64; added to; None: not counted
+    Values just after doses at that time. Patients with a status and NaN values are passed over. Raises ValueError for
+    a bad grid or `course`, limits that are NaN, or unequal shapes.
     """
-    values = np.ascontiguousarray(values, dtype=np.float64)
-    n, times = values.shape
+    grid = _grid(grid_min)
+    n, groups = len(disposition), members.shape[1]
+    if bins is None:
+        bins = np.empty((groups, grid.size, 0), dtype=np.int32)
+    elif bins.shape != (groups, grid.size, BIN_COUNT) or bins.dtype not in (np.int32, np.int64):
+        raise ValueError(f"bins are {bins.shape} {bins.dtype}, not {(groups, grid.size, BIN_COUNT)} int32 or int64")
+    if counts.shape != (groups, grid.size, 3) or counts.dtype != np.int64:
+        raise ValueError(f"counts are {counts.shape} {counts.dtype}, not {(groups, grid.size, 3)} int64")
+    if members.shape != (n, groups) or members.dtype != np.bool_:
+        raise ValueError(f"members are {members.shape} {members.dtype}, not {(n, groups)} bool")
     low, high = _array("low", low, (n,)), _array("high", high, (n,))
-    groups = members.shape[1]
-    expected = {"members": (members, (n, groups)), "counts": (counts, (groups, times, 3)),
-                "bins": (bins, (groups, times, BIN_COUNT))}  # fmt: skip
-    for name, (array, shape) in expected.items():
-        if array.shape != shape:
-            raise ValueError(f"{name} has shape {array.shape}, not {shape}")
-    if members.dtype != np.bool_ or counts.dtype != np.int64 or bins.dtype not in (np.int32, np.int64):
-        raise ValueError("members must be bool, counts int64, bins int32 or int64")
     if np.isnan(low).any() or np.isnan(high).any():
         raise ValueError("a limit is not a number")
-    kernels.tally(values, values.view(np.int64), low, high, members, counts, bins)
+    if isinstance(course, str):
+        if course not in COURSES:
+            raise ValueError(f"{course!r} is not one of {', '.join(COURSES)}")
+        kind, curve = COURSES[course], np.empty((0, 5))
+    else:
+        kind, curve = kernels.EFFECT, np.stack([_array("an effect's curve", column, (n,)) for column in course], axis=1)
+        if curve.shape != (n, 5):
+            raise ValueError(f"an effect's curve has {curve.shape[1]} parameters, not 5")
+    given = _given(disposition, timeline)
+    _within_interval(grid, given.interval)
+    unkept = np.empty((0, 0))
+    kernels.on_grid(kind, *given[:4], grid, *_steps(grid), curve, low, high, np.ascontiguousarray(members), counts,
+                    bins, unkept, unkept)  # fmt: skip
 
 
 def bin_layout() -> np.ndarray:
@@ -220,16 +246,86 @@ def _array(name: str, values: np.ndarray, shape: tuple[int, ...]) -> np.ndarray:
     return array
 
 
-def _events(disposition: Disposition, timeline: Timeline) -> tuple[tuple[np.ndarray, ...], np.ndarray]:
-    """The timeline's arrays, and the patients' status with that of their timelines."""
-    shape = (len(disposition), *np.shape(timeline.time_min)[1:])
+def _grid(grid_min: np.ndarray) -> np.ndarray:
+    grid = np.ascontiguousarray(grid_min, dtype=np.float64)
+    if grid.ndim != 1 or grid.size == 0 or not np.isfinite(grid).all() or (np.diff(grid) <= 0).any():
+        raise ValueError("the grid is not a line of finite, ascending times")
+    return grid
+
+
+def _within_interval(grid: np.ndarray, interval: np.ndarray) -> None:
+    repeats = np.isfinite(interval)
+    if repeats.any() and (grid[0] < 0 or grid[-1] > interval[repeats].min()):
+        raise ValueError("the grid leaves the interval of a repeated regimen")
+
+
+def _given(disposition: Disposition, timeline: Timeline) -> Given:
+    """Both as the kernels take them; the patients' status with that of their timelines."""
+    n, shape = len(disposition), (len(disposition), *np.shape(timeline.time_min)[1:])
     if len(shape) != 2:
         raise ValueError(f"time_min has shape {np.shape(timeline.time_min)}, not (n, m)")
-    names = ("time_min", "bolus_mg", "rate_mg_per_min")
-    events = tuple(_array(name, getattr(timeline, name), shape) for name in names)
+    names = ("time_min", "bolus_mg", "oral_mg", "rate_mg_per_min")
+    events = np.stack([_array(name, getattr(timeline, name), shape) for name in names], axis=2)
+    interval = _array("interval_min", timeline.interval_min, (n,))
+    drug = np.column_stack([disposition.rates, disposition.weights, disposition.ke0, disposition.ka])
     status = disposition.status.copy()
-    kernels.check_events(*events, status)
-    return events, status
+    kernels.check_events(events, disposition.ka, interval, status)
+    if events[:, :, kernels.ORAL].any():
+        events = _absorbed(events, disposition.bioavailability, disposition.lag_min)
+    if np.isfinite(interval).any():
+        events = _folded(events, np.where(status == kernels.FINE, interval, np.inf))
+    start = np.zeros((n, 5))
+    if np.isfinite(interval).any():
+        kernels.steady_starts(drug, events, interval, status, start)
+    return Given(drug, status, events, start, interval)
+
+
+def _absorbed(events: np.ndarray, bioavailability: np.ndarray, lag: np.ndarray) -> np.ndarray:
+    """Doses by mouth as they reach the depot: their share, as events of their own, later by the lag."""
+    n, m, _ = events.shape
+    later = np.zeros_like(events)
+    taken = events[:, :, kernels.ORAL]
+    later[:, :, kernels.TIME] = np.where(taken > 0, events[:, :, kernels.TIME] + lag[:, None], np.inf)
+    later[:, :, kernels.ORAL] = taken * bioavailability[:, None]
+    both = np.concatenate([events, later], axis=1)
+    both[:, :m, kernels.ORAL] = 0.0
+    order = np.argsort(both[:, :, kernels.TIME], axis=1, kind="stable")
+    # the rate goes on as the last event of before said
+    speaks = np.maximum.accumulate(np.where(order < m, order, -1), axis=1)
+    rate = np.take_along_axis(events[:, :, kernels.FLOW], np.maximum(speaks, 0), axis=1)
+    both = np.take_along_axis(both, order[:, :, None], axis=1)
+    both[:, :, kernels.FLOW] = np.where(speaks >= 0, rate, 0.0)
+    used = max(int(np.isfinite(both[:, :, kernels.TIME]).sum(axis=1).max(initial=0)), 1)
+    return np.ascontiguousarray(both[:, :used])
+
+
+def _folded(events: np.ndarray, interval: np.ndarray) -> np.ndarray:
+    """One interval's events with what earlier intervals still have running in it; others as they are.
+
+    Events past the interval's end come that much later in a later one. The rate between two folded events is the sum,
+    over intervals, of the rate at their middle: a middle is safe from rounding.
+    """
+    repeats = np.isfinite(interval)
+    time, rate = events[:, :, kernels.TIME], events[:, :, kernels.FLOW]
+    finite = np.isfinite(time)
+    folded = np.concatenate([np.zeros((len(events), 1, 4)), events], axis=1)
+    folded[:, 1:, kernels.TIME] = np.where(finite, np.fmod(np.where(finite, time, 0.0), interval[:, None]), np.inf)
+    order = np.argsort(folded[:, :, kernels.TIME], axis=1, kind="stable")
+    folded = np.take_along_axis(folded, order[:, :, None], axis=1)
+    begins = np.where(np.isfinite(folded[:, :, kernels.TIME]), folded[:, :, kernels.TIME], 0.0)
+    ends = np.minimum(np.append(folded[:, 1:, kernels.TIME], np.full((len(events), 1), np.inf), axis=1),
+                      interval[:, None])  # fmt: skip
+    middle = np.where(repeats[:, None], (begins + ends) / 2, 0.0)
+    spans = np.where(repeats, np.where(finite, time, 0.0).max(axis=1, initial=0.0) / interval, 0.0)
+    total = np.zeros_like(middle)
+    for k in range(int(spans.max(initial=0.0)) + 1):
+        at = middle + k * np.where(repeats, interval, 0.0)[:, None]
+        last = (time[:, None, :] <= at[:, :, None]).sum(axis=2) - 1
+        running = np.take_along_axis(rate, np.maximum(last, 0), axis=1)
+        total += np.where(last >= 0, running, 0.0)
+    folded[:, :, kernels.FLOW] = total
+    unfolded = np.concatenate([events, np.full((len(events), 1, 4), [np.inf, 0.0, 0.0, 0.0])], axis=1)
+    return np.where(repeats[:, None, None], folded, unfolded)
 
 
 def _steps(grid: np.ndarray) -> tuple[np.ndarray, np.ndarray]:

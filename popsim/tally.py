@@ -20,6 +20,7 @@ MANTISSAS = 9 * 10 ** (DIGITS - 1)
 KEY_COUNT = 1 + DECADES * MANTISSAS
 HIGHEST = 9.999 * 10.0 ** (LOWEST_DECADE + DECADES - 1)
 MOST_BYTES = 8 * 2**30
+MOST_NAMED = 10  # patients who could not be simulated are named up to this many for each reason
 
 
 @dataclass
@@ -96,6 +97,7 @@ class Tally:
     overlap: np.ndarray  # (groups, groups) patients in both
     over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
+    failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
     clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
@@ -141,6 +143,7 @@ class Tally:
             mine += theirs
         for key, count in other.statuses.items():
             self.statuses[key] = self.statuses.get(key, 0) + count
+            self.failing[key] = sorted({*self.failing.get(key, []), *other.failing[key]})[:MOST_NAMED]
         self.add_flags(other.flags)
 
     def add_flags(self, counts: dict[tuple[str, str], int]) -> None:
@@ -157,10 +160,13 @@ class Tally:
         unequal = int(pair.only_a[group] + pair.only_b[group])
         return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
 
-    def add_statuses(self, model: int, status: np.ndarray) -> None:
+    def add_statuses(self, model: int, status: np.ndarray, first: int) -> None:
+        """Count who could not be computed, and why; `first` is the number of the block's first patient."""
         for code, count in zip(*np.unique(status[status != 0], return_counts=True), strict=True):
             key = (model, int(code))
             self.statuses[key] = self.statuses.get(key, 0) + int(count)
+            numbers = (first + np.nonzero(status == code)[0][:MOST_NAMED]).tolist()
+            self.failing[key] = sorted([*self.failing.get(key, []), *numbers])[:MOST_NAMED]
 
 
 @dataclass(frozen=True)

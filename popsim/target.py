@@ -8,7 +8,7 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
-from popsim.effect import concentration_at, effect_at, falls
+from popsim.effect import concentration_at, effect_at, effect_curve, falls
 from popsim.records import Judged, Target, WindowCourse
 
 SHARE_SLACK = 1e-9  # a share found to 1e-12 of the window must not miss "80 %" by rounding
@@ -78,11 +78,6 @@ def judge(target: Target, model: DrugModel, values: Mapping[str, np.ndarray], co
     )
 
 
-def course_values(target: Target, model: DrugModel, values: Mapping[str, np.ndarray], plasma: np.ndarray,
-                  effect_site: np.ndarray) -> np.ndarray:
-    """The target's course quantity at each time of the grid, (n, times)."""
-    if target.quantity == "plasma":
-        return plasma
-    if target.quantity == "effect_site":
-        return effect_site
-    return effect_at(model, values, effect_site)
+def grid_course(target: Target, model: DrugModel, values: Mapping[str, np.ndarray]) -> str | tuple[np.ndarray, ...]:
+    """The target's course quantity as `solve.count_over_time` takes it: a course's name, or an effect's curve."""
+    return effect_curve(model, values) if target.quantity == "effect" else COURSE_OF[target.quantity]

@@ -9,6 +9,7 @@ import runpy
 import sys
 import time
 from collections.abc import Callable
+from concurrent.futures import ThreadPoolExecutor
 from pathlib import Path
 from types import SimpleNamespace
 
@@ -49,7 +50,7 @@ def by_lsoda(p: dict[str, float], grid: np.ndarray) -> None:
 
 
 def main() -> None:
-    n = int(sys.argv[1]) if len(sys.argv) > 1 else 1024
+    n = int(sys.argv[1]) if len(sys.argv) > 1 else 8192
     values = cases.varied(n)
     d = solve.disposition(values)
     on_grid = cases.timeline((0.0, 100.0, 10.0), (10.0, 0.0, 8.0), (30.0, 20.0, 6.0), (60.0, 0.0, 0.0), n=n)
@@ -59,6 +60,7 @@ def main() -> None:
     limits = np.full(n, 2.0), np.full(n, 4.0)
     members = np.ones((n, GROUPS), dtype=bool)
     ends = np.full(n, 5.0), np.full(n, 60.0)
+    curve = tuple(np.full(n, x) for x in (93.0, 0.0, 3.0, 1.5, 1.9))
 
     print(f"{n} patients, one thread")
     print(f"rates and weights     {seconds(lambda: solve.disposition(values)) / n * 1e9:9.0f} ns per patient")
@@ -68,20 +70,30 @@ def main() -> None:
     for times, every in ((181, 0.5), (1081, 0.1)):
         grid = every * np.arange(times)
         points = n * times
-        counts = np.zeros((GROUPS, times, 3), dtype=np.int64)
+
+        def counted(line, groups, bins=None, course="effect_site", grid=grid, times=times):
+            counts = np.zeros((groups, times, 3), dtype=np.int64)
+            solve.count_over_time(d, line, grid, course, *limits, members[:, :groups], counts, bins)
+
         bins = np.zeros((GROUPS, times, solve.BIN_COUNT), dtype=np.int32)
-        site = solve.courses_on_grid(d, on_grid, grid)[1]
-        ours = seconds(lambda g=grid: solve.courses_on_grid(d, on_grid, g)) / points
-        inside = seconds(lambda g=grid: solve.courses_on_grid(d, between, g)) / points
-        counting = seconds(lambda s=site, c=counts, b=bins: solve.tally_on_grid(s, *limits, members, c, b)) / points
-        exponential = seconds(lambda t=times, e=every: by_expm(cases.PROPOFOL, t, e)) / times
-        integrator = seconds(lambda g=grid: by_lsoda(cases.PROPOFOL, g)) / times
-        print(f"{times} times, ns per patient and time")
-        print(f"  courses, events on the grid   {ours * 1e9:9.2f}")
-        print(f"  courses, events between       {inside * 1e9:9.2f}")
-        print(f"  counts and bins, {GROUPS} groups     {counting * 1e9:9.2f}")
-        print(f"  scipy expm and products       {exponential * 1e9:9.0f}   {exponential / ours:9.0f} times as long")
-        print(f"  scipy LSODA, rtol 1e-8        {integrator * 1e9:9.0f}   {integrator / ours:9.0f} times as long")
+        ours = seconds(lambda c=counted: c(on_grid, 1)) / points
+        rows = {
+            "steps, range test, counts": ours,
+            "the same, doses inside steps": seconds(lambda c=counted: c(between, 1)) / points,
+            f"the same, {GROUPS} groups": seconds(lambda c=counted: c(on_grid, GROUPS)) / points,
+            f"{GROUPS} groups and percentile bins": seconds(lambda c=counted, b=bins: c(on_grid, GROUPS, b)) / points,
+            "the same, of an effect": seconds(lambda c=counted, b=bins: c(on_grid, GROUPS, b, curve)) / points,
+            "both courses kept": seconds(lambda g=grid: solve.courses_on_grid(d, on_grid, g)) / points,
+            "scipy expm and products": seconds(lambda t=times, e=every: by_expm(cases.PROPOFOL, t, e)) / times,
+            "scipy LSODA, rtol 1e-8": seconds(lambda g=grid: by_lsoda(cases.PROPOFOL, g)) / times,
+        }
+        print(f"{times} times, ns per patient and time; times as long as the first")
+        for label, spent in rows.items():
+            print(f"  {label:32} {spent * 1e9:9.2f} {spent / ours:9.1f}")
+    started = time.perf_counter()
+    with ThreadPoolExecutor(2) as pool:
+        list(pool.map(lambda _: counted(on_grid, 1), range(8)))
+    print(f"two threads, wall time per point {(time.perf_counter() - started) / 8 / points * 1e9:9.2f} ns")
 
 
 if __name__ == "__main__":

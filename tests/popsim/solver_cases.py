@@ -2,6 +2,7 @@
 
 from __future__ import annotations
 
+import dataclasses
 import os
 
 import numpy as np
@@ -17,6 +18,11 @@ EXAMPLES = 20 if SLOW else 60
 PROPOFOL = {"V1": 6.3, "CL": 1.8, "V2": 25.0, "Q2": 1.7, "V3": 270.0, "Q3": 1.1, "ke0": 0.15}
 REMIFENTANIL = {"V1": 5.1, "CL": 2.6, "V2": 9.8, "Q2": 2.05, "V3": 5.4, "Q3": 0.076, "ke0": 0.6}
 NAMES = tuple(PROPOFOL)
+
+
+def rows_of(record, rows):
+    """The same record (Disposition, Timeline) for some of its patients."""
+    return dataclasses.replace(record, **{f.name: getattr(record, f.name)[rows] for f in dataclasses.fields(record)})
 
 
 def people(*parameters: dict[str, float]) -> Disposition:

@@ -39,20 +39,26 @@ def difference(*points: float) -> mp.mpf:
 @few
 @given(decades)
 def test_mean_exponential_is_mpmaths(z):
-    assert kernels._mean_exponential(z) == pytest.approx(float(difference(0.0, -z)), rel=1e-15)
+    assert kernels._mean_exponential(z) == pytest.approx(float(difference(0.0, -z)), rel=1e-15, abs=0)
 
 
 @few
 @given(decades, decades)
 def test_second_difference_is_mpmaths(a, b):
-    assert kernels._second_difference(a, b) == pytest.approx(float(difference(0.0, -a, -b)), rel=2e-15)
+    assert kernels._second_difference(a, b) == pytest.approx(float(difference(0.0, -a, -b)), rel=2e-15, abs=0)
 
 
 @few
 @given(decades, st.sampled_from([0.0, 1e-16, 1e-12, 1e-8, 1e-4, 1e-2]))
 def test_second_difference_where_both_meet(a, aside):
     b = a * (1 + aside)
-    assert kernels._second_difference(a, b) == pytest.approx(float(difference(0.0, -a, -b)), rel=2e-15)
+    assert kernels._second_difference(a, b) == pytest.approx(float(difference(0.0, -a, -b)), rel=2e-15, abs=0)
+
+
+@few
+@given(decades, decades, decades)
+def test_third_difference_is_mpmaths(a, b, c):
+    assert kernels._third_difference(a, b, c) == pytest.approx(float(difference(0.0, -a, -b, -c)), rel=1e-14, abs=0)
 
 
 @few
@@ -166,7 +172,7 @@ def test_kernels_import_nothing_of_ours_and_ask_for_no_shortcuts():
 def test_every_status_of_the_kernels_is_worded():
     codes = {value for name, value in vars(kernels).items()
              if name in {"FINE", "NOT_POSITIVE", "NOT_FINITE", "OUT_OF_REACH", "BAD_EVENT", "BAD_WINDOW", "BAD_LIMITS",
-                         "NO_EFFECT_SITE"}}  # fmt: skip
+                         "NO_EFFECT_SITE", "NO_ABSORPTION"}}  # fmt: skip
     assert codes == set(solve.STATUS)
 
 

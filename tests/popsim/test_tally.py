@@ -147,8 +147,20 @@ def test_merged_counts_equal_those_of_one(tmp_path):
     for mine, theirs in zip(_arrays(one.tally), _arrays(three.tally), strict=True):
         assert (mine == theirs).all()
     assert one.tally.statuses == three.tally.statuses
+    assert one.tally.failing == three.tally.failing
     twice = Tally.empty(asked, len(asked.grid_min()))
     twice.merge(one.tally)
     twice.merge(three.tally)
     assert twice.patients.tolist() == (2 * one.tally.patients).tolist()
     assert twice.statuses == {code: 2 * count for code, count in one.tally.statuses.items()}
+
+
+def test_who_could_not_be_simulated_is_counted_and_the_first_are_named(tmp_path):
+    """In any order of blocks: the ten smallest numbers of each reason."""
+    asked = cases.study(tmp_path, count=10, every="30 min")
+    early, late = (Tally.empty(asked, len(asked.grid_min())) for _ in range(2))
+    late.add_statuses(0, np.array([0, 3, 3, 0, 4]), first=101)
+    early.add_statuses(0, np.full(9, 3), first=1)
+    late.merge(early)
+    assert late.statuses == {(0, 3): 11, (0, 4): 1}
+    assert late.failing == {(0, 3): [*range(1, 10), 102], (0, 4): [105]}

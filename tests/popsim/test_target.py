@@ -8,7 +8,7 @@ import pytest
 from covariates.problems import ProblemsError
 from covariates.sheet import read_sheet
 from popsim.records import Target, WindowCourse
-from popsim.target import concentration_limits, course_values, judge, window_of
+from popsim.target import concentration_limits, grid_course, judge, window_of
 
 REMIFENTANIL, BIS = read_sheet("remifentanil_minto_1997"), read_sheet("propofol_eleveld_2018")
 INF = float("inf")
@@ -24,9 +24,8 @@ def course(inside=(1.0,), below=None, above=None, touched=True, lowest=4.0, high
     n = len(inside)
     below = 1 - inside if below is None else np.array(below, dtype=float)
     above = np.zeros(n) if above is None else np.array(above, dtype=float)
-    return WindowCourse(
-        below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in (touched, lowest, highest, at_end, status))
-    )
+    of_all = (touched, lowest, highest, at_end, status, 0.0, 0.0, 0.0, 0.0)
+    return WindowCourse(below, inside, above, *(np.broadcast_to(np.array(x), (n,)) for x in of_all))
 
 
 def attained(asked: Target, found: WindowCourse, model=REMIFENTANIL, values=None) -> list[bool]:
@@ -147,7 +146,7 @@ def test_a_window_past_the_runs_end_is_refused(minutes):
 
 
 def test_the_course_quantity():
-    plasma, site = np.array([[1.0, 2.0]]), np.array([[0.0, 3.0]])
-    assert course_values(target(quantity="plasma"), BIS, person(), plasma, site) is plasma
-    assert course_values(target(), BIS, person(), plasma, site) is site
-    assert course_values(target(quantity="effect"), BIS, person(), plasma, site).tolist() == [[93.0, 46.5]]
+    assert grid_course(target(quantity="plasma"), BIS, person()) == "plasma"
+    assert grid_course(target(), BIS, person()) == "effect_site"
+    curve = grid_course(target(quantity="effect"), BIS, person())
+    assert [column.tolist() for column in curve] == [[93.0], [0.0], [3.0], [2.0], [2.0]]

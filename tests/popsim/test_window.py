@@ -200,23 +200,78 @@ def test_plasma_that_turns_twice_in_one_interval():
 
 
 @few
-@given(st.tuples(*[st.floats(-3, 3)] * 7), st.tuples(*[st.floats(0, 1)] * 3), st.floats(0, 5), st.floats(-3, 4))
-def test_monotone_between_the_turning_points(powers, state, rate, length_power):
+@given(st.tuples(*[st.floats(-3, 3)] * 8), st.tuples(*[st.floats(0, 1)] * 3), st.floats(0, 5), st.floats(-3, 4),
+       st.just(0.0) | st.floats(0, 100))  # fmt: skip
+def test_monotone_between_the_turning_points(powers, state, rate, length_power, depot):
     """Any rates over six decades, any state: between neighbouring cuts the course never turns back (dense sampling)."""
-    d = cases.people({name: 10.0**power for name, power in zip(cases.NAMES, powers, strict=True)})
-    state, length = (*state, 0.7), 10.0**length_power
-    rates, weights, ke0 = d.rates[0], d.weights[0], d.ke0[0]
-    slopes = kernels._slopes(state, rate, rates, weights, ke0)
+    d = cases.people({name: 10.0**power for name, power in zip((*cases.NAMES, "ka"), powers, strict=True)})
+    state, length = (*state, 0.7, depot), 10.0**length_power
+    row = np.array([*d.rates[0], *d.weights[0], d.ke0[0], d.ka[0]])
+    slopes = kernels._slopes(state, rate, row)
     for kind in (kernels.PLASMA, kernels.EFFECT_SITE):
-        cuts, roots = np.zeros(5), np.zeros(3)
-        count = kernels._monotone_cuts(kind, length, cuts, roots, state, rate, slopes, rates, weights, ke0)
+        cuts, roots = np.zeros(6), np.zeros(4)
+        count = kernels._monotone_cuts(kind, length, cuts, roots, state, rate, slopes, row)
         for a, b in zip(cuts[: count - 1], cuts[1:count], strict=True):
             inside = np.concatenate([a + (b - a) * np.geomspace(1e-9, 1, 40), np.linspace(a, b, 40)])
             inside.sort()
-            course = np.array([kernels._function(kind, t, state, rate, slopes, rates, weights, ke0) for t in inside])
+            course = np.array([kernels._function(kind, t, state, rate, slopes, row)[0] for t in inside])
             moves = np.diff(course)
             noise = 1e-13 * course.max()
             assert (moves >= -noise).all() or (moves <= noise).all()
+
+
+# ---- moments ----
+
+
+def test_when_it_first_is_in_range_and_last_above_it_is_the_logarithm():
+    """One compartment: C0 exp(-k t) falls to 6 and to 2 at ln(C0/c)/k (textbook)."""
+    d, line = one_compartment(), cases.timeline((0.0, 100.0, 0.0))
+    found = window(d, line, "plasma", 2.0, 6.0, 0.0, 40.0)
+    assert found.first_inside_min[0] == found.last_above_min[0] == pytest.approx(math.log(10 / 6) / 0.1, rel=1e-13)
+    assert (found.highest_at_min[0], found.lowest_at_min[0]) == (0.0, 40.0)
+    never = window(d, line, "plasma", 11.0, 12.0, 0.0, 40.0)
+    assert (never.first_inside_min[0], never.last_above_min[0]) == (math.inf, -math.inf)
+    assert not never.touched[0]
+    later = window(d, line, "plasma", 0.0, 20.0, 3.0, 40.0)
+    assert (later.first_inside_min[0], later.last_above_min[0]) == (3.0, -math.inf)
+    assert window(d, line, "plasma", 0.0, 0.1, 3.0, 40.0).last_above_min[0] == 40.0
+
+
+@pytest.mark.parametrize("which", COURSES)
+def test_moments_are_those_of_a_dense_grid(which):
+    """30 patients, six events: the first grid time in range, the last above, the extremes', to one grid step."""
+    n, parts = (3, 2001) if cases.SLOW else (30, 40001)
+    d, line = solve.disposition(cases.varied(n)), cases.timeline(*BUSY, n=n)
+    grid = np.linspace(3.0, 57.0, parts)
+    course = solve.courses_on_grid(d, line, grid)[COURSES.index(which)]
+    found = window(d, line, which, 2.0, 4.0, 3.0, 57.0)
+    step = grid[1] - grid[0]
+    inside, above = (course >= 2) & (course <= 4), course > 4
+    first = np.where(inside.any(1), grid[inside.argmax(1)], np.inf)
+    last = np.where(above.any(1), grid[parts - 1 - above[:, ::-1].argmax(1)], -np.inf)
+    for ours, theirs in ((found.first_inside_min, first), (found.last_above_min, last)):
+        np.testing.assert_array_equal(np.isfinite(ours), np.isfinite(theirs))
+        np.testing.assert_allclose(ours, theirs, atol=1.01 * step)
+    np.testing.assert_allclose(found.highest_at_min, grid[course.argmax(1)], atol=1.01 * step)
+    np.testing.assert_allclose(found.lowest_at_min, grid[course.argmin(1)], atol=1.01 * step)
+
+
+@pytest.mark.parametrize("which", COURSES)
+def test_moments_are_brentqs(which):
+    """scipy.optimize.brentq on the course, rising into the range and, infusion over, falling below its upper limit."""
+    d, line = cases.people(cases.PROPOFOL), cases.timeline((0.0, 0.0, 12.0), (60.0, 0.0, 0.0))
+    found = window(d, line, which, 2.0, 4.0, 0.0, 200.0)
+    into = brentq(lambda t: value(d, line, which, t) - 2.0, 1e-6, 60.0, xtol=1e-13)
+    out = brentq(lambda t: value(d, line, which, t) - 4.0, 60.0 if which == "plasma" else 61.0, 200.0, xtol=1e-13)
+    assert found.first_inside_min[0] == pytest.approx(into, rel=1e-12)
+    assert found.last_above_min[0] == pytest.approx(out, rel=1e-12)
+
+
+def test_a_dose_that_jumps_over_the_range_is_not_its_first_time_in_range():
+    line = cases.timeline((10.0, 1000.0, 0.0))
+    found = window(one_compartment(), line, "plasma", 20.0, 50.0, 0.0, 30.0)
+    assert found.first_inside_min[0] == found.last_above_min[0] == pytest.approx(10 + math.log(2) / 0.1, rel=1e-13)
+    assert found.highest_at_min[0] == 10.0
 
 
 # ---- edges, instants, levels ----
