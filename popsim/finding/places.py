@@ -76,11 +76,19 @@ def times(quantity: Quantity, factor: float) -> Quantity:
 
 
 def with_doses(protocol: ProtocolSection, change: Callable[[Quantity], Quantity]) -> ProtocolSection:
-    """The protocol with every amount and rate changed, in the steps and in their bands."""
+    """The protocol with every amount and rate changed, in the steps and in their bands.
+
+    Raises ProblemsError for a step that gives neither: it would silently stay as it is.
+    """
     def changed(section):
         return section.model_copy(update={key: change(dose) for key in ("amount", "rate")
                                           if (dose := getattr(section, key)) is not None})
 
+    unmoved = [number for number, step in enumerate(protocol.dose, 1)
+               if all(one.amount is None and one.rate is None for one in (step, *step.band))]
+    if unmoved:
+        raise ProblemsError(Problem(f'protocol "{protocol.name}", dose {number}', "neither amount nor rate",
+                                    "an amount or a rate, which a search can multiply") for number in unmoved)
     doses = [changed(step).model_copy(update={"band": [changed(band) for band in step.band]})
              for step in protocol.dose]
     return protocol.model_copy(update={"dose": doses})

@@ -11,11 +11,13 @@ import pytest
 from scipy.optimize import brentq
 from scipy.stats import norm
 
+from covariates.problems import ProblemsError
 from popsim.estimate import paired_difference
 from popsim.finding.counting import count, fresh
 from popsim.finding.dose import confirm, label, search
 from popsim.finding.holding import hold
 from popsim.finding.places import read_vary
+from popsim.study_file import DoseSection
 
 find_cases = runpy.run_path(str(Path(__file__).with_name("find_cases.py")))
 RATE = {"a": 'rate = "1 mg/min"\nuntil = "600 min"'}
@@ -113,6 +115,9 @@ def test_all_doses_are_multiplied_together(tmp_path):
     varied, = read_vary(question.section.find, protocol, "study.toml")
     changed = [varied.place.put(protocol, one) for one in varied.values]
     assert [(one.dose[0].amount.value, one.dose[1].rate.value) for one in changed] == [(5, 0.5), (10, 1.0), (15, 1.5)]
+    without = protocol.model_copy(update={"dose": [protocol.dose[0], DoseSection()]})
+    with pytest.raises(ProblemsError, match="dose 2"):
+        varied.place.put(without, varied.values[0])
 
 
 def test_paired_differences_are_those_of_the_tally(tmp_path):
