@@ -12,10 +12,13 @@ from pathlib import Path
 import numpy as np
 
 from covariates.problems import Problem, ProblemsError, nearest
+from covariates.sheet import DrugModel
 from covariates.units import parse_quantity
 from popsim.clusters import worth_of
 from popsim.estimate import paired_difference, wilson
 from popsim.finding.wishes import EVERY, Wish
+from popsim.lookup import Lookup
+from popsim.patients.draw import blocks
 from popsim.records import BlockRows, Study, Target
 from popsim.run import simulate
 from popsim.study import resolve_study
@@ -79,7 +82,7 @@ def read_asked(section: StudyFile, path: Path) -> Asked:
             problems.append(Problem(where, f'"{wish.group}", no group of this study',
                                     ", ".join([*base.group_names, EVERY]), nearest(wish.group, base.group_names)))
         try:
-            limits += [_limit_target(wish, target, where)] if wish.ever else []
+            limits += [_limit_target(wish, target, base.models[0], where)] if wish.ever else []
         except ProblemsError as error:
             problems += error.problems
         wishes.append((wish, len(limits) if wish.ever else 0))
@@ -88,9 +91,11 @@ def read_asked(section: StudyFile, path: Path) -> Asked:
     return Asked(section, path, base, target, tuple(wishes), tuple(limits))
 
 
-def _limit_target(wish: Wish, target: Target, where: str) -> Target:
+def _limit_target(wish: Wish, target: Target, model: DrugModel, where: str) -> Target:
     """The wish "ever above X" as a target: always at or below X in the same window."""
     quantity = wish.course or target.quantity
+    if quantity == "effect_site" and not model.has_effect_site:
+        raise ProblemsError(Problem(where, f'"at the effect site", and {model.name} has none', "in plasma"))
     kind = "area" if "area" in quantity else "number" if quantity in ("effect", "response") else "concentration"
     limit = parse_quantity(wish.limit, [kind], where)
     low, high = (-np.inf, limit.value) if wish.ever == "above" else (limit.value, np.inf)
@@ -98,6 +103,22 @@ def _limit_target(wish: Wish, target: Target, where: str) -> Target:
     return replace(target, name=wish.text, quantity=quantity, low=low, high=high, unit=limit.unit,
                    range_text=f"{'<=' if wish.ever == 'above' else '>='} {limit.text}",
                    rule="always" if course else target.rule, rule_text="always" if course else target.rule_text)
+
+
+def cut_up(study: Study, name: str, width: float | None, most: int, where: str) -> np.ndarray:
+    """The first patients' values of a covariate that is to be cut into cells of a width.
+
+    Raises ProblemsError for a covariate that is no number, or a width that leaves more cells than `most`.
+    """
+    values = np.asarray(Lookup(next(iter(blocks(study.population, study.seed))).attributes)(name))
+    if values.dtype.kind != "f":
+        raise ProblemsError(Problem(where, f'"{name}", which is no number',
+                                    "a covariate that is a number, such as weight or age"))
+    cells = np.ptp(values) / width if width else 0
+    if cells > most:
+        raise ProblemsError(Problem(where, f"{cells:,.0f} cells of {width:g} across {name}", f"at most {most}",
+                                    "wider cells"))
+    return values
 
 
 @dataclass

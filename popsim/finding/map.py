@@ -8,13 +8,13 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError
 from popsim.estimate import wilson
-from popsim.finding.counting import Asked, Counts, count, fresh
+from popsim.finding.counting import Asked, Counts, count, cut_up, fresh
 from popsim.lookup import Lookup
-from popsim.patients.draw import blocks
 from popsim.records import BlockRows, Study
 from popsim.study_file import ProtocolSection
 
 FINE = 5  # regions are looked for in cells so much narrower than those of the table
+MOST_CELLS = 100
 CELLS = 12  # about so many across and up where the study does not say how wide they are
 MOST_REGIONS = 4  # of each sex
 AGAINST = 3.0  # patients where more attain than the level count so much against a region, so that it is no mixture
@@ -82,13 +82,9 @@ def search_map(asked: Asked, protocol: ProtocolSection, threads: int = 1) -> Map
 def _axes(asked: Asked, study: Study) -> tuple[Axis, Axis]:
     """The two axes, with cells of a round width where the study does not say."""
     section = asked.section.find.map
-    lookup = Lookup(next(iter(blocks(study.population, study.seed))).attributes)
     axes = []
     for key, name, width in (("across", section.across, section.across_every), ("up", section.up, section.up_every)):
-        values = np.asarray(lookup(name))
-        if values.dtype.kind != "f":
-            raise ProblemsError(Problem(f"{asked.path.name}: find, map: {key}", f'"{name}", which is no number',
-                                        "a covariate that is a number, such as weight or age"))
+        values = cut_up(study, name, width, MOST_CELLS, f"{asked.path.name}: find, map: {key}")
         spread = np.ptp(np.quantile(values, (0.005, 0.995)))
         axes.append(Axis(name, width or _round_width(spread / CELLS)))
     return axes[0], axes[1]

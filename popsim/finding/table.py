@@ -18,14 +18,14 @@ import numpy as np
 from covariates.formula import compile_formula
 from covariates.problems import Problem, ProblemsError
 from covariates.units import Quantity, parse_quantity, to_unit
-from popsim.finding.counting import Asked, Counts, count
+from popsim.finding.counting import Asked, Counts, count, cut_up
 from popsim.finding.dose import in_fresh
 from popsim.finding.places import Place, range_of, read_place
 from popsim.finding.wishes import EVERY
 from popsim.records import BlockRows
 from popsim.study_file import BandSection, FindTableSection, ProtocolSection
 
-MOST_DOSES = 150
+MOST_DOSES, MOST_SLICES = 150, 150
 LEAST_SHARE = 0.01  # a band holds at least this share of the patients
 WEIGHINGS, FIRST_WEIGHT = 60, 4.0
 
@@ -80,6 +80,7 @@ def read_table(asked: Asked, protocol: ProtocolSection) -> tuple[FindTableSectio
     if section.round_to.kind != kind or section.round_to.value == 0:
         raise ProblemsError(Problem(f"{where}: round_to", f'"{section.round_to.text}"',
                                     'an amount, such as "50 mg"' if kind == "mass" else 'a rate, such as "50 mg/h"'))
+    cut_up(asked.study([protocol]), section.by, section.edges_to, MOST_SLICES, f"{where}: by")
     return section, place, _doses(section, kind, f"{where}: doses")
 
 

@@ -152,6 +152,11 @@ def test_the_proposal_goes_to_other_patients(tmp_path):
     assert (counts.flags[0] != count(result.asked.study([result.protocol])).flags[0]).any()
 
 
+def test_an_effect_site_that_the_model_lacks_is_told(tmp_path):
+    with pytest.raises(ProblemsError, match="find: wish 1"):
+        asked(tmp_path, '[find]\nwish = ["at most 5 % ever above 8 mg/L at the effect site"]\n')
+
+
 def test_failed_patients_count_against_every_wish(tmp_path):
     """Two in three patients get no dose: no headline, no wish met, and each of them counts as ever above."""
     doses = {"a": 'rate = "1 mg/min"\nuntil = "600 min"\nwhere = "age < 40"'}

@@ -99,6 +99,9 @@ def test_bands_in_words():
     (table_file().replace("10 mg/h", "10 mg", 2), "round_to"),
     (table_file(doses="1 to 9 mg/h"), "2 to 150 doses"),
     (table_file(doses="10 to 120 mg/kg/h"), "a rate per kg"),
+    (table_file(by="sex"), "no number"),
+    (table_file(by="wieght"), 'did you mean "weight"?'),
+    (table_file(edges=0.01), "at most 150"),
 ])  # fmt: skip
 def test_a_table_that_cannot_be_made_is_told(tmp_path, find, said):
     with pytest.raises(ProblemsError) as error:
@@ -146,6 +149,7 @@ def test_neighbours_are_sums_over_a_box():
     (MAP.replace('"age"', '"weight"'), "twice"),
     (MAP.replace('"age"', '"sex"'), "no number"),
     (MAP.replace('"age"', '"aeg"'), 'did you mean "age"?'),
+    (MAP.replace("across_every = 10", "across_every = 0.01"), "wider cells"),
 ])
 def test_a_map_that_cannot_be_made_is_told(tmp_path, find, said):
     with pytest.raises(ProblemsError) as error:
