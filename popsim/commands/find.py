@@ -10,6 +10,7 @@ from pathlib import Path
 
 import click
 
+from covariates.problems import ProblemsError
 from popsim.commands.judge import MOST_THREADS, default_threads
 
 LONG_WORK = 2_000_000  # patients x protocols x targets: beyond, a small part is timed first and the cost told
@@ -100,8 +101,6 @@ def _run(name: str, study: Path, search: Callable, given: dict, options: dict) -
     given |= {key: options[key] for key in ("protocol", "target") if options[key] is not None}
     section, faults = read_study_file(study)
     if faults:
-        from covariates.problems import ProblemsError
-
         raise ProblemsError(faults)
     if given := {key: value for key, value in given.items() if value}:
         stated = read_find(given)
@@ -110,8 +109,7 @@ def _run(name: str, study: Path, search: Callable, given: dict, options: dict) -
                 update={key: getattr(stated.map, key) for key in given["map"]})})
         section = section.model_copy(update={"find": section.find.model_copy(
             update={key: getattr(stated, key) for key in given})})
-    asked = read_asked(section, study)
-    protocol = chosen_protocol(section, study.name)
+    asked, protocol = _both(lambda: read_asked(section, study), lambda: chosen_protocol(section, study.name))
     folder = options["out"] or Path(f"{study.stem}_{name}")
 
     from popsim.output import check_folder, check_format, written_aside
@@ -141,6 +139,19 @@ def _run(name: str, study: Path, search: Callable, given: dict, options: dict) -
     if options["as_json"] or not quiet:
         click.echo(as_json_text(answer) if options["as_json"] else terminal_text(answer, bold))
     told(f"\nResults in {folder}")
+
+
+def _both(*readers: Callable) -> list:
+    """What each reader returns, or the problems of all of them at once."""
+    found, problems = [], []
+    for read in readers:
+        try:
+            found.append(read())
+        except ProblemsError as error:
+            problems += error.problems
+    if problems:
+        raise ProblemsError(problems)
+    return found
 
 
 def _ready(asked, protocols: list, threads: int, told: Callable[[str], None], what: str) -> None:

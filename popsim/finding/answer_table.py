@@ -61,7 +61,7 @@ def _volume(found: TableFound, dose) -> float:
     strength = found.asked.study([found.protocol]).protocols[0].strength_mg_per_ml
     if strength is None:
         return float("nan")
-    return dose.value / strength * (60 if dose.kind == "rate" else 1)
+    return float(f"{dose.value / strength * (60 if dose.kind == 'rate' else 1):.12g}")  # 12, not 11.999999999999998
 
 
 def _volume_text(found: TableFound, dose) -> str:
