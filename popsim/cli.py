@@ -10,6 +10,7 @@ import click
 from covariates.problems import ProblemsError
 from popsim import __version__
 from popsim.commands.check import check
+from popsim.commands.draw import draw
 from popsim.commands.find import find
 from popsim.commands.judge import judge
 from popsim.commands.models import models
@@ -31,6 +32,7 @@ def popsim() -> None:
     popsim check study.toml    see the ward card before anything is simulated
     popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
+    popsim draw study          draw a finished run's pictures again
     popsim find dose study.toml    or size, table, map: what to write instead
     popsim models              the published drug models, and one of them whole
     popsim person ...          every covariate of one person, side by side
@@ -40,7 +42,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, patients, judge, models, person, find):
+for command in (new, check, patients, judge, draw, models, person, find):
     popsim.add_command(command)
 
 

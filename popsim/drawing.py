@@ -1,9 +1,10 @@
-"""How every picture looks and is saved: palette, type, a page laid out in inches, SVG without date or random ids."""
+"""How every picture looks and is saved: palette, type, a page laid out in inches, files without date or random ids."""
 
 from __future__ import annotations
 
 import io
 import re
+from collections.abc import Sequence
 from dataclasses import dataclass
 from functools import lru_cache
 from html import escape
@@ -22,6 +23,7 @@ from matplotlib.transforms import Bbox
 
 WIDTH = 9.0
 HOURS_FROM_MIN = 240.0
+PNG_DPI = 200
 MARGIN = 0.12
 INK, FAINT, RULE, SHADE = "#1a1a1a", "#595959", "#d9d9d9", "#f0f0f0"
 # Source: Okabe and Ito 2008, Color Universal Design (from memory); without their yellow, too pale for a line on white.
@@ -161,7 +163,7 @@ class Page:
             self.text(left, self.top, line, size, **how)
             self.top += 1.4 * size / 72
 
-    def key(self, names: list[str]) -> None:
+    def key(self, names: Sequence[str]) -> None:
         """The protocols' strokes and names, side by side as far as they fit; moves `top`."""
         left, height, stroke = MARGIN, 0.21, 0.38
         for index, name in enumerate(names):
@@ -178,11 +180,24 @@ class Page:
         self.top += height + 0.06
 
 
+def _signed(kind: str, title: str, description: str) -> dict[str, str | None]:
+    """What a file says of itself: popsim's name, by which a later run knows it, and no date."""
+    if kind == "svg":  # title and description become elements, which screen readers know
+        return {"Date": None, "Creator": "popsim"}
+    if kind == "png":
+        return {"Software": "popsim", "Title": title, "Description": description}
+    return {"Creator": "popsim", "Producer": "popsim", "Title": title, "Subject": description, "CreationDate": None}
+
+
 def save(page: Page, path: Path, title: str, description: str) -> None:
-    """Write the SVG: same bytes on repeat, with title and description for those who cannot see it."""
-    buffer = io.BytesIO()
+    """Write SVG, PNG or PDF by the path's ending: same bytes on repeat, with title and description inside."""
+    buffer, kind = io.BytesIO(), path.suffix[1:]
     used = Bbox([[0, page.height - page.top - MARGIN], [WIDTH, page.height]])
-    page.figure.savefig(buffer, format="svg", metadata={"Date": None, "Creator": "popsim"}, bbox_inches=used)
+    page.figure.savefig(buffer, format=kind, dpi=PNG_DPI, metadata=_signed(kind, plain(title), plain(description)),
+                        bbox_inches=used)
+    if kind != "svg":
+        path.write_bytes(buffer.getvalue())
+        return
     svg = buffer.getvalue().decode("utf-8")
     names = '<title id="popsim-title">{}</title>\n <desc id="popsim-description">{}</desc>'
     said = names.format(escape(plain(title)), escape(plain(description)))

@@ -5,7 +5,8 @@ from __future__ import annotations
 import pandas as pd
 
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
-from popsim.records import Study, Target
+from popsim.finished import FinishedRun
+from popsim.records import Target
 from popsim.words import percent, window
 
 NO_HEADLINE = f"No headline: more than {MOST_FAILED_PERCENT} % could not be simulated or went without a dose"
@@ -24,16 +25,16 @@ def has_headline(row: pd.Series) -> bool:
     return bool(row.patients > 0 and not no_headline(row.failed, row.patients))
 
 
-def attainment_headline(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame) -> str:
+def attainment_headline(run: FinishedRun, comparison: pd.DataFrame, attainment: pd.DataFrame) -> str:
     """A picture's title: what the rows of one model and one target say."""
     everyone = rows_where(attainment, group="all")
     if not all(has_headline(row) for row in everyone.itertuples()):
         return NO_HEADLINE
-    if len(study.protocols) == 1:
+    if len(run.protocols) == 1:
         shares = [row.attained for row in attainment.itertuples() if has_headline(row)]
         by_group = f"; by group {percent(min(shares))} to {percent(max(shares))} %" if len(shares) > 1 else ""
         return f"{percent(everyone.iloc[0].attained)} % of all patients attain the target{by_group}"
-    if len(study.protocols) == 2:
+    if len(run.protocols) == 2:
         return _pair_headline(comparison, attainment)
     best = everyone.loc[everyone["attained"].idxmax()]
     unclear = [pair.protocol_b if pair.protocol_a == best.protocol else pair.protocol_a
@@ -82,18 +83,33 @@ def _listed(names: list[str], what: str) -> str:
     return " and ".join(f'"{name}"' for name in names) if len(names) < 3 else f"{len(names)} {what}"
 
 
-def range_headline(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, target: Target) -> str:
+def range_headline(run: FinishedRun, comparison: pd.DataFrame, attainment: pd.DataFrame, target: Target) -> str:
     """A title for the course of the share in range: how much of the window all patients spend in range on average."""
     everyone = rows_where(attainment, group="all")
     if not all(has_headline(row) for row in everyone.itertuples()):
         return NO_HEADLINE
-    if len(study.protocols) > 3:
+    if len(run.protocols) > 3:
         everyone = everyone.loc[[everyone["time_in_range"].idxmin(), everyone["time_in_range"].idxmax()]]
-    joined = " to " if len(study.protocols) > 3 else ", "
-    several = len(study.protocols) > 1
+    joined = " to " if len(run.protocols) > 3 else ", "
+    several = len(run.protocols) > 1
     shares = joined.join(f"{percent(row.time_in_range)} %" + (f' with "{row.protocol}"' if several else "")
                          for row in everyone.itertuples())
     title = f"{'In range' if target.instant else 'Mean time in range,'} {window(target)}: {shares}"
     pairs = rows_where(comparison, group="all")
     unclear = len(pairs) == 1 and spans_zero(pairs.iloc[0])
     return title + ("; no clear difference in attainment" if unclear else "")
+
+
+def sides_headline(attainment: pd.DataFrame, target: Target) -> str:
+    """A title for who is on which side: mean share of the window below and above, of all patients."""
+    everyone = rows_where(attainment, group="all")
+    if not all(has_headline(row) for row in everyone.itertuples()):
+        return NO_HEADLINE
+    lead = f"Out of range {window(target)}, on average"
+    if len(everyone) > 3:
+        below, above = ([percent(end) for end in (side.min(), side.max())]
+                        for side in (everyone["time_below"], everyone["time_above"]))
+        return f"{lead}: {' to '.join(below)} % below and {' to '.join(above)} % above, by protocol"
+    shares = "; ".join(f"{percent(row.time_below)} % below and {percent(row.time_above)} % above"
+                       + (f' with "{row.protocol}"' if len(everyone) > 1 else "") for row in everyone.itertuples())
+    return f"{lead}: {shares}"

@@ -17,9 +17,10 @@ from covariates.problems import Problem, ProblemsError
 from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
-TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "patients", "courses",
-               "along", "confirm", "sizes", "simplicity", "ward_card", "map", "regions")
-OURS = {"record.json", "report.html", "ward_card.txt", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
+TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "people", "attainment_map", "body_size",
+               "patients", "courses", "along", "confirm", "sizes", "simplicity", "ward_card", "map", "regions")
+OURS = {"record.json", "report.html", "ward_card.txt",
+        *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 
 def check_folder(folder: Path, overwrite: bool) -> None:
@@ -59,6 +60,16 @@ def written_aside(folder: Path) -> Iterator[Path]:
         shutil.rmtree(aside, ignore_errors=True)
 
 
+@contextmanager
+def replaced_whole(folder: Path) -> Iterator[Path]:
+    """A scratch folder whose files take their place in `folder` only when all are written; the others there stay."""
+    with tempfile.TemporaryDirectory(prefix=".unfinished-", dir=folder) as aside:
+        yield Path(aside)
+        for path in sorted(Path(aside).iterdir()):
+            path.chmod(0o666 & ~_umask())
+            os.replace(path, folder / path.name)
+
+
 def _umask() -> int:
     mask = os.umask(0)
     os.umask(mask)
@@ -66,11 +77,11 @@ def _umask() -> int:
 
 
 def _is_picture(path: Path) -> bool:
-    """Whether this is an SVG that came from popsim, which signs its pictures."""
-    if path.suffix != ".svg" or not path.is_file():
+    """Whether this is a picture that came from popsim, which signs its pictures: a PDF near its end."""
+    if path.suffix not in (".svg", ".png", ".pdf") or not path.is_file():
         return False
-    with path.open(encoding="utf-8", errors="replace") as file:
-        return "popsim" in file.read(2000)
+    written = path.read_bytes()
+    return b"popsim" in written[:2000] or (path.suffix == ".pdf" and b"popsim" in written)
 
 
 def write_tables(folder: Path, tables: dict[str, pd.DataFrame], kind: str) -> None:

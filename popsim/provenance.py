@@ -60,7 +60,7 @@ def _model_record(study, model: DrugModel) -> dict[str, Any]:
     return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
             "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
             "spread_not_lognormal": forms_used(model, study.variability),
-            "spread_note": model.spread_note, "cautions": list(model.cautions)}
+            "spread_note": model.spread_note, "cautions": list(model.cautions), "effect": plain(model.effect)}
 
 
 def plain(value: Any) -> Any:

@@ -6,6 +6,9 @@ Every number is a cell of the run's tables or a count of its record, written as 
 from __future__ import annotations
 
 import re
+from base64 import b64encode
+from hashlib import sha256
+from importlib import resources
 from pathlib import Path
 from typing import Any
 
@@ -15,13 +18,19 @@ from markupsafe import Markup
 
 from covariates.sheet import DrugModel
 from covariates.units import to_unit
+from popsim.finished import own_site
 from popsim.headlines import has_headline, rows_where
-from popsim.pictures import INTERVALS_SAY, Picture
+from popsim.pictures.shown import INTERVALS_SAY, Picture
+from popsim.population_tally import LEAN
 from popsim.records import Protocol, Study, Target
 from popsim.ward_card import card_lines, describe, example_people, step_as_written
 from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line
 
 ATTRIBUTE_UNITS = {"age": "years", "weight": "kg", "height": "cm", "bmi": "kg/m2"}
+MEASURES = {"age": ("Age", "years"), "weight": ("Weight", "kg"), "height": ("Height", "cm"), "bmi": ("BMI", "kg/m2"),
+            LEAN: ("Lean mass", "kg")}
+ASKED = ["asked", "protocol_a", "protocol_b", "attained_a", "attained_b", "difference", "difference_low",
+         "difference_high", "same_answer"]
 CHANGED = ("capped", "floored", "rounded", "impossible", "undosed")  # what can befall a dose, as doses.csv counts it
 SOURCES = {"survey": "adults drawn as a national household survey of the United States finds them",
            "list": "the people of a list",
@@ -35,20 +44,26 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
     environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
                               trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
     environment.globals |= {"percent": percent, "points": points, "interval": _interval}
+    script = (resources.files("popsim") / "templates" / "report.js").read_text(encoding="utf-8")
+    drawn = [{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
+             for number, picture in enumerate(pictures, 1)]
     html = environment.get_template("report.html.j2").render(
         study=study,
         record=record,
         intervals_say=INTERVALS_SAY,
         targets=[target_line(target) for target in study.targets],
         answers=[_answer(study, tables, model, target) for model in study.models for target in study.targets],
-        pictures=[{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
-                  for number, picture in enumerate(pictures, 1)],
+        script=Markup(script),  # our own; the browser runs it by its digest and runs no other
+        script_digest=f"sha256-{b64encode(sha256(script.encode()).digest()).decode()}",
+        pictures=[one for one in drawn if not _of_models(one)],
         who=_who(study, record),
-        people=_groups_of_people(study, tables["attainment"], record),
+        measures=MEASURES.values(),
+        people=_groups_of_people(study, tables, record),
         ward=_cards(study),
         doses=[_doses(protocol, tables["doses"]) for protocol in study.protocols],
         models=[_model(model, found) for model, found in zip(study.models, record["models"], strict=True)],
-        left_out=_left_out(study, tables["attainment"], record),
+        left_out=_left_out(study, tables, record),
+        sensitivity=_sensitivity(study, tables, [one for one in drawn if _of_models(one)]),
         run_end=clock(study.until_min),
     )
     path.write_text(html, encoding="utf-8")
@@ -124,14 +139,23 @@ def _range(low: float, high: float, unit: str) -> str:
     return f"from {low:g} {unit}" if high == float("inf") else f"{low:g} to {high:g} {unit}"
 
 
-def _groups_of_people(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) -> list[dict[str, Any]]:
-    """For each group: its condition, its size, and for each model the share outside it."""
+def _groups_of_people(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any]) -> list[dict[str, Any]]:
+    """For each group: its condition, its size, quantiles of its people, and for each model the share outside it."""
     conditions = {"all": "everyone"} | {name: where.text for name, where in study.groups}
-    first = rows_where(attainment, protocol=study.protocols[0].name, target=study.targets[0].name)
+    people = tables["people"].set_index("group")
+    first = rows_where(tables["attainment"], protocol=study.protocols[0].name, target=study.targets[0].name)
     return [{"group": group, "where": conditions[group], "patients": record["counts"]["groups"][group],
+             "female": people.loc[group, "female"],
+             "cells": [_quantiles_cell(people.loc[group], measure) for measure in MEASURES],
              "outside": [rows_where(first, model=model.name, group=group).iloc[0].outside_model
                          for model in study.models]}
             for group in study.group_names]
+
+
+def _quantiles_cell(row: pd.Series, measure: str) -> tuple[str, str]:
+    """Median, and the 5th and 95th percentile: "48.6", "23.0 to 79.3"."""
+    low, median, high = (row[f"{measure}_{name}"] for name in ("p05", "p50", "p95"))
+    return ("-", "") if pd.isna(median) else (f"{median:.1f}", f"{low:.1f} to {high:.1f}")
 
 
 def _cards(study: Study) -> dict[str, Any]:
@@ -181,18 +205,22 @@ def _model(model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
     limits = [f"{_called(name)} {limit.text}" for name, limit in built_on.ranges.items()]
     if built_on.longest_infusion_min is not None:
         limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
-    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"], "forms": found["spread_not_lognormal"],
-            "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
+    return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
+            "forms": found["spread_not_lognormal"], "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
 
 
-def _left_out(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) -> dict[str, Any]:
-    """Who could not be simulated, who lies outside a model and by what, whose infusion is longer than was studied."""
+def _left_out(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any]) -> dict[str, Any]:
+    """Who could not be simulated, who gets an impossible dose or none, who lies outside a model and by what, whose
+    infusion is longer than was studied."""
     counts, total = record["counts"], record["counts"]["patients"]
-    everyone = rows_where(attainment, group="all", target=study.targets[0].name)
+    everyone = rows_where(tables["attainment"], group="all", target=study.targets[0].name)
     longest = {model.name: model.built_on.longest_infusion_min for model in study.models}
     return {
         "failed": counts["not_simulated"],
         "skipped": counts["list_rows_skipped"],
+        "doses": [(row.protocol, what, share) for row in rows_where(tables["doses"], group="all").itertuples()
+                  for what, share in (("get a dose that comes out as zero", row.share_impossible),
+                                      ("get no dose at all", row.share_undosed)) if share > 0],
         "by": [(one["model"], _called(one["attribute"]),
                 [(group, number / max(counts["groups"][group], 1)) for group, number in one["patients"].items()])
                for one in counts["outside_by"]],
@@ -201,6 +229,43 @@ def _left_out(study: Study, attainment: pd.DataFrame, record: dict[str, Any]) ->
         "long": [(row.model, row.protocol, clock(longest[row.model]), row.infusion_beyond_model)
                  for row in everyone.itertuples() if row.infusion_beyond_model > 0],
     }
+
+
+def _of_models(drawn: dict[str, Any]) -> bool:
+    return drawn["picture"].file_name.startswith("models_compared")
+
+
+def _sensitivity(study: Study, tables: dict[str, pd.DataFrame], pictures: list[dict[str, Any]]) -> dict[str, Any]:
+    """What other models, and other ways of asking where the run has them, make of the answer."""
+    lines, several, asked = [], len(study.models) > 1, tables.get("robustness")
+    if not several and asked is None:
+        lines.append("Judged under one published model alone: this run does not tell how far the answer leans on it. "
+                     "[drug] repeat_with asks other models of the same people.")
+    if several:
+        lines.append("The same patients and protocols under each model. What the models differ by is no interval: more "
+                     "models could lie further apart.")
+    if several and any(own_site(target) for target in study.targets):
+        lines.append("Effect sites of different models are different sites: no spread between models is given.")
+    changed = [] if asked is None else [row for row in asked.itertuples() if row.same_answer == "no"]
+    lines += [f'The answer changes in the group "{row.group}", {row.asked} ({row.target}).' for row in changed]
+    return {"lines": lines, "pictures": pictures,
+            "models": [_under_models(study, tables["attainment"], target) for target in study.targets if several],
+            "asked": [] if asked is None else list(rows_where(asked, group="all").reindex(columns=ASKED).itertuples())}
+
+
+def _under_models(study: Study, attainment: pd.DataFrame, target: Target) -> dict[str, Any]:
+    """Attainment of one target under each model, with the points between the lowest and the highest."""
+    rows, spread = [], not own_site(target)
+    for group in study.group_names:
+        for protocol in study.protocols:
+            found = rows_where(attainment, target=target.name, group=group, protocol=protocol.name)
+            fine = [has_headline(row) for row in found.itertuples()]
+            rows.append({"group": group, "protocol": protocol.name,
+                         "cells": [percent(row.attained) if ok else "no headline"
+                                   for row, ok in zip(found.itertuples(), fine, strict=True)],
+                         "spread": f"{100 * (found['attained'].max() - found['attained'].min()):.1f}"
+                         if all(fine) else "-"})
+    return {"title": target.name if len(study.targets) > 1 else "", "spread": spread, "rows": rows}
 
 
 def _inlined(svg: str, number: int) -> Markup:

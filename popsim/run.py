@@ -44,8 +44,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              progress: Callable[[int], None] | None = None, attainment_only: bool = False) -> Findings:
     """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
 
-    attainment_only   count neither over time, nor pairs of protocols, nor doses: what a search over many protocols
-                      does without
+    attainment_only   as a search over many protocols wants it: nothing over time, no pairs, no doses, no cells of people
     """
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)
@@ -119,6 +118,7 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
+    cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
         tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
@@ -133,6 +133,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
         disposition = solve.disposition(parameters.values)
         status = disposition.status
         tally.outside[m] += members.T @ parameters.outside
+        if tally.population:
+            tally.population.add_outside(m, cell, parameters.outside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -145,6 +147,8 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
+                if tally.population:
+                    tally.population.add_judged((m, p, t), cell, judged[p, t])
                 if tally.clusters is not None:
                     tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
             if not tally.over_time:

@@ -11,6 +11,7 @@ from popsim import solve
 from popsim.compare import against_reference, protocol_pairs
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline, wilson
 from popsim.flagged import flag_notes
+from popsim.population_tables import POPULATION_TABLES
 from popsim.records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, decimal_quantile, decimal_value, range_names
 
@@ -132,7 +133,8 @@ def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
     return math.fsum(counted[keys] * waste) / int(counted.sum())
 
 
-TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses}
+TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses,
+          **POPULATION_TABLES}
 
 
 def all_tables(study: Study, tally: Tally) -> dict[str, pd.DataFrame]:

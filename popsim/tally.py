@@ -11,6 +11,7 @@ from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.clusters import ClusterTally
+from popsim.population_tally import PopulationTally
 from popsim.records import Judged, Received, Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
@@ -95,6 +96,7 @@ class Tally:
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
+    population: PopulationTally | None
     over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
     failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
@@ -103,7 +105,7 @@ class Tally:
 
     @classmethod
     def empty(cls, study: Study, times: int, origins: int = 0, attainment_only: bool = False) -> Tally:
-        """Nothing counted yet; `attainment_only` leaves out the counts over time, of pairs and of doses."""
+        """Nothing counted yet; `attainment_only` leaves out the counts over time, of pairs, doses and people."""
         groups, times = len(study.group_names), 0 if attainment_only else times
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -134,6 +136,7 @@ class Tally:
             doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
             over_time=not attainment_only,
+            population=None if attainment_only else PopulationTally.empty(study),
             clusters=clusters,
         )
 
@@ -190,7 +193,7 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap]
+    found = [tally.patients, tally.overlap, *(tally.population.arrays() if tally.population else [])]
     for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
     for table in (tally.targets, tally.pairs):

@@ -56,10 +56,11 @@ def judge(study: Path, out: Path | None, overwrite: bool, tables_only: bool, no_
         record = record_of(findings, f"popsim judge {study.name}", notes)
         write_record(aside, record)
         if not tables_only:
-            from popsim.pictures import draw_all
+            from popsim.finished import read_run
+            from popsim.pictures.album import draw_all
             from popsim.report import write_report
 
-            pictures = draw_all(resolved, tables, aside)
+            pictures = draw_all(read_run(aside), aside)
             write_report(resolved, tables, record, pictures, aside / "report.html")
         bold = sys.stdout.isatty() and "NO_COLOR" not in os.environ
         said = as_json_text(resolved, tables, notes) if as_json else summary(resolved, tables, notes, bold)

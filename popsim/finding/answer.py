@@ -15,7 +15,7 @@ from popsim.cautions import CAUTIONS
 from popsim.estimate import no_headline
 from popsim.finding.counting import Asked, Counts, fresh_line
 from popsim.finding.holding import hold, share_of
-from popsim.pictures import Picture
+from popsim.pictures.shown import Picture
 from popsim.tables import FEW_PATIENTS
 from popsim.words import percent, points, target_line
 

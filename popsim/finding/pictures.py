@@ -20,7 +20,7 @@ from popsim.finding.dose import DoseFound, label
 from popsim.finding.map import SEXES, MapFound, neighbours
 from popsim.finding.size import AGE_CLASSES, BMI_CLASSES, PRACTICAL, SizeFound
 from popsim.finding.table import TableFound
-from popsim.pictures import INTERVALS_SAY, Picture
+from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.words import percent, target_line
 
 ROOM = WIDTH - 2 * MARGIN

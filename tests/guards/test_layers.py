@@ -17,14 +17,17 @@ FLOW = [
     "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_described", "study_population",
     "study_protocols", "study_targets", "study",
     "groups", "parameters", "flagged", "timeline", "solve", "effect", "target", "estimate", "clusters",
-    "tally", "people", "run", "compare", "tables", "words", "headlines", "ward_card", "provenance", "output",
-    "drawing", "pictures", "patient_pictures", "report", "terminal", "check_text", "progress",
+    "population_tally", "tally", "people", "run", "compare", "population_tables", "tables", "words", "ward_card",
+    "provenance", "output", "finished", "headlines",
+    "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
+    "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
+    "patient_pictures", "report", "terminal", "check_text", "progress",
     "derived", "model_text", "person_text",
     "finding.places", "finding.counting", "finding.holding", "finding.dose", "finding.size", "finding.table",
     "finding.map", "finding.answer", "finding.answer_dose", "finding.answer_size", "finding.answer_table",
     "finding.answer_map", "finding.pictures", "finding.leave",
-    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.find", "commands.models",
-    "commands.person", "cli",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw", "commands.find",
+    "commands.models", "commands.person", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -45,7 +48,7 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "finding", "commands") else {rest}
+            names |= inside if rest in ("", "patients", "finding", "commands", "pictures") else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names

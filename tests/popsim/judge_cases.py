@@ -7,10 +7,12 @@ from pathlib import Path
 import pandas as pd
 
 from covariates.problems import ProblemsError  # noqa: F401 (for the tests)
+from popsim.finished import FinishedRun, finished_run
+from popsim.provenance import record_of
 from popsim.records import Study
 from popsim.run import simulate
 from popsim.study import read_study
-from popsim.tables import all_tables
+from popsim.tables import all_tables, notes_of
 from popsim.tally import Findings
 
 SURVEY = 'source = "survey"\ncount = {count}\nage = "20 to 90 years"'
@@ -106,6 +108,11 @@ def people(folder: Path, rows: list[str], header: str = "sex,age,weight,height")
     """Write a list and return the [population] that names it."""
     (folder / "people.csv").write_text("\n".join([header, *rows]) + "\n", encoding="utf-8")
     return 'source = "list"\nfile = "people.csv"'
+
+
+def finished(asked: Study, findings: Findings, tables: dict[str, pd.DataFrame]) -> FinishedRun:
+    """The run as its record and tables tell it."""
+    return finished_run(record_of(findings, "popsim judge study.toml", notes_of(findings, tables)), tables)
 
 
 def judged(asked: Study, threads: int = 1) -> tuple[Findings, dict[str, pd.DataFrame]]:

@@ -2,7 +2,9 @@
 
 import re
 import runpy
+from base64 import b64encode
 from dataclasses import replace
+from hashlib import sha256
 from html.parser import HTMLParser
 from pathlib import Path
 from types import SimpleNamespace
@@ -10,7 +12,8 @@ from types import SimpleNamespace
 import pytest
 
 from popsim.cautions import CAUTIONS
-from popsim.pictures import draw_all
+from popsim.finished import finished_run
+from popsim.pictures.album import draw_all
 from popsim.provenance import record_of
 from popsim.report import write_report
 from popsim.tables import notes_of
@@ -65,7 +68,7 @@ def reported(folder: Path, count: int = 500, title: str = "A test", **asked) -> 
     study = replace(cases.study(folder, count=count, **asked), title=title)
     findings, tables = cases.judged(study)
     record = record_of(findings, "popsim judge study.toml", notes_of(findings, tables))
-    pictures = draw_all(study, tables, folder)
+    pictures = draw_all(finished_run(record, tables), folder)
     write_report(study, tables, record, pictures, folder / "report.html")
     html = (folder / "report.html").read_text(encoding="utf-8")
     return SimpleNamespace(study=study, tables=tables, record=record, pictures=pictures, html=html, page=Page(html),
@@ -79,14 +82,17 @@ def run(tmp_path_factory):
 
 
 def test_nothing_is_loaded_from_elsewhere(run):
+    assert [attributes for tag, attributes in run.page.elements if tag == "script"] == [{}]  # our own, inline
     for tag, attributes in run.page.elements:
-        assert tag not in ("script", "link", "iframe", "img", "object", "embed", "base", "form")
+        assert tag not in ("link", "iframe", "img", "object", "embed", "base", "form")
         assert not [name for name in attributes if name.startswith("on") or name in ("src", "srcset", "data")]
         for name in ("href", "xlink:href"):
             target = attributes.get(name, "#")
             assert target.startswith("#") or (tag == "a" and target.startswith("https://doi.org/10."))
     assert "@import" not in run.html and not re.search(r"url\((?!#)", run.html)
-    assert "default-src 'none'" in run.html
+    script = re.search(r"<script>(.*?)</script>", run.html, flags=re.DOTALL)[1]
+    digest = b64encode(sha256(script.encode()).digest()).decode()
+    assert f"default-src 'none'; style-src 'unsafe-inline'; script-src 'sha256-{digest}'" in run.html
 
 
 def test_every_sentence_target_note_and_caution(run):
@@ -118,8 +124,9 @@ def test_numbers_are_the_tables(run):
 
 
 def test_in_the_order_of_a_committee(run):
-    order = ["Who attains the target", "Protocol against protocol", "Pictures", "Groups against", "Who was simulated",
-             "ward cards", "Doses received", "The drug model", "Who is left out", "Notes", "Cautions", "How to repeat"]
+    order = ["Who was simulated", "ward cards", "Doses received", "The drug model", "Who attains the target",
+             "Protocol against protocol", "Groups against", "Pictures", "Who is left out", "How far the answer leans",
+             "Notes", "Cautions", "How to repeat"]
     headings = " ".join(re.findall(r"<h2>(.*?)</h2>", run.html))
     places = [headings.index(words) for words in order]
     assert places == sorted(places)
@@ -147,7 +154,7 @@ def test_ward_cards_doi_and_how_to_repeat(run):
 
 def test_pictures_stand_in_the_page_with_names_of_their_own(run):
     svgs = [attributes for tag, attributes in run.page.elements if tag == "svg"]
-    assert len(svgs) == len(run.pictures) == 2 and all(one["role"] == "img" for one in svgs)
+    assert len(svgs) == len(run.pictures) == 5 and all(one["role"] == "img" for one in svgs)
     ids = re.findall(r'\bid="([^"]+)"', run.html)
     assert len(ids) == len(set(ids)) and len(ids) > 50
     used = set(re.findall(r'(?:xlink:href="#|url\(#)([^")]+)', run.html))
@@ -166,7 +173,7 @@ def test_text_of_a_study_stays_text(tmp_path):
     title = "</title><script>alert(0)</script>"
     found = reported(tmp_path, count=60, title=title, protocols=HOSTILE,
                      groups={"<img src=x onerror=alert(3)>": "age < 65"})
-    assert not [tag for tag, _ in found.page.elements if tag in ("script", "img")]
+    assert [tag for tag, _ in found.page.elements if tag in ("script", "img")] == ["script"]  # our own alone
     assert not [name for _, attributes in found.page.elements for name in attributes if name.startswith("on")]
     for name in (title, *found.study.group_names, *(protocol.name for protocol in found.study.protocols)):
         assert name in found.page.text
@@ -184,7 +191,7 @@ def test_one_protocol_and_one_group(tmp_path):
 def test_many_failed_are_no_headline(run, tmp_path):
     tables = {name: table.copy() for name, table in run.tables.items()}
     tables["attainment"].loc[0, ["failed", "note"]] = [6, "6 patients failed: no headline"]
-    pictures = draw_all(run.study, tables, tmp_path)
+    pictures = draw_all(finished_run(run.record, tables), tmp_path)
     write_report(run.study, tables, run.record, pictures, tmp_path / "report.html")
     page = Page((tmp_path / "report.html").read_text(encoding="utf-8"))
     row = tables["attainment"].iloc[0]

@@ -25,6 +25,10 @@ COLUMNS = {  # the contract: these come first, in this order
     "difference_low, difference_high, only_a, only_b, both, neither, verdict",
     "groups": "model, protocol, target, group",
     "doses": "protocol, group",
+    "people": "group, patients, female, age_p05",
+    "attainment_map": "model, protocol, target, age_from, age_to, weight_from, weight_to, patients, failed, attained, "
+    "attained_low, attained_high, outside_model",
+    "body_size": "measure, sex, weight_from, weight_to, patients, p05, p25, p50, p75, p95, doses",
 }
 LIST = ["female,30,60,165", "male,40,80,180", "female,60,70,160", "male,70,90,175"]
 
@@ -66,16 +70,20 @@ def test_columns_stand_as_promised(run, name):
 
 def test_one_row_per(run):
     t = run.tables
-    assert {name: len(table) for name, table in t.items()} == {
+    expected = {
         "attainment": 2 * 4 * 2,
         "over_time": 2 * 4 * 2 * 10,
         "comparison": 4 * 2,
         "groups": 2 * 2 * 2,
         "doses": 2 * 4,
+        "people": 4,
     }
+    assert {name: len(t[name]) for name in expected} == expected
     for name, keys in {
         "attainment": ["model", "protocol", "group", "target"],
         "over_time": ["model", "protocol", "group", "target", "time_min"],
+        "attainment_map": ["model", "protocol", "target", "age_from", "weight_from"],
+        "body_size": ["measure", "sex", "weight_from"],
     }.items():
         assert not t[name].duplicated(keys).any()
 

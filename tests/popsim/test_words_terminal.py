@@ -2,7 +2,9 @@
 
 from __future__ import annotations
 
+import io
 import json
+import re
 import runpy
 from pathlib import Path
 from types import SimpleNamespace
@@ -13,6 +15,8 @@ import pytest
 from hypothesis import given
 from hypothesis import strategies as st
 
+from popsim.cli import run as popsim_run
+from popsim.progress import bar
 from popsim.tables import notes_of
 from popsim.terminal import WIDTH, as_json_text, summary
 from popsim.words import clock, finding, percent, points
@@ -282,3 +286,41 @@ def test_empty_groups_and_unknown_people_are_said_in_words(tmp_path):
     assert 'In the group "nobody": no patients.' in text
     assert text.count("no patients") >= 4  # the sentence, the rows of both protocols, the difference
     assert "propofol_marsh_1991: not known" in text
+
+
+class Screen(io.StringIO):
+    """A stream that says it is a terminal."""
+
+    def isatty(self) -> bool:
+        return True
+
+
+@pytest.mark.parametrize(("terminal", "no_color", "bold"),
+                         [(True, None, True), (True, "1", False), (False, None, False)])
+def test_escape_codes_only_on_a_terminal_without_no_color(tmp_path, monkeypatch, terminal, no_color, bold):
+    cases.study(tmp_path, count=60)
+    monkeypatch.delenv("NO_COLOR", raising=False)
+    if no_color:
+        monkeypatch.setenv("NO_COLOR", no_color)
+    screen = Screen() if terminal else io.StringIO()
+    monkeypatch.setattr("sys.stdout", screen)
+    arguments = ["judge", str(tmp_path / "study.toml"), "--out", str(tmp_path / "run"), "--tables-only"]
+    assert popsim_run(arguments) == 0
+    assert ("\033[1m" in screen.getvalue()) == bold
+    assert re.sub(r"\033\[[01]m", "", screen.getvalue()).isascii()
+
+
+def test_a_long_run_shows_the_time_left_on_a_terminal_only(monkeypatch):
+    clock = [1000.0]
+    monkeypatch.setattr("time.time", lambda: clock[0])
+    screen = Screen()
+    monkeypatch.setattr("sys.stderr", screen)
+    with bar(1000, "simulating") as advance:
+        for done in (100, 200, 300):
+            clock[0] += 10
+            advance(done)
+    assert "simulating" in screen.getvalue() and "30%" in screen.getvalue()
+    assert "00:01:10" in screen.getvalue()  # 300 in 30 s leave 700 in 70 s
+    monkeypatch.setattr("sys.stderr", io.StringIO())
+    with bar(1000, "simulating") as advance:
+        assert advance is None
