@@ -44,7 +44,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              progress: Callable[[int], None] | None = None, attainment_only: bool = False) -> Findings:
     """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
 
-    attainment_only   as a search over many protocols wants it: nothing over time, no pairs, no doses, no cells of people
+    attainment_only   for a search over many protocols: nothing over time, no pairs, no doses, no cells of people
     """
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)

@@ -37,7 +37,8 @@ def dose_answer(found: DoseFound, whys: list[str], confirmed: list[tuple[str, Co
     leads = [_lead(found, place) for place in range(len(found.points))]
     confirm_table = [by_group(asked, of, [{"model": name, "what": why, "protocol": protocol} for why, protocol in
                                           zip(whys, of.names, strict=True)], 0) for name, of in confirmed]
-    return Answer(asked, parts, {"along": by_group(asked, counts, leads), "confirm": pd.concat(confirm_table, ignore_index=True)},
+    tables = {"along": by_group(asked, counts, leads), "confirm": pd.concat(confirm_table, ignore_index=True)}
+    return Answer(asked, parts, tables,
                   _numbers(found))
 
 

@@ -39,13 +39,14 @@ def map_answer(found: MapFound) -> Answer:
 def _clustered(counts: Counts) -> list[str]:
     if counts.origins is None:
         return []
-    return ["The list's people are drawn again and again: intervals of cells and regions count draws, not people, and are "
-            "too narrow."]
+    return ["The list's people are drawn again and again: intervals of cells and regions count draws, not people, and "
+            "are too narrow."]
 
 
 def _sentences(found: MapFound) -> list[str]:
     if not found.regions:
-        return [f"No region with 1 % of a sex and {FEWEST} patients or more lies clearly below {percent(found.level, 0)} %."]
+        return [f"No region with 1 % of a sex and {FEWEST} patients or more lies clearly below "
+                f"{percent(found.level, 0)} %."]
     lines = []
     for region in found.regions:
         clear = region.fresh_high < found.level

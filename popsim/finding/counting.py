@@ -162,7 +162,8 @@ class Counts:
         """The same protocols in another order."""
         order = list(order)
         return replace(self, names=[self.names[p] for p in order], dose_mg=self.dose_mg[order], flags=self.flags[order],
-                       too_long=self.too_long[order], worth=self.worth[order], sums={name: values[order] for name, values in self.sums.items()})
+                       too_long=self.too_long[order], worth=self.worth[order],
+                       sums={name: values[order] for name, values in self.sums.items()})
 
     @property
     def n(self) -> np.ndarray:
