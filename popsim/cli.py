@@ -12,6 +12,7 @@ from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.draw import draw
 from popsim.commands.evidence import evidence
+from popsim.commands.find import find
 from popsim.commands.judge import judge
 from popsim.commands.models import models
 from popsim.commands.new import new
@@ -34,6 +35,7 @@ def popsim() -> None:
     popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim draw study          draw a finished run's pictures again
+    popsim find dose study.toml    or size, table, map: what to write instead
     popsim models              the published drug models, and one of them whole
     popsim person ...          every covariate of one person, side by side
     popsim score ...           which published model predicts measured patients
@@ -44,7 +46,7 @@ def popsim() -> None:
     """
 
 
-for command in (new, check, patients, judge, draw, models, person, score, evidence):
+for command in (new, check, patients, judge, draw, find, models, person, score, evidence):
     popsim.add_command(command)
 
 

@@ -10,7 +10,6 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
-from itertools import combinations
 
 import numpy as np
 
@@ -42,19 +41,23 @@ LEAN = "lean_body_mass_janmahasatian"
 
 def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              sink: Callable[[BlockRows], None] | None = None,
-             progress: Callable[[int], None] | None = None) -> Findings:
-    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far."""
+             progress: Callable[[int], None] | None = None, attainment_only: bool = False) -> Findings:
+    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
+
+    attainment_only   for a search over many protocols: nothing over time, no pairs, no doses, no cells of people
+    """
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)
     queue = _Queue(iter(drawn), sink, progress)
     grid = study.grid_min()
-    check_room(study, len(grid))
+    if not attainment_only:
+        check_room(study, len(grid))
 
     def work(_: int = 0) -> Tally | None:
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid), drawn.origins)
+                tally = tally or Tally.empty(study, len(grid), drawn.origins, attainment_only)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -115,21 +118,23 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
     tally.patients += members.sum(axis=0)
     tally.overlap += members.T @ members
-    cell = tally.population.add_patients(patients.attributes, members)
+    cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
         tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
-    for p, (_, received) in enumerate(given):
-        tally.doses[p].add(received, per, members)
+    for p, doses in tally.doses.items():
+        doses.add(given[p][1], per, members)
     courses = []
+    all_judged: dict[tuple[int, int, int], Judged] = {}
     for m, model in enumerate(study.models):
         parameters = individual_parameters(model, study.variability, study.seed, patients, lookup)
         disposition = solve.disposition(parameters.values)
         status = disposition.status
         tally.outside[m] += members.T @ parameters.outside
-        tally.population.add_outside(m, cell, parameters.outside)
+        if tally.population:
+            tally.population.add_outside(m, cell, parameters.outside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -142,19 +147,23 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 judged[p, t], found = _judge_target(study, m, t, parameters, disposition, timeline, received, lookup)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members)
-                tally.population.add_judged((m, p, t), cell, judged[p, t])
+                if tally.population:
+                    tally.population.add_judged((m, p, t), cell, judged[p, t])
                 if tally.clusters is not None:
                     tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
+            if not tally.over_time:
+                continue
             of_targets = [judged[p, t] for t in range(len(study.targets))]
             _over_time(study, grid, m, p, parameters, disposition, timeline, of_targets, members, tally)
             if keep_courses:
                 kept = _courses(grid, model, parameters, disposition, timeline)
                 courses.append((model.name, study.protocols[p].name, *kept))
         tally.add_statuses(m, status, patients.first)
-        for t in range(len(study.targets)):
-            for a, b in combinations(range(len(study.protocols)), 2):
+        for pair, t, a, b in tally.pairs:
+            if pair == m:
                 tally.pairs[m, t, a, b].add(judged[a, t], judged[b, t], members)
-    return BlockRows(patients, lookup, courses)
+        all_judged |= {(m, p, t): one for (p, t), one in judged.items()}
+    return BlockRows(patients, lookup, courses, members, all_judged, [received for _, received in given])
 
 
 def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:

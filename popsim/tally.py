@@ -96,15 +96,17 @@ class Tally:
     pairs: dict[tuple[int, int, int, int], PairTally]  # model, target, protocol a, protocol b
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
-    population: PopulationTally
+    population: PopulationTally | None
+    over_time: bool  # whether the targets' over-time counts are kept
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
     failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
     clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int, origins: int = 0) -> Tally:
-        groups = len(study.group_names)
+    def empty(cls, study: Study, times: int, origins: int = 0, attainment_only: bool = False) -> Tally:
+        """Nothing counted yet; `attainment_only` leaves out the counts over time, of pairs, doses and people."""
+        groups, times = len(study.group_names), 0 if attainment_only else times
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
         def zeros() -> np.ndarray:
@@ -130,10 +132,11 @@ class Tally:
             large_total={(m, p): zeros() for m in models for p in protocols},
             targets={(m, p, t): target_tally() for m in models for p in protocols for t in targets},
             pairs={(m, t, a, b): PairTally(*(zeros() for _ in range(5)))
-                   for m in models for t in targets for a, b in combinations(protocols, 2)},
-            doses={p: dose_tally() for p in protocols},
+                   for m in models for t in targets for a, b in combinations(protocols, 2) if not attainment_only},
+            doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
-            population=PopulationTally.empty(study),
+            over_time=not attainment_only,
+            population=None if attainment_only else PopulationTally.empty(study),
             clusters=clusters,
         )
 
@@ -190,7 +193,7 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap, *tally.population.arrays()]
+    found = [tally.patients, tally.overlap, *(tally.population.arrays() if tally.population else [])]
     for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
     for table in (tally.targets, tally.pairs):
