@@ -11,11 +11,14 @@ from covariates.problems import ProblemsError
 from popsim import __version__
 from popsim.commands.check import check
 from popsim.commands.draw import draw
+from popsim.commands.evidence import evidence
+from popsim.commands.find import find
 from popsim.commands.judge import judge
 from popsim.commands.models import models
 from popsim.commands.new import new
 from popsim.commands.patients import patients
 from popsim.commands.person import person
+from popsim.commands.score import score
 from popsim.errors import CRASH_ADVICE, DONE, OURS, USER_CAN_MEND, problem_report
 
 INTERRUPTED = 130  # what a shell expects of a program that was stopped
@@ -32,15 +35,18 @@ def popsim() -> None:
     popsim patients study.toml look at its patients
     popsim judge study.toml    judge the protocols: tables, pictures, report
     popsim draw study          draw a finished run's pictures again
+    popsim find dose study.toml    or size, table, map: what to write instead
     popsim models              the published drug models, and one of them whole
     popsim person ...          every covariate of one person, side by side
+    popsim score ...           which published model predicts measured patients
+    popsim evidence            every outside check, recomputed
 
     A simulation for appraising protocols, not for dosing a person. Follow the
     product's label, local protocols and a licensed clinician's judgement.
     """
 
 
-for command in (new, check, patients, judge, draw, models, person):
+for command in (new, check, patients, judge, draw, find, models, person, score, evidence):
     popsim.add_command(command)
 
 
@@ -55,8 +61,7 @@ def main() -> None:
 def run(arguments: list[str]) -> int:
     """Exit code of one command: 0 done, 2 the user can mend it, 1 ours."""
     try:
-        popsim.main(arguments, prog_name="popsim", standalone_mode=False)
-        return DONE
+        return popsim.main(arguments, prog_name="popsim", standalone_mode=False) or DONE
     except ProblemsError as error:
         click.echo(problem_report(error), err=True)
         return USER_CAN_MEND

@@ -72,7 +72,7 @@ def quartile_pairs(study: Study, tally: Tally) -> list[dict]:
 
 
 def all_of_them(study: Study, tally: Tally) -> list[dict]:
-    """One row per model, protocol and group: who attains all targets, and the paired difference to the first protocol."""
+    """One row per model, protocol and group: who attains all targets; paired difference to the first protocol."""
     rows = []
     for (m, a, b), tallied in tally.together.items():
         names = (study.protocols[a].name, study.protocols[b].name)

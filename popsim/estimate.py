@@ -44,7 +44,7 @@ def mean_error(mean: np.ndarray | float, mean_square: np.ndarray | float, n: np.
 
 
 def quantile_ranks(share: float, n: int) -> tuple[float, float, float]:
-    """Ranks (1 = smallest of n) of a quantile and of its 95 % interval from order statistics, not brought within 1 to n.
+    """Ranks (1 = smallest of n) of a quantile and of its 95 % interval from order statistics; they may lie beyond.
 
     The number of values below the true quantile is binomial; taken as normal. Source: Conover 1999, Practical
     Nonparametric Statistics, 3.2. The median of 100 lies at rank 50, its interval at 40.2 to 60.8.

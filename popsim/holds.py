@@ -118,8 +118,8 @@ def gains(tables: dict[str, pd.DataFrame]) -> list[str]:
     for (model, target, a, b, covariate), rows in table[table["patients"] > 0].groupby(
             ["model", "target", "protocol_a", "protocol_b", "covariate"], sort=False):
         least, most = rows.loc[rows["difference"].idxmin()], rows.loc[rows["difference"].idxmax()]
-        lines.append(f'{target}, "{b}" less "{a}" ({model}), by {covariate.replace("_", " ")}: {points(least.difference)} '
-                     f"points in {_quarter(least)}, {points(most.difference)} in {_quarter(most)}")
+        lines.append(f'{target}, "{b}" less "{a}" ({model}), by {covariate.replace("_", " ")}: '
+                     f"{points(least.difference)} points in {_quarter(least)}, {points(most.difference)} in {_quarter(most)}")
     return lines
 
 

@@ -20,11 +20,20 @@ JUST_BEFORE_MIN = 1.0  # a trough is looked at from so long before; any time wou
 
 def judge_target(study: Study, m: int, target: Target, patients: Patients, parameters: IndividualParameters,
                  disposition: Disposition, timeline: Timeline, received: Received,
-                 lookup: Lookup, steady: Timeline | None) -> tuple[Judged, np.ndarray]:
+                 lookup: Lookup, steady: Timeline | None, numbers: bool) -> tuple[Judged, np.ndarray]:
     """What a target finds in each patient of a block under model `m`, and each patient's status.
 
-    steady   the regimen as repeated for ever, None where it is not repeated
+    steady    the regimen as repeated for ever, None where it is not repeated
+    numbers   whether each patient's own numbers are wanted beside attainment
     """
+    judged, status = _judge(study, m, target, patients, parameters, disposition, timeline, received, lookup, steady,
+                            numbers)
+    return (judged if numbers else replace(judged, measures={})), status
+
+
+def _judge(study: Study, m: int, target: Target, patients: Patients, parameters: IndividualParameters,
+           disposition: Disposition, timeline: Timeline, received: Received, lookup: Lookup, steady: Timeline | None,
+           numbers: bool) -> tuple[Judged, np.ndarray]:
     model, n = study.models[m], len(disposition)
     if target.steady:
         assert steady is not None
@@ -38,7 +47,7 @@ def judge_target(study: Study, m: int, target: Target, patients: Patients, param
                     for name in ("proportional", "additive"))
             level = measured_level(model, level, *luck)
         judged = judge_value(target, summary_value(target, model, level, end - start), status, received.undosed)
-        if steady is not None and not target.steady and target.summary in AREAS:
+        if numbers and steady is not None and not target.steady and target.summary in AREAS:
             at_steady, _ = solve.area_under_curve(disposition, steady, "plasma", np.zeros(n), steady.interval_min)
             share = level / (end - start) / (at_steady / steady.interval_min)
             judged = replace(judged, measures=judged.measures | {"of_steady_state": share})
@@ -46,7 +55,7 @@ def judge_target(study: Study, m: int, target: Target, patients: Patients, param
     low, high = concentration_limits(target, model, parameters.values, n)
     course = solve.window_course(disposition, timeline, course_of(target), low, high, start, end)
     judged = judge(target, model, parameters.values, course, received.undosed)
-    if target.over_time and not target.steady:
+    if numbers and target.over_time and not target.steady:
         more = _times(study, target, m, parameters, disposition, timeline, received, low, end)
         judged = replace(judged, measures=judged.measures | {
             name: np.where(judged.failed, np.nan, minutes) for name, minutes in more.items()})

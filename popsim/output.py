@@ -18,8 +18,11 @@ from popsim.flagged import covariates_used
 from popsim.records import BlockRows, Study
 
 TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles",
-               "together", "models", "robustness", "people", "attainment_map", "body_size", "patients", "courses")
-OURS = {"record.json", "report.html", *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
+               "together", "models", "robustness", "people", "attainment_map", "body_size",
+               "patients", "courses", "along", "confirm", "sizes", "simplicity", "ward_card", "map", "regions",
+               "scores", "score_comparison", "score_patients", "score_predictions", "score_check")
+OURS = {"record.json", "report.html", "ward_card.txt",
+        *(f"{name}.{end}" for name in TABLE_NAMES for end in ("csv", "parquet"))}
 
 
 def check_folder(folder: Path, overwrite: bool) -> None:

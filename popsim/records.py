@@ -423,8 +423,16 @@ class Judged:
 
 @dataclass(frozen=True)
 class BlockRows:
-    """What a block leaves for the tables that have a row per patient. Courses only when they are kept."""
+    """What a block leaves for those who ask patient by patient. Courses only when they are kept; the rest only of a run.
+
+    members   (n, groups) int64, 1 = belongs to that group
+    judged    (model, protocol, target) -> what the target made of each patient
+    received  what each patient is given, protocol by protocol
+    """
 
     patients: Patients
     lookup: Lookup
     courses: list[tuple[str, str, np.ndarray, np.ndarray, np.ndarray | None]]  # model, protocol, plasma, site, effect
+    members: np.ndarray | None = None
+    judged: dict[tuple[int, int, int], Judged] = field(default_factory=dict)
+    received: list[Received] = field(default_factory=list)

@@ -46,7 +46,7 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
                               trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
     environment.globals |= {"percent": percent, "points": points, "interval": _interval}
     script = (resources.files("popsim") / "templates" / "report.js").read_text(encoding="utf-8")
-    drawn = [{"picture": picture, "svg": _inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
+    drawn = [{"picture": picture, "svg": inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
              for number, picture in enumerate(pictures, 1)]
     html = environment.get_template("report.html.j2").render(
         study=study,
@@ -270,7 +270,7 @@ def _under_models(study: Study, attainment: pd.DataFrame, target: Target) -> dic
     return {"title": target.name if len(study.targets) > 1 else "", "spread": spread, "rows": rows}
 
 
-def _inlined(svg: str, number: int) -> Markup:
+def inlined(svg: str, number: int) -> Markup:
     """One of our SVG files as part of a page: no prolog, comments or metadata; ids that no other picture has."""
     svg = svg[svg.index("<svg"):]
     svg = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", svg, flags=re.DOTALL)

@@ -10,7 +10,6 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
-from itertools import combinations
 
 import numpy as np
 
@@ -43,21 +42,26 @@ LEAN = "lean_body_mass_janmahasatian"
 
 def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              sink: Callable[[BlockRows], None] | None = None,
-             progress: Callable[[int], None] | None = None, over_time: bool = True) -> Findings:
-    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far. Without
-    `over_time` nothing is counted on the grid, which takes most of the time."""
+             progress: Callable[[int], None] | None = None, over_time: bool = True,
+             attainment_only: bool = False) -> Findings:
+    """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
+
+    over_time         False: nothing is counted on the grid, nor each patient's own numbers, which takes most of the time
+    attainment_only   for a search over many protocols: nothing over time, no pairs, no doses, no cells of people
+    """
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)
     queue = _Queue(iter(drawn), sink, progress)
-    grid = study.grid_min() if over_time else np.empty(0)
-    check_room(study, len(grid))
-    cuts = quartile_cuts(study)
+    grid = study.grid_min() if over_time and not attainment_only else np.empty(0)
+    if not attainment_only:
+        check_room(study, len(grid))
+    cuts = {} if attainment_only else quartile_cuts(study)
 
     def work(_: int = 0) -> Tally | None:
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid), cuts, drawn.origins)
+                tally = tally or Tally.empty(study, len(grid), cuts, drawn.origins, attainment_only)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -120,22 +124,26 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     quarters = quartile_members(tally.cuts, lookup, len(patients)).astype(np.int64)
     tally.quartile_patients += quarters.sum(axis=0)
     tally.overlap += members.T @ members
-    cell = tally.population.add_patients(patients.attributes, members)
+    cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
         tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
-    steady = [steady_timeline(protocol, lookup, len(patients)) for protocol in study.protocols]
+    numbers = len(grid) > 0
+    repeats = any(target.steady or (numbers and target.summary) for target in study.targets)
+    steady = [steady_timeline(protocol, lookup, len(patients)) if repeats else None for protocol in study.protocols]
     per = _per_kg(patients, lookup)
-    for p, (_, received) in enumerate(given):
-        tally.doses[p].add(received, per, members)
+    for p, doses in tally.doses.items():
+        doses.add(given[p][1], per, members)
     courses = []
+    all_judged: dict[tuple[int, int, int], Judged] = {}
     for m, model in enumerate(study.models):
         parameters = individual_parameters(model, study.variability, study.seed, patients, lookup)
         disposition = solve.disposition(parameters.values)
         status = disposition.status
         tally.outside[m] += members.T @ parameters.outside
-        tally.population.add_outside(m, cell, parameters.outside)
+        if tally.population:
+            tally.population.add_outside(m, cell, parameters.outside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -146,13 +154,15 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
             for t, target in enumerate(study.targets):
                 judged[p, t], found = judge_target(study, m, target, patients, parameters, disposition, timeline,
-                                                   received, lookup, steady[p])
+                                                   received, lookup, steady[p], numbers)
                 status = np.where(status == 0, found, status)
                 tally.targets[m, p, t].add(judged[p, t], members, parameters.outside)
-                tally.population.add_judged((m, p, t), cell, judged[p, t])
+                if tally.population:
+                    tally.population.add_judged((m, p, t), cell, judged[p, t])
                 if tally.clusters is not None:
                     tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
-            _add_responses(study, m, p, judged, members, tally)
+            if tally.responses:
+                _add_responses(study, m, p, judged, members, tally)
             if not len(grid):
                 continue
             of_targets = [judged[p, t] for t in range(len(study.targets))]
@@ -160,18 +170,19 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             if keep_courses:
                 kept = _courses(grid, model, parameters, disposition, timeline)
                 courses.append((model.name, study.protocols[p].name, *kept))
-        if study.joint_targets:
+        if tally.together:
             joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
             for p, one in enumerate(joint):
                 tally.together[m, 0, p].add(joint[0], one, members)
         tally.add_statuses(m, status, patients.first)
-        for t in range(len(study.targets)):
-            for a, b in combinations(range(len(study.protocols)), 2):
-                pair = judged[a, t], judged[b, t]
-                tally.pairs[m, t, a, b].add(*pair, members)
-                tally.pairs_inside[m, t, a, b].add(*pair, members * ~parameters.outside[:, None])
-                tally.quartile_pairs[m, t, a, b].add(*pair, quarters)
-    return BlockRows(patients, lookup, courses)
+        for pair, t, a, b in tally.pairs:
+            if pair == m:
+                both = judged[a, t], judged[b, t]
+                tally.pairs[m, t, a, b].add(*both, members)
+                tally.pairs_inside[m, t, a, b].add(*both, members * ~parameters.outside[:, None])
+                tally.quartile_pairs[m, t, a, b].add(*both, quarters)
+        all_judged |= {(m, p, t): one for (p, t), one in judged.items()}
+    return BlockRows(patients, lookup, courses, members, all_judged, [received for _, received in given])
 
 
 def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:

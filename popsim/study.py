@@ -28,7 +28,11 @@ WORDS = {"number": "a number", "condition": "true or false", "text": "text"}
 
 def read_study(path: Path) -> Study:
     """Read and check a study file; ProblemsError lists all that the user can mend."""
-    section, faults = read_study_file(path)
+    return resolve_study(*read_study_file(path), path)
+
+
+def resolve_study(section: StudyFile, faults: list[Problem], path: Path) -> Study:
+    """The study that these sections mean; `faults` of shape are told together with those of meaning."""
     problems: list[Problem] = []
     models = with_fraction_unbound(section, _models(section, path, problems), path, problems)
     population, brought = resolve_population(section.population, path, problems)

@@ -4,6 +4,7 @@ from __future__ import annotations
 
 import tomllib
 from collections.abc import Callable
+from dataclasses import replace
 from pathlib import Path
 from typing import Annotated, Any, Literal
 
@@ -12,6 +13,7 @@ from pydantic import BaseModel, BeforeValidator, ConfigDict, Field, StrictBool, 
 from covariates.formula import Formula, compile_formula
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity, Range, allowed_kinds, parse_quantity, parse_range
+from popsim.finding.wishes import Wish, parse_wishes
 from popsim.study_salvage import without_faults
 
 DOSE_AMOUNTS = ("mass", "mass_per_kg", "mass_per_m2")
@@ -261,6 +263,47 @@ class RunSection(Section):
     every: Time
 
 
+class VarySection(Section):
+    what: _text(LONGEST_TEXT)
+    over: Name
+    steps: _whole(2, 400, 21) | None = None
+
+
+class ReferenceSection(Section):
+    sex: Literal["female", "male"]
+    age: _quantity("age")
+    weight: _quantity("body_weight")
+    height: _quantity("height")
+
+
+class FindTableSection(Section):
+    what: _text(LONGEST_TEXT)
+    by: Name
+    bands: _whole(1, 12, 4)
+    edges_to: _number(1e-3, 1e4, 5)
+    doses: Name
+    round_to: PlainDose
+
+
+class FindMapSection(Section):
+    across: Name = "weight"
+    up: Name = "age"
+    across_every: _number(1e-3, 1e4, 10) | None = None
+    up_every: _number(1e-3, 1e4, 10) | None = None
+    level: _quantity("percent") | None = None
+
+
+class FindSection(Section):
+    protocol: Name | None = None
+    target: Name | None = None
+    wish: Annotated[list[_parsed(parse_wishes, tuple[Wish, ...])], Field(max_length=20)] = []
+    vary: Annotated[list[VarySection], Field(max_length=2)] = []
+    reference: ReferenceSection | None = None
+    sizes: Annotated[list[Name], Field(max_length=60)] = []
+    table: FindTableSection | None = None
+    map: FindMapSection = FindMapSection()
+
+
 class StudyFile(Section):
     title: Name
     question: _text(LONGEST_TEXT)
@@ -273,6 +316,7 @@ class StudyFile(Section):
     target: Annotated[list[TargetSection], Field(min_length=1, max_length=20)]
     compare: CompareSection = CompareSection()
     run: RunSection
+    find: FindSection = FindSection()
 
 
 def read_study_file(path: Path) -> tuple[StudyFile, list[Problem]]:
@@ -296,6 +340,15 @@ def read_study_file(path: Path) -> tuple[StudyFile, list[Problem]]:
     except ValidationError:
         pass
     raise ProblemsError(faults)
+
+
+def read_find(raw: dict[str, Any]) -> FindSection:
+    """What the command line gives in place of a study's [find]; ProblemsError lists what does not fit."""
+    try:
+        return FindSection.model_validate(raw)
+    except ValidationError as error:
+        raise ProblemsError([_problem("command line", {"find": raw}, {**entry, "loc": ("find", *entry["loc"])})
+                             for entry in error.errors()]) from None
 
 
 def _toml(path: Path) -> dict[str, Any]:
@@ -361,7 +414,7 @@ def _section_form(location: list[str | int]) -> str:
     words = [part for part in location if isinstance(part, str)]
     if words[-1] == "repeat_with":
         return 'a list of names: ["propofol_schnider_1998"]'
-    if words[-1] in ("group", "protocol", "dose", "band", "target"):
+    if words[-1] in ("group", "protocol", "dose", "band", "target", "vary"):
         return f"a section that begins with [[{'.'.join(words)}]]"
     return f"a section that begins with [{'.'.join(words)}]"
 
@@ -371,6 +424,9 @@ _EXAMPLES = {
     "until": 'until = "90 min"', "every": 'every = "30 s"', "during": 'during = "5 min to 60 min"',
     "model": 'model = "propofol_eleveld_2018"', "source": 'source = "survey", "list", "described" or "lattice"',
     "population": "a [population] section", "drug": "a [drug] section", "run": "a [run] section",
+    "what": 'what = "dose 1: rate"', "over": 'over = "2 to 12 mg/kg/h"', "bands": "bands = 4",
+    "edges_to": "edges_to = 5",
+    "doses": 'doses = "100 to 900 mg/h"', "round_to": 'round_to = "50 mg/h"', "by": 'by = "weight"',
     "protocol": "at least one [[protocol]]", "target": "a [target] section", "dose": "at least one [[protocol.dose]]",
 }
 
@@ -385,7 +441,8 @@ def _known_keys(location: list[str | int]) -> list[str]:
 
 _SECTIONS = {"population": PopulationSection, "variability": VariabilitySection, "group": GroupSection,
              "drug": DrugSection, "protocol": ProtocolSection, "dose": DoseSection, "band": BandSection,
-             "target": TargetSection, "compare": CompareSection, "run": RunSection}
+             "target": TargetSection, "compare": CompareSection, "run": RunSection, "find": FindSection,
+             "vary": VarySection, "reference": ReferenceSection, "table": FindTableSection, "map": FindMapSection}
 
 
 def shown(value: Any) -> str:
@@ -399,3 +456,15 @@ def shown(value: Any) -> str:
     else:
         text = str(value).lower()
     return text if len(text) <= 120 else text[:117] + "..."
+
+
+def read_dose(words: dict[str, Any], where: str) -> DoseSection:
+    """One dose step from its words, such as {"at": "0 min", "amount": "200 mg"}; `where` says where they stand.
+
+    Raises ProblemsError with all its faults, each at "where, column KEY".
+    """
+    try:
+        return DoseSection.model_validate(words)
+    except ValidationError as error:
+        raise ProblemsError(replace(_problem("", words, entry), where=f"{where}, column {entry['loc'][-1]}")
+                            for entry in error.errors()) from None

@@ -8,7 +8,9 @@ from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity
 from popsim.records import DoseStep, DoseVariant, Protocol
-from popsim.study_file import MOST_ADMINISTRATIONS, MOST_IN_PROTOCOL, WHOLE_VIALS, DoseSection, ProtocolSection, key_path
+from popsim.study_file import (
+    MOST_ADMINISTRATIONS, MOST_IN_PROTOCOL, WHOLE_VIALS, DoseSection, ProtocolSection, key_path,
+)  # fmt: skip
 from popsim.study_loading import is_given, resolve_loading
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
@@ -268,7 +270,8 @@ def _drawn_up(given: Quantity | str | None, protocol: ProtocolSection, say: Call
         return given
     if given == WHOLE_VIALS:
         if protocol.strength is None or protocol.vial is None:
-            say("round_to", f'"{WHOLE_VIALS}"', "only beside strength and vial", 'strength = "10 mg/mL", vial = "50 mL"')
+            say("round_to", f'"{WHOLE_VIALS}"', "only beside strength and vial",
+                'strength = "10 mg/mL", vial = "50 mL"')
             return None
         vial_mg = protocol.vial.value * protocol.strength.value
         return Quantity(vial_mg, "mass", "mg", WHOLE_VIALS)

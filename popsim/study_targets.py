@@ -89,7 +89,8 @@ def _mics(section: TargetSection, report: Callable) -> list[tuple[Quantity, floa
         report("over_mic", "over_mic without a MIC" if not mics else "a MIC without over_mic",
                'over_mic = ">= 1" (times MIC; hours for an area) beside mic = "2 mg/L", a list, or isolates')
     if mics and section.quantity in ("effect_site", "effect", "response"):
-        report("mic", f'"{section.quantity}"', "a target in plasma: plasma, unbound_plasma, an area, peak, trough, average")
+        report("mic", f'"{section.quantity}"',
+               "a target in plasma: plasma, unbound_plasma, an area, peak, trough, average")
     return mics
 
 
@@ -195,7 +196,8 @@ def _check_fluid(quantity: str, model: DrugModel, report: Callable) -> None:
                    "a fraction unbound with its source",
                    'under [drug]: fraction_unbound = 0.2 and fraction_unbound_source = "..."')
     elif fluid == "unbound plasma" and quantity not in ("effect_site", "effect", "response"):
-        report("quantity", f'"{quantity}", but {model.name} was built on unbound concentrations', f'"unbound_{quantity}"')
+        report("quantity", f'"{quantity}", but {model.name} was built on unbound concentrations',
+               f'"unbound_{quantity}"')
 
 
 def _models_with(drug: str, has: Callable[[DrugModel], bool]) -> str:
@@ -205,7 +207,8 @@ def _models_with(drug: str, has: Callable[[DrugModel], bool]) -> str:
 
 def _limits(section: TargetSection, report: Callable) -> Range | None:
     kind = _kind(section)
-    example = {"number": '"40 to 60"', "area": '"400 to 600 mg.h/L"', "percent": '">= 90 %"'}.get(kind, '"2 to 4 ug/mL"')
+    example = {"number": '"40 to 60"', "area": '"400 to 600 mg.h/L"',
+               "percent": '">= 90 %"'}.get(kind, '"2 to 4 ug/mL"')
     given = [key for key in ("range", "low", "high") if getattr(section, key) is not None]
     if not given or ("range" in given and len(given) > 1):
         report("range", "nothing" if not given else " and ".join(given), f"range = {example}, or low and/or high")

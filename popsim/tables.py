@@ -91,7 +91,7 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
         if not study.targets[t].over_time:
             continue
         quantiles = solve.percentiles_from_bins(counts.bins, PERCENTILES)
-        if study.targets[t].quantity != "effect":  # counted as the solver's concentrations: monotone, so percentiles stay
+        if study.targets[t].quantity != "effect":  # counted as the solver's concentrations, of which it is monotone
             quantiles = in_target_unit(study.targets[t], study.models[m], {}, quantiles)
         for g, group in enumerate(study.group_names):
             solved = counts.over_time[g].sum(axis=1)

@@ -134,14 +134,16 @@ class Tally:
     together: dict[tuple[int, int, int], PairTally]  # model, first protocol, protocol: all targets
     doses: dict[int, DoseTally]  # protocol
     overlap: np.ndarray  # (groups, groups) patients in both
-    population: PopulationTally
+    population: PopulationTally | None
     statuses: dict[tuple[int, int], int] = field(default_factory=dict)  # model, status code -> patients
     failing: dict[tuple[int, int], list[int]] = field(default_factory=dict)  # ... -> the first of their numbers
     clusters: ClusterTally | None = None  # only where people of a list are drawn again and again
     flags: dict[tuple[str, str], int] = field(default_factory=dict)  # covariate equation, how it misleads -> patients
 
     @classmethod
-    def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray], origins: int = 0) -> Tally:
+    def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray], origins: int = 0,
+              attainment_only: bool = False) -> Tally:
+        """Nothing counted yet; `attainment_only` leaves out the counts of pairs, responses, doses and people."""
         groups = len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
@@ -160,7 +162,8 @@ class Tally:
 
         def pair_tallies(size: int) -> dict[tuple[int, int, int, int], PairTally]:
             return {(m, t, a, b): pair_tally(size)
-                    for m in models for t in targets for a, b in combinations(protocols, 2)}
+                    for m in models for t in targets for a, b in combinations(protocols, 2)
+                    if not attainment_only}
 
         def dose_tally() -> DoseTally:
             return DoseTally(
@@ -183,11 +186,12 @@ class Tally:
             quartile_patients=zeros(4 * len(cuts)),
             cuts=cuts,
             responses={(m, p, family): ShareTally(zeros(), zeros())
-                       for m in models for p in protocols for family in study.families},
-            together={(m, 0, p): pair_tally(groups) for m in models for p in protocols if study.joint_targets},
-            doses={p: dose_tally() for p in protocols},
+                       for m in models for p in protocols for family in study.families if not attainment_only},
+            together={(m, 0, p): pair_tally(groups)
+                      for m in models for p in protocols if study.joint_targets and not attainment_only},
+            doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
-            population=PopulationTally.empty(study),
+            population=None if attainment_only else PopulationTally.empty(study),
             clusters=clusters,
         )
 
@@ -247,10 +251,12 @@ def range_names(model: DrugModel) -> list[str]:
 
 def _arrays(tally: Tally) -> list[np.ndarray]:
     """Every counting array of a tally, always in the same order."""
-    found = [tally.patients, tally.overlap, tally.quartile_patients, *tally.population.arrays()]
+    found = [tally.patients, tally.overlap, tally.quartile_patients,
+             *(tally.population.arrays() if tally.population else [])]
     for table in (tally.outside, tally.beyond, tally.long_infusion, tally.large_total):
         found += table.values()
-    for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses, tally.together):
+    for table in (tally.targets, tally.pairs, tally.pairs_inside, tally.quartile_pairs, tally.responses,
+                  tally.together):
         for entry in table.values():
             found += (counts for counts in vars(entry).values() if isinstance(counts, np.ndarray))
     for entry in tally.targets.values():

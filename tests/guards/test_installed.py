@@ -22,6 +22,8 @@ def test_data_files_are_installed():
         "remifentanil_minto_1997.toml"}
     assert (resources.files("popsim") / "templates" / "study.toml").is_file()
     assert (resources.files("popsim") / "templates" / "report.html.j2").is_file()
+    assert (resources.files("popsim") / "templates" / "score.html.j2").is_file()
+    assert (resources.files("popsim.evidence") / "outcomes.csv").is_file()
     assert (resources.files("popsim.patients") / "tables" / "us_adults_2021_2023.csv").is_file()
 
 

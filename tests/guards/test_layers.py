@@ -14,17 +14,24 @@ FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
     "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
-    "patients.draw", "study_salvage", "study_file", "study_described", "study_population", "study_loading",
-    "study_protocols", "study_targets", "study_fit", "study", "groups", "slices", "parameters", "flagged", "amounts",
-    "timeline", "solve", "effect", "target", "judging", "estimate", "clusters",
+    "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_described", "study_population",
+    "study_loading", "study_protocols", "study_targets", "study_fit", "study", "groups", "slices", "parameters",
+    "flagged", "amounts", "timeline", "solve", "effect", "target", "judging", "estimate", "clusters",
     "population_tally", "tally", "people", "run", "compare", "measures", "population_tables", "tables", "robustness",
     "words", "holds", "ward_card", "provenance", "output", "finished", "headlines",
     "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
     "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
     "patient_pictures", "report", "terminal", "check_text", "progress",
+    "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
+    "scoring.report", "scoring.run",
+    "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.mixed_fit", "evidence.open_data",
+    "evidence.bodies", "evidence.mathematics", "evidence.check", "evidence.words",
     "derived", "model_text", "person_text",
-    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw",
-    "commands.models", "commands.person", "cli",
+    "finding.places", "finding.counting", "finding.holding", "finding.dose", "finding.size", "finding.table",
+    "finding.map", "finding.answer", "finding.answer_dose", "finding.answer_size", "finding.answer_table",
+    "finding.answer_map", "finding.pictures", "finding.leave",
+    "commands.new", "commands.check", "commands.patients", "commands.judge", "commands.draw", "commands.find",
+    "commands.models", "commands.person", "commands.score", "commands.evidence", "cli",
 ]  # fmt: skip
 # Steps know nothing of each other: only run.py (and what reads a finished run) knows their order.
 STEPS = {"groups", "patients.draw", "parameters", "timeline", "solve", "target", "estimate"}
@@ -45,7 +52,8 @@ def imported(path: Path, package: str) -> set[str]:
         if isinstance(node, ast.ImportFrom) and node.module and node.module.split(".")[0] == package:
             rest = node.module[len(package) + 1:]
             inside = {f"{rest}.{alias.name}".strip(".") for alias in node.names if not alias.name.startswith("__")}
-            names |= inside if rest in ("", "patients", "commands", "pictures") else {rest}
+            packages = ("", "patients", "pictures", "finding", "scoring", "evidence", "commands")
+            names |= inside if rest in packages else {rest}
         if isinstance(node, ast.Import):
             names |= {alias.name[len(package) + 1:] for alias in node.names if alias.name.split(".")[0] == package}
     return names

@@ -1,0 +1,69 @@
+"""The report and the record of a score."""
+
+from __future__ import annotations
+
+import hashlib
+import platform
+from importlib.metadata import version
+from pathlib import Path
+from typing import Any
+
+import pandas as pd
+from jinja2 import Environment, PackageLoader, StrictUndefined
+
+from covariates.sheet import shipped_sheets
+from popsim.pictures.shown import Picture
+from popsim.provenance import PACKAGES
+from popsim.report import inlined
+from popsim.scoring.tables import PHASES, Scored
+from popsim.scoring.words import INTERVALS_SAY, MEASURES_SAY, SCORE_CAUTIONS, answer, inside, interval, number
+from popsim.words import percent
+
+
+def score_record(scored: Scored, files: tuple[Path, Path, Path], replicates: int, notes: list[str]) -> dict[str, Any]:
+    """What record.json holds of a score: enough to repeat it."""
+    measured = scored.measured
+    shipped = shipped_sheets()
+    names = [f"--model {model.name}{'' if model.name in shipped else '.toml'}" for model in scored.models]
+    kinds = ("people", "given", "measured")
+    options = " ".join(f"--{kind} {path.name}" for kind, path in zip(kinds, files, strict=True))
+    return {
+        "command": f"popsim score {options} {' '.join(names)} --replicates {replicates} --seed {scored.seed}",
+        "seed": scored.seed,
+        "replicates": replicates,
+        "files": [{"name": path.name, "digest_sha256": hashlib.sha256(path.read_bytes()).hexdigest()}
+                  for path in files],
+        "counts": {"patients": len(measured.labels), "measurements": len(measured.value)},
+        "groups": {name: where.text for name, where in scored.groups},
+        "models": [{"name": model.name, "digest_sha256": model.digest, "evidence": model.evidence,
+                    "source": model.source, "cautions": list(model.cautions)} for model in scored.models],
+        "not_scored": scored.left_out,
+        "notes": notes,
+        "cautions": list(SCORE_CAUTIONS),
+        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
+        "machine": {"system": platform.system(), "processor": platform.machine()},
+    }
+
+
+def write_score_report(scored: Scored, tables: dict[str, pd.DataFrame], record: dict[str, Any],
+                       pictures: list[Picture], path: Path) -> None:
+    """Write the report to `path`; the pictures' files stand in the same folder."""
+    environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
+                              trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
+    environment.globals |= {"percent": percent, "number": number, "interval": interval, "inside": inside}
+    scores = tables["scores"]
+    html = environment.get_template("score.html.j2").render(
+        drug=scored.models[0].drug,
+        record=record,
+        models=scored.models,
+        sentences=[answer(scored, tables, group) for group in scored.group_names],
+        groups=[(group, list(scores.query("group == @group and phase == 'all'").itertuples()))
+                for group in scored.group_names],
+        phases=[(phase, list(scores.query("group == 'all' and phase == @phase").itertuples())) for phase in PHASES],
+        pairs=list(tables["score_comparison"].itertuples()),
+        intervals_say=INTERVALS_SAY,
+        measures_say=MEASURES_SAY,
+        pictures=[{"picture": picture, "svg": inlined((path.parent / picture.file_name).read_text("utf-8"), k)}
+                  for k, picture in enumerate(pictures, 1)],
+    )
+    path.write_text(html, encoding="utf-8")
