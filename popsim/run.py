@@ -46,7 +46,7 @@ def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              attainment_only: bool = False) -> Findings:
     """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
 
-    over_time         False: nothing is counted on the grid, nor each patient's own numbers, which takes most of the time
+    over_time         False: nothing on the grid and none of each patient's own numbers, which take most of the time
     attainment_only   for a search over many protocols: nothing over time, no pairs, no doses, no cells of people
     """
     started = time.perf_counter()

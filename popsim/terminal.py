@@ -64,7 +64,8 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
     lines += _attainment_table(attainment, study.group_names)
     own = numbers(study, tables, model.name, target)
     if own:
-        lines += ["", heading("Each patient's own numbers, all patients"), *(line for one in own for line in _wrapped(one))]
+        lines += ["", heading("Each patient's own numbers, all patients")]
+        lines += [line for one in own for line in _wrapped(one)]
     if len(pairs):
         lines += ["", heading("Same patients, difference in attainment (percentage points)"), *_pair_table(pairs)]
     return lines

@@ -128,7 +128,8 @@ def test_paired_differences_are_those_of_the_tally(tmp_path):
                 for place, name in zip((0, 3), names, strict=True)]
     tally = find_cases["cases"]["simulate"](question.study(sections)).tally
     for group in range(3):
-        pair = {name: int(values[group]) for name, values in vars(tally.pairs[0, 0, 0, 1]).items() if name not in ("failed", "gained")}
+        pair = {name: int(getattr(tally.pairs[0, 0, 0, 1], name)[group])
+                for name in ("both", "only_a", "only_b", "neither")}
         assert result.counts.difference(0, 3, group) == paired_difference(
             pair["both"], pair["only_a"], pair["only_b"], pair["neither"])
 
