@@ -9,7 +9,7 @@ import numpy as np
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import parameters_of
 from covariates.units import Quantity
-from popsim.records import DoseStep, Loading
+from popsim.study_records import DoseStep, Loading
 
 ROUNDING_SLACK = 1e-9  # 0.15 mg in steps of 0.1 mg is 1.4999999999999998 steps, and must round up
 Lookup = Callable[[str], np.ndarray]

@@ -12,7 +12,7 @@ from popsim.groups import members
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
-from popsim.records import DoseStep, Protocol, Study, Variability
+from popsim.study_records import DoseStep, Protocol, Study, Variability
 from popsim.timeline import build_timeline
 from popsim.ward_card import CardLine, card_lines, describe, example_people, step_as_written
 from popsim.words import clock, per_kg_line, percent, target_line

@@ -12,7 +12,7 @@ import pandas as pd
 
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet_reading import EffectModel
-from popsim.records import Target
+from popsim.study_records import Target
 
 NEEDED = ("attainment", "over_time", "comparison")
 OPTIONAL = ("people", "attainment_map", "body_size")

@@ -9,7 +9,8 @@ import numpy as np
 from covariates.flags import equations_behind, flags_of
 from covariates.sheet import DrugModel
 from popsim.lookup import Lookup
-from popsim.records import Received, Study
+from popsim.records import Received
+from popsim.study_records import Study
 
 SLACK = 1e-9
 

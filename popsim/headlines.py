@@ -6,7 +6,7 @@ import pandas as pd
 
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
 from popsim.finished import FinishedRun
-from popsim.records import Target
+from popsim.study_records import Target
 from popsim.words import percent, window
 
 NO_HEADLINE = f"No headline: more than {MOST_FAILED_PERCENT} % could not be simulated or went without a dose"

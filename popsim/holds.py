@@ -8,7 +8,7 @@ import math
 import pandas as pd
 
 from covariates.units import to_unit
-from popsim.records import Study, Target
+from popsim.study_records import Study, Target
 from popsim.words import clock, percent, points
 
 MEASURES = {"first_reached_min": "first reached after", "recovery_min": "recovered after the last dose in"}

@@ -8,8 +8,9 @@ import numpy as np
 
 from popsim import solve
 from popsim.lookup import Lookup
-from popsim.records import Disposition, IndividualParameters, Judged, Patients, Received, Study, Target, Timeline
+from popsim.records import Disposition, IndividualParameters, Judged, Patients, Received, Timeline
 from popsim.streams import normals
+from popsim.study_records import Study, Target
 from popsim.target import (
     concentration_limits, course_of, judge, judge_value, measured_level, recovery_limits, summary_value, window_of,
 )  # fmt: skip

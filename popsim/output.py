@@ -15,7 +15,8 @@ import pandas as pd
 
 from covariates.problems import Problem, ProblemsError
 from popsim.flagged import covariates_used
-from popsim.records import BlockRows, Study
+from popsim.records import BlockRows
+from popsim.study_records import Study
 
 TABLE_NAMES = ("attainment", "over_time", "comparison", "groups", "doses", "values", "responses", "quartiles",
                "together", "models", "robustness", "people", "attainment_map", "body_size",

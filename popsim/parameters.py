@@ -8,8 +8,9 @@ import numpy as np
 
 from covariates.sheet import DrugModel, parameters_of
 from covariates.variability import cholesky_factor, covariance_from
-from popsim.records import IndividualParameters, Patients, Variability
+from popsim.records import IndividualParameters, Patients
 from popsim.streams import normals
+from popsim.study_records import Variability
 
 VOLUMES_AND_CLEARANCES = ("V1", "V2", "V3", "CL", "Q2", "Q3")
 RANGE_SLACK = 1e-9

@@ -9,7 +9,7 @@ from matplotlib.axes import Axes
 
 from popsim.drawing import COLOURS, FAINT, MARGIN, WIDTH, Page, house_style, save, text_width, wrapped
 from popsim.people import People
-from popsim.records import Study
+from popsim.study_records import Study
 
 PANEL, LEFT, GAP = 2.9, 0.65, 0.75  # inches
 ROW = 0.24

@@ -9,7 +9,8 @@ import numpy as np
 
 from covariates.catalogue import attributes_needed, compute
 from popsim.patients.possible import ADULT_YEARS
-from popsim.records import Patients, Study
+from popsim.records import Patients
+from popsim.study_records import Study
 from popsim.tally import KEY_COUNT, decimal_keys, decimal_quantile
 
 WIDTH = 80

@@ -9,7 +9,8 @@ from itertools import product
 import numpy as np
 
 from covariates.catalogue import attributes_needed, compute
-from popsim.records import Judged, Protocol, Study
+from popsim.records import Judged
+from popsim.study_records import Protocol, Study
 
 LEAN = "lean_body_mass_janmahasatian"
 GROUP_MEASURES = ("age", "weight", "height", "bmi", LEAN)

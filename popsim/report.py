@@ -23,7 +23,7 @@ from popsim.headlines import has_headline, rows_where
 from popsim.holds import further, numbers
 from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.population_tally import LEAN
-from popsim.records import Protocol, Study, Target
+from popsim.study_records import Protocol, Study, Target
 from popsim.ward_card import card_lines, describe, example_people, step_as_written
 from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line
 

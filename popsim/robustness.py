@@ -13,8 +13,8 @@ from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from popsim.compare import pair_row
 from popsim.estimate import no_headline, wilson
 from popsim.patients.draw import blocks
-from popsim.records import Study, needs_effect_site
 from popsim.run import simulate
+from popsim.study_records import Study, needs_effect_site
 from popsim.tally import Tally, range_names
 
 FACTORS = (0.7, 1.3)

@@ -23,16 +23,9 @@ from popsim.judging import judge_target
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
-from popsim.records import (
-    BlockRows,
-    Disposition,
-    IndividualParameters,
-    Judged,
-    Patients,
-    Study,
-    Timeline,
-)
+from popsim.records import BlockRows, Disposition, IndividualParameters, Judged, Patients, Timeline
 from popsim.slices import quartile_cuts, quartile_members
+from popsim.study_records import Study
 from popsim.tally import Findings, Tally, check_room
 from popsim.target import all_attained, grid_course, grid_limits
 from popsim.timeline import build_timeline, steady_timeline

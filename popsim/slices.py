@@ -8,7 +8,7 @@ import numpy as np
 
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
-from popsim.records import Study
+from popsim.study_records import Study
 
 SLICED_BY = ("age", "weight", "bmi", "serum_creatinine")
 QUARTILES = (0.25, 0.5, 0.75)

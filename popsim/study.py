@@ -12,15 +12,17 @@ from covariates.problems import Problem, ProblemsError, nearest
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from covariates.sheet_reading import read_one_spread
 from covariates.sheet_section import Section
-from popsim.records import Study, Target, Variability, needs_effect_site
-from popsim.study_file import StudyFile, VariabilitySection, key_path, read_study_file, shown
+from popsim.study_file import key_path, read_study_file
 from popsim.study_fit import (
     check_listed_windows, check_routes, check_set_windows, check_steady, with_fraction_unbound,
 )  # fmt: skip
 from popsim.study_population import resolve_population
 from popsim.study_protocols import covariate_fault, resolve_protocols
+from popsim.study_records import Study, Target, Variability, needs_effect_site
 from popsim.study_salvage import beside
+from popsim.study_sections import StudyFile, VariabilitySection
 from popsim.study_targets import resolve_targets
+from popsim.study_values import shown
 
 MOST_GRID_TIMES = 20_001
 WORDS = {"number": "a number", "condition": "true or false", "text": "text"}

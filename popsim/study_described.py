@@ -11,7 +11,7 @@ from covariates.problems import Problem, nearest
 from covariates.sheet_section import Section
 from popsim.patients.described import Described, Marginal, fit_marginal
 from popsim.patients.possible import ADULT_YEARS, POSSIBLE
-from popsim.study_file import PopulationSection
+from popsim.study_sections import PopulationSection
 
 ATTRIBUTE_NAME = re.compile(r"[A-Za-z][A-Za-z0-9_]{0,79}")
 KINDS = {"age": "age", "weight": "body_weight", "height": "height", "bmi": "body_mass_index",

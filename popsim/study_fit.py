@@ -8,8 +8,8 @@ from pathlib import Path
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim.patients.listed import read_list
-from popsim.records import Protocol, Target
-from popsim.study_file import StudyFile
+from popsim.study_records import Protocol, Target
+from popsim.study_sections import StudyFile
 
 
 def with_fraction_unbound(section: StudyFile, models: tuple[DrugModel, ...], path: Path,

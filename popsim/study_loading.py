@@ -8,8 +8,8 @@ from covariates.catalogue import attributes_needed
 from covariates.problems import ProblemsError
 from covariates.sheet import read_sheet
 from covariates.units import Quantity
-from popsim.records import Loading
-from popsim.study_file import DoseSection
+from popsim.study_records import Loading
+from popsim.study_sections import DoseSection
 
 VOLUME_KEYS = ("volume", "volume_of", "volume_is")
 EXAMPLE = 'volume = "0.7 L/kg", or volume_of = "vancomycin_goti_2018" with volume_is = "Vss" or "V1"'

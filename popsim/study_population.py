@@ -17,7 +17,8 @@ from popsim.patients.listed import list_columns
 from popsim.patients.population import LIMITED, SCALED, SURVEY_ATTRIBUTES, Population
 from popsim.patients.possible import POSSIBLE, completed_names
 from popsim.study_described import ATTRIBUTE_NAME, BODY, KINDS, read_described, share_of_women
-from popsim.study_file import PopulationSection, shown
+from popsim.study_sections import PopulationSection
+from popsim.study_values import shown
 
 OWN_SOURCE = {"file": "list", "on_bad_row": "list", "units": "list", "described": "described", "together": "described",
               "lattice": "lattice", "each": "lattice", "age_mix": "survey"}  # fmt: skip

@@ -5,13 +5,13 @@ from __future__ import annotations
 from collections.abc import Callable
 
 from covariates.catalogue import ATTRIBUTES, EQUATIONS, attributes_needed
-from covariates.problems import Problem, ProblemsError, nearest
+from covariates.problems import Problem, ProblemsError
 from covariates.units import Quantity
-from popsim.records import DoseStep, DoseVariant, Protocol
-from popsim.study_file import (
-    MOST_ADMINISTRATIONS, MOST_IN_PROTOCOL, WHOLE_VIALS, DoseSection, ProtocolSection, key_path,
-)  # fmt: skip
+from popsim.study_file import key_path
 from popsim.study_loading import is_given, resolve_loading
+from popsim.study_records import DoseStep, DoseVariant, Protocol
+from popsim.study_sections import DoseSection, ProtocolSection
+from popsim.study_values import MOST_ADMINISTRATIONS, MOST_IN_PROTOCOL, WHOLE_VIALS
 
 PER_UNIT = {"mass_per_kg": "kg", "rate_per_kg": "kg", "mass_per_m2": "m2", "rate_per_m2": "m2"}
 SIZES = {"kg": 'such as "weight" or "adjusted_body_weight"', "m2": 'such as "body_surface_area_mosteller"'}

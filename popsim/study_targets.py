@@ -9,8 +9,9 @@ from dataclasses import replace
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel, read_sheet, shipped_sheets
 from covariates.units import Quantity, Range, parse_quantity, parse_range
-from popsim.records import SUMMARIES, Mic, ResponseCurve, Target, quantity_words
-from popsim.study_file import TargetSection, key_path
+from popsim.study_file import key_path
+from popsim.study_records import SUMMARIES, Mic, ResponseCurve, Target, quantity_words
+from popsim.study_sections import TargetSection
 
 RULES = '"80 % of the time", "at any time", "always" or "at the end"'
 AREA_UNIT = "mg.h/L"

@@ -13,7 +13,7 @@ from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, wilson
 from popsim.flagged import flag_notes
 from popsim.measures import responses, values
 from popsim.population_tables import POPULATION_TABLES
-from popsim.records import Protocol, Study
+from popsim.study_records import Protocol, Study
 from popsim.tally import ONE, Findings, Tally, TargetTally, decimal_quantile, decimal_value, range_names
 from popsim.target import in_target_unit
 

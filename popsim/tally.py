@@ -12,7 +12,8 @@ from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.clusters import ClusterTally
 from popsim.population_tally import PopulationTally
-from popsim.records import Judged, Received, Study
+from popsim.records import Judged, Received
+from popsim.study_records import Study
 
 ONE = 2**32  # a share of 1 as a fixed-point integer
 DIGITS = 4  # doses are counted to four significant digits

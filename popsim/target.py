@@ -9,7 +9,8 @@ import numpy as np
 from covariates.problems import Problem, ProblemsError
 from covariates.sheet import DrugModel
 from popsim.effect import concentration_at, effect_at, effect_curve, falls
-from popsim.records import MINUTES_A_DAY, Judged, Target, WindowCourse, needs_effect_site
+from popsim.records import Judged, WindowCourse
+from popsim.study_records import MINUTES_A_DAY, Target, needs_effect_site
 
 SHARE_SLACK = 1e-9  # a share found to 1e-12 of the window must not miss "80 %" by rounding
 

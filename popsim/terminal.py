@@ -12,7 +12,7 @@ from covariates.sheet import DrugModel
 from popsim.cautions import CAUTIONS
 from popsim.estimate import no_headline
 from popsim.holds import further, numbers
-from popsim.records import Study, Target
+from popsim.study_records import Study, Target
 from popsim.words import finding, per_kg_line, percent, points, sides_line, target_line
 
 WIDTH = 80

@@ -9,7 +9,8 @@ import numpy as np
 from covariates.formula import Formula
 from covariates.problems import Problem, ProblemsError
 from popsim.amounts import ROUNDING_SLACK, Lookup, as_given, loading_mg, scaled_dose
-from popsim.records import DoseStep, DoseVariant, Protocol, Received, Timeline
+from popsim.records import Received, Timeline
+from popsim.study_records import DoseStep, DoseVariant, Protocol
 
 FAR_MIN = 1e9  # no run is as long
 GAP_MIN = 1e-9  # between two infusions: no pause, but the rounding of start + duration

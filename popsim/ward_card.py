@@ -9,7 +9,7 @@ import numpy as np
 from covariates.units import show, to_unit
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
-from popsim.records import DoseStep, DoseVariant, Protocol, Study
+from popsim.study_records import DoseStep, DoseVariant, Protocol, Study
 from popsim.timeline import Administration, administrations_of, loading_mg
 from popsim.words import clock
 

@@ -7,7 +7,7 @@ from typing import TYPE_CHECKING
 
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
-from popsim.records import Protocol, Study, Target, quantity_words
+from popsim.study_records import Protocol, Study, Target, quantity_words
 
 if TYPE_CHECKING:  # a third of a second that `popsim check` does without
     import pandas as pd

@@ -16,8 +16,9 @@ from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
 from popsim.patients.population import Population
-from popsim.records import Timeline, Variability
+from popsim.records import Timeline
 from popsim.streams import normals
+from popsim.study_records import Variability
 
 SEED, PEOPLE, ERROR = 20261201, 36, 0.15
 TIMES = (2.0, 5.0, 10.0, 20.0, 30.0, 45.0, 60.0, 75.0, 90.0)

@@ -13,10 +13,11 @@ from covariates.units import parse_quantity
 from popsim import solve
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
-from popsim.records import Disposition, Patients, Timeline, Variability
+from popsim.records import Disposition, Patients, Timeline
 from popsim.scoring.files import dose_step, kinds_of, timeline_of
 from popsim.scoring.predict import rows_of
 from popsim.streams import BLOCK, normals
+from popsim.study_records import Variability
 
 USUAL = {"sex": "male", "age": "40", "weight": "70", "height": "170", "serum_creatinine": "1"}
 FINE_MIN = 0.001

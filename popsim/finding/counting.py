@@ -19,10 +19,11 @@ from popsim.estimate import paired_difference, wilson
 from popsim.finding.wishes import EVERY, Wish
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
-from popsim.records import BlockRows, Study, Target
+from popsim.records import BlockRows
 from popsim.run import simulate
 from popsim.study import resolve_study
-from popsim.study_file import ProtocolSection, StudyFile
+from popsim.study_records import Study, Target
+from popsim.study_sections import ProtocolSection, StudyFile
 from popsim.tally import Tally, range_names
 
 AT_ONCE = 100  # protocols counted in one run, so that memory does not grow with them

@@ -18,7 +18,7 @@ from covariates.units import Quantity
 from popsim.finding.counting import Asked, Counts, count, fresh
 from popsim.finding.holding import Held, all_met, hold, shortfall
 from popsim.finding.places import Varied
-from popsim.study_file import ProtocolSection
+from popsim.study_sections import ProtocolSection
 
 PARTS, ROUNDS = 8, 2  # the last step is 1/64 of the grid's
 FINE_2D = 6

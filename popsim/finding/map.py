@@ -10,8 +10,9 @@ from covariates.problems import Problem, ProblemsError
 from popsim.estimate import wilson
 from popsim.finding.counting import Asked, Counts, count, cut_up, fresh
 from popsim.lookup import Lookup
-from popsim.records import BlockRows, Study
-from popsim.study_file import ProtocolSection
+from popsim.records import BlockRows
+from popsim.study_records import Study
+from popsim.study_sections import ProtocolSection
 
 FINE = 5  # regions are looked for in cells so much narrower than those of the table
 MOST_CELLS = 100

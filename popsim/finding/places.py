@@ -11,9 +11,8 @@ import numpy as np
 
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import Quantity, parse_quantity, parse_range, show
-from popsim.study_file import (
-    DOSE_AMOUNTS, DOSE_RATES, DoseSection, FindSection, ProtocolSection, StudyFile, VarySection,
-)  # fmt: skip
+from popsim.study_sections import DoseSection, FindSection, ProtocolSection, StudyFile, VarySection
+from popsim.study_values import DOSE_AMOUNTS, DOSE_RATES
 
 ALL_DOSES = "all doses"  # every amount and rate, and their caps and floors left as they are
 KINDS = {"amount": DOSE_AMOUNTS, "rate": DOSE_RATES, "at_most": ("mass", "rate"), "at_least": ("mass", "rate"),

@@ -16,8 +16,8 @@ from popsim.finding.places import with_doses
 from popsim.groups import members
 from popsim.lookup import Lookup
 from popsim.patients.draw import blocks
-from popsim.records import Study
-from popsim.study_file import GroupSection, ProtocolSection
+from popsim.study_records import Study
+from popsim.study_sections import GroupSection, ProtocolSection
 
 FIXED = "fixed"
 REFERENCE_ATTRIBUTES = ("sex", "age", "weight", "height")

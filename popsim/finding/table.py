@@ -23,7 +23,7 @@ from popsim.finding.dose import in_fresh
 from popsim.finding.places import Place, range_of, read_place
 from popsim.finding.wishes import EVERY
 from popsim.records import BlockRows
-from popsim.study_file import BandSection, FindTableSection, ProtocolSection
+from popsim.study_sections import BandSection, FindTableSection, ProtocolSection
 
 MOST_DOSES, MOST_SLICES = 150, 150
 LEAST_SHARE = 0.01  # a band holds at least this share of the patients

@@ -11,7 +11,7 @@ from popsim.drawing import FAINT, INK, MARGIN, RULE, Page, share_axis, strokes, 
 from popsim.finished import FinishedRun
 from popsim.headlines import NO_HEADLINE, has_headline, rows_where
 from popsim.pictures.shown import INTERVALS_SAY, ROOM, Picture, finish, group_label, head
-from popsim.records import Target
+from popsim.study_records import Target
 from popsim.words import percent, target_line
 
 NAME_WIDTH, SPREAD_WIDTH, STEP = 3.0, 1.25, 0.3

@@ -15,7 +15,7 @@ from covariates.units import UNITS, to_unit
 from popsim.drawing import FAINT, MARGIN, SHADE, WIDTH, Page, save, wrapped
 from popsim.finished import FinishedModel, FinishedRun
 from popsim.headlines import has_headline, rows_where
-from popsim.records import Target
+from popsim.study_records import Target
 from popsim.words import clock, sides_line, target_line, window
 
 INTERVALS_SAY = "95 % simulation intervals: the luck of drawing patients. They say nothing about the model's error."

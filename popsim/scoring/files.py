@@ -13,9 +13,12 @@ from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import parse_quantity
 from popsim.lookup import Lookup
 from popsim.patients.listed import read_list
-from popsim.records import DoseStep, Patients, Protocol, Timeline
-from popsim.study_file import LARGEST, SMALLEST, ProtocolSection, read_dose, shown
+from popsim.records import Patients, Timeline
+from popsim.study_file import read_dose
 from popsim.study_protocols import resolve_protocols
+from popsim.study_records import DoseStep, Protocol
+from popsim.study_sections import ProtocolSection
+from popsim.study_values import LARGEST, SMALLEST, shown
 from popsim.timeline import build_timeline
 
 GIVEN_COLUMNS = ("patient", "at", "amount", "rate", "over", "until", "every", "times", "by", "route")

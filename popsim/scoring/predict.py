@@ -13,9 +13,10 @@ from covariates.sheet import DrugModel
 from popsim import solve
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
-from popsim.records import Disposition, Timeline, Variability
+from popsim.records import Disposition, Timeline
 from popsim.scoring.files import Measured
 from popsim.streams import normals
+from popsim.study_records import Variability
 
 TYPICAL = Variability(between_subject=False, scale=1.0, from_model=None)
 AS_PUBLISHED = Variability(between_subject=True, scale=1.0, from_model=None)

@@ -17,7 +17,7 @@ from popsim.parameters import individual_parameters, random_effects
 from popsim.patients.described import Described, fit_marginal
 from popsim.patients.draw import blocks
 from popsim.patients.population import Population
-from popsim.records import Variability
+from popsim.study_records import Variability
 
 COUNT = 1_000_000
 SIX = ("V1", "V2", "V3", "CL", "Q2", "Q3")

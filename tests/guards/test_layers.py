@@ -13,9 +13,10 @@ POPSIM = Path(popsim.__file__).parent
 FLOW = [
     "errors", "cautions", "lookup", "streams", "kernels",
     "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
-    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population", "records",
-    "patients.draw", "finding.wishes", "study_salvage", "study_file", "study_described", "study_population",
-    "study_loading", "study_protocols", "study_targets", "study_fit", "study", "groups", "slices", "parameters",
+    "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population",
+    "records", "patients.draw", "study_records", "finding.wishes", "study_salvage", "study_values", "study_sections",
+    "study_file", "study_described", "study_population", "study_loading", "study_protocols", "study_targets",
+    "study_fit", "study", "groups", "slices", "parameters",
     "flagged", "amounts", "timeline", "solve", "effect", "target", "judging", "estimate", "clusters",
     "population_tally", "tally", "people", "run", "compare", "measures", "population_tables", "tables", "robustness",
     "words", "holds", "ward_card", "provenance", "output", "finished", "headlines",

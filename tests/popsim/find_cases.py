@@ -6,7 +6,8 @@ import runpy
 from pathlib import Path
 
 from popsim.finding.counting import Asked, read_asked
-from popsim.study_file import ProtocolSection, read_study_file
+from popsim.study_file import read_study_file
+from popsim.study_sections import ProtocolSection
 
 cases = runpy.run_path(str(Path(__file__).with_name("judge_cases.py")))
 LOGNORMAL = 'CL = {{ value = {omega}, printed_as = "sd of ln", evidence = "seen" }}'

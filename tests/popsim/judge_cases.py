@@ -9,9 +9,9 @@ import pandas as pd
 from covariates.problems import ProblemsError  # noqa: F401 (for the tests)
 from popsim.finished import FinishedRun, finished_run
 from popsim.provenance import record_of
-from popsim.records import Study
 from popsim.run import simulate
 from popsim.study import read_study
+from popsim.study_records import Study
 from popsim.tables import all_tables, notes_of
 from popsim.tally import Findings
 

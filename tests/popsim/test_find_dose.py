@@ -17,7 +17,7 @@ from popsim.finding.counting import count, fresh
 from popsim.finding.dose import confirm, label, search
 from popsim.finding.holding import hold
 from popsim.finding.places import read_vary
-from popsim.study_file import DoseSection
+from popsim.study_sections import DoseSection
 
 find_cases = runpy.run_path(str(Path(__file__).with_name("find_cases.py")))
 RATE = {"a": 'rate = "1 mg/min"\nuntil = "600 min"'}

@@ -10,8 +10,9 @@ import pytest
 from covariates.sheet import read_sheet
 from popsim.lookup import Lookup
 from popsim.parameters import forms_used, individual_parameters, outside_ranges, random_effects, spread_used
-from popsim.records import Patients, Variability
+from popsim.records import Patients
 from popsim.streams import normals
+from popsim.study_records import Variability
 
 BIS, MINTO, MARSH = (
     read_sheet(name) for name in ("propofol_eleveld_2018", "remifentanil_minto_1997", "propofol_marsh_1991")

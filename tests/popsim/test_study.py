@@ -11,8 +11,8 @@ from hypothesis import HealthCheck, given, settings
 from hypothesis import strategies as st
 
 from covariates.problems import ProblemsError
-from popsim.records import Study
 from popsim.study import read_study
+from popsim.study_records import Study
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("bad_studies.py"))))
 GOOD, BAD = cases.GOOD, cases.BAD

@@ -7,7 +7,8 @@ import pytest
 
 from covariates.problems import ProblemsError
 from covariates.sheet import read_sheet
-from popsim.records import Target, WindowCourse
+from popsim.records import WindowCourse
+from popsim.study_records import Target
 from popsim.target import concentration_limits, grid_course, judge, window_of
 
 REMIFENTANIL, BIS = read_sheet("remifentanil_minto_1997"), read_sheet("propofol_eleveld_2018")

@@ -8,7 +8,7 @@ from hypothesis import strategies as st
 from covariates.formula import compile_formula
 from covariates.problems import ProblemsError
 from covariates.units import parse_quantity
-from popsim.records import DoseStep, DoseVariant, Protocol
+from popsim.study_records import DoseStep, DoseVariant, Protocol
 from popsim.timeline import administrations_of, as_given, build_timeline
 
 KINDS = ["mass", "mass_per_kg", "mass_per_m2", "rate", "rate_per_kg", "rate_per_m2"]
