@@ -14,6 +14,7 @@ from covariates.units import Quantity
 from popsim import solve
 from popsim.cautions import CAUTIONS
 from popsim.parameters import forms_used, spread_used
+from popsim.study_records import Study
 from popsim.tally import Findings
 
 PACKAGES = ("popsim", "numpy", "scipy", "pandas", "numba", "matplotlib", "jinja2", "pydantic")
@@ -50,17 +51,28 @@ def record_of(findings: Findings, command: str, notes: list[str]) -> dict[str, A
         },
         "notes": notes,
         "cautions": list(CAUTIONS),
-        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
-        "machine": {"system": platform.system(), "processor": platform.machine()},
+        **surroundings(),
         "timings": {"simulation_s": round(findings.seconds, 3), "threads": findings.threads},
     }
 
 
-def _model_record(study, model: DrugModel) -> dict[str, Any]:
-    return {"name": model.name, "drug": model.drug, "digest_sha256": model.digest, "evidence": model.evidence,
-            "source": model.source, "spread_sd_of_ln": spread_used(model, study.variability),
-            "spread_not_lognormal": forms_used(model, study.variability),
-            "spread_note": model.spread_note, "cautions": list(model.cautions), "effect": plain(model.effect)}
+def surroundings() -> dict[str, Any]:
+    """The versions and the machine that a result came from."""
+    return {"versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
+            "machine": {"system": platform.system(), "processor": platform.machine()}}
+
+
+def sheet_record(model: DrugModel) -> dict[str, Any]:
+    """Which model sheet was used, and what it says of itself."""
+    return {"name": model.name, "digest_sha256": model.digest, "evidence": model.evidence, "source": model.source,
+            "cautions": list(model.cautions)}
+
+
+def _model_record(study: Study, model: DrugModel) -> dict[str, Any]:
+    return sheet_record(model) | {
+        "drug": model.drug, "spread_sd_of_ln": spread_used(model, study.variability),
+        "spread_not_lognormal": forms_used(model, study.variability), "spread_note": model.spread_note,
+        "effect": plain(model.effect)}
 
 
 def plain(value: Any) -> Any:

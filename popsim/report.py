@@ -5,7 +5,6 @@ Every number is a cell of the run's tables or a count of its record, written as 
 
 from __future__ import annotations
 
-import re
 from base64 import b64encode
 from hashlib import sha256
 from importlib import resources
@@ -13,7 +12,6 @@ from pathlib import Path
 from typing import Any
 
 import pandas as pd
-from jinja2 import Environment, PackageLoader, StrictUndefined
 from markupsafe import Markup
 
 from covariates.sheet import DrugModel
@@ -21,6 +19,7 @@ from covariates.units import to_unit
 from popsim.finished import own_site
 from popsim.headlines import has_headline, rows_where
 from popsim.holds import further, numbers
+from popsim.page import inlined, write_page
 from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.population_tally import LEAN
 from popsim.study_records import Protocol, Study, Target
@@ -42,13 +41,13 @@ SOURCES = {"survey": "adults drawn as a national household survey of the United 
 def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any], pictures: list[Picture],
                  path: Path) -> None:
     """Write the report to `path`; the pictures' files stand in the same folder."""
-    environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
-                              trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
-    environment.globals |= {"percent": percent, "points": points, "interval": _interval}
     script = (resources.files("popsim") / "templates" / "report.js").read_text(encoding="utf-8")
-    drawn = [{"picture": picture, "svg": inlined((path.parent / picture.file_name).read_text("utf-8"), number)}
-             for number, picture in enumerate(pictures, 1)]
-    html = environment.get_template("report.html.j2").render(
+    drawn = inlined(pictures, path.parent)
+    write_page(
+        path, "report.html.j2",
+        percent=percent,
+        points=points,
+        interval=_interval,
         study=study,
         record=record,
         intervals_say=INTERVALS_SAY,
@@ -68,7 +67,6 @@ def write_report(study: Study, tables: dict[str, pd.DataFrame], record: dict[str
         sensitivity=_sensitivity(study, tables, [one for one in drawn if _of_models(one)]),
         run_end=clock(study.until_min),
     )
-    path.write_text(html, encoding="utf-8")
 
 
 def _interval(low: float, high: float, show=percent) -> str:
@@ -268,15 +266,3 @@ def _under_models(study: Study, attainment: pd.DataFrame, target: Target) -> dic
                          "spread": f"{100 * (found['attained'].max() - found['attained'].min()):.1f}"
                          if all(fine) else "-"})
     return {"title": target.name if len(study.targets) > 1 else "", "spread": spread, "rows": rows}
-
-
-def inlined(svg: str, number: int) -> Markup:
-    """One of our SVG files as part of a page: no prolog, comments or metadata; ids that no other picture has."""
-    svg = svg[svg.index("<svg"):]
-    svg = re.sub(r"<!--.*?-->|<metadata>.*?</metadata>", "", svg, flags=re.DOTALL)
-    own = f"p{number}-"
-    svg = re.sub(r'\bid="', f'id="{own}', svg)
-    svg = re.sub(r'(xlink:href="#|url\(#)', rf"\g<1>{own}", svg)
-    svg = svg.replace('aria-labelledby="popsim-title popsim-description"',
-                      f'aria-labelledby="{own}popsim-title {own}popsim-description"')
-    return Markup(re.sub(r"\n\s*\n+", "\n", svg))  # its text was escaped when it was drawn

@@ -4,17 +4,14 @@ from __future__ import annotations
 
 import base64
 import json
-import platform
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any
-
-from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from popsim.cautions import CAUTIONS
 from popsim.finding.answer import Answer
 from popsim.output import write_record, write_tables
-from popsim.provenance import PACKAGES, plain
+from popsim.page import write_page
+from popsim.provenance import plain, sheet_record, surroundings
 
 
 def leave(answer: Answer, folder: Path, command: str, kind: str, seconds: float, threads: int, report: bool) -> None:
@@ -35,23 +32,17 @@ def record_of_search(answer: Answer, command: str, seconds: float, threads: int)
         "title": study.title, "question": study.question, "seed": study.seed, "command": command,
         "study_file": study.path.name, "study_digest_sha256": study.digest, "study": plain(study),
         "find": plain(answer.asked.section.find.model_dump()) | answer.numbers,
-        "models": [{"name": model.name, "digest_sha256": model.digest, "evidence": model.evidence,
-                    "source": model.source, "cautions": list(model.cautions)} for model in study.models],
+        "models": [sheet_record(model) for model in study.models],
         "cautions": list(CAUTIONS),
-        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
-        "machine": {"system": platform.system(), "processor": platform.machine()},
+        **surroundings(),
         "timings": {"search_s": round(seconds, 3), "threads": threads},
     }
 
 
 def _write_report(answer: Answer, record: dict[str, Any], folder: Path) -> None:
-    environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
-                              trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
-    html = environment.get_template("find.html.j2").render(
-        study=answer.asked.base, record=record, parts=answer.parts,
-        pictures=[(picture, base64.b64encode((folder / picture.file_name).read_bytes()).decode("ascii"))
-                  for picture in answer.pictures])
-    (folder / "report.html").write_text(html, encoding="utf-8")
+    write_page(folder / "report.html", "find.html.j2", study=answer.asked.base, record=record, parts=answer.parts,
+               pictures=[(picture, base64.b64encode((folder / picture.file_name).read_bytes()).decode("ascii"))
+                         for picture in answer.pictures])
 
 
 def as_json_text(answer: Answer) -> str:

@@ -3,18 +3,15 @@
 from __future__ import annotations
 
 import hashlib
-import platform
-from importlib.metadata import version
 from pathlib import Path
 from typing import Any
 
 import pandas as pd
-from jinja2 import Environment, PackageLoader, StrictUndefined
 
 from covariates.sheet import shipped_sheets
+from popsim.page import inlined, write_page
 from popsim.pictures.shown import Picture
-from popsim.provenance import PACKAGES
-from popsim.report import inlined
+from popsim.provenance import sheet_record, surroundings
 from popsim.scoring.tables import PHASES, Scored
 from popsim.scoring.words import INTERVALS_SAY, MEASURES_SAY, SCORE_CAUTIONS, answer, inside, interval, number
 from popsim.words import percent
@@ -35,24 +32,24 @@ def score_record(scored: Scored, files: tuple[Path, Path, Path], replicates: int
                   for path in files],
         "counts": {"patients": len(measured.labels), "measurements": len(measured.value)},
         "groups": {name: where.text for name, where in scored.groups},
-        "models": [{"name": model.name, "digest_sha256": model.digest, "evidence": model.evidence,
-                    "source": model.source, "cautions": list(model.cautions)} for model in scored.models],
+        "models": [sheet_record(model) for model in scored.models],
         "not_scored": scored.left_out,
         "notes": notes,
         "cautions": list(SCORE_CAUTIONS),
-        "versions": {"python": platform.python_version(), **{name: version(name) for name in PACKAGES}},
-        "machine": {"system": platform.system(), "processor": platform.machine()},
+        **surroundings(),
     }
 
 
 def write_score_report(scored: Scored, tables: dict[str, pd.DataFrame], record: dict[str, Any],
                        pictures: list[Picture], path: Path) -> None:
     """Write the report to `path`; the pictures' files stand in the same folder."""
-    environment = Environment(loader=PackageLoader("popsim"), autoescape=True, undefined=StrictUndefined,
-                              trim_blocks=True, lstrip_blocks=True, keep_trailing_newline=True)
-    environment.globals |= {"percent": percent, "number": number, "interval": interval, "inside": inside}
     scores = tables["scores"]
-    html = environment.get_template("score.html.j2").render(
+    write_page(
+        path, "score.html.j2",
+        percent=percent,
+        number=number,
+        interval=interval,
+        inside=inside,
         drug=scored.models[0].drug,
         record=record,
         models=scored.models,
@@ -63,7 +60,5 @@ def write_score_report(scored: Scored, tables: dict[str, pd.DataFrame], record: 
         pairs=list(tables["score_comparison"].itertuples()),
         intervals_say=INTERVALS_SAY,
         measures_say=MEASURES_SAY,
-        pictures=[{"picture": picture, "svg": inlined((path.parent / picture.file_name).read_text("utf-8"), k)}
-                  for k, picture in enumerate(pictures, 1)],
+        pictures=inlined(pictures, path.parent),
     )
-    path.write_text(html, encoding="utf-8")

@@ -22,7 +22,7 @@ FLOW = [
     "words", "holds", "ward_card", "provenance", "output", "finished", "headlines",
     "drawing", "pictures.shown", "pictures.grid", "pictures.by_group", "pictures.over_time", "pictures.sides",
     "pictures.bands", "pictures.age_weight", "pictures.body_size", "pictures.models", "pictures.mic", "pictures.album",
-    "patient_pictures", "report", "terminal", "check_text", "progress",
+    "patient_pictures", "page", "report", "terminal", "check_text", "progress",
     "scoring.files", "scoring.measures", "scoring.predict", "scoring.tables", "scoring.words", "scoring.pictures",
     "scoring.report", "scoring.run",
     "evidence.claims", "evidence.typical", "evidence.remifentanil", "evidence.mixed_fit", "evidence.open_data",
