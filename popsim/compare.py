@@ -6,10 +6,11 @@ from itertools import combinations
 
 import numpy as np
 
+from popsim.counted import key_of_rank
 from popsim.estimate import no_headline, paired_difference, quantile_ranks, unpaired_difference, verdict, wilson
 from popsim.slices import QUARTILES
 from popsim.study_records import Study, needs_effect_site
-from popsim.tally import STEPS_OF_SHARE, PairTally, Tally, key_of_rank
+from popsim.tally import STEPS_OF_SHARE, PairTally, Tally
 
 
 def protocol_pairs(study: Study, tally: Tally) -> list[dict]:

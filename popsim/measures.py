@@ -6,11 +6,10 @@ import math
 
 import numpy as np
 
+from popsim.counted import QUANTILES, key_of_rank, measure_value
 from popsim.estimate import Z95, mean_error, quantile_ranks
 from popsim.study_records import Study, Target
-from popsim.tally import ONE, Tally, key_of_rank, measure_value
-
-QUANTILES = {"p05": 0.05, "p25": 0.25, "p50": 0.5, "p75": 0.75, "p95": 0.95}
+from popsim.tally import ONE, Tally
 
 
 def values(study: Study, tally: Tally) -> list[dict]:

@@ -7,25 +7,23 @@ from dataclasses import dataclass
 
 import numpy as np
 
-from covariates.catalogue import attributes_needed, compute
-from popsim.patients.possible import ADULT_YEARS
+from popsim.counted import KEY_COUNT, QUANTILES, count_by_group, decimal_keys, decimal_quantile
+from popsim.population_tally import CLEARANCE, LEAN, measured
 from popsim.records import Patients
 from popsim.study_records import Study
-from popsim.tally import KEY_COUNT, decimal_keys, decimal_quantile
 
 WIDTH = 80
 SHOWN_IN_PICTURE = 1500  # people of the first block that a picture shows one by one
-SHARES = (0.05, 0.25, 0.5, 0.75, 0.95)
+SHARES = tuple(QUANTILES.values())
 
 
 @dataclass(frozen=True)
 class Measure:
-    """What is summarised: covariate, its words, its unit, and whether its equation is for adults only."""
+    """What is summarised: covariate, its words, its unit."""
 
     covariate: str
     words: str
     unit: str
-    adults_only: bool = False
 
 
 MEASURES = (
@@ -33,8 +31,8 @@ MEASURES = (
     Measure("weight", "weight", "kg"),
     Measure("height", "height", "cm"),
     Measure("bmi", "BMI", "kg/m2"),
-    Measure("lean_body_mass_janmahasatian", "lean mass", "kg", True),
-    Measure("creatinine_clearance_cockcroft_gault_adjusted", "clearance", "mL/min", True),
+    Measure(LEAN, "lean mass", "kg"),
+    Measure(CLEARANCE, "clearance", "mL/min"),
 )
 FOOTNOTE = (
     "lean mass by Janmahasatian 2005; clearance of creatinine by Cockcroft and Gault 1976 with adjusted body weight; "
@@ -59,21 +57,11 @@ class People:
         self.patients += members.sum(axis=0)
         if not self.sample:
             self.sample = {name: values[:SHOWN_IN_PICTURE] for name, values in patients.attributes.items()}
-        everyone = np.ones(len(patients), dtype=bool)
-        adults = patients.attributes["age"] >= ADULT_YEARS if "age" in patients.attributes else everyone
         for measure in MEASURES:
-            of = adults if measure.adults_only else everyone
-            if (
-                not attributes_needed(measure.covariate, patients.attributes) <= patients.attributes.keys()
-                or not of.any()
-            ):
-                continue
-            keys = decimal_keys(
-                compute(measure.covariate, {name: all_of[of] for name, all_of in patients.attributes.items()})
-            )
-            counts = self.counts.setdefault(measure, np.zeros((len(self.names), KEY_COUNT), dtype=np.int32))
-            for group in range(len(self.names)):
-                np.add.at(counts[group], keys[members[of, group]], 1)
+            if found := measured(measure.covariate, patients.attributes):
+                of, values = found
+                counts = self.counts.setdefault(measure, np.zeros((len(self.names), KEY_COUNT), dtype=np.int32))
+                count_by_group(counts, decimal_keys(values), members[of])
 
     def quantiles(self, measure: Measure, group: int) -> list[float]:
         """At SHARES; NaN where nobody is counted."""

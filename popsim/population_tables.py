@@ -8,15 +8,13 @@ from collections.abc import Callable
 import numpy as np
 import pandas as pd
 
+from popsim.counted import QUANTILES, tenths_quantile
 from popsim.estimate import wilson
 from popsim.population_tally import (
     AGE_BINS, AGE_STEP_YEARS, GROUP_MEASURES, SEXES, WEIGHT_BINS, WEIGHT_STEP_KG, dosed_by, size_measures,
-    tenths_quantile,
 )  # fmt: skip
 from popsim.study_records import Study
 from popsim.tally import Tally, range_names
-
-QUANTILES = {"p05": 0.05, "p25": 0.25, "p50": 0.5, "p75": 0.75, "p95": 0.95}
 
 
 def people(study: Study, tally: Tally) -> pd.DataFrame:

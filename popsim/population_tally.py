@@ -9,18 +9,19 @@ from itertools import product
 import numpy as np
 
 from covariates.catalogue import attributes_needed, compute
+from popsim.counted import TENTHS_KEYS, count_by_group, tenths_keys
+from popsim.patients.possible import ADULT_YEARS
 from popsim.records import Judged
 from popsim.study_records import Protocol, Study
 
 LEAN = "lean_body_mass_janmahasatian"
+CLEARANCE = "creatinine_clearance_cockcroft_gault_adjusted"
 GROUP_MEASURES = ("age", "weight", "height", "bmi", LEAN)
 SIZE_MEASURES = ("weight", LEAN, "ideal_body_weight_devine", "adjusted_body_weight")
-FOR_ADULTS = (LEAN, "ideal_body_weight_devine", "adjusted_body_weight")  # the equations' own people
-ADULT_YEARS = 18.0
+FOR_ADULTS = (LEAN, CLEARANCE, "ideal_body_weight_devine", "adjusted_body_weight")  # the equations' own people
 SEXES = ("female", "male")
 AGE_STEP_YEARS, AGE_BINS = 10.0, 13  # the last bin of each is open: 120 years, 200 kg and more
 WEIGHT_STEP_KG, WEIGHT_BINS = 10.0, 21
-TENTHS = 10_000  # values are counted in tenths from 0 to 1000; a bin below and one above hold the rest
 
 
 @dataclass
@@ -55,8 +56,8 @@ class PopulationTally:
         return cls(
             sexed=counts(groups),
             female=counts(groups),
-            by_group={name: counts(groups, TENTHS + 3) for name in GROUP_MEASURES},
-            by_weight={name: np.zeros((2, WEIGHT_BINS, TENTHS + 3), dtype=np.int32) for name in size_measures(study)},
+            by_group={name: counts(groups, TENTHS_KEYS) for name in GROUP_MEASURES},
+            by_weight={name: np.zeros((2, WEIGHT_BINS, TENTHS_KEYS), dtype=np.int32) for name in size_measures(study)},
             cells=counts(AGE_BINS, WEIGHT_BINS),
             outside={m: counts(AGE_BINS, WEIGHT_BINS) for m in models},
             attained={key: counts(AGE_BINS, WEIGHT_BINS) for key in judged},
@@ -75,16 +76,16 @@ class PopulationTally:
             self.sexed += members.sum(axis=0)
             self.female += members.T @ female
         for name, counts in self.by_group.items():
-            of, tenths = _counted(name, attributes)
-            for group in range(members.shape[1]) if of is not None else ():
-                np.add.at(counts[group], tenths[members[of, group] > 0], 1)
+            if found := measured(name, attributes):
+                of, values = found
+                count_by_group(counts, tenths_keys(values), members[of])
         if "weight" not in attributes:
             return None
         heavy = _bin(attributes["weight"], WEIGHT_STEP_KG, WEIGHT_BINS)
         for name, counts in self.by_weight.items() if female is not None else ():
-            of, tenths = _counted(name, attributes)
-            if of is not None:
-                np.add.at(counts, (1 - female[of].astype(np.int64), heavy[of], tenths), 1)
+            if found := measured(name, attributes):
+                of, values = found
+                np.add.at(counts, (1 - female[of].astype(np.int64), heavy[of], tenths_keys(values)), 1)
         if "age" not in attributes:
             return None
         cell = _bin(attributes["age"], AGE_STEP_YEARS, AGE_BINS) * WEIGHT_BINS + heavy
@@ -113,17 +114,16 @@ def dosed_by(protocol: Protocol) -> set[str]:
             for dose in (variant.amount, variant.rate) if dose is not None and dose.kind.endswith("_per_kg")}
 
 
-def _counted(name: str, attributes: Mapping[str, np.ndarray]) -> tuple[np.ndarray | None, np.ndarray | None]:
-    """Which patients have this measure, and theirs in tenths; None where the patients' attributes do not tell it."""
+def measured(name: str, attributes: Mapping[str, np.ndarray]) -> tuple[np.ndarray, np.ndarray] | None:
+    """Who has this measure, (n,) bool, and their values; None where nobody does, or the attributes do not tell it."""
     if not attributes_needed(name, attributes) <= attributes.keys():
-        return None, None
+        return None
     of = np.ones(len(next(iter(attributes.values()))), dtype=bool)
     if name in FOR_ADULTS and "age" in attributes:
         of = attributes["age"] >= ADULT_YEARS
     if not of.any():
-        return None, None
-    values = compute(name, {key: column[of] for key, column in attributes.items()})
-    return of, np.clip(np.rint(values * 10) + 1, 0, TENTHS + 2).astype(np.int64)
+        return None
+    return of, compute(name, {key: column[of] for key, column in attributes.items()})
 
 
 def _bin(values: np.ndarray, step: float, bins: int) -> np.ndarray:
@@ -132,12 +132,3 @@ def _bin(values: np.ndarray, step: float, bins: int) -> np.ndarray:
 
 def _add_cells(counts: np.ndarray, cell: np.ndarray, marked: np.ndarray) -> None:
     counts += np.bincount(cell[marked], minlength=counts.size).reshape(counts.shape)
-
-
-def tenths_quantile(counts: np.ndarray, share: float) -> float:
-    """Smallest counted value with at least `share` of the counts at or below it, to a tenth; NaN without counts."""
-    total = int(counts.sum())
-    if total == 0:
-        return float("nan")
-    place = int(np.searchsorted(np.cumsum(counts), max(int(np.ceil(share * total - 1e-9)), 1)))
-    return float("-inf") if place == 0 else float("inf") if place == TENTHS + 2 else (place - 1) / 10

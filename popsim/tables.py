@@ -9,12 +9,13 @@ import pandas as pd
 
 from popsim import solve
 from popsim.compare import against_reference, all_of_them, between_models, protocol_pairs, quartile_pairs
+from popsim.counted import decimal_quantile, decimal_value
 from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, wilson
 from popsim.flagged import flag_notes
 from popsim.measures import responses, values
 from popsim.population_tables import POPULATION_TABLES
 from popsim.study_records import Protocol, Study
-from popsim.tally import ONE, Findings, Tally, TargetTally, decimal_quantile, decimal_value, range_names
+from popsim.tally import ONE, Findings, Tally, TargetTally, range_names
 from popsim.target import in_target_unit
 
 FEW_PATIENTS = 400

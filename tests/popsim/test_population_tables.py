@@ -10,8 +10,8 @@ import pytest
 
 from covariates.catalogue import compute
 from popsim.cli import run as popsim_run
+from popsim.counted import TENTHS, tenths_quantile
 from popsim.pictures.album import draw_all
-from popsim.population_tally import TENTHS, tenths_quantile
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 ADJUSTED = {"adjusted": 'rate = "6 mg/kg/h"\nuntil = "60 min"', "fixed": 'rate = "600 ug/h"\nuntil = "60 min"'}

@@ -12,8 +12,9 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from covariates.problems import ProblemsError
+from popsim.counted import KEY_COUNT, decimal_keys, decimal_quantile, decimal_value
 from popsim.records import Judged
-from popsim.tally import KEY_COUNT, ONE, PairTally, Tally, TargetTally, decimal_keys, decimal_quantile, decimal_value
+from popsim.tally import ONE, PairTally, Tally, TargetTally
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 
