@@ -37,11 +37,11 @@ def robustness(study: Study, threads: int) -> pd.DataFrame:
     the study as written, asked of the same first patients; empty for a single protocol.
     """
     few = _fewer(study)
-    written = simulate(few, threads, over_time=False).tally
+    written = simulate(few, threads, what="pairs").tally
     rows = list(_rows(study, Variant("as written", few), written))
     answers = {_key(row): _answer(row) for row in rows}
     for variant in _variants(few):
-        tally = written if variant.inside_only else simulate(variant.study, threads, over_time=False).tally
+        tally = written if variant.inside_only else simulate(variant.study, threads, what="pairs").tally
         rows += _rows(study, variant, tally)
     for row in rows:
         row["same_answer"] = "" if len(study.protocols) == 1 else (

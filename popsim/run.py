@@ -10,6 +10,7 @@ import threading
 import time
 from collections.abc import Callable, Iterator
 from concurrent.futures import ThreadPoolExecutor
+from dataclasses import dataclass
 
 import numpy as np
 
@@ -23,38 +24,37 @@ from popsim.judging import judge_target
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
-from popsim.records import BlockRows, Disposition, IndividualParameters, Judged, Patients, Timeline
+from popsim.population_tally import LEAN
+from popsim.records import BlockRows, Disposition, IndividualParameters, Judged, Patients, Received, Timeline
 from popsim.slices import quartile_cuts, quartile_members
 from popsim.study_records import Study
-from popsim.tally import Findings, Tally, check_room
+from popsim.tally import Findings, Tally, What, check_room
 from popsim.target import all_attained, grid_course, grid_limits
 from popsim.timeline import build_timeline, steady_timeline
-
-LEAN = "lean_body_mass_janmahasatian"
 
 
 def simulate(study: Study, threads: int = 1, keep_courses: bool = False,
              sink: Callable[[BlockRows], None] | None = None,
-             progress: Callable[[int], None] | None = None, over_time: bool = True,
-             attainment_only: bool = False) -> Findings:
+             progress: Callable[[int], None] | None = None, what: What = "everything") -> Findings:
     """Run a study. `sink` receives every block in order; `progress` the number of patients done so far.
 
-    over_time         False: nothing on the grid and none of each patient's own numbers, which take most of the time
-    attainment_only   for a search over many protocols: nothing over time, no pairs, no doses, no cells of people
+    what  "everything"; "pairs": attainment and pairs of protocols; "attainment" alone, for a search over many. Most of
+          the time goes into what happens over time and into each patient's own numbers, which only the first counts.
     """
     started = time.perf_counter()
     drawn = blocks(study.population, study.seed)
     queue = _Queue(iter(drawn), sink, progress)
-    grid = study.grid_min() if over_time and not attainment_only else np.empty(0)
-    if not attainment_only:
+    grid, cuts = np.empty(0), {}
+    if what == "everything":
+        grid = study.grid_min()
         check_room(study, len(grid))
-    cuts = {} if attainment_only else quartile_cuts(study)
+        cuts = quartile_cuts(study)
 
     def work(_: int = 0) -> Tally | None:
         tally = None  # counts take tens of MB: a thread that finds no block left makes none
         for number, patients in queue:
             try:
-                tally = tally or Tally.empty(study, len(grid), cuts, drawn.origins, attainment_only)
+                tally = tally or Tally.empty(study, len(grid), cuts, drawn.origins, what)
                 queue.done(number, _judge_block(study, grid, patients, tally, keep_courses))
             except BaseException:
                 queue.stop()
@@ -110,72 +110,119 @@ class _Queue:
                     self._progress(self._patients)
 
 
+@dataclass(frozen=True)
+class _Block:
+    """A block of patients, and what is the same for them under every model.
+
+    members, quarters  (n, groups) and (n, quartiles) int64, 1 = belongs to it
+    cell     (n,) each patient's cell of age and weight; None where people are not counted by cells
+    given    what each protocol gives: its timeline and what is received
+    steady   each protocol's timeline at steady state, None where no target asks for it
+    """
+
+    study: Study
+    grid: np.ndarray
+    patients: Patients
+    lookup: Lookup
+    members: np.ndarray
+    quarters: np.ndarray
+    cell: np.ndarray | None
+    given: list[tuple[Timeline, Received]]
+    steady: list[Timeline | None]
+    tally: Tally
+
+
 def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tally, keep_courses: bool) -> BlockRows:
-    lookup = Lookup(patients.attributes)
-    members = group_members(study.groups, lookup, len(patients)).astype(np.int64)
+    block = _counted_block(study, grid, patients, tally)
+    courses, all_judged = [], {}
+    for m, model in enumerate(study.models):
+        parameters = individual_parameters(model, study.variability, study.seed, patients, block.lookup)
+        disposition = solve.disposition(parameters.values)
+        _count_outside(block, m, parameters)
+        judged = _judge_model(block, m, parameters, disposition)
+        _compare_protocols(block, m, judged, parameters.outside)
+        all_judged |= {(m, p, t): one for (p, t), one in judged.items()}
+        if keep_courses:
+            courses += [(model.name, protocol.name, *_courses(grid, model, parameters, disposition, timeline))
+                        for protocol, (timeline, _) in zip(study.protocols, block.given, strict=True)]
+    return BlockRows(patients, block.lookup, courses, block.members, all_judged, [one for _, one in block.given])
+
+
+def _counted_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tally) -> _Block:
+    """Count who is in a block and what they are given, before any model is asked."""
+    n, lookup = len(patients), Lookup(patients.attributes)
+    members = group_members(study.groups, lookup, n).astype(np.int64)
+    quarters = quartile_members(tally.cuts, lookup, n).astype(np.int64)
     tally.patients += members.sum(axis=0)
-    quarters = quartile_members(tally.cuts, lookup, len(patients)).astype(np.int64)
     tally.quartile_patients += quarters.sum(axis=0)
     tally.overlap += members.T @ members
     cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
         tally.clusters.add_people(patients.origins, members)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
-    given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
-    numbers = len(grid) > 0
-    repeats = any(target.steady or (numbers and target.summary) for target in study.targets)
-    steady = [steady_timeline(protocol, lookup, len(patients)) if repeats else None for protocol in study.protocols]
+    given = [build_timeline(protocol, lookup, n, study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
     for p, doses in tally.doses.items():
         doses.add(given[p][1], per, members)
-    courses = []
-    all_judged: dict[tuple[int, int, int], Judged] = {}
-    for m, model in enumerate(study.models):
-        parameters = individual_parameters(model, study.variability, study.seed, patients, lookup)
-        disposition = solve.disposition(parameters.values)
-        status = disposition.status
-        tally.outside[m] += members.T @ parameters.outside
-        if tally.population:
-            tally.population.add_outside(m, cell, parameters.outside)
-        for name, marked in parameters.beyond.items():
-            tally.beyond[m, name] += members.T @ marked
-        judged: dict[tuple[int, int], Judged] = {}
-        for p, (timeline, received) in enumerate(given):
-            if model.built_on.longest_infusion_min is not None:
-                tally.long_infusion[m, p] += members.T @ (
-                    received.longest_infusion_min > model.built_on.longest_infusion_min * (1 + 1e-9))
-            tally.large_total[m, p] += members.T @ beyond_total(model, received, lookup)
-            for t, target in enumerate(study.targets):
-                judged[p, t], found = judge_target(study, m, target, patients, parameters, disposition, timeline,
-                                                   received, lookup, steady[p], numbers)
-                status = np.where(status == 0, found, status)
-                tally.targets[m, p, t].add(judged[p, t], members, parameters.outside)
-                if tally.population:
-                    tally.population.add_judged((m, p, t), cell, judged[p, t])
-                if tally.clusters is not None:
-                    tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
-            if tally.responses:
-                _add_responses(study, m, p, judged, members, tally)
-            if not len(grid):
-                continue
-            of_targets = [judged[p, t] for t in range(len(study.targets))]
-            _over_time(study, grid, m, p, parameters, disposition, timeline, of_targets, members, tally)
-            if keep_courses:
-                kept = _courses(grid, model, parameters, disposition, timeline)
-                courses.append((model.name, study.protocols[p].name, *kept))
-        if tally.together:
-            joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
-            for p, one in enumerate(joint):
-                tally.together[m, 0, p].add(joint[0], one, members)
-        tally.add_statuses(m, status, patients.first)
-        for pair, t, a, b in tally.pairs:
-            if pair == m:
-                both = judged[a, t], judged[b, t]
-                tally.pairs[m, t, a, b].add(*both, members)
-                tally.pairs_inside[m, t, a, b].add(*both, members * ~parameters.outside[:, None])
-                tally.quartile_pairs[m, t, a, b].add(*both, quarters)
-        all_judged |= {(m, p, t): one for (p, t), one in judged.items()}
-    return BlockRows(patients, lookup, courses, members, all_judged, [received for _, received in given])
+    repeats = any(target.steady or (len(grid) and target.summary) for target in study.targets)
+    steady = [steady_timeline(protocol, lookup, n) if repeats else None for protocol in study.protocols]
+    return _Block(study, grid, patients, lookup, members, quarters, cell, given, steady, tally)
+
+
+def _count_outside(block: _Block, m: int, parameters: IndividualParameters) -> None:
+    """Who is outside the people that the model was built on, or is given more, or for longer, than was studied."""
+    tally, members, model = block.tally, block.members, block.study.models[m]
+    tally.outside[m] += members.T @ parameters.outside
+    if tally.population:
+        tally.population.add_outside(m, block.cell, parameters.outside)
+    for name, marked in parameters.beyond.items():
+        tally.beyond[m, name] += members.T @ marked
+    longest = model.built_on.longest_infusion_min
+    for p, (_, received) in enumerate(block.given):
+        if longest is not None:
+            tally.long_infusion[m, p] += members.T @ (received.longest_infusion_min > longest * (1 + 1e-9))
+        tally.large_total[m, p] += members.T @ beyond_total(model, received, block.lookup)
+
+
+def _judge_model(block: _Block, m: int, parameters: IndividualParameters,
+                 disposition: Disposition) -> dict[tuple[int, int], Judged]:
+    """(protocol, target) -> what it made of each patient under a model, counted."""
+    study, tally = block.study, block.tally
+    status, numbers = disposition.status, len(block.grid) > 0
+    judged: dict[tuple[int, int], Judged] = {}
+    for p, (timeline, received) in enumerate(block.given):
+        for t, target in enumerate(study.targets):
+            one, found = judge_target(study, m, target, block.patients, parameters, disposition, timeline, received,
+                                      block.lookup, block.steady[p], numbers)
+            judged[p, t] = one
+            status = np.where(status == 0, found, status)
+            tally.targets[m, p, t].add(one, block.members, parameters.outside)
+            if tally.population:
+                tally.population.add_judged((m, p, t), block.cell, one)
+            if tally.clusters is not None:
+                tally.clusters.add_attained((m, p, t), block.patients.origins, one.attained)
+        of_targets = [judged[p, t] for t in range(len(study.targets))]
+        if tally.responses:
+            _add_responses(study, m, p, of_targets, block.members, tally)
+        if numbers:
+            _over_time(block, m, p, parameters, disposition, of_targets)
+    tally.add_statuses(m, status, block.patients.first)
+    return judged
+
+
+def _compare_protocols(block: _Block, m: int, judged: dict[tuple[int, int], Judged], outside: np.ndarray) -> None:
+    """Count the pairs of protocols in the same patients, for each target and for all targets at once."""
+    study, tally, members = block.study, block.tally, block.members
+    if tally.together:
+        joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
+        for p, one in enumerate(joint):
+            tally.together[m, 0, p].add(joint[0], one, members)
+    for pair, t, a, b in tally.pairs:
+        if pair == m:
+            both = judged[a, t], judged[b, t]
+            tally.pairs[m, t, a, b].add(*both, members)
+            tally.pairs_inside[m, t, a, b].add(*both, members * ~outside[:, None])
+            tally.quartile_pairs[m, t, a, b].add(*both, block.quarters)
 
 
 def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
@@ -187,29 +234,28 @@ def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
     return per
 
 
-def _add_responses(study: Study, m: int, p: int, judged: dict[tuple[int, int], Judged], members: np.ndarray,
-                   tally: Tally) -> None:
+def _add_responses(study: Study, m: int, p: int, judged: list[Judged], members: np.ndarray, tally: Tally) -> None:
     """Each patient's share of the isolates against which the target is attained: its mean is the cumulative fraction
     of response."""
     for family in study.families:
-        share = sum(target.mic.weight * judged[p, t].attained for t, target in enumerate(study.targets)
+        share = sum(target.mic.weight * one.attained for target, one in zip(study.targets, judged, strict=True)
                     if target.mic is not None and target.mic.family == family)
         tally.responses[m, p, family].add(share, members)
 
 
-def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: IndividualParameters,
-               disposition: Disposition, timeline: Timeline, judged: list[Judged], members: np.ndarray,
-               tally: Tally) -> None:
+def _over_time(block: _Block, m: int, p: int, parameters: IndividualParameters, disposition: Disposition,
+               judged: list[Judged]) -> None:
     """Add to the over-time counts: whoever did not fail, in the groups they belong to."""
-    n, model = len(disposition), study.models[m]
-    for t, target in enumerate(study.targets):
+    n, model, timeline = len(disposition), block.study.models[m], block.given[p][0]
+    for t, target in enumerate(block.study.targets):
         if not target.over_time:
             continue
         course = grid_course(target, model, parameters.values)
         limits = grid_limits(target, model, n)
-        counted = (members > 0) & ~judged[t].failed[:, None]
-        counts = tally.targets[m, p, t]
-        solve.count_over_time(disposition, timeline, grid, course, *limits, counted, counts.over_time, counts.bins)
+        counted = (block.members > 0) & ~judged[t].failed[:, None]
+        counts = block.tally.targets[m, p, t]
+        solve.count_over_time(disposition, timeline, block.grid, course, *limits, counted, counts.over_time,
+                              counts.bins)
 
 
 def _courses(grid: np.ndarray, model: DrugModel, parameters: IndividualParameters, disposition: Disposition,

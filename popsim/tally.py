@@ -4,6 +4,7 @@ from __future__ import annotations
 
 from dataclasses import dataclass, field
 from itertools import combinations, product
+from typing import Literal
 
 import numpy as np
 
@@ -19,6 +20,7 @@ from popsim.study_records import Study
 ONE = 2**32  # a share of 1 as a fixed-point integer
 STEPS_OF_SHARE = 1000  # differences of shares are counted in thousandths
 MOST_BYTES = 8 * 2**30
+What = Literal["everything", "pairs", "attainment"]  # what is counted
 MOST_NAMED = 10  # patients who could not be simulated are named up to this many for each reason
 
 
@@ -138,9 +140,10 @@ class Tally:
 
     @classmethod
     def empty(cls, study: Study, times: int, cuts: dict[str, np.ndarray], origins: int = 0,
-              attainment_only: bool = False) -> Tally:
-        """Nothing counted yet; `attainment_only` leaves out the counts of pairs, responses, doses and people."""
-        groups = len(study.group_names)
+              what: What = "everything") -> Tally:
+        """Nothing counted yet; no room for what is not asked for: "pairs" and "attainment" leave out responses, joint
+        targets, doses and people, "attainment" also pairs."""
+        everything, groups = what == "everything", len(study.group_names)
         models, protocols, targets = (range(len(items)) for items in (study.models, study.protocols, study.targets))
 
         def zeros(size: int = groups) -> np.ndarray:
@@ -159,7 +162,7 @@ class Tally:
         def pair_tallies(size: int) -> dict[tuple[int, int, int, int], PairTally]:
             return {(m, t, a, b): pair_tally(size)
                     for m in models for t in targets for a, b in combinations(protocols, 2)
-                    if not attainment_only}
+                    if what != "attainment"}
 
         def dose_tally() -> DoseTally:
             return DoseTally(
@@ -182,12 +185,12 @@ class Tally:
             quartile_patients=zeros(4 * len(cuts)),
             cuts=cuts,
             responses={(m, p, family): ShareTally(zeros(), zeros())
-                       for m in models for p in protocols for family in study.families if not attainment_only},
+                       for m in models for p in protocols for family in study.families if everything},
             together={(m, 0, p): pair_tally(groups)
-                      for m in models for p in protocols if study.joint_targets and not attainment_only},
-            doses={p: dose_tally() for p in protocols if not attainment_only},
+                      for m in models for p in protocols if study.joint_targets and everything},
+            doses={p: dose_tally() for p in protocols if everything},
             overlap=np.zeros((groups, groups), dtype=np.int64),
-            population=None if attainment_only else PopulationTally.empty(study),
+            population=PopulationTally.empty(study) if everything else None,
             clusters=clusters,
         )
 

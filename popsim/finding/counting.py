@@ -235,7 +235,7 @@ def count(study: Study, threads: int = 1,
 
 def _count_part(study: Study, threads: int, cells_of: Callable | None) -> Counts:
     sink = _Sink(study, cells_of)
-    return sink.counts(simulate(study, threads, sink=sink, attainment_only=True).tally)
+    return sink.counts(simulate(study, threads, sink=sink, what="attainment").tally)
 
 
 def seconds_expected(study: Study, threads: int) -> float:
