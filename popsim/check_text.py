@@ -2,8 +2,6 @@
 
 from __future__ import annotations
 
-import textwrap
-
 import numpy as np
 
 from popsim.cautions import CAUTIONS
@@ -12,37 +10,31 @@ from popsim.groups import members
 from popsim.lookup import Lookup
 from popsim.parameters import individual_parameters
 from popsim.patients.draw import blocks
+from popsim.screen import WIDTH, wrapped
 from popsim.study_records import DoseStep, Protocol, Study, Variability
 from popsim.timeline import build_timeline
 from popsim.ward_card import CardLine, card_lines, describe, example_people, step_as_written
 from popsim.words import clock, per_kg_line, percent, target_line
 
-WIDTH = 80
-
 
 def check_text(study: Study, looked_at: int) -> str:
     """The study in words, the ward cards, and who lies outside the model among the first patients."""
-    lines = [*textwrap.wrap(study.title, WIDTH), *textwrap.wrap(study.question, WIDTH), ""]
+    lines = [*wrapped(study.title), *wrapped(study.question), ""]
     count = study.population.count
     again = ", drawn again and again" if study.population.resampled else ""
     lines += [f"Patients  {f'{count:,}' if count else 'all'} ({study.population.source}{again}), seed {study.seed}"]
     lines += [f"Run       {clock(study.until_min)}, a table row every {clock(study.every_min)}"]
     for target in study.targets:
-        lines += _indented("Target    ", target_line(target))
+        lines += wrapped(target_line(target), "Target    ")
     for model in study.models:
-        lines += _indented("Model     ", f"{model.name}: {model.source['citation']}"
-                           f" (evidence: {model.evidence})")
-        lines += _indented("          ", f"built on {model.built_on.people}")
+        lines += wrapped(f"{model.name}: {model.source['citation']} (evidence: {model.evidence})", "Model     ")
+        lines += wrapped(f"built on {model.built_on.people}", "          ")
     lines += ["", *_cards(study)]
     lines += ["", *_who(study, looked_at)]
     for warning in study.warnings:
-        lines += _indented("Note      ", warning)
-    lines += ["", *(line for caution in CAUTIONS for line in _indented("- ", caution))]
+        lines += wrapped(warning, "Note      ")
+    lines += ["", *(line for caution in CAUTIONS for line in wrapped(caution, "- "))]
     return "\n".join(line.rstrip() for line in lines)
-
-
-def _indented(lead: str, text: str) -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead))
 
 
 def _cut(text: str, width: int) -> str:
@@ -59,7 +51,7 @@ def _cards(study: Study) -> list[str]:
     for protocol in study.protocols:
         strength = f", {protocol.strength_text}" if protocol.strength_text else ""
         title = f'Ward card "{protocol.name}" ({per_kg_line(protocol)}{strength})'
-        lines += ["", *textwrap.wrap(title, WIDTH), "=" * min(len(title), WIDTH)]
+        lines += ["", *wrapped(title), "=" * min(len(title), WIDTH)]
         for step, of_step in zip(protocol.steps, card_lines(study, protocol, attributes), strict=True):
             lines += _step_lines(protocol, step, of_step, labels, seen)
     return lines
@@ -70,19 +62,19 @@ def _step_lines(protocol: Protocol, step: DoseStep, of_step: list[CardLine | Non
     """The step as written, then person by person; once for all when everyone gets the same, or got it before."""
     times = {line.when for line in of_step if line is not None}
     together = f"{times.pop()}: " if len(times) == 1 else ""
-    heading = _indented(f"{step.number}  ", together + step_as_written(step))
+    heading = wrapped(together + step_as_written(step), f"{step.number}  ")
     what = [_given(line, together) for line in of_step]
     key = (step.number, *heading, *what)
     if key in seen:
-        return [*heading, *_indented("     ", f'the same as under "{seen[key]}"')]
+        return [*heading, *wrapped(f'the same as under "{seen[key]}"', "     ")]
     seen[key] = protocol.name
     if not any(of_step):
         return [*heading, "     none of these people"]
     if len(set(what)) == 1:
-        return [*heading, *_indented("     everyone: ", what[0])]
+        return [*heading, *wrapped(what[0], "     everyone: ")]
     width = max(len(label) for label in labels)
     return heading + [line for label, given in zip(labels, what, strict=True)
-                      for line in _indented(f"     {label:<{width}}  ", given)]
+                      for line in wrapped(given, f"     {label:<{width}}  ")]
 
 
 def _given(line: CardLine | None, together: str) -> str:
@@ -117,12 +109,12 @@ def _who(study: Study, looked_at: int) -> list[str]:
             break
     lines = [f"Among the first {counts[0]:,} patients"]
     for name, most in events.items():
-        lines += _indented("  ", f'at most {most} dose events under "{name}"')
+        lines += wrapped(f'at most {most} dose events under "{name}"', "  ")
     width = min(max(len(name) for name in names), WIDTH - 34)
     for model in study.models:
-        lines += _indented("  ", f"outside the people that {model.name} was built on:")
+        lines += wrapped(f"outside the people that {model.name} was built on:", "  ")
         lines += [f"    {_cut(name, width):<{width}}  {percent(marked / n if n else float('nan')):>5} % of {n:,}"
                   for name, marked, n in zip(names, outside[model.name], counts, strict=True)]
     for note in flag_notes(study, flags, int(counts[0])):
-        lines += _indented("  ", note)
+        lines += wrapped(note, "  ")
     return lines

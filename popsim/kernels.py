@@ -224,14 +224,8 @@ def _mean_of(z, exponential):
 
 
 @_compiled
-def _passed_on(a, b, h):
-    """First divided difference of exp(-s) at a h and b h: exp(-smaller) times a mean exponential, never negative."""
-    return math.exp(-min(a, b) * h) * _mean_exponential(abs(a - b) * h)
-
-
-@_compiled
 def _passed_of(apart, exponential_a, exponential_b):
-    """The same where both exponentials are known already, and the points lie `apart`."""
+    """First divided difference of exp(-s) at two points that lie `apart`, from both exponentials; never negative."""
     nearer = max(exponential_a, exponential_b)
     if apart >= 1.0:
         return (nearer - min(exponential_a, exponential_b)) / apart

@@ -11,8 +11,8 @@ from covariates.catalogue import compute
 from covariates.sheet import DrugModel, example_people, parameters_of
 from covariates.variability import cv_from_omega
 from popsim.derived import Disposition, half_lives, steady_state_volume, time_to_half, time_to_peak
+from popsim.screen import WIDTH
 
-WIDTH = 80
 INFUSED_MIN = (10, 30, 60, 120, 240, 480)
 INTERNAL_UNITS = {"V1": "L", "V2": "L", "V3": "L", "CL": "L/min", "Q2": "L/min", "Q3": "L/min", "ke0": "1/min",
                   "ka": "1/min", "F": "", "lag": "min"}

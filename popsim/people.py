@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import textwrap
 from dataclasses import dataclass
 
 import numpy as np
@@ -10,9 +9,9 @@ import numpy as np
 from popsim.counted import KEY_COUNT, QUANTILES, count_by_group, decimal_keys, decimal_quantile
 from popsim.population_tally import CLEARANCE, LEAN, measured
 from popsim.records import Patients
+from popsim.screen import wrapped
 from popsim.study_records import Study
 
-WIDTH = 80
 SHOWN_IN_PICTURE = 1500  # people of the first block that a picture shows one by one
 SHARES = tuple(QUANTILES.values())
 
@@ -74,24 +73,17 @@ class People:
 
 def summary(study: Study, people: People, eligible_line: str) -> str:
     """The people by group, for the terminal."""
-    lines = [*textwrap.wrap(study.title, WIDTH), *textwrap.wrap(eligible_line, WIDTH)]
+    lines = [*wrapped(study.title), *wrapped(eligible_line)]
     heads = "".join(f"{f'{100 * share:.0f} %':>9}" for share in SHARES)
     for group, name in enumerate(people.names):
         title = f"{name}: {people.patients[group]:,} patients"
-        lines += ["", *textwrap.wrap(title, WIDTH), f"{'':<22}{heads}"]
+        lines += ["", *wrapped(title), f"{'':<22}{heads}"]
         for measure in people.shown():
             numbers = "".join(f"{_three_digits(value):>9}" for value in people.quantiles(measure, group))
             lines.append(f"  {f'{measure.words} ({measure.unit})':<20}{numbers}")
-    return "\n".join([*lines, "", *textwrap.wrap(FOOTNOTE, WIDTH), *_notes(study)])
+    notes = [line for note in study.population.notes() for line in wrapped(note, "- ")]
+    return "\n".join([*lines, "", *wrapped(FOOTNOTE), *notes])
 
 
 def _three_digits(value: float) -> str:
     return "-" if np.isnan(value) else f"{value:.3g}" if value < 100 else f"{value:.0f}"
-
-
-def _notes(study: Study) -> list[str]:
-    return [
-        line
-        for note in study.population.notes()
-        for line in textwrap.wrap(note, WIDTH, initial_indent="- ", subsequent_indent="  ")
-    ]

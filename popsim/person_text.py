@@ -40,7 +40,7 @@ def person_text(person: Mapping[str, np.ndarray], models: Iterable[DrugModel]) -
         lacking = sorted({attribute for name in unknown for attribute in attributes_needed(name, person)})
         lines += ["", *wrapped(f"Not shown for want of {', '.join(lacking)}: {', '.join(unknown)}.", "")]
     for model in models:
-        lines += ["", *_model_lines(model, person, lookup)]
+        lines += ["", *_model_lines(model, lookup)]
     return "\n".join(line.rstrip() for line in lines)
 
 
@@ -82,7 +82,7 @@ def flags_in(people: Mapping[str, np.ndarray], lookup: Lookup, names: Iterable[s
     return found
 
 
-def _model_lines(model: DrugModel, person: Mapping[str, np.ndarray], lookup: Lookup) -> list[str]:
+def _model_lines(model: DrugModel, lookup: Lookup) -> list[str]:
     values = {name: float(value[0]) for name, value in parameters_of(model, lookup, {}, 1).items()}
     lines = [f"{model.name}, typical values", *wrapped(", ".join(parameter_words(values)), "  ")]
     wrong = [name for name in ("V1", "V2", "V3", "CL") if name in values and not 0 < values[name] < np.inf]

@@ -103,7 +103,6 @@ class Protocol:
     impossible_refused: bool = False
 
 
-COURSE_QUANTITIES = ("plasma", "unbound_plasma", "effect_site", "effect", "response")
 SUMMARIES = ("area_under_curve", "peak", "trough", "average")
 MINUTES_A_DAY = 1440.0  # an area "per 24 h"
 
@@ -136,7 +135,8 @@ class ResponseCurve:
 class Target:
     """What counts as success.
 
-    quantity      one of COURSE_QUANTITIES, or of SUMMARIES of a window, these also as unbound_...
+    quantity      a course (plasma, unbound_plasma, effect_site, effect, response), or one of SUMMARIES of a window,
+                  these also as unbound_...
     low, high     limits in mg/L, mg.min/L (areas), the effect's own unit, or as a probability; -inf or inf where
                   one-sided
     unit          the unit that the study wrote

@@ -39,7 +39,7 @@ def _of_section(section: TargetSection, models: tuple[DrugModel, ...], run_until
                 attributes: dict[str, str], report: Callable) -> list[Target]:
     _check_models_have(section, models, report)
     mics = _mics(section, report)
-    limits = _over_mic(section, mics, report) if mics else _limits(section, report)
+    limits = _over_mic(section, report) if mics else _limits(section, report)
     window = _window(section, run_until_min, attributes, report)
     response = _response(section, report)
     rule = _rule(section, window, report)
@@ -95,7 +95,7 @@ def _mics(section: TargetSection, report: Callable) -> list[tuple[Quantity, floa
     return mics
 
 
-def _over_mic(section: TargetSection, mics: list, report: Callable) -> Range | None:
+def _over_mic(section: TargetSection, report: Callable) -> Range | None:
     given = [key for key in ("range", "low", "high") if getattr(section, key) is not None]
     if given:
         report(given[0], f"{given[0]} beside mic", 'the limits as multiples of the MIC: over_mic = ">= 1"')

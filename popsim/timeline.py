@@ -146,7 +146,7 @@ def _of_step(protocol: Protocol, step: DoseStep, lookup: Lookup, n: int, until_m
         gets_it = reach & holds(variant.where, lookup, n)
         covered += gets_it
         if gets_it.any():
-            amount, duration = _one_administration(step, variant, lookup, gets_it, until_min, changes)
+            amount, duration = _one_administration(step, variant, lookup, gets_it, changes)
             administrations += [Administration(step.number, start, duration, amount, gets_it, step.oral)
                                 for start in _starts(step, variant, until_min)]
     if (covered > 1).any():
@@ -173,7 +173,7 @@ def _left_out(protocol: Protocol, nothing_covers: str, who: np.ndarray) -> Probl
         'no_dose = "allowed" in the protocol, if going without is meant'))
 
 
-def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, gets_it: np.ndarray, until_min: float,
+def _one_administration(step: DoseStep, variant: DoseVariant, lookup: Lookup, gets_it: np.ndarray,
                         changes: Changes) -> tuple[np.ndarray, np.ndarray]:
     """Amount in mg and duration in min of each administration of a step."""
     n = len(gets_it)

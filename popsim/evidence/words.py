@@ -10,8 +10,9 @@ from dataclasses import asdict
 
 from popsim.evidence.check import AGREES, DISAGREES, KNOWN, NOT_RUN, NOT_SHIPPED, STALE, Answer
 from popsim.evidence.claims import PAGES, Claim
+from popsim.screen import wrapped
 
-WIDTH, CLAIM_WIDTH = 80, 35
+CLAIM_WIDTH = 35
 SAID = {AGREES: "agree", KNOWN: "disagree for a known reason", DISAGREES: "DISAGREE", STALE: "agree now, against "
         "a reason on record", NOT_SHIPPED: "ask a sheet that is not shipped", NOT_RUN: "not run, a package is missing"}
 
@@ -37,8 +38,8 @@ def table(answers: list[Answer], sources: bool = False) -> str:
         for answer in own:
             lines += _row(answer, reasons)
             if sources:
-                lines += _wrapped(f"{answer.claim.source}. Tolerance: {answer.claim.why}.", "      ")
-        lines += [line for reason, k in reasons.items() for line in _wrapped(reason, f"  {k}) ")]
+                lines += wrapped(f"{answer.claim.source}. Tolerance: {answer.claim.why}.", "      ")
+        lines += [line for reason, k in reasons.items() for line in wrapped(reason, f"  {k}) ")]
     return "\n".join([*lines[1:], "", totals(answers)])
 
 
@@ -55,11 +56,7 @@ def totals(answers: list[Answer]) -> str:
     """"120 claims: 100 agree, 12 disagree for a known reason, ..."."""
     counts = Counter(answer.status for answer in answers)
     said = ", ".join(f"{counts[status]} {what}" for status, what in SAID.items() if counts[status])
-    return "\n".join(_wrapped(f"{len(answers)} claims: {said}", ""))
-
-
-def _wrapped(text: str, lead: str) -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead))
+    return "\n".join(wrapped(f"{len(answers)} claims: {said}"))
 
 
 def as_json_text(answers: list[Answer]) -> str:

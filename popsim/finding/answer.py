@@ -16,10 +16,10 @@ from popsim.estimate import no_headline
 from popsim.finding.counting import Asked, Counts, fresh_line
 from popsim.finding.holding import hold, share_of
 from popsim.pictures.shown import Picture
+from popsim.screen import WIDTH, wrapped
 from popsim.tables import FEW_PATIENTS
 from popsim.words import percent, points, target_line
 
-WIDTH = 80
 
 
 @dataclass(frozen=True)
@@ -175,19 +175,17 @@ def fresh_heading(asked: Asked, counts: Counts) -> str:
 def terminal_text(answer: Answer, bold: bool = False) -> str:
     """The answer on 80 columns."""
     def heading(text: str) -> list[str]:
-        return [f"\033[1m{line}\033[0m" if bold else line for line in textwrap.wrap(text, WIDTH)]
+        return [f"\033[1m{line}\033[0m" if bold else line for line in wrapped(text)]
 
     study = answer.asked.base
-    lines = [*heading(study.title), *textwrap.wrap(study.question, WIDTH)]
+    lines = [*heading(study.title), *wrapped(study.question)]
     for part in answer.parts:
         if part.report_only:
             continue
         lines += ["", *heading(part.heading)]
-        lines += [line for sentence in part.sentences
-                  for line in textwrap.wrap(sentence, WIDTH, initial_indent="- ", subsequent_indent="  ")]
+        lines += [line for sentence in part.sentences for line in wrapped(sentence, "- ")]
         lines += _text_table(part)
-    lines += ["", *heading("Caution"), *(line for caution in CAUTIONS for line in textwrap.wrap(
-        caution, WIDTH, initial_indent="- ", subsequent_indent="  "))]
+    lines += ["", *heading("Caution"), *(line for caution in CAUTIONS for line in wrapped(caution, "- "))]
     return "\n".join(line.rstrip() for line in lines)
 
 

@@ -28,7 +28,7 @@ def read_cells(path: Path) -> tuple[list[str], list[str], list[list[str]]]:
     Raises ProblemsError when the file cannot be read or its header cannot be used.
     """
     try:
-        header, places, cells = _parquet_cells(path) if path.suffix == ".parquet" else _csv_cells(path)
+        header, places, cells = _parquet_cells(path) if path.suffix == ".parquet" else csv_cells(path)
     except OSError as error:
         found = error.strerror or "cannot be read"
         raise ProblemsError(Problem(str(path), found, "a CSV file, or a Parquet file, that can be read")) from None
@@ -40,7 +40,8 @@ def read_cells(path: Path) -> tuple[list[str], list[str], list[list[str]]]:
     return header, places, cells
 
 
-def _csv_cells(path: Path) -> tuple[list[str], list[str], list[list[str]]]:
+def csv_cells(path: Path) -> tuple[list[str], list[str], list[list[str]]]:
+    """Header, places and cells of a CSV file; rows without a single cell are passed over."""
     try:
         with open(path, encoding="utf-8-sig", newline="") as file:
             reader = csv.reader(file)

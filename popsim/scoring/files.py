@@ -2,7 +2,6 @@
 
 from __future__ import annotations
 
-import csv
 from collections.abc import Iterable
 from dataclasses import dataclass
 from pathlib import Path
@@ -12,6 +11,7 @@ import numpy as np
 from covariates.problems import Problem, ProblemsError, nearest
 from covariates.units import parse_quantity
 from popsim.lookup import Lookup
+from popsim.patients.list_cells import csv_cells
 from popsim.patients.listed import read_list
 from popsim.records import Patients, Timeline
 from popsim.study_file import read_dose
@@ -60,7 +60,7 @@ class Measured:
 
 @dataclass(frozen=True)
 class _Row:
-    line: int
+    place: str
     cells: dict[str, str]
 
 
@@ -94,30 +94,26 @@ def read_measured(people: Path, given: Path, measured: Path) -> Measured:
 def _rows(path: Path, known: tuple[str, ...], needed: tuple[str, ...]) -> list[_Row]:
     """Rows of a CSV file by column name, empty cells left out."""
     try:
-        with open(path, encoding="utf-8-sig", newline="") as file:
-            reader = csv.reader(file)
-            header = [name.strip() for name in next(reader, [])]
-            lines = [(reader.line_num, cells) for cells in reader if any(cell.strip() for cell in cells)]
+        header, places, cells_of = csv_cells(path)
     except OSError as error:
         found = error.strerror or "cannot be read"
         raise ProblemsError(Problem(str(path), found, "a CSV file that can be read")) from None
-    except (UnicodeDecodeError, csv.Error) as error:
-        raise ProblemsError(Problem(path.name, f"not readable: {error}", "CSV text, saved as UTF-8")) from None
+    lines = list(zip(places, cells_of, strict=True))
     where = f"{path.name}: line 1"
     problems = [Problem(where, f'column "{name}"', ", ".join(known), nearest(name, known))
                 for name in header if name not in known]
     problems += [Problem(where, f'no column "{name}"', ", ".join(known)) for name in needed if name not in header]
     problems += [Problem(where, f'column "{name}" twice', "each name once")
                  for name in sorted({name for name in header if header.count(name) > 1})]
-    problems += [Problem(f"{path.name}: line {line}", f"{len(cells)} cells", f"{len(header)}, as the header has",
+    problems += [Problem(f"{path.name}: {place}", f"{len(cells)} cells", f"{len(header)}, as the header has",
                          "write 72.5, not 72,5" if len(cells) > len(header) else "")
-                 for line, cells in lines if len(cells) != len(header)]
+                 for place, cells in lines if len(cells) != len(header)]
     if not lines and not problems:
         problems.append(Problem(path.name, "no rows", "a header and at least one row"))
     if problems:
         raise ProblemsError(problems)
-    return [_Row(line, {name: cell.strip() for name, cell in zip(header, cells, strict=True) if cell.strip()})
-            for line, cells in lines]
+    return [_Row(place, {name: cell.strip() for name, cell in zip(header, cells, strict=True) if cell.strip()})
+            for place, cells in lines]
 
 
 def _known_patient(row: _Row, where: str, places: dict[str, int], problems: list[Problem]) -> str | None:
@@ -136,7 +132,7 @@ def _given(path: Path, places: dict[str, int], attributes: dict[str, np.ndarray]
     kinds = kinds_of(attributes)
     steps: dict[str, list[DoseStep]] = {}
     for row in _rows(path, GIVEN_COLUMNS, ("patient", "at")):
-        where = f"{path.name}: line {row.line}"
+        where = f"{path.name}: {row.place}"
         label = _known_patient(row, where, places, problems)
         try:
             step = dose_step({name: cell for name, cell in row.cells.items() if name != "patient"}, where, kinds)
@@ -185,7 +181,7 @@ def _values(path: Path, places: dict[str, int],
     """(label, minutes, mg/L, quantity, unit) of each row."""
     found, seen = [], {}
     for row in _rows(path, MEASURED_COLUMNS, MEASURED_COLUMNS):
-        where = f"{path.name}: line {row.line}"
+        where = f"{path.name}: {row.place}"
         label = _known_patient(row, where, places, problems)
         quantity = row.cells.get("quantity", "")
         if quantity not in QUANTITIES:
@@ -196,9 +192,9 @@ def _values(path: Path, places: dict[str, int],
         value = _quantity(row, "value", "concentration", where, problems)
         if label is None or at is None or value is None:
             continue
-        earlier = seen.setdefault((label, at.value, quantity), row.line)
-        if earlier != row.line:
-            problems.append(Problem(where, f"the same patient, time and quantity as line {earlier}", "one of them",
+        earlier = seen.setdefault((label, at.value, quantity), row.place)
+        if earlier != row.place:
+            problems.append(Problem(where, f"the same patient, time and quantity as {earlier}", "one of them",
                                     "give the mean of repeated assays"))
         found.append((label, at.value, value.value, quantity, value.unit))
     return found

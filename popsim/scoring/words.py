@@ -4,15 +4,14 @@ from __future__ import annotations
 
 import json
 import math
-import textwrap
 
 import pandas as pd
 
 from popsim.cautions import CAUTIONS
 from popsim.scoring.tables import PHASES, Scored, best_model
+from popsim.screen import wrapped
 from popsim.words import percent
 
-WIDTH = 80
 INTERVALS_SAY = ("95 % intervals from resampling these patients: how far other patients like them could move a number. "
                  "They say nothing of patients unlike them.")
 SCORE_CAUTIONS = (*CAUTIONS[:2], INTERVALS_SAY, CAUTIONS[3])  # the third is about virtual patients
@@ -51,11 +50,11 @@ def answer(scored: Scored, tables: dict[str, pd.DataFrame], group: str) -> str:
 def summary(scored: Scored, tables: dict[str, pd.DataFrame], notes: list[str]) -> str:
     """What a score found, for a person at a terminal."""
     count = len(scored.measured.labels)
-    lines = _wrapped(f"Which published model of {scored.models[0].drug} predicts these patients?")
-    lines += _wrapped(f"{count} patients, {len(scored.measured.value)} measurements; "
+    lines = wrapped(f"Which published model of {scored.models[0].drug} predicts these patients?")
+    lines += wrapped(f"{count} patients, {len(scored.measured.value)} measurements; "
                       f"{', '.join(model.name for model in scored.models)}")
     lines += ["", "Answer", *(line for group in scored.group_names
-                              for line in _wrapped(answer(scored, tables, group), "- "))]
+                              for line in wrapped(answer(scored, tables, group), "- "))]
     lines += ["", "Bias and inaccuracy (%), share of measurements inside the 5 to 95 % interval (%)",
               f"{'group':<14} {'model':<25} {'n':>3} {'MDPE':>6} {'MDAPE (95 % interval)':<21} {'in':>5}"]
     width = 25
@@ -72,11 +71,11 @@ def summary(scored: Scored, tables: dict[str, pd.DataFrame], notes: list[str]) -
             lines.append(f"{phase if k == 0 else '':<16} {_cut(row.model, width):<{width}} {row.measurements:>4} "
                          f"{number(row.mdpe_percent):>6} {number(row.mdape_percent):>6} "
                          f"{number(row.wobble_percent):>6} {number(row.divergence_percent_per_h):>8}")
-    lines += ["", *_wrapped(f"{MEASURES_SAY} per hour: divergence, the slope of absolute error on time."),
-              *_wrapped("In: with measurement error; * the sheet has none, so without it.")]
+    lines += ["", *wrapped(f"{MEASURES_SAY} per hour: divergence, the slope of absolute error on time."),
+              *wrapped("In: with measurement error; * the sheet has none, so without it.")]
     if notes:
-        lines += ["", "Note", *(line for note in notes for line in _wrapped(note, "- "))]
-    lines += ["", "Caution", *(line for caution in SCORE_CAUTIONS for line in _wrapped(caution, "- "))]
+        lines += ["", "Note", *(line for note in notes for line in wrapped(note, "- "))]
+    lines += ["", "Caution", *(line for caution in SCORE_CAUTIONS for line in wrapped(caution, "- "))]
     return "\n".join(line.rstrip() for line in lines)
 
 
@@ -85,10 +84,6 @@ def inside(row) -> str:
     if not math.isnan(row.inside_with_error):
         return percent(row.inside_with_error)
     return "-" if math.isnan(row.inside) else f"{percent(row.inside)}*"
-
-
-def _wrapped(text: str, lead: str = "") -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead))
 
 
 def _cut(text: str, width: int) -> str:

@@ -11,7 +11,7 @@ POPSIM = Path(popsim.__file__).parent
 
 # In order of the flow: a module may import only what stands before it.
 FLOW = [
-    "errors", "cautions", "lookup", "streams", "kernels",
+    "errors", "cautions", "screen", "lookup", "streams", "kernels",
     "patients.ages", "patients.survey", "patients.fit_survey", "patients.corner", "patients.possible",
     "patients.described", "patients.lattice", "patients.list_cells", "patients.listed", "patients.population",
     "records", "patients.draw", "study_records", "finding.wishes", "study_salvage", "study_values", "study_sections",
