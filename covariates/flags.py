@@ -46,7 +46,8 @@ FLAGS: dict[str, tuple[Flag, ...]] = {
     "ideal_body_weight_devine": (_SHORT, _CHILD),
     "ideal_body_weight_robinson": (_SHORT, _CHILD),
     "adjusted_body_weight": (
-        _flag("lighter than their ideal weight, so that it lies above total weight", "weight < ideal_body_weight_devine"),
+        _flag("lighter than their ideal weight, so that it lies above total weight",
+              "weight < ideal_body_weight_devine"),
     ),
     "predicted_normal_weight": (_NORMAL, _CHILD),
     "pharmacokinetic_mass_shibutani": (

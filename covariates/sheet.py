@@ -149,7 +149,8 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     drug, title = top.text("drug", needed=True), top.text("title", needed=True)
     evidence = top.text("evidence", needed=True, among=("seen", "recalled"))
     source, built_on, measured_in = read_source(top), read_built_on(top), read_measured_in(top)
-    person, example, switches = read_person(top, "reference_person"), read_person(top, "example_person"), read_needs(top)
+    person, example = read_person(top, "reference_person"), read_person(top, "example_person")
+    switches = read_needs(top)
     numbers = read_numbers(top, switches)
     needed = {*switches, *numbers}
     effect = read_effect(top)

@@ -125,8 +125,8 @@ def check_names(
                     found = f'"{used}" without a person to refer to'
                     section.problem(f"{name}.is", found, "a section [reference_person]")
             else:
-                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], NAME_typical, "
-                           "NAME_reference")
+                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], "
+                           "NAME_typical, NAME_reference")
                 section.problem(f"{name}.is", f'unknown name "{used}"', allowed, nearest(used, known))
     return frozenset(needs), frozenset(references)
 
@@ -146,7 +146,8 @@ def check_structure(
         section.problem("V3", "V3 without V2", "compartments in order: V2 and Q2 before V3 and Q3")
     for name in ("F", "lag"):
         if name in equations and "ka" not in section.table:
-            section.problem(name, f"{name} without ka", "absorption has a rate constant", 'ka = { is = "1.5", unit = "1/h" }')
+            section.problem(name, f"{name} without ka", "absorption has a rate constant",
+                            'ka = { is = "1.5", unit = "1/h" }')
     used = {name.removesuffix(TYPICAL) for equation in equations.values() for name in equation.formula.names}
     for name in equations:
         if name not in used and name not in PARAMETERS and name not in effect_names:

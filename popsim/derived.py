@@ -36,7 +36,7 @@ class Disposition:
         self.rates, self._modes = np.linalg.eigh(matrix)
 
     def plasma_weights(self, concentrations: np.ndarray) -> np.ndarray:
-        """Plasma from these concentrations (k,) on, without further doses: the sum over i of weights[i] exp(-rates[i] t)."""
+        """Plasma from these concentrations (k,) on, no further doses: the sum over i of weights[i] exp(-rates[i] t)."""
         scale = np.sqrt(self.volumes)
         return self._modes[0] / scale[0] * (self._modes.T @ (scale * concentrations))
 
@@ -58,8 +58,8 @@ def steady_state_volume(disposition: Disposition) -> float:
 def time_to_peak(disposition: Disposition, rate: float) -> float:
     """Minutes from a bolus to the peak of an effect site with this rate constant (ke0).
 
-    Or from an oral dose, after its lag, to the peak in plasma, with `rate` as the rate constant of absorption (ka): both
-    courses are the same convolution. Its slope is zero once only, where the bolus course equals the delayed one.
+    Or from an oral dose, after its lag, to the peak in plasma, with `rate` as the rate constant of absorption (ka):
+    both courses are the same convolution. Its slope is zero once only, where the bolus course equals the delayed one.
     """
     weights, rates = disposition.after_bolus(), disposition.rates
 

@@ -73,7 +73,8 @@ def finished_run(record: dict[str, Any], tables: dict[str, pd.DataFrame]) -> Fin
 
 def own_site(target: Target) -> bool:
     """Whether a target looks at an effect site, which is another one in each model: never compared between models."""
-    return target.quantity == "effect_site" or getattr(getattr(target, "response", None), "follows", "") == "effect_site"
+    follows = getattr(getattr(target, "response", None), "follows", "")
+    return "effect_site" in (target.quantity, follows)
 
 
 def _target(written: dict[str, Any]) -> Target:

@@ -26,7 +26,8 @@ def list_text(models: Iterable[DrugModel]) -> str:
         if model.drug != drug:
             drug = model.drug
             lines += ["", drug.upper()]
-        lines += [f"  {model.name}", *wrapped(model.title, "    "), *wrapped(model.source["citation"], "    source    ")]
+        lines += [f"  {model.name}", *wrapped(model.title, "    "),
+                  *wrapped(model.source["citation"], "    source    ")]
         lines += wrapped(model.built_on.people, "    built on  ")
         lines += wrapped(f"{variability(model)}; {parts(model)}", "    has       ")
         lines += wrapped(evidence(model), "    evidence  ")
@@ -134,8 +135,8 @@ def _effect(model: DrugModel) -> list[str]:
     g, half = effect.steepness, effect.half
     above = f", g = {effect.steepness_above} above {half}" if effect.steepness_above else ""
     text = (f"{effect.name}{f' ({effect.unit})' if effect.unit else ''} = {effect.baseline} + ({effect.at_infinity} - "
-            f"{effect.baseline}) Ce^g / ({half}^g + Ce^g), g = {g}{above}; below a range is {effect.low_means}, above it "
-            f"{effect.high_means}")
+            f"{effect.baseline}) Ce^g / ({half}^g + Ce^g), g = {g}{above}; below a range is {effect.low_means}, above "
+            f"it {effect.high_means}")
     return wrapped(text, "  ")
 
 
@@ -164,7 +165,8 @@ def _error(model: DrugModel) -> list[str]:
 def _example(model: DrugModel) -> tuple[str, dict[str, np.ndarray]]:
     """The sheet's reference person where it has one, else its example man; in words, and as attributes."""
     person = {name: values[-1:] for name, values in example_people(model).items()} | model.reference_person
-    words = f"a {person['sex'][0]} of {person['age'][0]:g} years, {person['weight'][0]:g} kg, {person['height'][0]:g} cm"
+    sex, age, weight, height = (person[name][0] for name in ("sex", "age", "weight", "height"))
+    words = f"a {sex} of {age:g} years, {weight:g} kg, {height:g} cm"
     if any("creatinine" in name for name in model.needs):
         words += f", creatinine {person['serum_creatinine'][0]:g} mg/dL"
     words += "".join(f", {name} {number.example:g}" for name, number in model.numbers.items())

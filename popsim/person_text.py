@@ -74,7 +74,8 @@ def covariates_known(given: Iterable[str]) -> list[str]:
     return [name for name in EQUATIONS if name not in given and not attributes_needed(name, given)]
 
 
-def flags_in(people: Mapping[str, np.ndarray], lookup: Lookup, names: Iterable[str]) -> dict[tuple[str, str], np.ndarray]:
+def flags_in(people: Mapping[str, np.ndarray], lookup: Lookup,
+             names: Iterable[str]) -> dict[tuple[str, str], np.ndarray]:
     """(equation, words) -> whom it is true of, over all these covariates."""
     found: dict[tuple[str, str], np.ndarray] = {}
     for name in names:

@@ -173,7 +173,7 @@ class Judged:
 
 @dataclass(frozen=True)
 class BlockRows:
-    """What a block leaves for those who ask patient by patient. Courses only when they are kept; the rest only of a run.
+    """What a block leaves for those who ask patient by patient. Courses only when kept; the rest only of a run.
 
     members   (n, groups) int64, 1 = belongs to that group
     judged    (model, protocol, target) -> what the target made of each patient

@@ -206,7 +206,8 @@ def _model(model: DrugModel, found: dict[str, Any]) -> dict[str, Any]:
     if built_on.longest_infusion_min is not None:
         limits.append(f"infusions up to {clock(built_on.longest_infusion_min)}")
     return {"model": model, "limits": limits, "spread": found["spread_sd_of_ln"],
-            "forms": found["spread_not_lognormal"], "doi": str(model.source.get("doi") or ""), "further": model.source.get("further") or ()}
+            "forms": found["spread_not_lognormal"], "doi": str(model.source.get("doi") or ""),
+            "further": model.source.get("further") or ()}
 
 
 def _left_out(study: Study, tables: dict[str, pd.DataFrame], record: dict[str, Any]) -> dict[str, Any]:

@@ -69,8 +69,11 @@ def _variants(study: Study) -> Iterable[Variant]:
 
 
 def other_models(study: Study) -> list[DrugModel]:
-    """Shipped models of the same drug under which the study can be judged; none for targets in the effect site, which
-    is another one in each model. A model without variability of its own only where the study needs none or borrows it."""
+    """Shipped models of the same drug under which the study can be judged.
+
+    None for targets in the effect site, which is another one in each model. A model without variability of its own only
+    where the study needs none or borrows it.
+    """
     if any(needs_effect_site(target) for target in study.targets):
         return []
     main, has = study.models[0], next(iter(blocks(study.population, study.seed))).attributes

@@ -1,4 +1,4 @@
-"""When some keys of a study file do not fit, the rest can still be checked for its meaning, so that all is said at once."""
+"""Where keys of a study file do not fit, the rest can still be checked for its meaning: all is said at once."""
 
 from __future__ import annotations
 

@@ -269,7 +269,8 @@ def _arrays(tally: Tally) -> list[np.ndarray]:
 
 def check_room(study: Study, times: int) -> None:
     """Raise ProblemsError where the counts of one thread would outgrow any ordinary machine's memory."""
-    courses = len(study.models) * sum(target.over_time for target in study.targets) * times * (4 * solve.BIN_COUNT + 3 * 8)
+    followed = sum(target.over_time for target in study.targets)
+    courses = len(study.models) * followed * times * (4 * solve.BIN_COUNT + 3 * 8)
     measures = len(study.models) * len(study.targets) * 2 * 8 * MEASURE_KEYS
     needed = len(study.group_names) * len(study.protocols) * (courses + measures + 3 * 8 * KEY_COUNT)
     if needed > MOST_BYTES:

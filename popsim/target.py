@@ -122,7 +122,7 @@ def judge(target: Target, model: DrugModel, values: Mapping[str, np.ndarray], co
 
 
 def judge_value(target: Target, value: np.ndarray, status: np.ndarray, undosed: np.ndarray) -> Judged:
-    """Judge one number of each patient, in the target's unit: an area, a peak, a trough, an average, a measured level."""
+    """Judge one number of each patient, in the target's unit: an area, peak, trough, average or measured level."""
     below, above = value < target.low, value > target.high
     inside = ~below & ~above & ~np.isnan(value)
     shares = tuple(np.where(status == 0, one, np.nan) for one in (below, inside, above))

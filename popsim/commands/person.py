@@ -15,7 +15,8 @@ import click
 @click.option("--creatinine", metavar="SCR", help='Serum creatinine, always with its unit: "80 umol/L", "0.9 mg/dL".')
 @click.option("--file", type=click.Path(path_type=Path, dir_okay=False),
               help="A list of people (CSV) instead of one; prints a CSV.")
-@click.option("--model", "names", multiple=True, metavar="NAME", help="Typical parameters of this model too; repeatable.")
+@click.option("--model", "names", multiple=True, metavar="NAME",
+              help="Typical parameters of this model too; repeatable.")
 @click.option("--set", "settings", multiple=True, metavar="NAME=VALUE",
               help="What a model needs besides, such as opioid=true; repeatable.")
 def person(sex: str | None, age: str | None, weight: str | None, height: str | None, creatinine: str | None,
@@ -48,7 +49,8 @@ def person(sex: str | None, age: str | None, weight: str | None, height: str | N
         click.echo(people_csv(people | listed.attributes, labels.tolist(), models))
         return
     if not brought:
-        raise ProblemsError(Problem("popsim person", "nobody", "--sex, --age, --weight, --height, --creatinine, or --file"))
+        raise ProblemsError(Problem("popsim person", "nobody",
+                                    "--sex, --age, --weight, --height, --creatinine, or --file"))
     one = ({} if sex is None else {"sex": sex}) | _numbers(given) | _settings(settings)
     click.echo(person_text({name: np.array([value]) for name, value in one.items()}, models))
 

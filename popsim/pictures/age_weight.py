@@ -44,8 +44,8 @@ def age_weight(shown: Shown, path: Path) -> Picture:
             _map(axes, rows_where(cells, protocol=protocol), ages, weights)
         page.top += height + 0.58
     foot = (f"Number and shade: patients of the cell who attain the target, %. Faded: fewer than {FEW_IN_CELL} "
-            f"patients. Hatched: at least half of the cell's patients lie outside the people the model was built on. Empty: no "
-            f"patients. Counts and intervals: attainment_map.csv.")
+            f"patients. Hatched: at least half of the cell's patients lie outside the people the model was built on. "
+            f"Empty: no patients. Counts and intervals: attainment_map.csv.")
     return finish(page, path, title, f"A table of cells, age by weight, shaded by attainment. {title}.", foot)
 
 

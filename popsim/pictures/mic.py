@@ -76,7 +76,8 @@ def _panel(axes: Axes, run: FinishedRun, rows: pd.DataFrame, isolates: dict[floa
     axes.set_ylabel("Patients (%)", fontsize=8.5, labelpad=3)
     axes.axhline(WANTED, color=FAINT, linewidth=0.9, linestyle=(0, (1, 2)))
     for value, share in isolates.items():
-        axes.bar(value / 2**0.3, share, width=value * (2**0.3 - 2**-0.3), align="edge", color=RULE, linewidth=0, zorder=0)
+        axes.bar(value / 2**0.3, share, width=value * (2**0.3 - 2**-0.3), align="edge", color=RULE, linewidth=0,
+                 zorder=0)
     for index, line in _lines(run, rows).items():
         look = strokes(index)
         axes.fill_between(line["mic"], line["attained_low"], line["attained_high"], color=look.colour, alpha=0.22,

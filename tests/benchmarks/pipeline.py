@@ -93,8 +93,8 @@ def main() -> None:
         for million in map(float, sys.argv[1:]):
             count = int(million * 1e6)
             found = run(count, threads=2, repeats=1)
-            print(f"{count:9,} patients: {found['wall']:6.1f} s, {found['cpu'] / count * 1e6:5.2f} us of processor each, "
-                  f"peak {found['peak']:.0f} MB")
+            print(f"{count:9,} patients: {found['wall']:6.1f} s, {found['cpu'] / count * 1e6:5.2f} us of processor "
+                  f"each, peak {found['peak']:.0f} MB")
         return
     few, many = 20_000, 100_000
     small, large, two, threads = run(few), run(many), run(many, protocols=2), run(many, threads=2)

@@ -130,7 +130,8 @@ def test_no_dose_weight_from_a_negative_ideal_weight():
 @given(weights, heights, ages, sexes)
 def test_sizes_of_plausible_adults_are_positive(weight, height, age, sex):
     people = {"weight": weight, "height": height, "age": age, "sex": sex}
-    always_rising = [name for name in SIZES if name not in ("lean_body_mass_james", "predicted_normal_weight", "bmi_class_who")]
+    others = ("lean_body_mass_james", "predicted_normal_weight", "bmi_class_who")
+    always_rising = [name for name in SIZES if name not in others]
     for name in always_rising:
         assert compute(name, people) > 0, name
     if 16 <= body_size.bmi(weight, height) <= 60:
@@ -168,7 +169,8 @@ def test_metres_are_not_taken_for_centimetres():
 
 # World Health Organization 2000, Technical Report Series 894: classes begin at 18.5, 25, 30, 35 and 40 kg/m2.
 @pytest.mark.parametrize(
-    ("mass_index", "expected"), [(18.49, 0), (18.51, 1), (25.01, 2), (29.99, 2), (30.01, 3), (35.01, 4), (39.99, 4), (86, 5)]
+    ("mass_index", "expected"),
+    [(18.49, 0), (18.51, 1), (25.01, 2), (29.99, 2), (30.01, 3), (35.01, 4), (39.99, 4), (86, 5)],
 )
 def test_classes_of_body_mass_index(mass_index, expected):
     found = body_size.bmi_class_who(mass_index * 1.8**2, 180)

@@ -23,7 +23,8 @@ def test_each_equation_computes_for_a_block_of_people(name):
     values = compute(name, PERSON)
     assert values.shape == (2,) and values.dtype == np.float64 and np.all(values > 0)
     each = [compute(name, {key: value[i] for key, value in PERSON.items()}) for i in range(2)]
-    assert [value.dtype for value in each] == [np.float64] * 2 and [float(value) for value in each] == pytest.approx(values, rel=1e-14)
+    assert [value.dtype for value in each] == [np.float64] * 2
+    assert [float(value) for value in each] == pytest.approx(values, rel=1e-14)
 
 
 @pytest.mark.parametrize("name", EQUATIONS)

@@ -156,7 +156,8 @@ def test_absorption_numbers_and_example_people(tmp_path):
 def test_spread_is_kept_as_it_was_printed(tmp_path):
     printed = write(tmp_path, GOOD).printed_spread
     assert (printed["V1"].value, printed["V1"].printed_as, printed["V1"].evidence) == (0.5, "cv", "seen")
-    assert (printed["CL"].value, printed["CL"].printed_as, printed["CL"].omega) == (0.09, "variance of ln", pytest.approx(0.3))
+    clearance = printed["CL"]
+    assert (clearance.value, clearance.printed_as, clearance.omega) == (0.09, "variance of ln", pytest.approx(0.3))
 
 
 def test_constants_spread_over_all_patients(tmp_path):
@@ -344,7 +345,7 @@ def test_spread_that_is_not_lognormal(tmp_path, entry, sd, form):
 @pytest.mark.parametrize(
     ("entry", "key"),
     [
-        ('{ value = 0.2, distribution = "normal" }', "printed_as"),  # what the section says is meant for lognormal spread
+        ('{ value = 0.2, distribution = "normal" }', "printed_as"),  # the section is meant for lognormal spread
         ('{ value = 0.2, distribution = "logit-normal" }', "printed_as"),
         ('{ value = 0.2, distribution = "gaussian", printed_as = "sd" }', "distribution"),
         ('{ value = 0.2, distribution = "normal", printed_as = "sd of ln" }', "printed_as"),

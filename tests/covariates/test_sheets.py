@@ -188,10 +188,12 @@ def test_every_sheet_says_what_it_must(name):
     assert ("doi" in model.source) == ("doi_evidence" in model.source)
     assert model.spread or model.spread_note
     assert "low" not in [part.strip() for equation in model.equations for part in equation.evidence.split(",")]
-    assert "low" not in [part.strip() for printed in model.printed_spread.values() for part in printed.evidence.split(",")]
+    parts = [part.strip() for printed in model.printed_spread.values() for part in printed.evidence.split(",")]
+    assert "low" not in parts
     if any("medium" in equation.evidence for equation in model.equations):
         doubts = " ".join((*model.cautions, *(equation.note for equation in model.equations)))
-        assert "from memory" in doubts or "not known here" in doubts, "numbers graded medium ship with their doubt named"
+        named = "from memory" in doubts or "not known here" in doubts
+        assert named, "numbers graded medium ship with their doubt named"
     numbers = [line for line in model.text.splitlines() if "{ is = " in line or "{ value = " in line]
     assert len(numbers) == len(model.equations) + len(model.spread)
     assert all("evidence =" in line for line in numbers), "each number says its own grade"
@@ -219,7 +221,8 @@ def test_a_clearance_covariate_carries_its_cap():
     strong = typical("vancomycin_goti_2018", weight=160, creatinine=0.5)["CL"] * 60
     assert strong == pytest.approx(4.5 * 1.25**0.8, rel=1e-12)
     on_dialysis = typical("vancomycin_goti_2018", weight=160, creatinine=0.5, haemodialysis=True)
-    assert on_dialysis["CL"] * 60 == pytest.approx(0.7 * strong) and on_dialysis["V1"] == pytest.approx(58.4 * 160 / 140)
+    assert on_dialysis["CL"] * 60 == pytest.approx(0.7 * strong)
+    assert on_dialysis["V1"] == pytest.approx(58.4 * 160 / 140)
 
 
 def test_colin_growth_and_decline():
@@ -239,7 +242,8 @@ def test_thomson_by_hand():
 
 
 def test_jeon_by_hand():
-    """Jeon 2014: a man of 65 years, 70 kg, 1.4 mg/dL (52.08 mL/min), 10 days after the burn, without and with sepsis."""
+    """Jeon 2014: a man of 65 years, 70 kg, 1.4 mg/dL (52.08 mL/min), 10 days after the burn, without and with
+    sepsis."""
     plain = typical("piperacillin_jeon_2014", age=65, creatinine=1.4)
     assert plain["CL"] * 60 == pytest.approx(16.6 * 52.083333 / 132 - 0.874, rel=1e-6)
     assert typical("piperacillin_jeon_2014", sepsis=True)["V1"] - plain["V1"] == pytest.approx(14.8)
@@ -267,7 +271,8 @@ def test_adane_dose_gives_the_area_of_its_paper():
 
 
 @pytest.mark.parametrize(
-    ("model", "area", "half_life", "within"), [("cefazolin_obese_2021", 402, 2.7, 0.05), ("cefazolin_not_obese_2021", 450, 2.4, 0.12)]
+    ("model", "area", "half_life", "within"),
+    [("cefazolin_obese_2021", 402, 2.7, 0.05), ("cefazolin_not_obese_2021", 450, 2.4, 0.12)],
 )
 def test_cefazolin_area_and_half_life(model, area, half_life, within):
     """Measured after 2 g in 15 adults with and 15 without obesity: 402 and 450 mg.h/L, 2.7 and 2.4 h.
@@ -283,7 +288,8 @@ def test_kleijn_switches_by_hand():
     """Kleijn 2011, table 4: sevoflurane takes 56.7 % off ke0, Asian descent 21.2 % off Q."""
     plain = typical("rocuronium_kleijn_2011")
     changed = typical("rocuronium_kleijn_2011", sevoflurane=True, asian=True)
-    assert changed["ke0"] / plain["ke0"] == pytest.approx(1 - 0.567) and changed["Q2"] / plain["Q2"] == pytest.approx(0.788)
+    assert changed["ke0"] / plain["ke0"] == pytest.approx(1 - 0.567)
+    assert changed["Q2"] / plain["Q2"] == pytest.approx(0.788)
 
 
 def test_eleveld_remifentanil_women_of_child_bearing_age_clear_faster():

@@ -98,7 +98,8 @@ def test_forms_of_a_random_effect():
     shares = [0.05, 0.5, 0.9]
     assert np.quantile(with_effect(3.0, effects, "lognormal"), shares) == pytest.approx(
         stats.lognorm(0.4, scale=3.0).ppf(shares), rel=1e-4)
-    assert np.quantile(with_effect(3.0, effects, "normal"), shares) == pytest.approx(stats.norm(3.0, 0.4).ppf(shares), rel=1e-4)
+    expected = stats.norm(3.0, 0.4).ppf(shares)
+    assert np.quantile(with_effect(3.0, effects, "normal"), shares) == pytest.approx(expected, rel=1e-4)
     relative = with_effect(3.0, effects, "normal, relative")
     assert relative.std() / relative.mean() == pytest.approx(0.4, rel=1e-3)
     logit = special.logit(with_effect(0.8, effects, "logit-normal"))

@@ -13,7 +13,8 @@ def test_popsim_is_the_installed_one():
     where = Path(popsim.__file__).resolve()
     if CHECKOUT in where.parents and "site-packages" not in where.parts:
         text = metadata.distribution("popsim").read_text("direct_url.json") or "{}"
-        assert json.loads(text).get("dir_info", {}).get("editable"), "popsim was imported from the checkout, not installed"
+        editable = json.loads(text).get("dir_info", {}).get("editable")
+        assert editable, "popsim was imported from the checkout, not installed"
 
 
 def test_data_files_are_installed():

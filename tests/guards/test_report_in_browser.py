@@ -96,7 +96,8 @@ def test_nothing_overflows_nothing_complains_nothing_is_fetched(browser, report,
 
 
 def test_a_script_of_someone_else_does_not_run(browser, one_report, tmp_path):
-    html = one_report.read_text(encoding="utf-8").replace("</main>", "</main><script>document.title = 'taken'</script>", 1)
+    intruder = "</main><script>document.title = 'taken'</script>"
+    html = one_report.read_text(encoding="utf-8").replace("</main>", intruder, 1)
     (tmp_path / "report.html").write_text(html, encoding="utf-8")
     browser.open(tmp_path / "report.html", 1280)
     assert browser.value("document.title") != "taken"

@@ -78,7 +78,8 @@ BAD = [
     ([('strength = "10 mg/mL"', 'strength = "0 mg/mL"')], "protocol 1: strength", '"0 mg/mL"', "above zero"),
     ([('strength = "10 mg/mL"', 'vial = "20 mL"')], "protocol 1: vial", "20 mL", "strength"),
     ([('age = "20 to 90 years"', "age = 20")], "population: age", '"20"', ">= 65 years"),
-    ([('age = "20 to 90 years"', 'age = "5 to 90 years"')], "population: age", "from 5 to 90 years", 'source = "described"'),
+    ([('age = "20 to 90 years"', 'age = "5 to 90 years"')], "population: age", "from 5 to 90 years",
+     'source = "described"'),
     ([('age = "20 to 90 years"', 'age = "90 to 20 years"')], "population: age", "90 to 20", "a lower end below"),
     ([("matters = \"5 %\"", 'matters = "500 %"')], "compare: matters", "500 %", "up to 100 %"),
     # keys and sections

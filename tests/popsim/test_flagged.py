@@ -12,7 +12,8 @@ from popsim.flagged import flag_notes
 from popsim.tables import notes_of
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
-# body mass index 50.8, 33.2, 43.0 (just above 42.97), 42.9 (just below): James turns over at 36.15 in women, 42.97 in men
+# body mass index 50.8, 33.2, 43.0 (just above 42.97), 42.9 (just below): James turns over at 36.15 in women,
+# 42.97 in men
 PEOPLE = ["female,40,130,160", "female,40,85,160", "male,40,131.7,175", "male,40,131.4,175"]
 JAMES = ("lean_body_mass_james", "so heavy that this lean body mass falls as weight rises")
 
@@ -61,14 +62,17 @@ def test_who_gets_more_in_all_than_anyone_studied(tmp_path):
 
 
 def test_a_model_with_a_number_of_its_own(tmp_path):
-    """Jeon 2014 needs the days since the burn: set for everyone, or a column of the list; without it the study is refused."""
+    """Jeon 2014 needs the days since the burn: set for everyone, or a column of the list; without it the study is
+    refused."""
     target = ('quantity = "plasma"\nlow = "16 mg/L"\nduring = "1 h to 4 h"\nattained_when = "always"',)
-    more = {"model": "piperacillin_jeon_2014", "variability": "between_subject = false", "targets": target, "groups": {},
+    more = {"model": "piperacillin_jeon_2014", "variability": "between_subject = false", "targets": target,
+            "groups": {},
             "protocols": {"4 g": 'amount = "4 g"\nover = "30 min"'}, "until": "6 h", "every": "30 min"}
     header = "sex,age,weight,height,serum_creatinine"
     rows = [f"{row},1.0" for row in PEOPLE]
     with pytest.raises(ProblemsError) as refused:
-        cases.study(tmp_path, **more, population=cases.people(tmp_path, rows, header) + "\n[population.set]\nsepsis = false")
+        people = cases.people(tmp_path, rows, header)
+        cases.study(tmp_path, **more, population=people + "\n[population.set]\nsepsis = false")
     assert "no number days_after_burn" in str(refused.value)
     shares = []
     for days in (1, 90):
@@ -80,7 +84,7 @@ def test_a_model_with_a_number_of_its_own(tmp_path):
 
 @pytest.mark.parametrize("name", shipped_sheets())
 def test_every_shipped_sheet_can_be_judged(tmp_path, name):
-    """Its example people, 100 mg once, with variability where the sheet has it: nobody fails, everybody is above nothing."""
+    """Its example people, 100 mg once, with variability where the sheet has it: nobody fails, all are above nothing."""
     model = read_sheet(name)
     people = example_people(model)
     rows = [",".join(str(value).lower() for value in row) for row in zip(*(column.tolist() for column in (

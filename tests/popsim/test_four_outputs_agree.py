@@ -30,7 +30,8 @@ def outputs(tmp_path_factory):
             assert popsim_run(["judge", str(folder / "study.toml"), "--out", str(folder / "run"), *options]) == DONE
     words, as_json = said[False]
     tables = {name: pd.read_csv(folder / "run" / f"{name}.csv", keep_default_na=False, na_values=[""])
-              for name in ("attainment", "comparison", "groups", "doses", "people", "quartiles", "robustness", "values")}
+              for name in ("attainment", "comparison", "groups", "doses", "people", "quartiles", "robustness",
+                            "values")}
     page = Page((folder / "run" / "report.html").read_text())
     return words, json.loads(as_json), tables, page
 

@@ -97,7 +97,8 @@ def test_person_with_models(capsys):
     code, out, _ = said(capsys, "person", "--sex", "female", "--age", "105", "--weight", "60", "--height", "160",
                         "--model", "propofol_schnider_1998")
     assert code == DONE and "V2 not above 0: the model cannot be used in this person." in out
-    code, _, err = said(capsys, "person", *WOMAN, "--model", "propofol_eleveld_2018", "--model", "piperacillin_jeon_2014")
+    code, _, err = said(capsys, "person", *WOMAN, "--model", "propofol_eleveld_2018",
+                        "--model", "piperacillin_jeon_2014")
     assert code == USER_CAN_MEND
     assert all(f"no {name}" in err for name in ("opioid", "venous_sampling", "sepsis"))
     code, out, _ = said(capsys, "person", *WOMAN, "--creatinine", "1 mg/dL", "--model", "piperacillin_jeon_2014",
@@ -132,7 +133,8 @@ def test_a_list_of_people(capsys, tmp_path):
     assert code == DONE
     assert "which the list has too" in said(capsys, "person", "--file", str(people), "--set", "opioid=true")[2]
     first, second = csv.DictReader(io.StringIO(out))
-    assert (first["patient"], first["opioid"], second["opioid"], second["venous_sampling"]) == ("A", "true", "false", "false")
+    assert (first["patient"], first["opioid"]) == ("A", "true")
+    assert (second["opioid"], second["venous_sampling"]) == ("false", "false")
     expected = compute("lean_body_mass_james", {"sex": "female", "weight": 110.0, "height": 160.0})
     assert float(first["lean_body_mass_james"]) == expected
     assert "lean_body_mass_james: so heavy" in first["flags"] and "so heavy" not in second["flags"]
@@ -142,7 +144,8 @@ def test_a_list_of_people(capsys, tmp_path):
 
 def test_neither_command_loads_the_solver_or_pictures():
     script = ("import sys; from popsim.cli import run\n"
-              "run(['models', 'propofol_eleveld_2018']); run(['person', '--sex', 'male', '--weight', '70', '--height', '170'])\n"
+              "run(['models', 'propofol_eleveld_2018'])\n"
+              "run(['person', '--sex', 'male', '--weight', '70', '--height', '170'])\n"
               "print(sorted({'numba', 'scipy', 'matplotlib', 'seaborn', 'pydantic'} & set(sys.modules)))")
     done = subprocess.run([sys.executable, "-c", script], capture_output=True, text=True, env=os.environ, check=True)
     assert done.stdout.splitlines()[-1] == "[]"

@@ -89,11 +89,11 @@ def test_many_steps_of_many_administrations_are_refused_together(tmp_path):
 
 def test_one_interval_of_what_goes_on(tmp_path):
     """A loading dose and a step with times are left out; bands give each patient an interval of their own."""
+    card = ('amount = "9 mg"\n---\namount = "2 mg"\nevery = "1 h"\ntimes = 3\n---\n'
+            'at = "2 h"\nover = "1 h"\namount = "1 mg"\n[[protocol.dose.band]]\nwhere = "age < 65"\nevery = "6 h"\n'
+            '[[protocol.dose.band]]\nwhere = "age >= 65"\nevery = "8 h"')
     asked = cases.study(tmp_path, model="remifentanil_minto_1997", groups={}, targets=(PLASMA,), until="24 h",
-                        every="1 h", protocols={"card": 'amount = "9 mg"\n---\namount = "2 mg"\nevery = "1 h"\ntimes = 3'
-                                                '\n---\nat = "2 h"\nover = "1 h"\namount = "1 mg"\n[[protocol.dose.band]]'
-                                                '\nwhere = "age < 65"\nevery = "6 h"\n[[protocol.dose.band]]\n'
-                                                'where = "age >= 65"\nevery = "8 h"'})
+                        every="1 h", protocols={"card": card})
     steady = steady_timeline(asked.protocols[0], Lookup(PEOPLE), 2)
     assert steady.interval_min.tolist() == [360, 480]
     assert steady.time_min[:, 0].tolist() == [0, 0] and steady.rate_mg_per_min[:, 0] == pytest.approx(1 / 60)

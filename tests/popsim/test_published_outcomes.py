@@ -40,8 +40,8 @@ def test_vancomycin_4_g_a_day_in_extreme_obesity(tmp_path):
     """Adane 2015 (Pharmacotherapy 35:127-39): on 4 g a day a median area over 24 h of 582.9 mg.h/L (quartiles 513.8 and
     726.2), at least 93 % above 400. One compartment, 0.51 L/kg, clearance 6.54 L/h (seen): the typical area is 612. Its
     spread (CV 26.7 % and 23.9 %) is recalled, low, and stands in this test alone: no shipped sheet has it, and with the
-    spread of vancomycin_goti_2018 (38 %) only 87 % lie above 400, which the paper does not bear out. Median within 10 %,
-    ratio of the quartiles within 10 %."""
+    spread of vancomycin_goti_2018 (38 %) only 87 % lie above 400, which the paper does not bear out. Median within
+    10 %, ratio of the quartiles within 10 %."""
     spread = ('printed_as = "cv"\nCL = { value = 0.267, evidence = "recalled, low" }\n'
               'V1 = { value = 0.239, evidence = "recalled, low" }')
     name = cases.sheet(tmp_path, volume="0.51 * weight", clearance=str(6.54 / 60), spread=spread)
@@ -62,9 +62,9 @@ HALVES = [("alfentanil_scott_1987", "1 mg/min", 47.3, 12.0), ("remifentanil_mint
 
 @pytest.mark.parametrize(("model", "rate", "mean", "sd"), HALVES)
 def test_recovery_to_half_after_three_hours(tmp_path, model, rate, mean, sd):
-    """Kapila 1995 (author from memory): 3 h of infusion, then the time to half the level was 47.3 +- 12 min for alfentanil and 3.2 +- 0.9 min
-    for remifentanil (seen). The typical patient must lie within two of their SDs; remifentanil comes out a minute too
-    short (2.2 min), as the source notes expect of this model."""
+    """Kapila 1995 (author from memory): 3 h of infusion, then the time to half the level was 47.3 +- 12 min for
+    alfentanil and 3.2 +- 0.9 min for remifentanil (seen). The typical patient must lie within two of
+    their SDs; remifentanil comes out a minute too short (2.2 min), as the source notes expect of this model."""
     def ask(target):
         return cases.judged(cases.study(
             tmp_path, count=3, model=model, groups={}, targets=(target,), until="360 min", every="60 min",
@@ -86,7 +86,8 @@ def test_propofol_need_falls_with_age(tmp_path):
     people = cases.people(tmp_path, [f"{sex},{age},70,170" for age in (25, 40, 60, 76) for sex in ("male", "female")])
     groups = {f"{age}": f"age == {age}" for age in (25, 40, 60, 76)}
     asked = cases.study(tmp_path, model="propofol_eleveld_2018", groups=groups, targets=(target,), until="120 min",
-                        every="60 min", population=people + "\n[population.set]\nopioid = true\nvenous_sampling = false",
+                        every="60 min",
+                        population=people + "\n[population.set]\nopioid = true\nvenous_sampling = false",
                         variability="between_subject = false", protocols=cards)
     found = cases.judged(asked)[1]["attainment"]
     need = {age: min(float(row.protocol) for row in found.itertuples() if row.group == age and row.attained == 1)
@@ -95,10 +96,11 @@ def test_propofol_need_falls_with_age(tmp_path):
 
 
 def test_cefazolin_2_g_in_obesity(tmp_path):
-    """2 g gives an area of 402 (obese) and 450 (not) mg.h/L (2021, seen); dose / CL is 389 and 432 in the sheets made of
-    the same study, so 5 %."""
+    """2 g gives an area of 402 (obese) and 450 (not) mg.h/L (2021, seen); dose / CL is 389 and 432 in the sheets made
+    of the same study, so 5 %."""
     for model, published in (("cefazolin_obese_2021", 402), ("cefazolin_not_obese_2021", 450)):
-        target = f'quantity = "area_under_curve"\nrange = "{0.95 * published} to {1.05 * published} mg.h/L"\nduring = "0 h to 24 h"'
+        target = (f'quantity = "area_under_curve"\nrange = "{0.95 * published} to {1.05 * published} mg.h/L"\n'
+                  'during = "0 h to 24 h"')
         asked = cases.study(tmp_path, count=5, model=model, groups={}, targets=(target,), until="24 h", every="1 h",
                             variability="between_subject = false", protocols={"2 g": 'amount = "2 g"'})
         assert cases.judged(asked)[1]["attainment"]["attained"].tolist() == [1.0]
@@ -109,7 +111,8 @@ def test_meropenem_1_g_every_8_h(tmp_path):
     mass (CL 18.7 L/h, Vss 27.6 L, seen). The typical patient of those two numbers, one compartment, is above 2 mg/L for
     53 % of the interval (computed in the source notes)."""
     name = cases.sheet(tmp_path, volume="27.6", clearance=str(18.7 / 60))
-    target = 'quantity = "plasma"\nover_mic = ">= 1"\nmic = "2 mg/L"\nduring = "steady state"\nattained_when = "40 % of the time"'
+    target = ('quantity = "plasma"\nover_mic = ">= 1"\nmic = "2 mg/L"\nduring = "steady state"\n'
+              'attained_when = "40 % of the time"')
     asked = cases.study(tmp_path, count=5, model=name, groups={}, targets=(target,), until="24 h", every="1 h",
                         variability="between_subject = false",
                         protocols={"1 g": 'amount = "1 g"\nover = "15 min"\nevery = "8 h"'})

@@ -70,7 +70,8 @@ def test_measurement_error_in_closed_form(tmp_path, error, quantile):
     _, tables = cases.scored(tmp_path, simulated(tmp_path, people=3), name, replicates=8000)
     for row in tables["score_predictions"].itertuples():
         for found, share in ((row.p05_with_error, 0.05), (row.p95_with_error, 0.95)):
-            assert found == pytest.approx(quantile(row.predicted, stats.norm.ppf(share)), abs=0.03 * (1 + row.predicted))
+            expected = quantile(row.predicted, stats.norm.ppf(share))
+            assert found == pytest.approx(expected, abs=0.03 * (1 + row.predicted))
         assert math.isnan(row.p05)
 
 

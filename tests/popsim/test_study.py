@@ -135,7 +135,8 @@ def test_many_problems_are_reported_at_once(study):
 
 def test_faults_of_shape_and_of_meaning_are_told_together_and_none_is_an_echo(study):
     told = problems_of(study, (AMOUNT, "amount = 1.5"), (MODEL, 'model = "propofol_eleveld2018"'),
-                       ('by = "adjusted_body_weight"', 'by = "adjusted_body_wieght"'), (RANGE, 'ragne = "2 to 4 ug/mL"'),
+                       ('by = "adjusted_body_weight"', 'by = "adjusted_body_wieght"'),
+                       (RANGE, 'ragne = "2 to 4 ug/mL"'),
                        ('every = "30 s"', "every = 30"), (WHERE, "where = 3"), ('name = "old"', 'name = "all"'))
     assert [problem.splitlines()[0] for problem in told] == [
         "study.toml: group 1: where", "study.toml: protocol 1, dose 1: amount", "study.toml: target: ragne",

@@ -160,7 +160,8 @@ def rows(sets: int) -> Iterator[list[str]]:
 def main() -> None:
     with open(sys.argv[1], "w", newline="", encoding="utf-8") as file:
         file.write("# Exact courses of three-compartment models, effect site, depot, by mpmath's matrix exponential\n")
-        file.write(f"# at {DIGITS} digits: written by make_solver_reference.py. L, L/min, 1/min, mg, mg/min, min, mg/L.\n")
+        file.write(f"# at {DIGITS} digits: written by make_solver_reference.py. "
+                   "L, L/min, 1/min, mg, mg/min, min, mg/L.\n")
         writer = csv.writer(file, lineterminator="\n")
         writer.writerow(COLUMNS)
         writer.writerows(rows(int(sys.argv[2]) if len(sys.argv) > 2 else SETS))
