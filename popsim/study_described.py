@@ -27,28 +27,7 @@ def read_described(section: PopulationSection, where: str, problems: list[Proble
     """The described population; None where problems were noted. `where` names the file and its [population]."""
     before = len(problems)
     table = Section(section.described, f"{where}: described", problems)
-    numbers, switches = {}, {}
-    for name, entry in table.entries(EXAMPLE):
-        if (
-            not ATTRIBUTE_NAME.fullmatch(name)
-            or name in (*FUNCTIONS, "sex", "true", "false", "patient", "label")
-            or (name in EQUATIONS and name not in KINDS)
-        ):
-            advice = "female_share gives the share of women" if name == "sex" else ""
-            table.problem(name, "no name for an attribute", "age, weight, height, or a name of its own", advice)
-        elif "share" in entry.table:
-            share = entry.quantity("share", "percent")
-            if share is not None and share > 100:
-                entry.problem("share", f"{share:g} %", "0 % to 100 %")
-            switches[name] = (share or 0.0) / 100
-            entry.close()
-        elif {"female", "male"} & entry.table.keys():
-            women, men = (_marginal(name, entry.section(sex, needed=True)) for sex in ("female", "male"))
-            entry.close()
-            numbers[name] = women, men
-        else:
-            together = _marginal(name, entry)
-            numbers[name] = together, together
+    numbers, switches = _attributes(table)
     share = {"female": 1.0, "male": 0.0}.get(section.sex, share_of_women(section))
     if share is None or not 0 <= share <= 1:
         found = "missing" if share is None else f"{100 * share:g} %"
@@ -74,6 +53,33 @@ def read_described(section: PopulationSection, where: str, problems: list[Proble
         )
         return None
     return described if _people_are_possible(described, where, problems) else None
+
+
+def _attributes(table: Section) -> tuple[dict[str, tuple[Marginal | None, Marginal | None]], dict[str, float]]:
+    """Numbers with their distributions in women and in men, and switches with the share for whom they hold."""
+    numbers, switches = {}, {}
+    for name, entry in table.entries(EXAMPLE):
+        if (
+            not ATTRIBUTE_NAME.fullmatch(name)
+            or name in (*FUNCTIONS, "sex", "true", "false", "patient", "label")
+            or (name in EQUATIONS and name not in KINDS)
+        ):
+            advice = "female_share gives the share of women" if name == "sex" else ""
+            table.problem(name, "no name for an attribute", "age, weight, height, or a name of its own", advice)
+        elif "share" in entry.table:
+            share = entry.quantity("share", "percent")
+            if share is not None and share > 100:
+                entry.problem("share", f"{share:g} %", "0 % to 100 %")
+            switches[name] = (share or 0.0) / 100
+            entry.close()
+        elif {"female", "male"} & entry.table.keys():
+            women, men = (_marginal(name, entry.section(sex, needed=True)) for sex in ("female", "male"))
+            entry.close()
+            numbers[name] = women, men
+        else:
+            together = _marginal(name, entry)
+            numbers[name] = together, together
+    return numbers, switches
 
 
 def _marginal(name: str, entry: Section) -> Marginal | None:

@@ -98,17 +98,7 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
     _check_bands(section, variants, say)
     _check_duration(section, variants, say)
     _check_repeats(section, variants, run_until_min, say)
-    if section.route == "oral" and (section.rate is not None or section.over is not None
-                                    or any(variant.rate is not None for variant in variants)):
-        say("route", '"oral" with a rate or over', "an amount alone, swallowed at once")
-    for variant in variants:
-        if variant.at_min > run_until_min:
-            say("at", f"{variant.at_min:g} min, after the run's end", f"at most {run_until_min:g} min",
-                "move the dose or lengthen [run] until")
-        concentration = variant.loading.concentration if variant.loading else None
-        for key, dose in (("amount", variant.amount), ("rate", variant.rate), ("amount_for", concentration)):
-            if dose is not None and dose.value == 0:
-                say(key, f'"{dose.text}"', "above zero", "leave the step out, or let where say who gets it")
+    _check_variants(section, variants, run_until_min, say)
     limits = _limits(section, protocol, variants, say)
     return DoseStep(
         number=number + 1,
@@ -123,6 +113,22 @@ def _step(section: DoseSection, number: int, protocol: ProtocolSection, run_unti
         and all(variant.every_min is not None for variant in variants),
         **limits,
     )
+
+
+def _check_variants(section: DoseSection, variants: tuple[DoseVariant, ...], run_until_min: float,
+                    say: Callable) -> None:
+    """Swallowed at once where by mouth, begun within the run, and never a dose of zero."""
+    if section.route == "oral" and (section.rate is not None or section.over is not None
+                                    or any(variant.rate is not None for variant in variants)):
+        say("route", '"oral" with a rate or over', "an amount alone, swallowed at once")
+    for variant in variants:
+        if variant.at_min > run_until_min:
+            say("at", f"{variant.at_min:g} min, after the run's end", f"at most {run_until_min:g} min",
+                "move the dose or lengthen [run] until")
+        concentration = variant.loading.concentration if variant.loading else None
+        for key, dose in (("amount", variant.amount), ("rate", variant.rate), ("amount_for", concentration)):
+            if dose is not None and dose.value == 0:
+                say(key, f'"{dose.text}"', "above zero", "leave the step out, or let where say who gets it")
 
 
 def _variants(section: DoseSection, number: int, loading: Callable, say: Callable,

@@ -96,19 +96,9 @@ def _run(name: str, study: Path, search: Callable, given: dict, options: dict) -
     """Read, search, draw and leave; the same for every search."""
     from popsim.finding.counting import read_asked
     from popsim.finding.places import chosen_protocol
-    from popsim.study_file import read_find, read_study_file
 
     given |= {key: options[key] for key in ("protocol", "target") if options[key] is not None}
-    section, faults = read_study_file(study)
-    if faults:
-        raise ProblemsError(faults)
-    if given := {key: value for key, value in given.items() if value}:
-        stated = read_find(given)
-        if "map" in given:
-            stated = stated.model_copy(update={"map": section.find.map.model_copy(
-                update={key: getattr(stated.map, key) for key in given["map"]})})
-        section = section.model_copy(update={"find": section.find.model_copy(
-            update={key: getattr(stated, key) for key in given})})
+    section = _read(study, {key: value for key, value in given.items() if value})
     asked, protocol = _both(lambda: read_asked(section, study), lambda: chosen_protocol(section, study.name))
     folder = options["out"] or Path(f"{study.stem}_{name}")
 
@@ -139,6 +129,23 @@ def _run(name: str, study: Path, search: Callable, given: dict, options: dict) -
     if options["as_json"] or not quiet:
         click.echo(as_json_text(answer) if options["as_json"] else terminal_text(answer, bold))
     told(f"\nResults in {folder}")
+
+
+def _read(study: Path, given: dict):
+    """The study's sections, with what the command line gives in place of its own."""
+    from popsim.study_file import read_find, read_study_file
+
+    section, faults = read_study_file(study)
+    if faults:
+        raise ProblemsError(faults)
+    if not given:
+        return section
+    stated = read_find(given)
+    if "map" in given:
+        stated = stated.model_copy(update={"map": section.find.map.model_copy(
+            update={key: getattr(stated.map, key) for key in given["map"]})})
+    return section.model_copy(update={"find": section.find.model_copy(
+        update={key: getattr(stated, key) for key in given})})
 
 
 def _both(*readers: Callable) -> list:
