@@ -35,9 +35,9 @@ def check_text(study: Study, looked_at: int) -> str:
         lines += _indented("          ", f"built on {model.built_on.people}")
     lines += ["", *_cards(study)]
     lines += ["", *_who(study, looked_at)]
-    for warning in study.warnings:
-        lines += _indented("Note      ", warning)
-    lines += ["", *(line for caution in CAUTIONS for line in _indented("- ", caution))]
+    if study.warnings:
+        lines += ["", "Note", *(line for warning in study.warnings for line in _indented("- ", warning))]
+    lines += ["", "Caution", *(line for caution in CAUTIONS for line in _indented("- ", caution))]
     return "\n".join(line.rstrip() for line in lines)
 
 

@@ -62,7 +62,8 @@ def target_line(target: Target) -> str:
     name = target.name if target.name.endswith(target.range_text) else f"{target.name}: {described}"
     if target.per_day and name == target.name:
         name += ", per 24 h"
-    return f"{name}, {window(target)}, attained when in range {target.rule_text}".rstrip()
+    when = "always in range" if target.rule_text == "always" else f"in range {target.rule_text}".rstrip()
+    return f"{name}, {window(target)}, attained when {when}"
 
 
 def sides_line(target: Target, model: DrugModel) -> str:

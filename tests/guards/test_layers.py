@@ -88,7 +88,7 @@ def test_steps_do_not_import_steps():
 def test_covariates_stand_alone():
     for name, path in modules(COVARIATES).items():
         assert not imported(path, "popsim"), f"covariates/{name} imports popsim"
-        heavy = outside_packages(path) & {"pandas", "numba", "scipy", "matplotlib", "seaborn", "pydantic", "click", "jinja2"}
+        heavy = outside_packages(path) & {"pandas", "numba", "scipy", "matplotlib", "pydantic", "click", "jinja2"}
         assert not heavy, f"covariates/{name} imports {heavy}"
 
 

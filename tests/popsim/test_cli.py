@@ -90,7 +90,7 @@ def loaded(*arguments: str, cwd: Path) -> set[str]:
     return set(found.stdout.partition("\nLOADED ")[2].split())
 
 
-HEAVY = {"pandas", "numba", "scipy", "matplotlib", "seaborn", "jinja2"}
+HEAVY = {"pandas", "numba", "scipy", "matplotlib", "jinja2"}
 
 
 @pytest.mark.parametrize("arguments", [
