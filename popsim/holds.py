@@ -72,7 +72,7 @@ def _said(target: Target, row) -> str:
         when = [f"{before} {_minutes(value)} in {patients}" for value, patients in
                 ((row.p50, "half of the patients"), (row.p95, "95 %")) if math.isfinite(value)]
         never = [f"not by the end of {end} in {percent(row.never)} %"] if row.never else []
-        return f"{reached}: {', '.join(when + never)}"
+        return f"{reached} {', '.join(when + never)}"
     if row.measure == "of_steady_state":
         return (f"the window has {percent(row.p50, 0)} % of its value at steady state (median; "
                 f"{percent(row.p05, 0)} to {percent(row.p95, 0)} %)")

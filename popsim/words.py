@@ -74,6 +74,20 @@ def sides_line(target: Target, model: DrugModel) -> str:
     return ", ".join(f"{side} is {meaning}" for side, meaning in meanings if meaning)
 
 
+AUTHORS = ("James", "Janmahasatian", "Boer", "Hume", "Al-Sallami", "Devine", "Robinson", "Mosteller", "Du Bois",
+           "Shibutani")
+
+
+def size_words(name: str) -> str:
+    """A body size in words: "lean_body_mass_james" is "lean body mass (James)", "weight" is "total body weight"."""
+    plain = "total body weight" if name == "weight" else name.replace("_", " ")
+    for author in AUTHORS:
+        end = author.lower().replace("-", " ")
+        if plain.endswith(f" {end}"):
+            return f"{plain.removesuffix(end)}({author})"
+    return plain
+
+
 def per_kg_line(protocol: Protocol) -> str:
     """What a "/kg" or "/m2" of a protocol means: "per kg of total body weight"; a fixed dose is not scaled."""
     scaled = {("m2" if "m2" in dose.kind else "kg", step.by)
@@ -83,8 +97,7 @@ def per_kg_line(protocol: Protocol) -> str:
                if variant.loading is not None and variant.loading.litres_per_kg is not None}
     if not scaled:
         return "not scaled by body size"
-    return " and ".join(f"per {unit} of {'total body weight' if by == 'weight' else by.replace('_', ' ')}"
-                        for unit, by in sorted(scaled))
+    return " and ".join(f"per {unit} of {size_words(by)}" for unit, by in sorted(scaled))
 
 
 def finding(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, group: str, target: str,

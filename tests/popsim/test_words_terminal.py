@@ -20,7 +20,7 @@ from popsim.holds import further, numbers
 from popsim.progress import bar
 from popsim.tables import notes_of
 from popsim.terminal import WIDTH, as_json_text, summary
-from popsim.words import clock, finding, percent, points
+from popsim.words import clock, finding, percent, points, size_words
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 LONG = "a very long name of a group or protocol that a department may well have written so"[:80]
@@ -75,6 +75,20 @@ def test_points(difference, said):
 )
 def test_clock(minutes, said):
     assert clock(minutes) == said
+
+
+@pytest.mark.parametrize(
+    ("name", "said"),
+    [
+        ("weight", "total body weight"),
+        ("adjusted_body_weight", "adjusted body weight"),
+        ("lean_body_mass_james", "lean body mass (James)"),
+        ("fat_free_mass_al_sallami", "fat free mass (Al-Sallami)"),
+        ("body_surface_area_du_bois", "body surface area (Du Bois)"),
+    ],
+)
+def test_body_sizes_in_words(name, said):
+    assert size_words(name) == said
 
 
 def pair(low, high, said="", a="A", b="B", share_a=0.5, failed=0, patients=1000):
@@ -263,10 +277,10 @@ def test_80_columns_with_a_hundred_million_patients_and_shares_near_the_ends(run
     ("p50", "p95", "never", "said"),
     [
         (10.8, np.inf, 0.066,
-         "reaches the range: by 10.8 min in half of the patients, not by the end of the window in 6.6 %"),
-        (4.731, 9.66, 0.0, "reaches the range: by 4.73 min in half of the patients, by 9.66 min in 95 %"),
-        (0.243, 0.315, 0.0, "reaches the range: by 14.6 s in half of the patients, by 18.9 s in 95 %"),
-        (np.inf, np.inf, 0.7, "reaches the range: not by the end of the window in 70.0 %"),
+         "reaches the range by 10.8 min in half of the patients, not by the end of the window in 6.6 %"),
+        (4.731, 9.66, 0.0, "reaches the range by 4.73 min in half of the patients, by 9.66 min in 95 %"),
+        (0.243, 0.315, 0.0, "reaches the range by 14.6 s in half of the patients, by 18.9 s in 95 %"),
+        (np.inf, np.inf, 0.7, "reaches the range not by the end of the window in 70.0 %"),
     ],
 )
 def test_when_the_range_is_reached(run, p50, p95, never, said):
