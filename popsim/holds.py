@@ -69,8 +69,10 @@ def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: T
 def _said(target: Target, row) -> str:
     if row.measure in REACHED:
         reached, before, end = REACHED[row.measure]
-        when = [f"{before} {_minutes(value)} in {patients}" for value, patients in
-                ((row.p50, "half of the patients"), (row.p95, "95 %")) if math.isfinite(value)]
+        shares = [(row.p50, "half of the patients"), (row.p95, "95 %")]
+        if row.p50 == row.p95:
+            shares = [(row.p95, "95 % of the patients")]
+        when = [f"{before} {_minutes(value)} in {patients}" for value, patients in shares if math.isfinite(value)]
         never = [f"not by the end of {end} in {percent(row.never)} %"] if row.never else []
         return f"{reached} {', '.join(when + never)}"
     if row.measure == "of_steady_state":

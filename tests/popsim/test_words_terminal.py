@@ -280,6 +280,7 @@ def test_80_columns_with_a_hundred_million_patients_and_shares_near_the_ends(run
          "reaches the range by 10.8 min in half of the patients, not by the end of the window in 6.6 %"),
         (4.731, 9.66, 0.0, "reaches the range by 4.73 min in half of the patients, by 9.66 min in 95 %"),
         (0.243, 0.315, 0.0, "reaches the range by 14.6 s in half of the patients, by 18.9 s in 95 %"),
+        (0.0, 0.0, 0.0, "reaches the range by 0 min in 95 % of the patients"),
         (np.inf, np.inf, 0.7, "reaches the range not by the end of the window in 70.0 %"),
     ],
 )
