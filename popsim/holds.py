@@ -9,11 +9,10 @@ import pandas as pd
 
 from covariates.units import to_unit
 from popsim.records import Study, Target
-from popsim.words import clock, percent, points
+from popsim.words import clock, percent, points, unit_of
 
 REACHED = {"first_reached_min": ("reaches the range", "by", "the window"),
            "recovery_min": ("recovers from the last dose", "within", "the run")}
-UNITS = {"age": " years", "weight": " kg", "bmi": " kg/m2", "serum_creatinine": " mg/dL"}
 
 
 def holds(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
@@ -141,12 +140,12 @@ def gains(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
 
 
 def _quarter(row: pd.Series) -> str:
-    unit = UNITS[row.covariate]
+    unit = unit_of(row.covariate)
     if math.isinf(row.above):
-        return f"the lowest quarter (up to {row.up_to:.3g}{unit})"
+        return f"the lowest quarter (up to {row.up_to:.3g} {unit})"
     if math.isinf(row.up_to):
-        return f"the highest quarter (above {row.above:.3g}{unit})"
-    return f"the quarter from {row.above:.3g} to {row.up_to:.3g}{unit}"
+        return f"the highest quarter (above {row.above:.3g} {unit})"
+    return f"the quarter from {row.above:.3g} to {row.up_to:.3g} {unit}"
 
 
 MOST_GAINS = 8  # lines in a summary; all stand in quartiles.csv

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING
 
+from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
 from popsim.records import Protocol, Study, Target, quantity_words
@@ -86,6 +87,11 @@ def size_words(name: str) -> str:
         if plain.endswith(f" {end}"):
             return f"{plain.removesuffix(end)}({author})"
     return plain
+
+
+def unit_of(covariate: str) -> str:
+    """The unit of an attribute or equation; empty for numbers of a study's own."""
+    return EQUATIONS[covariate].unit if covariate in EQUATIONS else ATTRIBUTES.get(covariate, "")
 
 
 def per_kg_line(protocol: Protocol) -> str:
