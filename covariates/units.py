@@ -185,6 +185,15 @@ def _split(shown: str, kinds: tuple[str, ...], where: str) -> tuple[Fraction, st
     return Fraction(number), number, match[2]
 
 
+def _with_a_unit(number: str, kind: str) -> str:
+    """What to write: the usual unit first, and the others of a short list, since any may be meant."""
+    usual = KINDS[kind].example.partition(" ")[2]
+    others = [unit for unit in UNITS[kind] if unit != usual]
+    if not 0 < len(others) < 5:
+        return f'write "{number} {usual}" if {usual} is what you mean'
+    return "write " + " or ".join(f'"{number} {unit}"' for unit in (usual, *others)) + ", whichever you mean"
+
+
 def parse_quantity(text: object, kinds: Iterable[str], where: str = "") -> Quantity:
     """A number with its unit, in the internal unit of the first of `kinds` that has this unit.
 
@@ -203,9 +212,8 @@ def parse_quantity(text: object, kinds: Iterable[str], where: str = "") -> Quant
     shown = str(text)
     number, number_text, unit_text = _split(shown, kinds, where)
     if not unit_text and "number" not in kinds:
-        usual = KINDS[kinds[0]].example.partition(" ")[2]
-        right = f'write "{number_text} {usual}" if {usual} is what you mean'
-        raise ProblemsError(Problem(where, f'"{shown}" has no unit', allowed_kinds(kinds), right))
+        raise ProblemsError(Problem(where, f'"{shown}" has no unit', allowed_kinds(kinds),
+                                    _with_a_unit(number_text, kinds[0])))
     unit = parse_unit(unit_text, kinds, where, shown)
     try:
         value = float(number * unit.factor)

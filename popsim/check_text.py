@@ -31,9 +31,9 @@ def check_text(study: Study, looked_at: int) -> str:
         lines += wrapped(f"built on {model.built_on.people}", "          ")
     lines += ["", *_cards(study)]
     lines += ["", *_who(study, looked_at)]
-    for warning in study.warnings:
-        lines += wrapped(warning, "Note      ")
-    lines += ["", *(line for caution in CAUTIONS for line in wrapped(caution, "- "))]
+    if study.warnings:
+        lines += ["", "Note", *(line for warning in study.warnings for line in wrapped(warning, "- "))]
+    lines += ["", "Caution", *(line for caution in CAUTIONS for line in wrapped(caution, "- "))]
     return "\n".join(line.rstrip() for line in lines)
 
 

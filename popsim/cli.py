@@ -32,11 +32,12 @@ def popsim() -> None:
     \b
     popsim new study.toml      write a study to start from
     popsim check study.toml    see the ward card before anything is simulated
-    popsim patients study.toml look at its patients
+    popsim patients study.toml see its patients before any drug is given
     popsim judge study.toml    judge the protocols: tables, pictures, report
-    popsim draw study          draw a finished run's pictures again
-    popsim find dose study.toml    or size, table, map: what to write instead
-    popsim models              the published drug models, and one of them whole
+    popsim draw FOLDER         draw a finished run's pictures again
+    popsim find dose study.toml
+                               what to write instead; also find size, table, map
+    popsim models              the published drug models; with a NAME one of them
     popsim person ...          every covariate of one person, side by side
     popsim score ...           which published model predicts measured patients
     popsim evidence            every outside check, recomputed

@@ -9,9 +9,10 @@ import pandas as pd
 
 from covariates.units import to_unit
 from popsim.study_records import Study, Target
-from popsim.words import clock, percent, points
+from popsim.words import clock, percent, points, unit_of
 
-MEASURES = {"first_reached_min": "first reached after", "recovery_min": "recovered after the last dose in"}
+REACHED = {"first_reached_min": ("reaches the range", "by", "the window"),
+           "recovery_min": ("recovers from the last dose", "within", "the run")}
 
 
 def holds(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
@@ -30,7 +31,7 @@ def holds(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
         else:
             which = "; ".join(_other(study, row) for row in list(other.itertuples())[:3])
             more = f"; and {len(other) - 3} more in robustness.csv" if len(other) > 3 else ""
-            lines.append(f"{asked}: another answer in {len(other)} of {len(rows)}: {which}{more}")
+            lines.append(f"{asked}: another answer in {len(other)} of {len(rows)} comparisons: {which}{more}")
     return lines
 
 
@@ -42,8 +43,15 @@ def _attained(study: Study, row) -> str:
 
 def _other(study: Study, row) -> str:
     of = f", {row.target}" if len(study.targets) > 1 else ""
-    pair = f', "{row.protocol_b}" less "{row.protocol_a}"' if len(study.protocols) > 2 else ""
-    return f'"{row.group}"{of}{pair}: ' + f"{points(row.difference)}" + (f" ({row.verdict})" if row.verdict else "")
+    pair = f', "{row.protocol_b}" minus "{row.protocol_a}"' if len(study.protocols) > 2 else ""
+    verdict = row.verdict
+    if verdict == "better":
+        verdict = f'"{row.protocol_b if row.difference > 0 else row.protocol_a}" is better'
+    return f'"{row.group}"{of}{pair}: {points(row.difference)} points' + (f" ({verdict})" if verdict else "")
+
+
+def _under(study: Study, model: str) -> str:
+    return f" ({model})" if len(study.models) > 1 else ""
 
 
 def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: Target) -> list[str]:
@@ -58,10 +66,14 @@ def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: T
 
 
 def _said(target: Target, row) -> str:
-    if row.measure in MEASURES:
-        half, most = (_minutes(value) for value in (row.p50, row.p95))
-        never = f"; {percent(row.never)} % not by the end" if row.never else ""
-        return f"{MEASURES[row.measure]} {half} (median), {most} (95 % of patients){never}"
+    if row.measure in REACHED:
+        reached, before, end = REACHED[row.measure]
+        shares = [(row.p50, "half of the patients"), (row.p95, "95 %")]
+        if row.p50 == row.p95:
+            shares = [(row.p95, "95 % of the patients")]
+        when = [f"{before} {_minutes(value)} in {patients}" for value, patients in shares if math.isfinite(value)]
+        never = [f"not by the end of {end} in {percent(row.never)} %"] if row.never else []
+        return f"{reached} {', '.join(when + never)}"
     if row.measure == "of_steady_state":
         return (f"the window has {percent(row.p50, 0)} % of its value at steady state (median; "
                 f"{percent(row.p05, 0)} to {percent(row.p95, 0)} %)")
@@ -76,15 +88,16 @@ def _said(target: Target, row) -> str:
 
 
 def _minutes(value: float) -> str:
-    return "never" if math.isinf(value) else clock(float(f"{value:.3g}"))
+    """Three significant digits, of seconds below a minute."""
+    return clock(float(f"{value * 60:.3g}") / 60 if value < 1 else float(f"{value:.3g}"))
 
 
-def responses(tables: dict[str, pd.DataFrame]) -> list[str]:
+def responses(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
     """Cumulative fractions of response of all patients."""
     table = tables.get("responses")
     if table is None:
         return []
-    return [f'{row.target}, "{row.protocol}" ({row.model}): {percent(row.response)} % '
+    return [f'{row.target}, "{row.protocol}"{_under(study, row.model)}: {percent(row.response)} % '
             f"({percent(row.response_low)} to {percent(row.response_high)} %)"
             for row in table[table["group"] == "all"].itertuples()]
 
@@ -99,17 +112,18 @@ def between_models(tables: dict[str, pd.DataFrame]) -> list[str]:
             for row in table[table["group"] == "all"].itertuples()]
 
 
-def together(tables: dict[str, pd.DataFrame]) -> list[str]:
-    """Who attains all targets at once, in every group."""
+def together(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
+    """Who attains all targets at once, in every group: a sentence per protocol."""
     table = tables.get("together")
     if table is None:
         return []
-    return [f'"{row.protocol}" ({row.model}), {row.group}: {percent(row.attained)} % '
-            f"({percent(row.attained_low)} to {percent(row.attained_high)} %)"
-            for row in table[table["patients"] > 0].itertuples()]
+    return [f'"{protocol}"{_under(study, model)}: ' + "; ".join(
+                f"{percent(row.attained)} % ({percent(row.attained_low)} to {percent(row.attained_high)} %) "
+                + ("of all" if row.group == "all" else f'in "{row.group}"') for row in rows.itertuples())
+            for (model, protocol), rows in table[table["patients"] > 0].groupby(["model", "protocol"], sort=False)]
 
 
-def gains(tables: dict[str, pd.DataFrame]) -> list[str]:
+def gains(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
     """For each pair and covariate the quarters that gain most and least from the second protocol."""
     table = tables.get("quartiles")
     if table is None:
@@ -118,31 +132,34 @@ def gains(tables: dict[str, pd.DataFrame]) -> list[str]:
     for (model, target, a, b, covariate), rows in table[table["patients"] > 0].groupby(
             ["model", "target", "protocol_a", "protocol_b", "covariate"], sort=False):
         least, most = rows.loc[rows["difference"].idxmin()], rows.loc[rows["difference"].idxmax()]
-        lines.append(f'{target}, "{b}" less "{a}" ({model}), by {covariate.replace("_", " ")}: '
-                     f"{points(least.difference)} points in {_quarter(least)}, {points(most.difference)} in {_quarter(most)}")
+        of = f"{target}, " if len(study.targets) > 1 else ""
+        by = "BMI" if covariate == "bmi" else covariate.replace("_", " ")
+        lines.append(f'{of}"{b}" minus "{a}"{_under(study, model)}, by {by}: {points(least.difference)} points in '
+                     f"{_quarter(least)}, {points(most.difference)} in {_quarter(most)}")
     return lines
 
 
 def _quarter(row: pd.Series) -> str:
+    unit = unit_of(row.covariate)
     if math.isinf(row.above):
-        return f"the lowest quarter (up to {row.up_to:.3g})"
+        return f"the lowest quarter (up to {row.up_to:.3g} {unit})"
     if math.isinf(row.up_to):
-        return f"the highest quarter (above {row.above:.3g})"
-    return f"the quarter from {row.above:.3g} to {row.up_to:.3g}"
+        return f"the highest quarter (above {row.above:.3g} {unit})"
+    return f"the quarter from {row.above:.3g} to {row.up_to:.3g} {unit}"
 
 
 MOST_GAINS = 8  # lines in a summary; all stand in quartiles.csv
 
 
-def _few_gains(tables: dict[str, pd.DataFrame]) -> list[str]:
-    lines = gains(tables)
+def _few_gains(study: Study, tables: dict[str, pd.DataFrame]) -> list[str]:
+    lines = gains(study, tables)
     return lines if len(lines) <= MOST_GAINS else [*lines[:MOST_GAINS], "all others: quartiles.csv"]
 
 
-FURTHER = (("All targets at once", lambda study, tables: together(tables)),
-           ("Who gains and who loses", lambda study, tables: _few_gains(tables)),
+FURTHER = (("All targets at once", together),
+           ("Who gains and who loses", _few_gains),
            ("Does the answer hold?", holds),
-           ("Cumulative fraction of response", lambda study, tables: responses(tables)),
+           ("Cumulative fraction of response", responses),
            ("Between models: how far the answer leans on the model", lambda study, tables: between_models(tables)))
 
 

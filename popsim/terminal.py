@@ -65,7 +65,7 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
     own = numbers(study, tables, model.name, target)
     if own:
         lines += ["", heading("Each patient's own numbers, all patients")]
-        lines += [line for one in own for line in _wrapped(one)]
+        lines += [line for one in own for line in _wrapped(one, "- ")]
     if len(pairs):
         lines += ["", heading("Same patients, difference in attainment (percentage points)"), *_pair_table(pairs)]
     return lines
@@ -75,17 +75,18 @@ def _attainment_table(rows: pd.DataFrame, groups: tuple[str, ...]) -> list[str]:
     """Group by group, so that the protocols stand under each other."""
     rows = rows.sort_values("group", key=lambda names: names.map(groups.index), kind="stable")
     n_width = len(str(rows["patients"].max()))
-    group_width, protocol_width = _widths(rows["group"], rows["protocol"], WIDTH - n_width - 41)
-    lines = [f"{'group':<{group_width}} {'protocol':<{protocol_width}} {'n':>{n_width}}  {'attained':<19}"
+    group_width, protocol_width = _widths(rows["group"], rows["protocol"], WIDTH - n_width - 44)
+    lines = [f"{'group':<{group_width}} {'protocol':<{protocol_width}} {'n':>{n_width}}  {'attained':<22}"
              f" {'below':>5} {'in':>5} {'above':>5}"]
     previous = None
     for row in rows.itertuples():
-        attained = f"{percent(row.attained):>5} ({percent(row.attained_low)}-{percent(row.attained_high)})"
+        attained = f"{percent(row.attained):>5} ({percent(row.attained_low)} to {percent(row.attained_high)})"
         if row.patients == 0 or no_headline(row.failed, row.patients):
             attained = "no headline" if row.patients else "no patients"
-        group = _cut(row.group, group_width) if row.group != previous else ""
+        before, group = _group_cell(row.group if row.group != previous else "", group_width)
+        lines += before
         lines.append(f"{group:<{group_width}} {_cut(row.protocol, protocol_width):<{protocol_width}}"
-                     f" {row.patients:>{n_width}}  {attained:<19} {percent(row.time_below):>5}"
+                     f" {row.patients:>{n_width}}  {attained:<22} {percent(row.time_below):>5}"
                      f" {percent(row.time_in_range):>5} {percent(row.time_above):>5}")
         previous = row.group
     for note in sorted({f"{row.group}: {row.note}" for row in rows.itertuples() if row.note}):
@@ -97,10 +98,12 @@ def _pair_table(rows: pd.DataFrame) -> list[str]:
     lines = []
     for (a, b), pairs in rows.groupby(["protocol_a", "protocol_b"], sort=False):
         lines += _wrapped(f'second "{b}" minus first "{a}"; share attaining with only one of them')
-        width = min(max(len(group) for group in ("group", *pairs["group"])), 18)
+        width = min(max(len(group) for group in ("group", *pairs["group"])), 20)
         lines.append(f"{'group':<{width}} {'difference':<24} {'first':>5} {'second':>6}")
         for row in pairs.itertuples():
-            lines.append(f"{_cut(row.group, width):<{width}} {_interval_cell(row):<24}"
+            before, group = _group_cell(row.group, width)
+            lines += before
+            lines.append(f"{group:<{width}} {_interval_cell(row):<24}"
                          f" {percent(row.only_a):>5} {percent(row.only_b):>6}  {_verdict_cell(row)}")
     return lines
 
@@ -122,10 +125,13 @@ def _verdict_cell(row) -> str:
 
 def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[str]:
     rows = attainment[(attainment["model"] == model.name) & (attainment["target"] == study.targets[0].name)]
-    shares = ", ".join(f"{row.group} {percent(row.outside_model)} %"
-                       for row in rows[rows["protocol"] == study.protocols[0].name].itertuples() if row.patients)
-    known = rows["outside_model"].notna().any()
-    lines = _wrapped(f"{model.name}: {shares if known else 'not known, the sheet gives no ranges of its people'}", "  ")
+    if rows["outside_model"].isna().all():
+        lines = _wrapped(f"{model.name}: not known, the sheet gives no ranges of its people", "  ")
+    else:
+        groups = rows[(rows["protocol"] == study.protocols[0].name) & (rows["patients"] > 0)]
+        width = min(groups["group"].str.len().max(), WIDTH - 14)
+        lines = [f"  {model.name}", *(f"    {_cut(row.group, width):<{width}}  {percent(row.outside_model):>5} %"
+                                      for row in groups.itertuples())]
     for row in rows[rows["group"] == "all"].itertuples():
         if row.infusion_beyond_model > 0:
             lines += _wrapped(f'"{row.protocol}" infuses longer than the {model.built_on.longest_infusion_min:g} min '
@@ -137,12 +143,14 @@ def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[s
 
 
 def _widths(groups: pd.Series, protocols: pd.Series, room: int) -> tuple[int, int]:
-    """Column widths that fit the names if they can, sharing the room if not."""
-    group, protocol = max(5, groups.str.len().max()), max(8, protocols.str.len().max())
-    if group + protocol <= room:
-        return group, protocol
-    group = min(group, max(room // 2, room - protocol))
-    return group, room - group
+    """Column widths: protocols are to be whole, since groups that are too long get a line of their own."""
+    protocol = min(max(8, protocols.str.len().max()), room - 5)
+    return max(5, min(groups.str.len().max(), room - protocol)), protocol
+
+
+def _group_cell(group: str, width: int) -> tuple[list[str], str]:
+    """A group's name: lines before the row where it is longer than its column, else the cell."""
+    return (_wrapped(group), "") if len(group) > width else ([], group)
 
 
 def _cut(text: str, width: int) -> str:

@@ -5,6 +5,7 @@ from __future__ import annotations
 import math
 from typing import TYPE_CHECKING
 
+from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
 from popsim.study_records import Protocol, Study, Target, quantity_words
@@ -62,7 +63,8 @@ def target_line(target: Target) -> str:
     name = target.name if target.name.endswith(target.range_text) else f"{target.name}: {described}"
     if target.per_day and name == target.name:
         name += ", per 24 h"
-    return f"{name}, {window(target)}, attained when in range {target.rule_text}".rstrip()
+    when = "always in range" if target.rule_text == "always" else f"in range {target.rule_text}".rstrip()
+    return f"{name}, {window(target)}, attained when {when}"
 
 
 def sides_line(target: Target, model: DrugModel) -> str:
@@ -71,6 +73,25 @@ def sides_line(target: Target, model: DrugModel) -> str:
         return ""
     meanings = (("below", model.effect.low_means), ("above", model.effect.high_means))
     return ", ".join(f"{side} is {meaning}" for side, meaning in meanings if meaning)
+
+
+AUTHORS = ("James", "Janmahasatian", "Boer", "Hume", "Al-Sallami", "Devine", "Robinson", "Mosteller", "Du Bois",
+           "Shibutani")
+
+
+def size_words(name: str) -> str:
+    """A body size in words: "lean_body_mass_james" is "lean body mass (James)", "weight" is "total body weight"."""
+    plain = "total body weight" if name == "weight" else name.replace("_", " ")
+    for author in AUTHORS:
+        end = author.lower().replace("-", " ")
+        if plain.endswith(f" {end}"):
+            return f"{plain.removesuffix(end)}({author})"
+    return plain
+
+
+def unit_of(covariate: str) -> str:
+    """The unit of an attribute or equation; empty for numbers of a study's own."""
+    return EQUATIONS[covariate].unit if covariate in EQUATIONS else ATTRIBUTES.get(covariate, "")
 
 
 def per_kg_line(protocol: Protocol) -> str:
@@ -82,8 +103,7 @@ def per_kg_line(protocol: Protocol) -> str:
                if variant.loading is not None and variant.loading.litres_per_kg is not None}
     if not scaled:
         return "not scaled by body size"
-    return " and ".join(f"per {unit} of {'total body weight' if by == 'weight' else by.replace('_', ' ')}"
-                        for unit, by in sorted(scaled))
+    return " and ".join(f"per {unit} of {size_words(by)}" for unit, by in sorted(scaled))
 
 
 def finding(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, group: str, target: str,

@@ -9,10 +9,9 @@ import pandas as pd
 
 from popsim.estimate import wilson
 from popsim.finding.answer import Answer, Part, notes, share_text
-from popsim.finding.answer_table import unit_of
 from popsim.finding.counting import Counts, fresh, fresh_line
 from popsim.finding.map import FEWEST, SEXES, Axis, MapFound, Region
-from popsim.words import percent
+from popsim.words import percent, unit_of
 
 PEOPLE = {"female": "women", "male": "men", "": "people"}
 

@@ -9,8 +9,8 @@ from popsim.finding.answer import (
     short_share,
 )  # fmt: skip
 from popsim.finding.counting import Counts, fresh
-from popsim.finding.size import AGE_CLASSES, BMI_CLASSES, FEWEST, PRACTICAL, SizeFound
-from popsim.words import percent, points, sides_line
+from popsim.finding.size import AGE_CLASSES, BMI_CLASSES, FEWEST, FIXED, PRACTICAL, SizeFound
+from popsim.words import percent, points, sides_line, size_words
 
 
 def size_answer(found: SizeFound, confirmed: Counts) -> Answer:
@@ -44,7 +44,12 @@ def size_answer(found: SizeFound, confirmed: Counts) -> Answer:
 
 def said(name: str) -> str:
     """A measure in words."""
-    return {"weight": "total body weight", "fixed": "fixed, the same for everyone"}.get(name, name.replace("_", " "))
+    return "fixed, the same for everyone" if name == FIXED else size_words(name)
+
+
+def _first(name: str) -> str:
+    """A measure at the start of a sentence."""
+    return said(name)[0].upper() + said(name)[1:]
 
 
 def _sentences(found: SizeFound) -> list[str]:
@@ -67,9 +72,9 @@ def _sentences(found: SizeFound) -> list[str]:
                      f"patients {said(found.measures[0])} differs by {points(difference[0])} points "
                      f"({points(difference[1])} to {points(difference[2])}).")
     for name, (many, falls) in found.left_out.items():
-        lines.append(f"{said(name).capitalize()} is left out: it cannot dose {many:,} patients (zero, negative or "
+        lines.append(f"{_first(name)} is left out: it cannot dose {many:,} patients (zero, negative or "
                      f"unknown). {_turned(counts, falls)}".rstrip())
-    lines += [f"{said(name).capitalize()}: {_turned(counts, falls)}"
+    lines += [f"{_first(name)}: {_turned(counts, falls)}"
               for name, falls in zip(found.measures, found.turned_over, strict=True) if falls[0] > 0]
     return lines
 

@@ -7,7 +7,6 @@ from typing import Any
 import numpy as np
 import pandas as pd
 
-from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.units import to_unit
 from popsim.cautions import CAUTIONS
 from popsim.finding.answer import (
@@ -17,7 +16,7 @@ from popsim.finding.counting import Counts, fresh
 from popsim.finding.dose import worst_of
 from popsim.finding.table import TableFound, WardTable, with_table
 from popsim.ward_card import step_as_written
-from popsim.words import clock, percent, points
+from popsim.words import clock, percent, points, unit_of
 
 
 def table_answer(found: TableFound) -> Answer:
@@ -40,10 +39,6 @@ def table_answer(found: TableFound) -> Answer:
                       for model, of in found.fresh], ignore_index=True)
     return Answer(asked, parts, {"simplicity": cost, "ward_card": card_frame(found)}, _numbers(found),
                   {"ward_card.txt": card_text(found, found.tables[0])})
-
-
-def unit_of(by: str) -> str:
-    return EQUATIONS[by].unit if by in EQUATIONS else ATTRIBUTES.get(by, "")
 
 
 def band_text(by: str, low: float, high: float) -> str:

@@ -14,14 +14,13 @@ from popsim.drawing import (
 )  # fmt: skip
 from popsim.finding.answer_map import PEOPLE, region_text
 from popsim.finding.answer_size import said
-from popsim.finding.answer_table import unit_of
 from popsim.finding.counting import Asked
 from popsim.finding.dose import DoseFound, label
 from popsim.finding.map import SEXES, MapFound, neighbours
 from popsim.finding.size import AGE_CLASSES, BMI_CLASSES, PRACTICAL, SizeFound
 from popsim.finding.table import TableFound
 from popsim.pictures.shown import INTERVALS_SAY, Picture
-from popsim.words import percent, target_line
+from popsim.words import percent, target_line, unit_of
 
 ROOM = WIDTH - 2 * MARGIN
 HEAT = "cividis"

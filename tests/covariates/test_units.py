@@ -68,7 +68,14 @@ def test_a_bare_number_shows_the_right_form(given):
     problem = refusal(parse_quantity, given, ["time"], "study.toml: run.until")
     assert problem.where == "study.toml: run.until"
     assert "has no unit" in problem.found
-    assert 'min" if min' in problem.advice and problem.advice.startswith('write "5')
+    assert problem.advice.startswith('write "5') and 'min" or "5' in problem.advice.replace("5.0", "5")
+
+
+def test_a_bare_creatinine_is_not_led_to_one_unit():
+    """106 is umol/L; whoever is told to write mg/dL might."""
+    problem = refusal(parse_quantity, "106", ["creatinine"], "--creatinine")
+    assert problem.advice == 'write "106 mg/dL" or "106 umol/L", whichever you mean'
+    assert refusal(parse_quantity, "80", ["percent"], "").advice == 'write "80 %" if % is what you mean'
 
 
 @pytest.mark.parametrize(

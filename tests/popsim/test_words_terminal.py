@@ -16,10 +16,11 @@ from hypothesis import given
 from hypothesis import strategies as st
 
 from popsim.cli import run as popsim_run
+from popsim.holds import further, numbers
 from popsim.progress import bar
 from popsim.tables import notes_of
 from popsim.terminal import WIDTH, as_json_text, summary
-from popsim.words import clock, finding, percent, points
+from popsim.words import clock, finding, percent, points, size_words
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 LONG = "a very long name of a group or protocol that a department may well have written so"[:80]
@@ -74,6 +75,20 @@ def test_points(difference, said):
 )
 def test_clock(minutes, said):
     assert clock(minutes) == said
+
+
+@pytest.mark.parametrize(
+    ("name", "said"),
+    [
+        ("weight", "total body weight"),
+        ("adjusted_body_weight", "adjusted body weight"),
+        ("lean_body_mass_james", "lean body mass (James)"),
+        ("fat_free_mass_al_sallami", "fat free mass (Al-Sallami)"),
+        ("body_surface_area_du_bois", "body surface area (Du Bois)"),
+    ],
+)
+def test_body_sizes_in_words(name, said):
+    assert size_words(name) == said
 
 
 def pair(low, high, said="", a="A", b="B", share_a=0.5, failed=0, patients=1000):
@@ -176,7 +191,7 @@ def test_the_summary_holds_the_tables_numbers(run):
     text = summary(run.study, run.tables, run.notes)
     assert text.isascii() and max(map(len, text.splitlines())) <= WIDTH
     for row in run.tables["attainment"].query("patients > 0").itertuples():
-        line = f"{percent(row.attained):>5} ({percent(row.attained_low)}-{percent(row.attained_high)})"
+        line = f"{percent(row.attained):>5} ({percent(row.attained_low)} to {percent(row.attained_high)})"
         assert (
             line in text
             and f"{percent(row.time_below):>5} {percent(row.time_in_range):>5} {percent(row.time_above):>5}" in text
@@ -185,6 +200,28 @@ def test_the_summary_holds_the_tables_numbers(run):
         assert f"{points(row.difference):>5} ({points(row.difference_low)} to {points(row.difference_high)})" in text
     assert "first is better" in text  # 600 ug/h, whatever the sign of the difference
     assert "simulation interval" in text and "not for dosing a person" in text and "nan" not in text
+
+
+def test_groups_outside_the_model_stand_in_lines_of_their_own(tmp_path):
+    """Names that hold commas cannot be told apart in a row."""
+    asked = cases.study(tmp_path, count=200, groups={"old, obese": "age >= 65 and bmi >= 30", "x" * 80: "age < 40"})
+    findings, tables = cases.judged(asked)
+    said = summary(asked, tables, notes_of(findings, tables)).split("was built on\n")[1].split("\n\n")[0].splitlines()
+    rows = tables["attainment"].drop_duplicates("group")
+    assert said[0] == "  remifentanil_minto_1997"
+    for line, row in zip(said[1:4], rows.itertuples(), strict=True):
+        assert re.fullmatch(rf"    {row.group[:60]}\S* +{percent(row.outside_model)} %", line)
+    assert len({len(line) for line in said[1:4]}) == 1
+
+
+def test_a_group_too_long_for_its_column_gets_a_line_and_protocols_stay_whole(tmp_path):
+    protocols = dict(zip(("600 ug/h as on the ward", "900 ug/h as it may"), cases.REMIFENTANIL.values(), strict=True))
+    groups = {"under 65, BMI < 30": "age < 65 and bmi < 30"}
+    asked = cases.study(tmp_path, count=60, groups=groups, protocols=protocols)
+    findings, tables = cases.judged(asked)
+    text = summary(asked, tables, notes_of(findings, tables))
+    assert "\nunder 65, BMI < 30\n" in text and ".." not in text
+    assert all(len(re.findall(rf"{name} +\d", text)) == 2 for name in protocols)
 
 
 def test_bold_changes_nothing_but_headings(run):
@@ -234,6 +271,32 @@ def test_80_columns_with_a_hundred_million_patients_and_shares_near_the_ends(run
         tables["comparison"][column] = -1.0
     tables["comparison"]["verdict"] = "too small to matter"
     assert max(map(len, summary(run.study, tables, run.notes).splitlines())) <= WIDTH
+
+
+@pytest.mark.parametrize(
+    ("p50", "p95", "never", "said"),
+    [
+        (10.8, np.inf, 0.066,
+         "reaches the range by 10.8 min in half of the patients, not by the end of the window in 6.6 %"),
+        (4.731, 9.66, 0.0, "reaches the range by 4.73 min in half of the patients, by 9.66 min in 95 %"),
+        (0.243, 0.315, 0.0, "reaches the range by 14.6 s in half of the patients, by 18.9 s in 95 %"),
+        (0.0, 0.0, 0.0, "reaches the range by 0 min in 95 % of the patients"),
+        (np.inf, np.inf, 0.7, "reaches the range not by the end of the window in 70.0 %"),
+    ],
+)
+def test_when_the_range_is_reached(run, p50, p95, never, said):
+    """Nobody is told "never" of a percentile: who does not reach the range is counted."""
+    values = run.tables["values"].head(1).assign(measure="first_reached_min", p50=p50, p95=p95, never=never)
+    (line,) = numbers(run.study, {"values": values}, run.study.models[0].name, run.study.targets[0])
+    assert line == f'"{values["protocol"].iloc[0]}": {said}'
+
+
+def test_a_changed_answer_says_which_protocol_is_better(run):
+    a, b = (protocol.name for protocol in run.study.protocols)
+    row = {"model": "m", "target": run.study.targets[0].name, "group": "old", "protocol_a": a, "protocol_b": b,
+           "asked": "variability x 1.3", "same_answer": "no", "difference": -0.08, "verdict": "better"}
+    (line,) = dict(further(run.study, {"robustness": pd.DataFrame([row])}))["Does the answer hold?"]
+    assert line == f'variability x 1.3: another answer in 1 of 1 comparisons: "old": -8.0 points ("{a}" is better)'
 
 
 def test_too_many_failures_leave_no_headline(run):
