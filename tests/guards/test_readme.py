@@ -37,7 +37,8 @@ def test_the_summary_is_what_the_first_command_prints(tmp_path, said):
 
 
 def test_the_ward_card_is_what_check_prints():
-    assert sample("Ward card \"adjusted") in check_text(read_study(CHECKOUT / "configs" / "propofol_body_size.toml"), 100)
+    study = read_study(CHECKOUT / "configs" / "propofol_body_size.toml")
+    assert sample('Ward card "adjusted') in check_text(study, 100)
 
 
 def test_the_table_is_what_find_prints(tmp_path, said):
