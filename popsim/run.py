@@ -33,7 +33,7 @@ from popsim.records import (
     Timeline,
 )
 from popsim.slices import quartile_cuts, quartile_members
-from popsim.tally import Findings, Tally, check_room
+from popsim.tally import ONE, Findings, Tally, check_room, fixed_shares
 from popsim.target import all_attained, grid_course, grid_limits
 from popsim.timeline import build_timeline, steady_timeline
 
@@ -126,7 +126,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
     tally.overlap += members.T @ members
     cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
-        tally.clusters.add_people(patients.origins, members)
+        tally.clusters.add_people(patients.origins)
+        tally.clusters.add_among("groups", patients.origins, members)
+        tally.clusters.add_among("quarters", patients.origins, quarters)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, len(patients), study.until_min) for protocol in study.protocols]
     numbers = len(grid) > 0
@@ -144,6 +146,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
         tally.outside[m] += members.T @ parameters.outside
         if tally.population:
             tally.population.add_outside(m, cell, parameters.outside)
+        inside = members * ~parameters.outside[:, None]
+        if tally.clusters is not None:
+            tally.clusters.add_among(f"inside model {m}", patients.origins, inside)
         for name, marked in parameters.beyond.items():
             tally.beyond[m, name] += members.T @ marked
         judged: dict[tuple[int, int], Judged] = {}
@@ -160,9 +165,9 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
                 if tally.population:
                     tally.population.add_judged((m, p, t), cell, judged[p, t])
                 if tally.clusters is not None:
-                    tally.clusters.add_attained((m, p, t), patients.origins, judged[p, t].attained)
+                    _add_by_person((m, p, t), judged[p, t], patients.origins, tally)
             if tally.responses:
-                _add_responses(study, m, p, judged, members, tally)
+                _add_responses(study, m, p, judged, patients.origins, members, tally)
             if not len(grid):
                 continue
             of_targets = [judged[p, t] for t in range(len(study.targets))]
@@ -174,12 +179,14 @@ def _judge_block(study: Study, grid: np.ndarray, patients: Patients, tally: Tall
             joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
             for p, one in enumerate(joint):
                 tally.together[m, 0, p].add(joint[0], one, members)
+                if tally.clusters is not None:
+                    tally.clusters.add(("together", m, p), patients.origins, one.attained)
         tally.add_statuses(m, status, patients.first)
         for pair, t, a, b in tally.pairs:
             if pair == m:
                 both = judged[a, t], judged[b, t]
                 tally.pairs[m, t, a, b].add(*both, members)
-                tally.pairs_inside[m, t, a, b].add(*both, members * ~parameters.outside[:, None])
+                tally.pairs_inside[m, t, a, b].add(*both, inside)
                 tally.quartile_pairs[m, t, a, b].add(*both, quarters)
         all_judged |= {(m, p, t): one for (p, t), one in judged.items()}
     return BlockRows(patients, lookup, courses, members, all_judged, [received for _, received in given])
@@ -194,14 +201,26 @@ def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
     return per
 
 
-def _add_responses(study: Study, m: int, p: int, judged: dict[tuple[int, int], Judged], members: np.ndarray,
-                   tally: Tally) -> None:
+def _add_by_person(key: tuple[int, int, int], judged: Judged, origins: np.ndarray, tally: Tally) -> None:
+    """What the intervals of a list need whose people are drawn again and again."""
+    tally.clusters.add(("attained", *key), origins, judged.attained)
+    if tally.population is None:  # attainment only
+        return
+    tally.clusters.add(("judged", *key), origins, ~judged.failed)
+    for side, shares in fixed_shares(judged).items():
+        tally.clusters.add((side, *key), origins, shares)
+
+
+def _add_responses(study: Study, m: int, p: int, judged: dict[tuple[int, int], Judged], origins: np.ndarray | None,
+                   members: np.ndarray, tally: Tally) -> None:
     """Each patient's share of the isolates against which the target is attained: its mean is the cumulative fraction
     of response."""
     for family in study.families:
         share = sum(target.mic.weight * judged[p, t].attained for t, target in enumerate(study.targets)
                     if target.mic is not None and target.mic.family == family)
         tally.responses[m, p, family].add(share, members)
+        if tally.clusters is not None:
+            tally.clusters.add(("response", m, p, family), origins, np.rint(share * ONE).astype(np.int64))
 
 
 def _over_time(study: Study, grid: np.ndarray, m: int, p: int, parameters: IndividualParameters,

@@ -47,7 +47,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
                 "total_beyond_model": int(tally.large_total[m, p][g]) / everyone,
-                **_errors(counts, g, n - failed),
+                **_errors(tally, (m, p, t), g, n - failed),
                 "ever_below": int(counts.ever_below[g]) / everyone, "ever_above": int(counts.ever_above[g]) / everyone,
                 **_by_model(study, tally, m, counts, g, n),
                 "mic": mic.mg_per_l if (mic := study.targets[t].mic) else math.nan,
@@ -55,12 +55,14 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     return pd.DataFrame(rows)
 
 
-def _errors(counts: TargetTally, g: int, judged: int) -> dict[str, float]:
+def _errors(tally: Tally, key: tuple[int, int, int], g: int, judged: int) -> dict[str, float]:
     """Monte Carlo standard errors of the mean shares of the window."""
-    whole = judged * ONE or math.nan
-    return {f"{name}_error": mean_error(int(getattr(counts, side)[g]) / whole,
-                                        int(getattr(counts, f"{side}_squared")[g]) / whole, judged)
-            for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above"))}
+    counts, whole, cells = tally.targets[key], judged * ONE or math.nan, {}
+    for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above")):
+        total, squares = int(getattr(counts, side)[g]), int(getattr(counts, f"{side}_squared")[g])
+        worth = (tally.clusters.worth_mean((side, *key), g, squares, ONE, ("judged", *key)) if tally.clusters else 1.0)
+        cells[f"{name}_error"] = float(mean_error(total / whole, squares / whole, judged)) / math.sqrt(worth)
+    return cells
 
 
 def _by_model(study: Study, tally: Tally, m: int, counts: TargetTally, g: int, patients: int) -> dict[str, float]:
@@ -200,6 +202,10 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
                      "of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
+    if tally.clusters:
+        notes.append("People of the list are drawn again and again: intervals count people, not draws, and are left "
+                     "empty where the counts cannot tell them (quantiles, median gains, means of values.csv and "
+                     "doses.csv, cells of age and weight).")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "

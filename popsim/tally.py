@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations, product
+from itertools import combinations
 
 import numpy as np
 
@@ -48,12 +48,8 @@ class TargetTally:
     measures: dict[str, np.ndarray] = field(default_factory=dict)  # (groups, keys) of `measure_keys`
 
     def add(self, judged: Judged, members: np.ndarray, outside: np.ndarray) -> None:
-        fine = ~judged.failed
-        below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
-                         for share in (judged.below, judged.inside))
-        columns = {"failed": judged.failed, "attained": judged.attained, "below": below, "inside": inside,
-                   "above": np.where(fine, ONE - below - inside, 0), "far_below": judged.far_below,
-                   "far_above": judged.far_above, "ever_below": judged.ever_below, "ever_above": judged.ever_above,
+        columns = {"failed": judged.failed, "attained": judged.attained, **fixed_shares(judged),
+                   "far_below": judged.far_below, "far_above": judged.far_above, "ever_below": judged.ever_below, "ever_above": judged.ever_above,
                    "attained_outside": judged.attained & outside}
         columns |= {f"{name}_squared": np.rint((columns[name] / ONE) ** 2 * ONE)
                     for name in ("below", "inside", "above")}
@@ -62,6 +58,14 @@ class TargetTally:
         for name, values in judged.measures.items():
             counts = self.measures.setdefault(name, np.zeros((members.shape[1], MEASURE_KEYS), dtype=np.int64))
             _count(counts, measure_keys(values), members * ~np.isnan(values)[:, None])
+
+
+def fixed_shares(judged: Judged) -> dict[str, np.ndarray]:
+    """Each patient's shares of the window, (n,) fixed-point integers that add up to ONE; 0 in whoever failed."""
+    fine = ~judged.failed
+    below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
+                     for share in (judged.below, judged.inside))
+    return {"below": below, "inside": inside, "above": np.where(fine, ONE - below - inside, 0)}
 
 
 @dataclass
@@ -172,7 +176,6 @@ class Tally:
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
-        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -192,7 +195,7 @@ class Tally:
             doses={p: dose_tally() for p in protocols if not attainment_only},
             overlap=np.zeros((groups, groups), dtype=np.int64),
             population=None if attainment_only else PopulationTally.empty(study),
-            clusters=clusters,
+            clusters=ClusterTally.empty(origins) if origins else None,
         )
 
     def merge(self, other: Tally) -> None:
@@ -213,13 +216,14 @@ class Tally:
 
     def worth(self, key: tuple[int, int, int]) -> np.ndarray:
         """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
-        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+        return self.clusters.worth(("attained", *key)) if self.clusters else np.ones_like(self.patients)
 
-    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
-        """Likewise for the difference of protocols b and a in one group."""
-        pair = self.pairs[m, t, a, b]
-        unequal = int(pair.only_a[group] + pair.only_b[group])
-        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
+    def worth_paired(self, pair: PairTally, part: int, a: tuple, b: tuple, division: str = "groups") -> float | None:
+        """Likewise for the difference between two sums of `clusters` in one part of a division; None where every
+        patient is a draw of its own."""
+        if self.clusters is None:
+            return None
+        return self.clusters.worth_paired(a, b, division, part, int(pair.only_a[part] + pair.only_b[part]))
 
     def add_statuses(self, model: int, status: np.ndarray, first: int) -> None:
         """Count who could not be computed, and why; `first` is the number of the block's first patient."""
