@@ -108,13 +108,14 @@ class PairTally:
 class DoseTally:
     """What one protocol gives; doses counted by group to four significant digits."""
 
-    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, too_fast, undosed, vials: (groups,)
+    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, too_fast, undosed, vials, vials_squared: (groups,)
     doses: dict[str, np.ndarray]  # total_mg, mg_per_kg_total, mg_per_kg_lean: (groups, keys)
 
     def add(self, received: Received, per: dict[str, np.ndarray], members: np.ndarray) -> None:
         """`per` gives the divisor in kg of each per-kg measure that these patients have."""
         for name, counts in self.counts.items():
-            counts += members.T @ getattr(received, name).astype(np.int64)
+            values = received.vials**2 if name == "vials_squared" else getattr(received, name)
+            counts += members.T @ values.astype(np.int64)
         for name, divisor in {"total_mg": 1.0, **per}.items():
             _count(self.doses[name], decimal_keys(received.total_mg / divisor), members)
 
@@ -172,7 +173,7 @@ class Tally:
         def dose_tally() -> DoseTally:
             return DoseTally(
                 {name: zeros() for name in ("capped", "floored", "rounded", "impossible", "too_fast", "undosed",
-                                            "vials")},
+                                            "vials", "vials_squared")},
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 

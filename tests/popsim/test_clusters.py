@@ -179,4 +179,7 @@ def test_what_counts_of_draws_cannot_tell_is_left_empty_and_said(tmp_path):
     assert tables["comparison"]["median_gain"].notna().all()
     numbers = tables["values"]
     assert numbers[["mean_error", "p50_low", "p95_high"]].isna().all(axis=None) and numbers["p50"].notna().all()
+    for name in ("over_time", "doses", "people"):
+        errors = [column for column in tables[name] if "error" in column]
+        assert errors and tables[name][errors].isna().all(axis=None)
     assert any("drawn again and again" in note for note in notes_of(findings, tables))
