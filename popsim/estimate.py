@@ -59,9 +59,10 @@ def quantile_ranks(share: float, n: int) -> tuple[float, float, float]:
 def quantile_error(quantile: Callable[[float], float], share: float, n: int) -> float:
     """Monte Carlo standard error of a quantile of n patients, from `quantile`, which gives it at any share.
 
-    Half the distance between the quantiles one SD of the share below it up and down: share -+ root(share (1 - share) / n).
+    Half the distance between the quantiles at share -+ root(share (1 - share) / n), one SD of the share to either side.
     NaN where one of them lies beyond the patients: the 5 % quantile needs 19. To the digits that are counted.
-    Source: Woodruff 1952, J Am Stat Assoc 47:635-46 (from memory). Shares spread evenly over 0 to 1, median of 100: 0.05.
+    Source: Woodruff 1952, J Am Stat Assoc 47:635-46 (from memory). The median of 100 values spread evenly over 0 to 1:
+    0.05.
     """
     low, high = shares_beside(share, n)
     return (quantile(high) - quantile(low)) / 2 if 0 <= low and high <= 1 else math.nan

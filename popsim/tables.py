@@ -112,7 +112,7 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
 
 
 def _percentiles(study: Study, m: int, t: int, bins: np.ndarray, independent: bool) -> tuple[np.ndarray, np.ndarray]:
-    """PERCENTILES of the course quantity and their Monte Carlo errors (see estimate.quantile_error), (times, 5) each."""
+    """PERCENTILES of the course quantity and their Monte Carlo errors as `quantile_error` has them, (times, 5) each."""
     target = study.targets[t]
     beside = np.array([shares_beside(share, int(bins[0].sum())) for share in PERCENTILES])
     found = solve.percentiles_from_bins(bins, [*PERCENTILES, *np.clip(beside, 0.0, 1.0).ravel()])
@@ -174,7 +174,7 @@ def _prepared(protocol: Protocol, counted: np.ndarray, vials: tuple[float, float
     cells: dict = {}
 
     def volume_ml(share: float) -> float:
-        return decimal_quantile(counted, share) / protocol.strength_mg_per_ml if protocol.strength_mg_per_ml else math.nan
+        return decimal_quantile(counted, share) / (protocol.strength_mg_per_ml or math.nan)
 
     def whole_vials(share: float) -> float:
         volume = volume_ml(share)

@@ -130,7 +130,8 @@ def resampled(folder, seed, rows, count):
         spread='printed_as = "sd of ln"\nCL = { value = 0.2, evidence = "seen" }',
     )
     sheet.write_text(sheet.read_text().replace('"nobody"', '"nobody"\nage = "30 to 75 years"'), encoding="utf-8")
-    people = [f"female,{age},{weight},165" for age, weight in zip(luck.integers(30, 90, rows), luck.integers(50, 99, rows))]
+    ages, weights = luck.integers(30, 90, rows), luck.integers(50, 99, rows)
+    people = [f"female,{age},{weight},165" for age, weight in zip(ages, weights, strict=True)]
     return cases.study(
         folder,
         model=sheet.name,

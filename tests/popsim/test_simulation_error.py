@@ -1,4 +1,4 @@
-"""Monte Carlo errors of means and quantiles: against simulations with other seeds, and in cases known in closed form."""
+"""Monte Carlo errors of means and quantiles: against simulations with other seeds, and in closed form."""
 
 from __future__ import annotations
 
