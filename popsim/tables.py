@@ -63,7 +63,9 @@ def _errors(tally: Tally, key: tuple[int, int, int], g: int, judged: int) -> dic
     for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above")):
         total, squares = int(getattr(counts, side)[g]), int(getattr(counts, f"{side}_squared")[g])
         worth = (tally.clusters.worth_mean((side, *key), g, squares, ONE, ("judged", *key)) if tally.clusters else 1.0)
-        cells[f"{name}_error"] = float(mean_error(total / whole, squares / whole, judged)) / math.sqrt(worth)
+        error = float(mean_error(total / whole, squares / whole, judged)) / math.sqrt(worth)
+        unknown = tally.clusters and error == 0  # nothing varies: how far people differ is not known
+        cells[f"{name}_error"] = math.nan if unknown else error
     return cells
 
 
@@ -88,8 +90,8 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
     """One row per model, protocol, group, target and time: shares of patients, percentiles of the course quantity.
 
     p05_error and so on are Monte Carlo standard errors: the luck of drawing patients, which says nothing about the
-    model. Failed and undosed patients are left out, as they are of the mean times. An area, peak, trough or average has the
-    percentiles of plasma and no shares; of several MICs only the first has rows.
+    model. Failed and undosed patients are left out, as they are of the mean times. An area, peak, trough or average has
+    the percentiles of plasma and no shares; of several MICs only the first has rows.
     """
     grid, parts = study.grid_min(), []
     for (m, p, t), counts in tally.targets.items():
@@ -238,9 +240,8 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
     if tally.clusters:
-        notes.append("People of the list are drawn again and again: intervals count people, not draws, and are left "
-                     "empty where the counts cannot tell them (quantiles, median gains, means of values.csv and "
-                     "doses.csv, cells of age and weight).")
+        notes.append("Where counts of draws cannot tell how far people differ, intervals and simulation errors are left "
+                     "empty: of quantiles, median gains, means in values.csv and doses.csv, cells of age and weight.")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "

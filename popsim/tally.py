@@ -49,7 +49,8 @@ class TargetTally:
 
     def add(self, judged: Judged, members: np.ndarray, outside: np.ndarray) -> None:
         columns = {"failed": judged.failed, "attained": judged.attained, **fixed_shares(judged),
-                   "far_below": judged.far_below, "far_above": judged.far_above, "ever_below": judged.ever_below, "ever_above": judged.ever_above,
+                   "far_below": judged.far_below, "far_above": judged.far_above,
+                   "ever_below": judged.ever_below, "ever_above": judged.ever_above,
                    "attained_outside": judged.attained & outside}
         columns |= {f"{name}_squared": np.rint((columns[name] / ONE) ** 2 * ONE)
                     for name in ("below", "inside", "above")}
@@ -108,7 +109,8 @@ class PairTally:
 class DoseTally:
     """What one protocol gives; doses counted by group to four significant digits."""
 
-    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, too_fast, undosed, vials, vials_squared: (groups,)
+    # capped, floored, rounded, impossible, too_fast, undosed, vials, vials_squared: (groups,)
+    counts: dict[str, np.ndarray]
     doses: dict[str, np.ndarray]  # total_mg, mg_per_kg_total, mg_per_kg_lean: (groups, keys)
 
     def add(self, received: Received, per: dict[str, np.ndarray], members: np.ndarray) -> None:

@@ -183,4 +183,4 @@ def test_what_counts_of_draws_cannot_tell_is_left_empty_and_said(tmp_path):
     for name in ("over_time", "doses", "people"):
         errors = [column for column in tables[name] if "error" in column]
         assert errors and tables[name][errors].isna().all(axis=None)
-    assert any("drawn again and again" in note for note in notes_of(findings, tables))
+    assert any("cannot tell how far people differ" in note for note in notes_of(findings, tables))
