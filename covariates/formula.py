@@ -148,8 +148,8 @@ def compile_formula(text: str, where: str, wanted: str | None = None) -> Formula
 def _parse(text: str, where: str) -> ast.expr:
     """The syntax tree, after the checks that need no look inside."""
 
-    def refused(found: str, allowed: str) -> ProblemsError:
-        return ProblemsError(Problem(where, found, allowed))
+    def refused(found: str, allowed: str, advice: str = "") -> ProblemsError:
+        return ProblemsError(Problem(where, found, allowed, advice))
 
     if len(text) > LONGEST_TEXT:
         raise refused(f"a formula of {len(text)} characters", f"at most {LONGEST_TEXT}")
@@ -164,7 +164,9 @@ def _parse(text: str, where: str) -> ast.expr:
         root = ast.parse(" ".join(text.split()), mode="eval").body
     except (SyntaxError, ValueError, MemoryError, RecursionError) as error:
         reason = error.msg if isinstance(error, SyntaxError) else "nested too deeply"
-        raise refused(f'"{text[:200]}" cannot be read: {reason}', _LANGUAGE) from None
+        unit = re.search(r"[0-9.] *[A-Za-z]", text)
+        advice = "a formula holds no units; multiply with *, as in 0.5 * weight" if unit else ""
+        raise refused(f'"{text[:200]}" cannot be read: {reason}', _LANGUAGE, advice) from None
     parts = sum(1 for _ in ast.walk(root))
     if parts > MOST_PARTS:
         raise refused(f"a formula of {parts} parts", f"at most {MOST_PARTS}")
@@ -206,7 +208,8 @@ class _Compiler:
         kind = self.kind_of(node)
         builder = getattr(self, f"_build_{type(node).__name__}", None)
         if builder is None:
-            return self.refuse(node, "is not part of the formula language")
+            advice = "write a decimal point, not a comma" if isinstance(node, ast.Tuple) else ""
+            return self.refuse(node, "is not part of the formula language", advice=advice)
         if kind not in (None, wanted):
             other = {"number": "a number", "condition": "a condition"}
             return self.refuse(node, f"is {other[kind]} where {other[wanted]} is needed", other[wanted])
@@ -241,7 +244,8 @@ class _Compiler:
     def _build_BinOp(self, node: ast.BinOp, wanted: str, depth: int) -> Run:
         function = _ARITHMETIC.get(type(node.op))
         if function is None:
-            return self.refuse(node, "uses an operator that is not part of the formula language", "+ - * / **")
+            advice = "write ** for a power" if isinstance(node.op, ast.BitXor) else ""
+            return self.refuse(node, "uses an operator that is not part of the formula language", "+ - * / **", advice)
         if isinstance(node.op, ast.Pow):
             self._check_exponent(node.right)
         left, right = self.build(node.left, "number", depth), self.build(node.right, "number", depth)

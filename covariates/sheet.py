@@ -161,7 +161,7 @@ def _model(table: dict, where: str, stem: str, text: str, digest: str) -> DrugMo
     check_structure(section, equations, effect.names if effect else ())
     _check_effect(top, effect, section)
     _check_evidence(top, evidence, equations)
-    spread, spread_note, correlations = read_spread(top, equations)
+    spread, spread_note, correlations = read_spread(top, section.table)
     measurement_error = read_error(top)
     cautions_section = top.section("cautions")
     cautions = cautions_section.texts("list")

@@ -23,6 +23,16 @@ PARAMETERS = {
 _PAIRS = (("V2", "Q2"), ("V3", "Q3"))
 TYPICAL, REFERENCE = "_typical", "_reference"
 GRADES = ("seen", "recalled", "computed")
+_UNITS = {"volume": '"L"', "flow": '"L/h"', "per_time": '"1/h"', "time": '"min"', "concentration": '"mg/L"'}
+# how papers write attributes and parameters -> what they may be here: the start of a covariate's name, or a parameter
+_IN_PAPERS = {
+    ("wt", "bw", "tbw", "bodyweight"): "weight", ("ht",): "height", ("scr", "creat", "creatinine"): "serum_creatinine",
+    ("crcl", "clcr", "ccr"): "creatinine_clearance", ("gfr", "egfr"): "egfr", ("pma",): "postmenstrual_age_weeks",
+    ("lbm", "lbw", "lean_body_mass"): "lean_body_mass", ("ffm", "fat_free_mass"): "fat_free_mass",
+    ("ibw", "ideal_body_weight"): "ideal_body_weight", ("ajbw", "adjbw"): "adjusted_body_weight",
+    ("bsa", "body_surface_area"): "body_surface_area",
+    ("v", "vd", "vc"): "V1", ("vp",): "V2", ("q",): "Q2", ("k", "ke", "kel", "k10"): "CL",
+}  # fmt: skip
 _EXAMPLE = '{ is = "4.27", unit = "L", evidence = "seen" }'
 
 
@@ -58,7 +68,7 @@ def read_equations(
     equations = {}
     for name, entry in section.entries(_EXAMPLE):
         _check_name(name, section, needed)
-        text = entry.text("is", needed=True)
+        text = entry.text("is", needed=True, example='"0.5 * weight"')
         unit, factor = _read_unit(entry, units.get(name))
         evidence = entry.text("evidence") or grade
         if evidence.split(",")[0] not in GRADES:
@@ -90,7 +100,7 @@ def _check_name(name: str, section: Section, needed: Collection[str]) -> None:
 
 def _read_unit(entry: Section, kind: str | None) -> tuple[str, float]:
     """The unit and the factor to the internal unit; any known unit, and factor 1, for what is no parameter."""
-    text = entry.text("unit", needed=kind not in (None, "number"))
+    text = entry.text("unit", needed=kind not in (None, "number"), example=_UNITS.get(kind, ""))
     if text is None:
         return "", 1.0
     if kind == "number":
@@ -111,7 +121,8 @@ def check_names(
     reference_person: Collection[str],
 ) -> tuple[frozenset[str], frozenset[str]]:
     """Names from outside that the equations need: (attributes and covariates, references without their ending)."""
-    known = {*ATTRIBUTES, *EQUATIONS, *equations, *needed, *(name + TYPICAL for name in equations)}
+    written = section.table  # also those that cannot be read: that is told already
+    known = {*ATTRIBUTES, *EQUATIONS, *written, *needed, *(name + TYPICAL for name in written)}
     needs, references = set(), set()
     for name, equation in equations.items():
         for used in sorted(equation.formula.names):
@@ -125,10 +136,20 @@ def check_names(
                     found = f'"{used}" without a person to refer to'
                     section.problem(f"{name}.is", found, "a section [reference_person]")
             else:
-                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], "
-                           "NAME_typical, NAME_reference")
-                section.problem(f"{name}.is", f'unknown name "{used}"', allowed, nearest(used, known))
+                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], NAME_typical, "
+                           "NAME_reference")
+                advice = _meant(used, {*ATTRIBUTES, *EQUATIONS, *needed}) or nearest(used, known)
+                section.problem(f"{name}.is", f'unknown name "{used}"', allowed, advice)
     return frozenset(needs), frozenset(references)
+
+
+def _meant(word: str, known: Collection[str]) -> str:
+    """The advice for a word as papers write it, or an empty string; which equation is never guessed."""
+    start = next((start for words, start in _IN_PAPERS.items() if word.lower() in words), "")
+    found = sorted(name for name in known if name.startswith(start)) if start else []
+    if word.lower() in ("k", "ke", "kel", "k10") and found:
+        return "write CL: the rate constant times V1"
+    return f"write {' or '.join(found)}" if found else ""
 
 
 def check_structure(
@@ -151,7 +172,7 @@ def check_structure(
     used = {name.removesuffix(TYPICAL) for equation in equations.values() for name in equation.formula.names}
     for name in equations:
         if name not in used and name not in PARAMETERS and name not in effect_names:
-            advice = nearest(name, PARAMETERS) or "remove it, or use it"
+            advice = _meant(name, PARAMETERS) or nearest(name, PARAMETERS) or "remove it, or use it"
             allowed = " ".join(PARAMETERS) + ", or a name that these use"
             section.problem(name, "an equation that nothing uses", allowed, advice)
 

@@ -216,20 +216,24 @@ def read_effect(top: Section) -> EffectModel | None:
 def read_spread(
     top: Section, equations: Collection[str]
 ) -> tuple[dict[str, PrintedSpread], str, dict[tuple[str, str], float]]:
-    """[spread] and [spread_together]: what was printed, the note, correlations."""
+    """[spread] and [spread_together]: what was printed, the note, correlations.
+
+    equations  names of all equations, also of those that cannot be read, which is told already
+    """
     section = top.section("spread", needed=True)
     published = section.flag("published", True)
     note = section.text("note") or ""
     usual = section.text("printed_as", among=_TO_SD["lognormal"])
-    printed = {}
+    printed, told = {}, False
     for name, entry in section.entries('{ value = 0.26, evidence = "seen" }'):
         spread = read_one_spread(entry, usual)
+        told = told or spread is None
         if name not in equations:
             section.problem(name, "spread on a name that is no equation", " ".join(equations), nearest(name, equations))
         elif spread is not None:
             printed[name] = spread
         entry.close()
-    if "spread" in top.table and published and not printed:
+    if "spread" in top.table and published and not printed and not told:
         section.problem("published", "no spread given", "values, or published = false")
     if not published and printed:
         section.problem("published", "false, yet values are given", "published = true")

@@ -35,9 +35,9 @@ class Section:
             self.problem(key, "missing", allowed)
         return value
 
-    def text(self, key: str, needed: bool = False, among: Collection[str] = ()) -> str | None:
+    def text(self, key: str, needed: bool = False, among: Collection[str] = (), example: str = "") -> str | None:
         """Text that is not blank, one of `among` where given."""
-        allowed = ", ".join(among) or "text in quotes"
+        allowed = ", ".join(among) or "text in quotes" + (f", such as {example}" if example else "")
         value = self.take(key, needed, allowed)
         if value is None:
             return None

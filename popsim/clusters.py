@@ -10,8 +10,7 @@ Source: variance of a ratio over clusters by linearisation, effective sample siz
 
 from __future__ import annotations
 
-from collections.abc import Iterable
-from dataclasses import dataclass
+from dataclasses import dataclass, field
 
 import numpy as np
 
@@ -22,45 +21,53 @@ from popsim.estimate import Z95
 class ClusterTally:
     """Integer counts per row of the list.
 
-    drawn     (rows,) how often each was drawn
-    inside    (rows, groups) bool, whether each belongs to a group
-    attained  (model, protocol, target) -> (rows,) in how many draws the target was attained
+    drawn   (rows,) how often each was drawn
+    among   division ("groups", "quarters", ...) -> (rows, parts) bool, whether each belongs to a part
+    sums    what is summed, such as ("attained", model, protocol, target) -> (rows,) over the draws of each
     """
 
     drawn: np.ndarray
-    inside: np.ndarray
-    attained: dict[tuple[int, int, int], np.ndarray]
+    among: dict[str, np.ndarray] = field(default_factory=dict)
+    sums: dict[tuple, np.ndarray] = field(default_factory=dict)
 
     @classmethod
-    def empty(cls, rows: int, groups: int, keys: Iterable[tuple[int, int, int]]) -> ClusterTally:
-        return cls(
-            np.zeros(rows, dtype=np.int64),
-            np.zeros((rows, groups), dtype=bool),
-            {key: np.zeros(rows, dtype=np.int64) for key in keys},
-        )
+    def empty(cls, rows: int) -> ClusterTally:
+        return cls(np.zeros(rows, dtype=np.int64))
 
-    def add_people(self, origins: np.ndarray, members: np.ndarray) -> None:
-        """A block: the row of each patient, and (n, groups) whether they belong to each group."""
+    def add_people(self, origins: np.ndarray) -> None:
+        """A block: the row of each patient."""
         self.drawn += np.bincount(origins, minlength=len(self.drawn))
-        self.inside[origins] |= members > 0
 
-    def add_attained(self, key: tuple[int, int, int], origins: np.ndarray, attained: np.ndarray) -> None:
-        self.attained[key] += np.bincount(origins[attained], minlength=len(self.drawn))
+    def add_among(self, division: str, origins: np.ndarray, members: np.ndarray) -> None:
+        """(n, parts) whether each patient belongs to each part; all draws of a person belong to the same."""
+        rows = self.among.setdefault(division, np.zeros((len(self.drawn), members.shape[1]), dtype=bool))
+        rows[origins] |= members > 0
+
+    def add(self, key: tuple, origins: np.ndarray, values: np.ndarray) -> None:
+        """(n,) integers or true and false, to be summed by person."""
+        np.add.at(self.sums.setdefault(key, np.zeros(len(self.drawn), dtype=np.int64)), origins, values)
 
     def arrays(self) -> list[np.ndarray]:
-        return [self.drawn, self.inside, *self.attained.values()]
+        return [self.drawn, *self.among.values(), *self.sums.values()]
 
-    def worth(self, key: tuple[int, int, int]) -> np.ndarray:
-        """(groups,) what one draw is worth, 0 to 1 independent draws, for the share attained."""
-        return np.array([worth_of(self.attained[key][chosen], self.drawn[chosen]) for chosen in self.inside.T])
+    def worth(self, key: tuple, division: str = "groups") -> np.ndarray:
+        """(parts,) what one draw is worth, 0 to 1 independent draws, for a share of the draws."""
+        return np.array([worth_of(self.sums[key][chosen], self.drawn[chosen]) for chosen in self.among[division].T])
 
-    def worth_paired(self, a: tuple[int, int, int], b: tuple[int, int, int], group: int, unequal: int) -> float:
-        """Likewise for the difference of two shares in the same draws of a group; `unequal` of them attain only one."""
-        chosen = self.inside[:, group]
-        return worth_of(self.attained[b][chosen] - self.attained[a][chosen], self.drawn[chosen], unequal)
+    def worth_paired(self, a: tuple, b: tuple, division: str, part: int, unequal: int) -> float:
+        """Likewise for the difference of two shares in the same draws of a part; `unequal` of them attain only one."""
+        chosen = self.among[division][:, part]
+        return worth_of(self.sums[b][chosen] - self.sums[a][chosen], self.drawn[chosen], unequal)
+
+    def worth_mean(self, key: tuple, group: int, squares: int, unit: int, counted: tuple | None = None) -> float:
+        """Likewise for a mean of numbers of each draw, kept as multiples of 1/unit, as their squares are; `counted`
+        draws of each person have one, all if not given."""
+        chosen = self.among["groups"][:, group]
+        drawn = self.drawn if counted is None else self.sums[counted]
+        return worth_of(self.sums[key][chosen] / unit, drawn[chosen], squares / unit)
 
 
-def worth_of(sums: np.ndarray, drawn: np.ndarray, squares: int | None = None) -> float:
+def worth_of(sums: np.ndarray, drawn: np.ndarray, squares: float | None = None) -> float:
     """What one draw is worth, 0 to 1 independent draws, for a mean over all draws.
 
     sums     (people,) sum over each person's draws of 1 or 0 (or -1, for differences)

@@ -21,22 +21,23 @@ def protocol_pairs(study: Study, tally: Tally) -> list[dict]:
             for t, target in enumerate(study.targets):
                 for a, b in combinations(range(len(study.protocols)), 2):
                     names = (study.protocols[a].name, study.protocols[b].name)
-                    worth = tally.worth_paired(m, t, a, b, g)
+                    tallied = tally.pairs[m, t, a, b]
+                    worth = tally.worth_paired(tallied, g, ("attained", m, a, t), ("attained", m, b, t))
                     rows.append({"model": model.name, "group": group, "target": target.name,
                                  "protocol_a": names[0], "protocol_b": names[1],
-                                 **pair_row(tally.pairs[m, t, a, b], g, int(tally.patients[g]), names, study.matters,
-                                            worth)})
+                                 **pair_row(tallied, g, int(tally.patients[g]), names, study.matters, worth)})
     return rows
 
 
 def pair_row(tallied: PairTally, g: int, patients: int, names: tuple[str, str], matters: float | None,
-             worth: float = 1.0) -> dict:
-    """One pair in one group; `worth` is what a patient counts in independent draws.
+             worth: float | None) -> dict:
+    """One pair in one group; `worth` is what a patient counts in independent draws, None where each is one.
 
-    median_gain: the median over patients of b - a in the share of the window in range.
+    median_gain: the median over patients of b - a in the share of the window in range; without an interval where
+    people are drawn again and again.
     """
     counts = {name: int(getattr(tallied, name)[g]) for name in ("failed", "both", "only_a", "only_b", "neither")}
-    four = (counts[name] * worth for name in ("both", "only_a", "only_b", "neither"))
+    four = (counts[name] * (1 if worth is None else worth) for name in ("both", "only_a", "only_b", "neither"))
     difference, low, high = paired_difference(*four)
     said = "" if no_headline(counts["failed"], patients) else verdict(low, high, matters)
     shares = {name: _share(counts[name], patients) for name in ("only_a", "only_b", "both", "neither")}
@@ -45,15 +46,16 @@ def pair_row(tallied: PairTally, g: int, patients: int, names: tuple[str, str], 
             "attained_b": _share(counts["both"] + counts["only_b"], patients),
             "difference": difference, "difference_low": low, "difference_high": high, **shares,
             "verdict": said, "better": names[difference > 0] if said == "better" else "",
-            **_median_gain(tallied.gained[g])}
+            **_median_gain(tallied.gained[g], worth is None)}
 
 
-def _median_gain(counted: np.ndarray) -> dict[str, float]:
+def _median_gain(counted: np.ndarray, independent: bool) -> dict[str, float]:
     n, names = int(counted.sum()), ("median_gain", "median_gain_low", "median_gain_high")
     if n == 0:
         return dict.fromkeys(names, float("nan"))
-    return {name: key_of_rank(counted, rank) / STEPS_OF_SHARE - 1
+    found = {name: key_of_rank(counted, rank) / STEPS_OF_SHARE - 1
             for name, rank in zip(names, quantile_ranks(0.5, n), strict=True)}
+    return found if independent else found | dict.fromkeys(names[1:], float("nan"))
 
 
 def quartile_pairs(study: Study, tally: Tally) -> list[dict]:
@@ -65,10 +67,11 @@ def quartile_pairs(study: Study, tally: Tally) -> list[dict]:
             edges = [float("-inf"), *(float(value) for value in cut), float("inf")]
             for quarter in range(len(QUARTILES) + 1):
                 g = place * (len(QUARTILES) + 1) + quarter
+                worth = tally.worth_paired(tallied, g, ("attained", m, a, t), ("attained", m, b, t), "quarters")
                 rows.append({"model": study.models[m].name, "target": study.targets[t].name, "protocol_a": names[0],
                              "protocol_b": names[1], "covariate": covariate, "quarter": quarter + 1,
                              "above": edges[quarter], "up_to": edges[quarter + 1],
-                             **pair_row(tallied, g, int(tally.quartile_patients[g]), names, study.matters)})
+                             **pair_row(tallied, g, int(tally.quartile_patients[g]), names, study.matters, worth)})
     return rows
 
 
@@ -79,8 +82,10 @@ def all_of_them(study: Study, tally: Tally) -> list[dict]:
         names = (study.protocols[a].name, study.protocols[b].name)
         for g, group in enumerate(study.group_names):
             n = int(tally.patients[g])
-            pair = pair_row(tallied, g, n, names, study.matters)
-            low, high = wilson(int(tallied.both[g] + tallied.only_b[g]), n)
+            worth = tally.worth_paired(tallied, g, ("together", m, a), ("together", m, b))
+            pair = pair_row(tallied, g, n, names, study.matters, worth)
+            each = tally.clusters.worth(("together", m, b))[g] if tally.clusters else 1.0
+            low, high = wilson(int(tallied.both[g] + tallied.only_b[g]) * each, n * each)
             first = a == b
             rows.append({"model": study.models[m].name, "protocol": names[1], "group": group, "patients": n,
                          "failed": pair["failed"], "attained": pair["attained_b"], "attained_low": float(low),
@@ -105,7 +110,8 @@ def between_models(study: Study, tally: Tally) -> list[dict]:
                 n = int(tally.patients[g])
                 counts = [int(tally.targets[m, p, t].attained[g]) for m in range(len(study.models))]
                 least, most = counts.index(min(counts)), counts.index(max(counts))
-                low, high = wilson(counts[0], n)
+                worth = tally.worth((0, p, t))[g]
+                low, high = wilson(counts[0] * worth, n * worth)
                 rows.append({"protocol": protocol.name, "group": group, "target": target.name, "patients": n,
                              "lowest": _share(counts[least], n), "lowest_model": study.models[least].name,
                              "highest": _share(counts[most], n), "highest_model": study.models[most].name,

@@ -79,7 +79,8 @@ def _said(target: Target, row) -> str:
                 f"{percent(row.p05, 0)} to {percent(row.p95, 0)} %)")
     kind = "area" if target.summary == "area_under_curve" else "concentration"
     if target.quantity == "response":
-        return f"mean probability of response {percent(row.mean)} % (Monte Carlo error {percent(row.mean_error)})"
+        error = "" if math.isnan(row.mean_error) else f" (Monte Carlo error {percent(row.mean_error)})"
+        return f"mean probability of response {percent(row.mean)} %{error}"
     if target.quantity == "effect":
         low, half, high = (f"{value:.3g}" for value in (row.p05, row.p50, row.p95))
         return f"median {half} (5 to 95 %: {low} to {high})"

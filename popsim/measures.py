@@ -16,7 +16,8 @@ def values(study: Study, tally: Tally) -> list[dict]:
     """One row per model, protocol, group, target and measure: mean and quantiles over patients, each with its Monte
     Carlo error (mean: standard error; quantile: 95 % interval).
 
-    Never counts as infinite: it moves quantiles, and leaves the mean empty. Values to three significant digits.
+    Never counts as infinite: it moves quantiles, and leaves the mean empty. Values to three significant digits. No
+    errors for a list that is drawn from again and again: only each person's own counts would tell them.
     """
     rows = []
     for (m, p, t), counts in tally.targets.items():
@@ -25,7 +26,7 @@ def values(study: Study, tally: Tally) -> list[dict]:
             for g, group in enumerate(study.group_names):
                 rows.append({"model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
                              "target": target.mic.family if target.mic else target.name, "measure": measure,
-                             "unit": measure_unit(target, measure), **_described(counted[g])})
+                             "unit": measure_unit(target, measure), **_described(counted[g], tally.clusters is None)})
     return rows
 
 
@@ -40,7 +41,7 @@ def measure_unit(target: Target, measure: str) -> str:
     return "" if target.quantity in ("effect", "response") else "mg/L"
 
 
-def _described(counted: np.ndarray) -> dict[str, float]:
+def _described(counted: np.ndarray, independent: bool) -> dict[str, float]:
     n, never = int(counted.sum()), int(counted[-1])
     cells: dict[str, float] = {"patients": n, "never": never / n if n else math.nan, "mean": math.nan,
                                "mean_error": math.nan}
@@ -48,10 +49,12 @@ def _described(counted: np.ndarray) -> dict[str, float]:
         keys = np.flatnonzero(counted)
         found = np.array([measure_value(int(key)) for key in keys])
         cells["mean"] = math.fsum(counted[keys] * found) / n
-        cells["mean_error"] = float(mean_error(cells["mean"], math.fsum(counted[keys] * found**2) / n, n))
+        if independent:
+            cells["mean_error"] = float(mean_error(cells["mean"], math.fsum(counted[keys] * found**2) / n, n))
     for name, share in QUANTILES.items():
         for end, rank in zip(("", "_low", "_high"), quantile_ranks(share, n), strict=True):
-            cells[name + end] = measure_value(key_of_rank(counted, rank)) if n else math.nan
+            known = n and (independent or not end)
+            cells[name + end] = measure_value(key_of_rank(counted, rank)) if known else math.nan
     return cells
 
 
@@ -64,7 +67,11 @@ def responses(study: Study, tally: Tally) -> list[dict]:
             n = int(tally.patients[g])
             whole = n * ONE or math.nan
             mean = int(counts.total[g]) / whole
-            half = Z95 * float(mean_error(mean, int(counts.squared[g]) / whole, n))
+            squares = int(counts.squared[g])
+            worth = tally.clusters.worth_mean(("response", m, p, family), g, squares, ONE) if tally.clusters else 1.0
+            half = Z95 * float(mean_error(mean, squares / whole, n)) / math.sqrt(worth)
+            if tally.clusters and half == 0:  # nothing varies: how far people differ is not known
+                half = math.nan
             rows.append({"model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
                          "target": family, "patients": n, "response": mean,
                          "response_low": mean - half, "response_high": mean + half})

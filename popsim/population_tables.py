@@ -4,12 +4,13 @@ from __future__ import annotations
 
 import math
 from collections.abc import Callable
+from functools import partial
 
 import numpy as np
 import pandas as pd
 
 from popsim.counted import QUANTILES, tenths_quantile
-from popsim.estimate import wilson
+from popsim.estimate import quantile_error, wilson
 from popsim.population_tally import (
     AGE_BINS, AGE_STEP_YEARS, GROUP_MEASURES, SEXES, WEIGHT_BINS, WEIGHT_STEP_KG, dosed_by, size_measures,
 )  # fmt: skip
@@ -27,14 +28,17 @@ def people(study: Study, tally: Tally) -> pd.DataFrame:
         row: dict = {"group": group, "patients": int(tally.patients[g]),
                      "female": int(counts.female[g]) / (int(counts.sexed[g]) or math.nan)}
         for name in GROUP_MEASURES:
-            row |= _quantiles(name, counts.by_group[name][g])
+            row |= _quantiles(f"{name}_", counts.by_group[name][g], tally.clusters is None)
         rows.append(row)
     return pd.DataFrame(rows)
 
 
-def _quantiles(name: str, counts: np.ndarray) -> dict[str, float]:
-    lead = f"{name}_" if name else ""
-    return {f"{lead}{quantile}": tenths_quantile(counts, share) for quantile, share in QUANTILES.items()}
+def _quantiles(lead: str, counts: np.ndarray, independent: bool) -> dict[str, float]:
+    """Quantiles with their Monte Carlo errors, which are not known of people drawn again and again."""
+    quantile, n = partial(tenths_quantile, counts), int(counts.sum())
+    found = {f"{lead}{name}": quantile(share) for name, share in QUANTILES.items()}
+    return found | {f"{lead}{name}_error": quantile_error(quantile, share, n) if independent else math.nan
+                    for name, share in QUANTILES.items()}
 
 
 MAP_COLUMNS = ("model", "protocol", "target", "age_from", "age_to", "weight_from", "weight_to", "patients", "failed",
@@ -64,7 +68,8 @@ def _limits(place: int, step: float, bins: int) -> tuple[float, float]:
     return place * step, math.inf if place == bins - 1 else (place + 1) * step
 
 
-SIZE_COLUMNS = ("measure", "sex", "weight_from", "weight_to", "patients", *QUANTILES, "doses")
+SIZE_COLUMNS = ("measure", "sex", "weight_from", "weight_to", "patients", *QUANTILES, "doses",
+                *(f"{name}_error" for name in QUANTILES))
 
 
 def body_size(study: Study, tally: Tally) -> pd.DataFrame:
@@ -81,7 +86,8 @@ def body_size(study: Study, tally: Tally) -> pd.DataFrame:
                     rows.append({"measure": name, "sex": sex,
                                  **dict(zip(("weight_from", "weight_to"), _limits(j, WEIGHT_STEP_KG, WEIGHT_BINS),
                                             strict=True)),
-                                 "patients": int(counts.sum()), **_quantiles("", counts), "doses": name in dosed})
+                                 "patients": int(counts.sum()), **_quantiles("", counts, tally.clusters is None),
+                                 "doses": name in dosed})
     return pd.DataFrame(rows, columns=list(SIZE_COLUMNS))
 
 

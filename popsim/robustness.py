@@ -112,7 +112,9 @@ def _rows(study: Study, variant: Variant, tally: Tally) -> Iterable[dict]:
             for a, b in combinations(range(len(study.protocols)), 2):
                 names = (study.protocols[a].name, study.protocols[b].name)
                 tallied = (tally.pairs_inside if variant.inside_only else tally.pairs)[0, t, a, b]
-                row = pair_row(tallied, g, patients, names, study.matters)
+                worth = tally.worth_paired(tallied, g, ("attained", 0, a, t), ("attained", 0, b, t),
+                                           _division(variant.inside_only))
+                row = pair_row(tallied, g, patients, names, study.matters, worth)
                 kept = ("patients", "failed", "attained_a", "attained_b", "difference", "difference_low",
                         "difference_high", "verdict", "better")
                 yield first | {"protocol_a": names[0], "protocol_b": names[1], **{name: row[name] for name in kept}}
@@ -121,9 +123,15 @@ def _rows(study: Study, variant: Variant, tally: Tally) -> Iterable[dict]:
 def _attained(tally: Tally, t: int, g: int, patients: int, inside_only: bool) -> dict:
     counts = tally.targets[0, 0, t]
     attained = int(counts.attained[g]) - (int(counts.attained_outside[g]) if inside_only else 0)
-    low, high = wilson(attained, patients)
+    worth = tally.clusters.worth(("attained", 0, 0, t), _division(inside_only))[g] if tally.clusters else 1.0
+    low, high = wilson(attained * worth, patients * worth)
     share = attained / patients if patients else float("nan")
     return {"attained_a": share, "attained_low": float(low), "attained_high": float(high)}
+
+
+def _division(inside_only: bool) -> str:
+    """Whom of a list that is drawn again and again: what `run` calls them."""
+    return "inside model 0" if inside_only else "groups"
 
 
 def _key(row: dict) -> tuple:

@@ -28,7 +28,7 @@ from popsim.population_tally import LEAN
 from popsim.records import BlockRows, Disposition, IndividualParameters, Judged, Patients, Received, Timeline
 from popsim.slices import quartile_cuts, quartile_members
 from popsim.study_records import Study
-from popsim.tally import Findings, Tally, What, check_room
+from popsim.tally import ONE, Findings, Tally, What, check_room, fixed_shares
 from popsim.target import all_attained, grid_course, grid_limits
 from popsim.timeline import build_timeline, steady_timeline
 
@@ -158,7 +158,9 @@ def _counted_block(study: Study, grid: np.ndarray, patients: Patients, tally: Ta
     tally.overlap += members.T @ members
     cell = tally.population.add_patients(patients.attributes, members) if tally.population else None
     if tally.clusters is not None:
-        tally.clusters.add_people(patients.origins, members)
+        tally.clusters.add_people(patients.origins)
+        tally.clusters.add_among("groups", patients.origins, members)
+        tally.clusters.add_among("quarters", patients.origins, quarters)
     tally.add_flags(flag_counts(study, lookup, patients.attributes))
     given = [build_timeline(protocol, lookup, n, study.until_min) for protocol in study.protocols]
     per = _per_kg(patients, lookup)
@@ -175,6 +177,8 @@ def _count_outside(block: _Block, m: int, parameters: IndividualParameters) -> N
     tally.outside[m] += members.T @ parameters.outside
     if tally.population:
         tally.population.add_outside(m, block.cell, parameters.outside)
+    if tally.clusters is not None:
+        tally.clusters.add_among(f"inside model {m}", block.patients.origins, members * ~parameters.outside[:, None])
     for name, marked in parameters.beyond.items():
         tally.beyond[m, name] += members.T @ marked
     longest = model.built_on.longest_infusion_min
@@ -200,10 +204,10 @@ def _judge_model(block: _Block, m: int, parameters: IndividualParameters,
             if tally.population:
                 tally.population.add_judged((m, p, t), block.cell, one)
             if tally.clusters is not None:
-                tally.clusters.add_attained((m, p, t), block.patients.origins, one.attained)
+                _add_by_person((m, p, t), one, block.patients.origins, tally)
         of_targets = [judged[p, t] for t in range(len(study.targets))]
         if tally.responses:
-            _add_responses(study, m, p, of_targets, block.members, tally)
+            _add_responses(study, m, p, of_targets, block.patients.origins, block.members, tally)
         if numbers:
             _over_time(block, m, p, parameters, disposition, of_targets)
     tally.add_statuses(m, status, block.patients.first)
@@ -217,6 +221,8 @@ def _compare_protocols(block: _Block, m: int, judged: dict[tuple[int, int], Judg
         joint = [all_attained([judged[p, t] for t in study.joint_targets]) for p in range(len(study.protocols))]
         for p, one in enumerate(joint):
             tally.together[m, 0, p].add(joint[0], one, members)
+            if tally.clusters is not None:
+                tally.clusters.add(("together", m, p), block.patients.origins, one.attained)
     for pair, t, a, b in tally.pairs:
         if pair == m:
             both = judged[a, t], judged[b, t]
@@ -234,13 +240,26 @@ def _per_kg(patients: Patients, lookup: Lookup) -> dict[str, np.ndarray]:
     return per
 
 
-def _add_responses(study: Study, m: int, p: int, judged: list[Judged], members: np.ndarray, tally: Tally) -> None:
+def _add_by_person(key: tuple[int, int, int], judged: Judged, origins: np.ndarray, tally: Tally) -> None:
+    """What the intervals of a list need whose people are drawn again and again."""
+    tally.clusters.add(("attained", *key), origins, judged.attained)
+    if tally.population is None:  # attainment only
+        return
+    tally.clusters.add(("judged", *key), origins, ~judged.failed)
+    for side, shares in fixed_shares(judged).items():
+        tally.clusters.add((side, *key), origins, shares)
+
+
+def _add_responses(study: Study, m: int, p: int, judged: list[Judged], origins: np.ndarray | None,
+                   members: np.ndarray, tally: Tally) -> None:
     """Each patient's share of the isolates against which the target is attained: its mean is the cumulative fraction
     of response."""
     for family in study.families:
         share = sum(target.mic.weight * one.attained for target, one in zip(study.targets, judged, strict=True)
                     if target.mic is not None and target.mic.family == family)
         tally.responses[m, p, family].add(share, members)
+        if tally.clusters is not None:
+            tally.clusters.add(("response", m, p, family), origins, np.rint(share * ONE).astype(np.int64))
 
 
 def _over_time(block: _Block, m: int, p: int, parameters: IndividualParameters, disposition: Disposition,

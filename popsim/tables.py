@@ -3,6 +3,8 @@
 from __future__ import annotations
 
 import math
+from collections.abc import Callable
+from functools import partial
 
 import numpy as np
 import pandas as pd
@@ -10,7 +12,7 @@ import pandas as pd
 from popsim import solve
 from popsim.compare import against_reference, all_of_them, between_models, protocol_pairs, quartile_pairs
 from popsim.counted import decimal_quantile, decimal_value
-from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, wilson
+from popsim.estimate import MOST_FAILED_PERCENT, mean_error, no_headline, quantile_error, shares_beside, wilson
 from popsim.flagged import flag_notes
 from popsim.measures import responses, values
 from popsim.population_tables import POPULATION_TABLES
@@ -48,7 +50,7 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
                 "outside_model": int(tally.outside[m][g]) / everyone if range_names(study.models[m]) else math.nan,
                 "infusion_beyond_model": int(tally.long_infusion[m, p][g]) / everyone,
                 "total_beyond_model": int(tally.large_total[m, p][g]) / everyone,
-                **_errors(counts, g, n - failed),
+                **_errors(tally, (m, p, t), g, n - failed),
                 "ever_below": int(counts.ever_below[g]) / everyone, "ever_above": int(counts.ever_above[g]) / everyone,
                 **_by_model(study, tally, m, counts, g, n),
                 "mic": mic.mg_per_l if (mic := study.targets[t].mic) else math.nan,
@@ -56,12 +58,16 @@ def attainment(study: Study, tally: Tally) -> pd.DataFrame:
     return pd.DataFrame(rows)
 
 
-def _errors(counts: TargetTally, g: int, judged: int) -> dict[str, float]:
+def _errors(tally: Tally, key: tuple[int, int, int], g: int, judged: int) -> dict[str, float]:
     """Monte Carlo standard errors of the mean shares of the window."""
-    whole = judged * ONE or math.nan
-    return {f"{name}_error": mean_error(int(getattr(counts, side)[g]) / whole,
-                                        int(getattr(counts, f"{side}_squared")[g]) / whole, judged)
-            for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above"))}
+    counts, whole, cells = tally.targets[key], judged * ONE or math.nan, {}
+    for name, side in (("time_below", "below"), ("time_in_range", "inside"), ("time_above", "above")):
+        total, squares = int(getattr(counts, side)[g]), int(getattr(counts, f"{side}_squared")[g])
+        worth = (tally.clusters.worth_mean((side, *key), g, squares, ONE, ("judged", *key)) if tally.clusters else 1.0)
+        error = float(mean_error(total / whole, squares / whole, judged)) / math.sqrt(worth)
+        unknown = tally.clusters and error == 0  # nothing varies: how far people differ is not known
+        cells[f"{name}_error"] = math.nan if unknown else error
+    return cells
 
 
 def _by_model(study: Study, tally: Tally, m: int, counts: TargetTally, g: int, patients: int) -> dict[str, float]:
@@ -84,18 +90,17 @@ def _note(patients: int, failed: int) -> str:
 def over_time(study: Study, tally: Tally) -> pd.DataFrame:
     """One row per model, protocol, group, target and time: shares of patients, percentiles of the course quantity.
 
-    Failed and undosed patients are left out, as they are of the mean times. An area, peak, trough or average has the
-    percentiles of plasma and no shares; of several MICs only the first has rows.
+    p05_error and so on are Monte Carlo standard errors: the luck of drawing patients, which says nothing about the
+    model. Failed and undosed patients are left out, as they are of the mean times. An area, peak, trough or average has
+    the percentiles of plasma and no shares; of several MICs only the first has rows.
     """
     grid, parts = study.grid_min(), []
     for (m, p, t), counts in tally.targets.items():
         if not study.targets[t].over_time:
             continue
-        quantiles = solve.percentiles_from_bins(counts.bins, PERCENTILES)
-        if study.targets[t].quantity != "effect":  # counted as the solver's concentrations, of which it is monotone
-            quantiles = in_target_unit(study.targets[t], study.models[m], {}, quantiles)
         for g, group in enumerate(study.group_names):
             solved = counts.over_time[g].sum(axis=1)
+            quantiles, errors = _percentiles(study, m, t, counts.bins[g], tally.clusters is None)
             with np.errstate(invalid="ignore"):
                 shares = counts.over_time[g] / solved[:, None]
             if study.targets[t].summary:
@@ -104,8 +109,23 @@ def over_time(study: Study, tally: Tally) -> pd.DataFrame:
                 "model": study.models[m].name, "protocol": study.protocols[p].name, "group": group,
                 "target": study.targets[t].name, "time_min": grid,
                 "below": shares[:, 0], "in_range": shares[:, 1], "above": shares[:, 2],
-                **{name: quantiles[g, :, k] for k, name in enumerate(PERCENTILE_NAMES)}}))
+                **{name: quantiles[:, k] for k, name in enumerate(PERCENTILE_NAMES)},
+                **{f"{name}_error": errors[:, k] for k, name in enumerate(PERCENTILE_NAMES)}}))
     return pd.concat(parts, ignore_index=True)
+
+
+def _percentiles(study: Study, m: int, t: int, bins: np.ndarray, independent: bool) -> tuple[np.ndarray, np.ndarray]:
+    """PERCENTILES of the course quantity and their Monte Carlo errors as `quantile_error` has them, (times, 5) each."""
+    target = study.targets[t]
+    beside = np.array([shares_beside(share, int(bins[0].sum())) for share in PERCENTILES])
+    found = solve.percentiles_from_bins(bins, [*PERCENTILES, *np.clip(beside, 0.0, 1.0).ravel()])
+    if target.quantity != "effect":  # counted as the solver's concentrations, of which it is monotone
+        found = in_target_unit(target, study.models[m], {}, found)
+    quantiles, ends = np.split(found, [len(PERCENTILES)], axis=1)
+    known = independent & (beside[:, 0] >= 0) & (beside[:, 1] <= 1)
+    with np.errstate(invalid="ignore"):  # both ends may be beyond what is counted
+        errors = (ends[:, 1::2] - ends[:, ::2]) / 2
+    return quantiles, np.where(known, errors, np.nan)
 
 
 COMPARISON_COLUMNS = ("model", "group", "target", "protocol_a", "protocol_b", "patients", "failed", "attained_a",
@@ -125,37 +145,54 @@ def groups(study: Study, tally: Tally) -> pd.DataFrame:
 
 
 def doses(study: Study, tally: Tally) -> pd.DataFrame:
-    """What they really receive until the run's end, by protocol and group; doses to four significant digits."""
-    rows = []
+    """What they really receive until the run's end, by protocol and group; doses to four significant digits.
+
+    Columns ending in _error are Monte Carlo standard errors; none for a list that is drawn from again and again.
+    """
+    rows, independent = [], tally.clusters is None
     for p, protocol in enumerate(study.protocols):
         counts = tally.doses[p]
         for g, group in enumerate(study.group_names):
             n = int(tally.patients[g])
             row: dict = {"protocol": protocol.name, "group": group, "patients": n}
             for measure, keys in counts.doses.items():
-                row |= {f"{measure}_{name}": decimal_quantile(keys[g], share)
-                        for name, share in zip(PERCENTILE_NAMES, PERCENTILES, strict=True)}
+                for name, share in zip(PERCENTILE_NAMES, PERCENTILES, strict=True):
+                    row |= _quantile(f"{measure}_{name}", partial(decimal_quantile, keys[g]), share, n, independent)
             shares = {name: int(counted[g]) / n if n else math.nan for name, counted in counts.counts.items()}
-            vials = shares.pop("vials")
+            vials, squares = shares.pop("vials"), shares.pop("vials_squared")
+            error = float(mean_error(vials, squares, n)) if independent else math.nan
             row |= {f"share_{name}": share for name, share in shares.items()}
-            rows.append(row | _prepared(protocol, row, counts.doses["total_mg"][g], vials))
+            rows.append(row | _prepared(protocol, counts.doses["total_mg"][g], (vials, error), independent))
     return pd.DataFrame(rows)
 
 
-def _prepared(protocol: Protocol, row: dict, counted: np.ndarray, vials_mean: float) -> dict:
+def _quantile(name: str, quantile: Callable[[float], float], share: float, n: int, independent: bool) -> dict:
+    return {name: quantile(share), f"{name}_error": quantile_error(quantile, share, n) if independent else math.nan}
+
+
+def _prepared(protocol: Protocol, counted: np.ndarray, vials: tuple[float, float], independent: bool) -> dict:
     """Volumes and vials from the same quantiles, and the mean left over in opened vials; empty where the study gives
     no strength or vial. vials_p05 ... and waste_ml_mean: containers are shared by all administrations of a patient;
-    vials_each_mean and waste_each_ml_mean: each administration opens its own."""
+    vials_each_mean and waste_each_ml_mean: each administration opens its own. `vials`: mean of those and its error."""
     cells: dict = {}
-    for name in ("p05", "p50", "p95"):
-        total = row[f"total_mg_{name}"]
-        volume = total / protocol.strength_mg_per_ml if protocol.strength_mg_per_ml else math.nan
-        cells[f"volume_ml_{name}"] = volume
+
+    def volume_ml(share: float) -> float:
+        return decimal_quantile(counted, share) / (protocol.strength_mg_per_ml or math.nan)
+
+    def whole_vials(share: float) -> float:
+        volume = volume_ml(share)
         whole = protocol.vial_ml is not None and not math.isnan(volume)
-        cells[f"vials_{name}"] = math.ceil(volume / protocol.vial_ml - 1e-9) if whole else math.nan
-    cells["waste_ml_mean"] = _mean_waste_ml(protocol, counted)
+        return math.ceil(volume / protocol.vial_ml - 1e-9) if whole else math.nan
+
+    for name, share in (("p05", 0.05), ("p50", 0.5), ("p95", 0.95)):
+        for what, quantile in (("volume_ml", volume_ml), ("vials", whole_vials)):
+            cells |= _quantile(f"{what}_{name}", quantile, share, int(counted.sum()), independent)
+    cells["waste_ml_mean"], error = _mean_waste_ml(protocol, counted)
+    cells["waste_ml_mean_error"] = error if independent else math.nan
     has_vials = protocol.strength_mg_per_ml is not None and protocol.vial_ml is not None and counted.any()
+    vials_mean, error = vials
     cells["vials_each_mean"] = vials_mean if has_vials else math.nan
+    cells["vials_each_mean_error"] = error if has_vials else math.nan
     cells["waste_each_ml_mean"] = (vials_mean * protocol.vial_ml - _mean_volume_ml(protocol, counted) if has_vials
                                    else math.nan)
     return cells
@@ -167,14 +204,16 @@ def _mean_volume_ml(protocol: Protocol, counted: np.ndarray) -> float:
     return whole / int(counted.sum()) / protocol.strength_mg_per_ml
 
 
-def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> float:
-    """Patients are counted by total mg; each opens whole vials of their own."""
+def _mean_waste_ml(protocol: Protocol, counted: np.ndarray) -> tuple[float, float]:
+    """Mean and its error. Patients are counted by total mg; each opens whole vials of their own."""
     if protocol.strength_mg_per_ml is None or protocol.vial_ml is None or not counted.any():
-        return math.nan
+        return math.nan, math.nan
     keys = np.flatnonzero(counted)
     volume = np.array([decimal_value(int(key)) for key in keys]) / protocol.strength_mg_per_ml
     waste = np.ceil(volume / protocol.vial_ml - 1e-9) * protocol.vial_ml - volume
-    return math.fsum(counted[keys] * waste) / int(counted.sum())
+    n = int(counted.sum())
+    mean = math.fsum(counted[keys] * waste) / n
+    return mean, float(mean_error(mean, math.fsum(counted[keys] * waste**2) / n, n))
 
 
 TABLES = {"attainment": attainment, "over_time": over_time, "comparison": comparison, "groups": groups, "doses": doses,
@@ -201,6 +240,9 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
                      "of age and sex.")
     if findings.rows_skipped:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
+    if tally.clusters:
+        notes.append("Where counts of draws cannot tell how far people differ, intervals and simulation errors are left "
+                     "empty: of quantiles, median gains, means in values.csv and doses.csv, cells of age and weight.")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "

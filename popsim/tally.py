@@ -3,7 +3,7 @@
 from __future__ import annotations
 
 from dataclasses import dataclass, field
-from itertools import combinations, product
+from itertools import combinations
 from typing import Literal
 
 import numpy as np
@@ -46,12 +46,9 @@ class TargetTally:
     measures: dict[str, np.ndarray] = field(default_factory=dict)  # (groups, keys) of `measure_keys`
 
     def add(self, judged: Judged, members: np.ndarray, outside: np.ndarray) -> None:
-        fine = ~judged.failed
-        below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
-                         for share in (judged.below, judged.inside))
-        columns = {"failed": judged.failed, "attained": judged.attained, "below": below, "inside": inside,
-                   "above": np.where(fine, ONE - below - inside, 0), "far_below": judged.far_below,
-                   "far_above": judged.far_above, "ever_below": judged.ever_below, "ever_above": judged.ever_above,
+        columns = {"failed": judged.failed, "attained": judged.attained, **fixed_shares(judged),
+                   "far_below": judged.far_below, "far_above": judged.far_above,
+                   "ever_below": judged.ever_below, "ever_above": judged.ever_above,
                    "attained_outside": judged.attained & outside}
         columns |= {f"{name}_squared": np.rint((columns[name] / ONE) ** 2 * ONE)
                     for name in ("below", "inside", "above")}
@@ -60,6 +57,14 @@ class TargetTally:
         for name, values in judged.measures.items():
             counts = self.measures.setdefault(name, np.zeros((members.shape[1], MEASURE_KEYS), dtype=np.int64))
             count_by_group(counts, measure_keys(values), members * ~np.isnan(values)[:, None])
+
+
+def fixed_shares(judged: Judged) -> dict[str, np.ndarray]:
+    """Each patient's shares of the window, (n,) fixed-point integers that add up to ONE; 0 in whoever failed."""
+    fine = ~judged.failed
+    below, inside = (np.where(fine, np.rint(np.nan_to_num(share) * ONE), 0).astype(np.int64)
+                     for share in (judged.below, judged.inside))
+    return {"below": below, "inside": inside, "above": np.where(fine, ONE - below - inside, 0)}
 
 
 @dataclass
@@ -102,13 +107,15 @@ class PairTally:
 class DoseTally:
     """What one protocol gives; doses counted by group to four significant digits."""
 
-    counts: dict[str, np.ndarray]  # capped, floored, rounded, impossible, too_fast, undosed, vials: (groups,)
+    # capped, floored, rounded, impossible, too_fast, undosed, vials, vials_squared: (groups,)
+    counts: dict[str, np.ndarray]
     doses: dict[str, np.ndarray]  # total_mg, mg_per_kg_total, mg_per_kg_lean: (groups, keys)
 
     def add(self, received: Received, per: dict[str, np.ndarray], members: np.ndarray) -> None:
         """`per` gives the divisor in kg of each per-kg measure that these patients have."""
         for name, counts in self.counts.items():
-            counts += members.T @ getattr(received, name).astype(np.int64)
+            values = received.vials**2 if name == "vials_squared" else getattr(received, name)
+            counts += members.T @ values.astype(np.int64)
         for name, divisor in {"total_mg": 1.0, **per}.items():
             count_by_group(self.doses[name], decimal_keys(received.total_mg / divisor), members)
 
@@ -167,11 +174,10 @@ class Tally:
         def dose_tally() -> DoseTally:
             return DoseTally(
                 {name: zeros() for name in ("capped", "floored", "rounded", "impossible", "too_fast", "undosed",
-                                            "vials")},
+                                            "vials", "vials_squared")},
                 {name: np.zeros((groups, KEY_COUNT), dtype=np.int64)
                  for name in ("total_mg", "mg_per_kg_total", "mg_per_kg_lean")})
 
-        clusters = ClusterTally.empty(origins, groups, product(models, protocols, targets)) if origins else None
         return cls(
             patients=zeros(),
             outside={m: zeros() for m in models},
@@ -191,7 +197,7 @@ class Tally:
             doses={p: dose_tally() for p in protocols if everything},
             overlap=np.zeros((groups, groups), dtype=np.int64),
             population=PopulationTally.empty(study) if everything else None,
-            clusters=clusters,
+            clusters=ClusterTally.empty(origins) if origins else None,
         )
 
     def merge(self, other: Tally) -> None:
@@ -212,13 +218,14 @@ class Tally:
 
     def worth(self, key: tuple[int, int, int]) -> np.ndarray:
         """(groups,) what one patient is worth in independent draws, for the share attained; model, protocol, target."""
-        return self.clusters.worth(key) if self.clusters else np.ones_like(self.patients)
+        return self.clusters.worth(("attained", *key)) if self.clusters else np.ones_like(self.patients)
 
-    def worth_paired(self, m: int, t: int, a: int, b: int, group: int) -> float:
-        """Likewise for the difference of protocols b and a in one group."""
-        pair = self.pairs[m, t, a, b]
-        unequal = int(pair.only_a[group] + pair.only_b[group])
-        return self.clusters.worth_paired((m, a, t), (m, b, t), group, unequal) if self.clusters else 1
+    def worth_paired(self, pair: PairTally, part: int, a: tuple, b: tuple, division: str = "groups") -> float | None:
+        """Likewise for the difference between two sums of `clusters` in one part of a division; None where every
+        patient is a draw of its own."""
+        if self.clusters is None:
+            return None
+        return self.clusters.worth_paired(a, b, division, part, int(pair.only_a[part] + pair.only_b[part]))
 
     def add_statuses(self, model: int, status: np.ndarray, first: int) -> None:
         """Count who could not be computed, and why; `first` is the number of the block's first patient."""

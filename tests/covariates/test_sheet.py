@@ -249,6 +249,28 @@ MISTAKES = [
 ]  # fmt: skip
 
 
+OF_PHARMACISTS = [  # a drug of one's own, copied from a paper: what is written, and what helps
+    ('"10000 * size"', '"10000 * CLcr"', "equations.V1.is", "creatinine_clearance_cockcroft_gault_total"),
+    ('"10000 * size"', '"140 * WT"', "equations.V1.is", "to do:   write weight"),
+    ('"10000 * size"', '"140 * LBM"', "equations.V1.is", "lean_body_mass_boer or "),
+    ('"10000 * size"', '"10000 * size^0.75"', "equations.V1.is", "write ** for a power"),
+    ('"10000 * size"', '"0,5 * weight"', "equations.V1.is", "a decimal point"),
+    ('"10000 * size"', '"0.5 L/kg"', "equations.V1.is", "holds no units"),
+    ('"10000 * size", unit = "mL"', '"10000 * size"', "equations.V1.unit", 'such as "L"'),
+    ("[equations]", '[equations]\nVd = { is = "30" }', "equations.Vd", "write V1"),
+    ("[equations]", '[equations]\nk10 = { is = "0.2" }', "equations.k10", "rate constant times V1"),
+]
+
+
+@pytest.mark.parametrize(("old", "new", "where", "said"), OF_PHARMACISTS, ids=[m[1] for m in OF_PHARMACISTS])
+def test_mistakes_of_those_who_copy_a_paper(tmp_path, old, new, where, said):
+    """One message each, and it says what to write."""
+    assert old in GOOD
+    problems = problems_of(tmp_path, GOOD.replace(old, new, 1))
+    assert [problem.where for problem in problems] == [f"drug_author_2000.toml: {where}"], "\n".join(map(str, problems))
+    assert said in str(problems[0])
+
+
 @pytest.mark.parametrize(("old", "new", "where", "said"), MISTAKES, ids=[f"{m[2]}-{m[3]}" for m in MISTAKES])
 def test_each_mistake_is_named(tmp_path, old, new, where, said):
     assert old in GOOD

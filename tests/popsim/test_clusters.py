@@ -8,13 +8,15 @@ from types import SimpleNamespace
 import numpy as np
 import pytest
 import statsmodels.api as sm
+from scipy.stats import chi2
 from scipy.stats import t as student
 
 from popsim import clusters
 from popsim.clusters import worth_of
 from popsim.estimate import Z95, wilson
+from popsim.robustness import robustness
 from popsim.run import simulate
-from popsim.tables import all_tables
+from popsim.tables import all_tables, notes_of
 
 cases = SimpleNamespace(**runpy.run_path(str(Path(__file__).with_name("judge_cases.py"))))
 
@@ -103,3 +105,82 @@ def test_counts_per_person_do_not_depend_on_threads(ward):
     one, two = simulate(ward, 1).tally.clusters, simulate(ward, 2).tally.clusters
     for mine, theirs in zip(one.arrays(), two.arrays(), strict=True):
         assert np.array_equal(mine, theirs)
+
+
+
+ISOLATES = (
+    'name = "isolates"\nquantity = "plasma"\nover_mic = ">= 1"\nduring = "0 min to 8 h"\n'
+    'attained_when = "50 % of the time"\nisolates = { "4 mg/L" = 50, "8 mg/L" = 30, "16 mg/L" = 20 }\n'
+    'isolates_source = "invented for a test"'
+)
+TIME = (
+    'name = "time"\nquantity = "plasma"\nrange = "10 to 60 mg/L"\nduring = "0 min to 8 h"\n'
+    'attained_when = "50 % of the time"'
+)
+PEAK = 'name = "level"\nquantity = "plasma"\nrange = ">= 12 mg/L"\nduring = "4 h"\nattained_when = "always"'
+
+
+def resampled(folder, seed, rows, count):
+    """A drug whose clearance hangs on age, so that one person's draws are much alike."""
+    luck = np.random.default_rng(seed)
+    sheet = folder / cases.sheet(
+        folder,
+        volume="20",
+        clearance="0.16 * exp(-0.02 * (age - 60))",
+        spread='printed_as = "sd of ln"\nCL = { value = 0.2, evidence = "seen" }',
+    )
+    sheet.write_text(sheet.read_text().replace('"nobody"', '"nobody"\nage = "30 to 75 years"'), encoding="utf-8")
+    ages, weights = luck.integers(30, 90, rows), luck.integers(50, 99, rows)
+    people = [f"female,{age},{weight},165" for age, weight in zip(ages, weights, strict=True)]
+    return cases.study(
+        folder,
+        model=sheet.name,
+        population=cases.people(folder, people) + f"\ncount = {count}",
+        groups={},
+        protocols={"1 g": 'amount = "1000 mg"', "1.3 g": 'amount = "1300 mg"'},
+        targets=(ISOLATES, TIME, PEAK),
+        until="8 h",
+        every="4 h",
+        seed=seed,
+    )
+
+
+def widths(asked):
+    """Of every table the value and the half width of its 95 % interval, as one number of standard errors each."""
+    tally = simulate(asked, 1).tally
+    tables = all_tables(asked, tally)
+    response, joint = tables["responses"].iloc[0], tables["together"].iloc[1]
+    time = tables["attainment"].query('target == "time"').iloc[0]
+    quarter = tables["quartiles"].query('target == "level" and covariate == "age" and quarter == 3').iloc[0]
+    whole = robustness(asked, 1)
+    inside = whole[whole["asked"].str.startswith("without") & (whole["target"] == "level")].iloc[0]
+    z = 2 * Z95
+    return {
+        "response": (response.response, (response.response_high - response.response_low) / z),
+        "together": (joint.attained, (joint.attained_high - joint.attained_low) / z),
+        "together, pair": (joint.difference, (joint.difference_high - joint.difference_low) / z),
+        "time": (time.time_in_range, time.time_in_range_error),
+        "quarter": (quarter.difference, (quarter.difference_high - quarter.difference_low) / z),
+        "inside the model": (inside.difference, (inside.difference_high - inside.difference_low) / z),
+    }
+
+
+def test_errors_are_those_between_lists(tmp_path):
+    """20 wards of 40 people each, drawn 1,000 times in all: the SD between wards is the error that each ward says."""
+    found = [widths(resampled(tmp_path, seed, 40, 1000)) for seed in range(20)]
+    low, high = np.sqrt(chi2.ppf([0.0005, 0.9995], 19) / 19)
+    for name in found[0]:
+        values, errors = np.array([one[name] for one in found]).T
+        assert low < values.std(ddof=1) / np.sqrt((errors**2).mean()) < high, name
+
+
+def test_what_counts_of_draws_cannot_tell_is_left_empty_and_said(tmp_path):
+    findings, tables = cases.judged(resampled(tmp_path, 1, 40, 1000))
+    assert tables["comparison"][["median_gain_low", "median_gain_high"]].isna().all(axis=None)
+    assert tables["comparison"]["median_gain"].notna().all()
+    numbers = tables["values"]
+    assert numbers[["mean_error", "p50_low", "p95_high"]].isna().all(axis=None) and numbers["p50"].notna().all()
+    for name in ("over_time", "doses", "people"):
+        errors = [column for column in tables[name] if "error" in column]
+        assert errors and tables[name][errors].isna().all(axis=None)
+    assert any("cannot tell how far people differ" in note for note in notes_of(findings, tables))
