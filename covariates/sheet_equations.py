@@ -136,8 +136,8 @@ def check_names(
                     found = f'"{used}" without a person to refer to'
                     section.problem(f"{name}.is", found, "a section [reference_person]")
             else:
-                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], NAME_typical, "
-                           "NAME_reference")
+                allowed = ("attributes, covariates, other equations, names of [needs] and [needs_numbers], "
+                           "NAME_typical, NAME_reference")
                 advice = _meant(used, {*ATTRIBUTES, *EQUATIONS, *needed}) or nearest(used, known)
                 section.problem(f"{name}.is", f'unknown name "{used}"', allowed, advice)
     return frozenset(needs), frozenset(references)

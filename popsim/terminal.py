@@ -3,7 +3,6 @@
 from __future__ import annotations
 
 import json
-import textwrap
 from collections.abc import Callable, Iterable
 
 import pandas as pd
@@ -12,10 +11,9 @@ from covariates.sheet import DrugModel
 from popsim.cautions import CAUTIONS
 from popsim.estimate import no_headline
 from popsim.holds import further, numbers
+from popsim.screen import WIDTH, wrapped
 from popsim.study_records import Study, Target
 from popsim.words import finding, per_kg_line, percent, points, sides_line, target_line
-
-WIDTH = 80
 
 
 def summary(study: Study, tables: dict[str, pd.DataFrame], notes: Iterable[str], bold: bool = False) -> str:
@@ -23,30 +21,26 @@ def summary(study: Study, tables: dict[str, pd.DataFrame], notes: Iterable[str],
     def heading(text: str) -> str:
         return f"\033[1m{text}\033[0m" if bold else text
 
-    lines = [*(heading(line) for line in _wrapped(study.title)), *_wrapped(study.question), ""]
+    lines = [*(heading(line) for line in wrapped(study.title)), *wrapped(study.question), ""]
     patients = int(tables["attainment"]["patients"].max())
-    lines += _wrapped(f"{patients:,} virtual patients; {', '.join(model.name for model in study.models)}", "Who     ")
+    lines += wrapped(f"{patients:,} virtual patients; {', '.join(model.name for model in study.models)}", "Who     ")
     for protocol in study.protocols:
-        lines += _wrapped(f'"{protocol.name}", {per_kg_line(protocol)}', "Gives   ")
+        lines += wrapped(f'"{protocol.name}", {per_kg_line(protocol)}', "Gives   ")
     for target in study.targets:
-        lines += _wrapped(target_line(target), "Target  ")
+        lines += wrapped(target_line(target), "Target  ")
     for model in study.models:
         for target in study.targets:
             lines += ["", *_one_target(study, tables, model, target, heading)]
     for title, sentences in further(study, tables):
-        lines += ["", heading(title), *(line for sentence in sentences for line in _wrapped(sentence, "- "))]
+        lines += ["", heading(title), *(line for sentence in sentences for line in wrapped(sentence, "- "))]
     lines += ["", heading("Outside the people the model was built on")]
     for model in study.models:
         lines += _outside(study, tables["attainment"], model)
     notes = list(notes)
     if notes:
-        lines += ["", heading("Note"), *(line for note in notes for line in _wrapped(note, "- "))]
-    lines += ["", heading("Caution"), *(line for caution in CAUTIONS for line in _wrapped(caution, "- "))]
+        lines += ["", heading("Note"), *(line for note in notes for line in wrapped(note, "- "))]
+    lines += ["", heading("Caution"), *(line for caution in CAUTIONS for line in wrapped(caution, "- "))]
     return "\n".join(line.rstrip() for line in lines)
-
-
-def _wrapped(text: str, lead: str = "") -> list[str]:
-    return textwrap.wrap(text, WIDTH, initial_indent=lead, subsequent_indent=" " * len(lead))
 
 
 def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel, target: Target,
@@ -55,17 +49,18 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
                          for table in (tables["attainment"], tables["comparison"]))
     of = f" under {model.name}" if len(study.models) > 1 else ""
     what = f"{target.name}{of}" if len(study.targets) > 1 else f"Answer{of}"
-    lines = [heading(line) for line in _wrapped(what)]
+    lines = [heading(line) for line in wrapped(what)]
     for group in study.group_names:
         sentence = finding(study, tables["comparison"], tables["attainment"], group, target.name, model.name)
-        lines += _wrapped(sentence, "- ")
-    lines += ["", heading("Attained, with 95 % simulation interval; mean share of the window (%)")]
-    lines += _wrapped(sides_line(target, model))
+        lines += wrapped(sentence, "- ")
+    sides = "share of patients" if target.summary else "mean share of the window"
+    lines += ["", heading(f"Attained, with 95 % simulation interval; {sides} (%)")]
+    lines += wrapped(sides_line(target, model))
     lines += _attainment_table(attainment, study.group_names)
     own = numbers(study, tables, model.name, target)
     if own:
         lines += ["", heading("Each patient's own numbers, all patients")]
-        lines += [line for one in own for line in _wrapped(one, "- ")]
+        lines += [line for one in own for line in wrapped(one, "- ")]
     if len(pairs):
         lines += ["", heading("Same patients, difference in attainment (percentage points)"), *_pair_table(pairs)]
     return lines
@@ -90,14 +85,14 @@ def _attainment_table(rows: pd.DataFrame, groups: tuple[str, ...]) -> list[str]:
                      f" {percent(row.time_in_range):>5} {percent(row.time_above):>5}")
         previous = row.group
     for note in sorted({f"{row.group}: {row.note}" for row in rows.itertuples() if row.note}):
-        lines += _wrapped(note, "  ! ")
+        lines += wrapped(note, "  ! ")
     return lines
 
 
 def _pair_table(rows: pd.DataFrame) -> list[str]:
     lines = []
     for (a, b), pairs in rows.groupby(["protocol_a", "protocol_b"], sort=False):
-        lines += _wrapped(f'second "{b}" minus first "{a}"; share attaining with only one of them')
+        lines += wrapped(f'second "{b}" minus first "{a}"; share attaining with only one of them')
         width = min(max(len(group) for group in ("group", *pairs["group"])), 20)
         lines.append(f"{'group':<{width}} {'difference':<24} {'first':>5} {'second':>6}")
         for row in pairs.itertuples():
@@ -126,7 +121,7 @@ def _verdict_cell(row) -> str:
 def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[str]:
     rows = attainment[(attainment["model"] == model.name) & (attainment["target"] == study.targets[0].name)]
     if rows["outside_model"].isna().all():
-        lines = _wrapped(f"{model.name}: not known, the sheet gives no ranges of its people", "  ")
+        lines = wrapped(f"{model.name}: not known, the sheet gives no ranges of its people", "  ")
     else:
         groups = rows[(rows["protocol"] == study.protocols[0].name) & (rows["patients"] > 0)]
         width = min(groups["group"].str.len().max(), WIDTH - 14)
@@ -134,10 +129,10 @@ def _outside(study: Study, attainment: pd.DataFrame, model: DrugModel) -> list[s
                                       for row in groups.itertuples())]
     for row in rows[rows["group"] == "all"].itertuples():
         if row.infusion_beyond_model > 0:
-            lines += _wrapped(f'"{row.protocol}" infuses longer than the {model.built_on.longest_infusion_min:g} min '
+            lines += wrapped(f'"{row.protocol}" infuses longer than the {model.built_on.longest_infusion_min:g} min '
                               f"studied in {percent(row.infusion_beyond_model)} % of patients", "  ")
         if row.total_beyond_model > 0:
-            lines += _wrapped(f'"{row.protocol}" gives more in all than the {model.built_on.largest_total.text} studied '
+            lines += wrapped(f'"{row.protocol}" gives more in all than the {model.built_on.largest_total.text} studied '
                               f"to {percent(row.total_beyond_model)} % of patients", "  ")
     return lines
 
@@ -150,7 +145,7 @@ def _widths(groups: pd.Series, protocols: pd.Series, room: int) -> tuple[int, in
 
 def _group_cell(group: str, width: int) -> tuple[list[str], str]:
     """A group's name: lines before the row where it is longer than its column, else the cell."""
-    return (_wrapped(group), "") if len(group) > width else ([], group)
+    return (wrapped(group), "") if len(group) > width else ([], group)
 
 
 def _cut(text: str, width: int) -> str:
