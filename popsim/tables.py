@@ -242,7 +242,8 @@ def notes_of(findings: Findings, tables: dict[str, pd.DataFrame]) -> list[str]:
         notes.append(f"{findings.rows_skipped} rows of the list were skipped because they could not be used.")
     if tally.clusters:
         notes.append("Where counts of draws cannot tell how far people differ, intervals and simulation errors are "
-                     "left empty: of quantiles, median gains, means in values.csv and doses.csv, cells of age and weight.")
+                     "left empty: of quantiles, median gains, means in values.csv and doses.csv, cells of age and "
+                     "weight.")
     notes += flag_notes(study, tally.flags, int(tally.patients[0]))
     for (m, code), count in sorted(tally.statuses.items()):
         notes.append(f"{study.models[m].name}: {_patients(count)} could not be simulated or judged "
