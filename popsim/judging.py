@@ -8,7 +8,9 @@ import numpy as np
 
 from popsim import solve
 from popsim.lookup import Lookup
-from popsim.records import Disposition, IndividualParameters, Judged, Patients, Received, Timeline
+from popsim.records import (
+    Disposition, IndividualParameters, Judged, Patients, Received, Timeline, WindowCourse,
+)  # fmt: skip
 from popsim.streams import normals
 from popsim.study_records import Study, Target
 from popsim.target import (
@@ -57,7 +59,7 @@ def _judge(study: Study, m: int, target: Target, patients: Patients, parameters:
     course = solve.window_course(disposition, timeline, course_of(target), low, high, start, end)
     judged = judge(target, model, parameters.values, course, received.undosed)
     if numbers and target.over_time and not target.steady:
-        more = _times(study, target, m, parameters, disposition, timeline, received, low, end)
+        more = _times(study, target, m, parameters, disposition, timeline, received, low, start, end, course)
         judged = replace(judged, measures=judged.measures | {
             name: np.where(judged.failed, np.nan, minutes) for name, minutes in more.items()})
     return judged, course.status
@@ -76,14 +78,14 @@ def _one_number(target: Target, disposition: Disposition, timeline: Timeline, st
 
 
 def _times(study: Study, target: Target, m: int, parameters: IndividualParameters, disposition: Disposition,
-           timeline: Timeline, received: Received, low: np.ndarray, end: np.ndarray) -> dict[str, np.ndarray]:
+           timeline: Timeline, received: Received, low: np.ndarray, start: np.ndarray, end: np.ndarray,
+           course: WindowCourse) -> dict[str, np.ndarray]:
     """Minutes from time 0 until the course first reaches the range's lower limit (inf: not before the window's end),
     and from the last dose until it has recovered (inf: not before the run's end)."""
     n, found = len(disposition), {}
     anything = np.full(n, np.inf)
     if np.isfinite(low).any():
-        reach = solve.window_course(disposition, timeline, course_of(target), low, anything, np.zeros(n), end)
-        found["first_reached_min"] = reach.first_inside_min
+        found["first_reached_min"] = _first_reached(target, disposition, timeline, low, start, end, course)
     if target.recovers_at is not None:
         level = recovery_limits(target, study.models[m], parameters.values, n)
         after = solve.window_course(disposition, timeline, course_of(target), -anything, level,
@@ -91,3 +93,30 @@ def _times(study: Study, target: Target, m: int, parameters: IndividualParameter
         waited = np.maximum(after.last_above_min - received.last_given_min, 0.0)
         found["recovery_min"] = np.where(after.at_end > level, np.inf, waited)
     return found
+
+
+def _first_reached(target: Target, disposition: Disposition, timeline: Timeline, low: np.ndarray, start: np.ndarray,
+                   end: np.ndarray, course: WindowCourse) -> np.ndarray:
+    """Minutes until a course first reaches `low`, inf where not before `end`; `course` is what it does in the window.
+
+    Looked for before the window, then in it. The effect site moves without jumps: whoever was below first reaches `low`
+    where the window's course first lies in range. Plasma may jump over the range, and is looked through again.
+    """
+    which = course_of(target)
+
+    def minutes(who: np.ndarray, since: np.ndarray, until: np.ndarray) -> np.ndarray:
+        part = solve.window_course(_of(disposition, who), _of(timeline, who), which, low[who], np.full(who.sum(), np.inf),
+                                   since[who], until[who])
+        return part.first_inside_min
+
+    reached = np.full(len(disposition), np.inf)
+    early = start > 0
+    reached[early] = minutes(early, np.zeros(len(start)), start)
+    late = np.isinf(reached)
+    reached[late] = course.first_inside_min[late] if which == "effect_site" else minutes(late, start, end)
+    return reached
+
+
+def _of(record: Disposition | Timeline, who: np.ndarray) -> Disposition | Timeline:
+    """The same record for some of its patients only."""
+    return replace(record, **{name: values[who] for name, values in vars(record).items()})

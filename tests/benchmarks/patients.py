@@ -37,7 +37,7 @@ def described() -> Described:
 
 def main() -> None:
     minto = read_sheet("remifentanil_minto_1997")
-    six = replace(minto, spread={name: minto.spread[name] for name in SIX})
+    six = replace(minto, printed_spread={name: minto.printed_spread[name] for name in SIX})
     own = Variability(True, 1.0, None)
     populations = {
         "survey": Population("survey", COUNT),
