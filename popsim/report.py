@@ -24,7 +24,7 @@ from popsim.pictures.shown import INTERVALS_SAY, Picture
 from popsim.population_tally import LEAN
 from popsim.study_records import Protocol, Study, Target
 from popsim.ward_card import card_lines, describe, example_people, step_as_written
-from popsim.words import clock, finding, per_kg_line, percent, points, sides_line, target_line
+from popsim.words import clock, finding, per_kg_line, percent, points, shares_of, sides_line, target_line
 
 ATTRIBUTE_UNITS = {"age": "years", "weight": "kg", "height": "cm", "bmi": "kg/m2"}
 MEASURES = {"age": ("Age", "years"), "weight": ("Weight", "kg"), "height": ("Height", "cm"), "bmi": ("BMI", "kg/m2"),
@@ -87,6 +87,7 @@ def _answer(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel, tar
         "attainment": [(group, [(row, has_headline(row)) for row in rows.itertuples()]) for group, rows in by_group],
         "sides": sides,
         "sides_line": sides_line(target, model),
+        "shares_of": shares_of(target),
         "pairs": [(a, b, [(row, all(has_headline(one) for one in attainment.itertuples()
                                     if one.group == row.group and one.protocol in (a, b)))
                           for row in rows.itertuples()])

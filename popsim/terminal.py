@@ -13,7 +13,7 @@ from popsim.estimate import no_headline
 from popsim.holds import further, numbers
 from popsim.screen import WIDTH, wrapped
 from popsim.study_records import Study, Target
-from popsim.words import finding, per_kg_line, percent, points, sides_line, target_line
+from popsim.words import finding, per_kg_line, percent, points, shares_of, sides_line, target_line
 
 
 def summary(study: Study, tables: dict[str, pd.DataFrame], notes: Iterable[str], bold: bool = False) -> str:
@@ -53,8 +53,7 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
     for group in study.group_names:
         sentence = finding(study, tables["comparison"], tables["attainment"], group, target.name, model.name)
         lines += wrapped(sentence, "- ")
-    sides = "share of patients" if target.summary else "mean share of the window"
-    lines += ["", heading(f"Attained, with 95 % simulation interval; {sides} (%)")]
+    lines += ["", heading(f"Attained, with 95 % simulation interval; {shares_of(target)} (%)")]
     lines += wrapped(sides_line(target, model))
     lines += _attainment_table(attainment, study.group_names)
     own = numbers(study, tables, model.name, target)

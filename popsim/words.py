@@ -67,6 +67,11 @@ def target_line(target: Target) -> str:
     return f"{name}, {window(target)}, attained when {when}"
 
 
+def shares_of(target: Target) -> str:
+    """What the shares below, in and above the range are shares of: one number of the window has no time in range."""
+    return "share of patients" if target.summary else "mean share of the window"
+
+
 def sides_line(target: Target, model: DrugModel) -> str:
     """What lies below and above an effect's range, where the sheet says: "below is too deep, above is too light"."""
     if target.quantity != "effect" or model.effect is None:
