@@ -54,7 +54,7 @@ def _under(study: Study, model: str) -> str:
     return f" ({model})" if len(study.models) > 1 else ""
 
 
-def numbers(study: Study, tables: dict[str, pd.DataFrame], model: str, target: Target) -> list[str]:
+def numbers(tables: dict[str, pd.DataFrame], model: str, target: Target) -> list[str]:
     """Median and middle 90 % of each patient's own numbers among all patients, protocol by protocol."""
     table = tables.get("values")
     if table is None:

@@ -82,8 +82,8 @@ def _answer(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel, tar
         model.effect.low_means, model.effect.high_means)
     return {
         "title": _about(study, model, target),
-        "numbers": numbers(study, tables, model.name, target),
-        "sentences": [finding(study, pairs, attainment, group, target.name, model.name) for group in study.group_names],
+        "numbers": numbers(tables, model.name, target),
+        "sentences": [finding(pairs, attainment, group, target.name, model.name) for group in study.group_names],
         "attainment": [(group, [(row, has_headline(row)) for row in rows.itertuples()]) for group, rows in by_group],
         "sides": sides,
         "sides_line": sides_line(target, model),

@@ -51,12 +51,12 @@ def _one_target(study: Study, tables: dict[str, pd.DataFrame], model: DrugModel,
     what = f"{target.name}{of}" if len(study.targets) > 1 else f"Answer{of}"
     lines = [heading(line) for line in wrapped(what)]
     for group in study.group_names:
-        sentence = finding(study, tables["comparison"], tables["attainment"], group, target.name, model.name)
+        sentence = finding(tables["comparison"], tables["attainment"], group, target.name, model.name)
         lines += wrapped(sentence, "- ")
     lines += ["", heading(f"Attained, with 95 % simulation interval; {shares_of(target)} (%)")]
     lines += wrapped(sides_line(target, model))
     lines += _attainment_table(attainment, study.group_names)
-    own = numbers(study, tables, model.name, target)
+    own = numbers(tables, model.name, target)
     if own:
         lines += ["", heading("Each patient's own numbers, all patients")]
         lines += [line for one in own for line in wrapped(one, "- ")]

@@ -8,7 +8,7 @@ from typing import TYPE_CHECKING
 from covariates.catalogue import ATTRIBUTES, EQUATIONS
 from covariates.sheet import DrugModel
 from popsim.estimate import MOST_FAILED_PERCENT, no_headline
-from popsim.study_records import Protocol, Study, Target, quantity_words
+from popsim.study_records import Protocol, Target, quantity_words
 
 if TYPE_CHECKING:  # a third of a second that `popsim check` does without
     import pandas as pd
@@ -111,8 +111,7 @@ def per_kg_line(protocol: Protocol) -> str:
     return " and ".join(f"per {unit} of {size_words(by)}" for unit, by in sorted(scaled))
 
 
-def finding(study: Study, comparison: pd.DataFrame, attainment: pd.DataFrame, group: str, target: str,
-            model: str) -> str:
+def finding(comparison: pd.DataFrame, attainment: pd.DataFrame, group: str, target: str, model: str) -> str:
     """What the numbers say of one group, in one sentence."""
     where = "Among all patients" if group == "all" else f'In the group "{group}"'
     rows = _of(attainment, group, target, model)

@@ -98,7 +98,7 @@ def test_nothing_is_loaded_from_elsewhere(run):
 def test_every_sentence_target_note_and_caution(run):
     model, target = run.study.models[0].name, run.study.targets[0]
     for group in run.study.group_names:
-        assert finding(run.study, run.tables["comparison"], run.tables["attainment"], group, target.name, model) \
+        assert finding(run.tables["comparison"], run.tables["attainment"], group, target.name, model) \
             in run.page.text
     assert run.record["notes"]
     for line in (run.study.title, run.study.question, target_line(target), *CAUTIONS, *run.record["notes"],

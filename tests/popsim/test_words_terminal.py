@@ -125,9 +125,8 @@ def found(pairs, attained, failed=0, patients=1000):
             "attained_high": 0.9,
         }
     )
-    study = SimpleNamespace(protocols=names)
     columns = list(pair(0, 0))
-    return finding(study, pd.DataFrame(pairs, columns=columns), rows, "all", "t", "m")
+    return finding(pd.DataFrame(pairs, columns=columns), rows, "all", "t", "m")
 
 
 @pytest.mark.parametrize(
@@ -287,7 +286,7 @@ def test_80_columns_with_a_hundred_million_patients_and_shares_near_the_ends(run
 def test_when_the_range_is_reached(run, p50, p95, never, said):
     """Nobody is told "never" of a percentile: who does not reach the range is counted."""
     values = run.tables["values"].head(1).assign(measure="first_reached_min", p50=p50, p95=p95, never=never)
-    (line,) = numbers(run.study, {"values": values}, run.study.models[0].name, run.study.targets[0])
+    (line,) = numbers({"values": values}, run.study.models[0].name, run.study.targets[0])
     assert line == f'"{values["protocol"].iloc[0]}": {said}'
 
 
